@@ -1,1 +1,1 @@
-"""Placeholder."""
+"""Numerics of the proof: arrays in, results out; no files, clock, printing or logging."""
