@@ -1,1 +1,1 @@
-"""Placeholder."""
+"""Shipped dialects: one TOML file for each kind of instrument."""
