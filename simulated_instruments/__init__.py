@@ -1,1 +1,1 @@
-"""Placeholder."""
+"""Simulated instruments: TCP servers that behave like a bench with a board on it."""
