@@ -11,6 +11,7 @@ from dataclasses import dataclass
 from typing import TypeAlias
 
 import numpy as np
+
 from bandproof.analysis.network import Network, response
 from bandproof.analysis.types import BoolArray, ComplexArray, FloatArray
 

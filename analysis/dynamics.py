@@ -11,6 +11,7 @@ from dataclasses import dataclass
 from math import isfinite
 
 import numpy as np
+
 from bandproof.analysis.elements import GROUND, Capacitor, Network, OpAmp, Resistor, refuse_unknown
 from bandproof.analysis.types import ComplexArray, FloatArray
 

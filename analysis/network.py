@@ -9,6 +9,8 @@ from __future__ import annotations
 from collections.abc import Iterable, Mapping, Sequence
 
 import numpy as np
+from numpy.typing import ArrayLike
+
 from bandproof.analysis.dynamics import StateSpace, modes, state_space
 from bandproof.analysis.elements import (
     GROUND,
@@ -21,7 +23,6 @@ from bandproof.analysis.elements import (
     to_plain,
 )
 from bandproof.analysis.types import ComplexArray, FloatArray
-from numpy.typing import ArrayLike
 
 __all__ = [
     "GROUND",

@@ -1,0 +1,191 @@
+"""The weighted complex fit of bands, many stages at once."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from bandproof.analysis.least_squares import Status, least_squares
+from bandproof.analysis.models import VARIABLES, band_jacobian, band_start
+from bandproof.analysis.types import BoolArray, ComplexArray, FloatArray, IndexArray
+
+__all__ = ["BandFit", "fit_bands"]
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class BandFit:
+    """Fitted bands of S stages.
+
+    Attributes
+    ----------
+    theta : (S, 7)
+        All variables of `models.VARIABLES`, fixed ones at 0.
+    free : tuple of str
+        Names of the P variables that were fitted, the axes of the covariance.
+    covariance : (S, P, P)
+        From the stated covariances of the points alone, not multiplied by chi-square.
+    f0, q, gain, delay, leakage : (S,)
+        Hz, f0 over the -3 dB bandwidth, complex ratio at f0 without delay and leakage, s, complex ratio.
+    u_f0, u_q, u_gain, u_delay : (S,)
+        Standard uncertainties; u_gain is that of |gain|.
+    chi_square : (S,)
+        Reduced: divided by the degrees of freedom (nan where there are none).
+    dof : (S,)
+        Two per used point less P.
+    residual : (S, N) complex
+        Response less fit, in units of the ratio, unused points included.
+    status : S words
+        "converged" or what kept a fit from it.
+    """
+
+    theta: FloatArray
+    free: tuple[str, ...]
+    covariance: FloatArray
+    f0: FloatArray
+    q: FloatArray
+    gain: ComplexArray
+    delay: FloatArray
+    leakage: ComplexArray
+    u_f0: FloatArray
+    u_q: FloatArray
+    u_gain: FloatArray
+    u_delay: FloatArray
+    chi_square: FloatArray
+    dof: FloatArray
+    residual: ComplexArray
+    status: tuple[Status, ...]
+
+
+def fit_bands(
+    frequency: FloatArray,
+    response: ComplexArray,
+    covariance: FloatArray,
+    *,
+    used: BoolArray | None = None,
+    delay: bool = True,
+    leakage: bool = False,
+    start: FloatArray | None = None,
+    step_limit: int = 100,
+) -> BandFit:
+    """Fit the band model to S sweeps, each point weighted by the covariance of its real and imaginary part.
+
+    Parameters
+    ----------
+    frequency : (S, N) float array
+        Hz, positive.
+    response : (S, N) complex array
+        Ratio out/in.
+    covariance : (S, N, 2, 2) float array
+        Of real and imaginary part.
+    used : (S, N) bool array, optional
+        Points to fit; all by default. Sweeps of different length are padded and masked with it.
+    delay, leakage : bool
+        Whether these belong to the model.
+    start : (S, 7) float array, optional
+        Starting values; found from the data by default.
+    step_limit : int
+        Most steps for any stage.
+
+    Raises
+    ------
+    ValueError
+        A shape is wrong, a used covariance is not positive definite, or a sweep has fewer data than variables.
+
+    Examples
+    --------
+    >>> f = np.array([[700.0, 850.0, 1000.0, 1200.0, 1400.0]])
+    >>> h = -3 / (1 + 2j * (f / 1e3 - 1e3 / f)) * np.exp(-2e-6j * np.pi * f)
+    >>> fit = fit_bands(f, h, np.broadcast_to(1e-6 * np.eye(2), (1, 5, 2, 2)))
+    >>> print(f"{fit.f0[0]:.6f} {fit.q[0]:.6f} {fit.gain[0].real:.6f} {fit.delay[0]:.3e}")
+    1000.000000 2.000000 -3.000000 1.000e-06
+    """
+    mask = np.ones(np.shape(frequency), dtype=np.bool_) if used is None else used
+    _check(frequency, response, covariance, mask)
+    free = [i for i, on in enumerate((True, True, True, True, delay, leakage, leakage)) if on]
+    dof = 2.0 * mask.sum(axis=1) - len(free)
+    if (dof < 0).any():
+        raise ValueError(f"sweep {int(dof.argmin())} has fewer data than the {len(free)} variables of the model")
+    f = np.where(mask, frequency, np.exp(np.log(frequency).mean()))
+    h = np.where(mask, response, 0.0)
+    white = _whitening(covariance, mask)
+    theta = band_start(f, h, mask) if start is None else np.array(start, dtype=np.float64)
+
+    def weighted(variables: FloatArray, which: IndexArray) -> tuple[FloatArray, FloatArray]:
+        whole = theta[which]
+        whole[:, free] = variables
+        model, jacobian = band_jacobian(whole, f[which])
+        return _whiten(white[which], (model - h[which])[..., None])[..., 0], _whiten(white[which], jacobian[..., free])
+
+    found = least_squares(weighted, theta[:, free], step_limit=step_limit)
+    theta[:, free] = found.theta
+    return _summary(theta, free, found.covariance, found.squares, dof, found.status, response, frequency)
+
+
+def _summary(
+    theta: FloatArray,
+    free: list[int],
+    covariance: FloatArray,
+    squares: FloatArray,
+    dof: FloatArray,
+    status: tuple[Status, ...],
+    response: ComplexArray,
+    frequency: FloatArray,
+) -> BandFit:
+    f0, q = np.exp(theta[:, 0]), np.exp(theta[:, 1])
+    gain = theta[:, 2] + 1j * theta[:, 3]
+    along = np.stack([gain.real, gain.imag], axis=-1) / np.abs(gain)[:, None]
+    u = np.sqrt(np.einsum("spp->sp", covariance))
+    with np.errstate(invalid="ignore", divide="ignore"):
+        chi_square = np.where(dof > 0, squares / dof, np.nan)
+    return BandFit(
+        theta=theta,
+        free=tuple(VARIABLES[i] for i in free),
+        covariance=covariance,
+        f0=f0,
+        q=q,
+        gain=gain,
+        delay=theta[:, 4],
+        leakage=theta[:, 5] + 1j * theta[:, 6],
+        u_f0=f0 * u[:, 0],
+        u_q=q * u[:, 1],
+        u_gain=np.sqrt(np.einsum("sp,spq,sq->s", along, covariance[:, 2:4, 2:4], along)),
+        u_delay=u[:, free.index(4)] if 4 in free else np.zeros_like(f0),
+        chi_square=chi_square,
+        dof=dof,
+        residual=response - band_jacobian(theta, frequency)[0],
+        status=status,
+    )
+
+
+def _check(frequency: FloatArray, response: ComplexArray, covariance: FloatArray, mask: BoolArray) -> None:
+    shape = np.shape(frequency)
+    if len(shape) != 2 or np.shape(response) != shape or np.shape(mask) != shape or covariance.shape != (*shape, 2, 2):
+        raise ValueError(
+            "frequency, response and used must be (S, N) and covariance (S, N, 2, 2), found "
+            f"{shape}, {np.shape(response)}, {np.shape(mask)} and {covariance.shape}"
+        )
+    if not (frequency > 0).all():
+        raise ValueError(f"frequency must be positive, found {frequency.min()!r}")
+
+
+def _whitening(covariance: FloatArray, mask: BoolArray) -> FloatArray:
+    """Return (S, N, 3): the entries 00, 10, 11 of the inverse Cholesky factor, 0 for unused points."""
+    a, b, c = covariance[..., 0, 0], covariance[..., 1, 0], covariance[..., 1, 1]
+    with np.errstate(invalid="ignore", divide="ignore"):
+        first = 1 / np.sqrt(a)
+        second = 1 / np.sqrt(c - b * b / a)
+        factors: FloatArray = np.stack([first, -b / a * second, second], axis=-1)
+    bad = ~np.isfinite(factors).all(axis=-1) & mask
+    if bad.any():
+        sweep, point = (int(i) for i in np.argwhere(bad)[0])
+        raise ValueError(f"the covariance of sweep {sweep}, point {point} is not positive definite")
+    factors[~mask] = 0.0
+    return factors
+
+
+def _whiten(white: FloatArray, values: ComplexArray) -> FloatArray:
+    """Return complex (S, N, P) values as whitened real (S, 2N, P)."""
+    first = white[..., 0, None] * values.real
+    second = white[..., 1, None] * values.real + white[..., 2, None] * values.imag
+    return np.concatenate([first, second], axis=1)
