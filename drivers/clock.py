@@ -84,7 +84,7 @@ class VirtualClock:
     path : path
         The clock file, 64 bytes (see `create_clock_file`).
     patience : float
-        Seconds by the wall that a reply may take whatever is expected: a simulated instrument computes, it does not wait.
+        Seconds by the wall that any reply may take: a simulated instrument computes, it does not wait.
     """
 
     def __init__(self, path: str | Path, *, patience: float = 2.0) -> None:

@@ -48,7 +48,9 @@ class LinkClosed(InstrumentProblem):
         self.address, self.command, self.reason, self.line = address, command, reason, line
 
     def __str__(self) -> str:
-        return f"{self.address}: {_short(self.command)} was not sent, {self.reason}: reopen the link first{self._where()}"
+        return (
+            f"{self.address}: {_short(self.command)} was not sent, {self.reason}: reopen the link first{self._where()}"
+        )
 
 
 class LinkBroken(InstrumentProblem):

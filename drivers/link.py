@@ -168,8 +168,7 @@ class Transaction:
         self.line = self._link.log(True, message[:EXCERPT], len(message)) or self.line
         rest = memoryview(message)
         while rest:
-            piece = rest
-            rest = rest[self._edge(lambda: self._port.write(piece, self._remaining())) :]
+            rest = rest[self._write(rest) :]
 
     def read_line(self, *, cap: int = LINE_CAP) -> bytes:
         """Return the reply up to a newline, without it and without a carriage return; at most `cap` bytes."""
@@ -215,6 +214,9 @@ class Transaction:
         """Write what came into the exchange log, as one message."""
         if self._received:
             self._link.log(False, self._head, self._received)
+
+    def _write(self, data: memoryview) -> int:
+        return self._edge(lambda: self._port.write(data, self._remaining()))
 
     def _read(self, count: int, *, line: bool) -> bytes:
         chunk = self._edge(lambda: self._port.read(count, self._remaining(), line=line))

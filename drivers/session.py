@@ -5,9 +5,9 @@ from __future__ import annotations
 import logging
 from collections.abc import Callable
 from dataclasses import dataclass
-from typing import TypeVar
+from typing import NoReturn, TypeVar
 
-from bandproof.drivers.errors import InstrumentError
+from bandproof.drivers.errors import InstrumentError, NoAnswer
 from bandproof.drivers.link import LINE_CAP, Link, Transaction
 from bandproof.drivers.scpi import ErrorEntry, parse_error_entry
 
@@ -58,6 +58,7 @@ class Session:
     def __init__(self, link: Link, habits: Habits | None = None) -> None:
         self.link, self.habits = link, habits or Habits()
         self._last_setting = ""
+        self.setting_line = 0  # of the exchange log, where the last setting stands
 
     @property
     def address(self) -> str:
@@ -87,6 +88,7 @@ class Session:
         query = self.habits.confirm if confirm is None else confirm
         with self.link.transaction(text, expected=expected) as exchange:
             self._send(exchange, text)
+            self.setting_line = exchange.line
             if query:
                 self._send(exchange, query)
                 self._parsed(exchange, exchange.read_line(), self._confirmation)
@@ -140,11 +142,41 @@ class Session:
         """
         with self.link.transaction(text, expected=expected) as exchange:
             self._send(exchange, text)
-            self._check_block_header(exchange, length)
+            stated, header = self._block_header(exchange)
+            if stated not in (length, None):
+                raise exchange.not_understood(f"a block of {length} bytes", header)
             data = exchange.read_exactly(length)
-            if terminated and (rest := exchange.read_line()):
-                raise exchange.not_understood("a newline after the block", rest)
+            self._end_block(exchange, terminated or stated is None)
             return data
+
+    def ask_text_block(
+        self,
+        text: str,
+        cap: int,
+        parse: Callable[[bytes], T],
+        *,
+        expected: float = 0.0,
+        terminated: bool = True,
+    ) -> T:
+        """Send a query and return the parsed text inside the block it answers with; at most `cap` bytes.
+
+        Like `ask_block`, but the length is only bounded: numbers as text have no fixed one.
+        """
+        with self.link.transaction(text, expected=expected) as exchange:
+            self._send(exchange, text)
+            stated, header = self._block_header(exchange)
+            if stated is None:  # ends with the line
+                return self._parsed(exchange, exchange.read_line(cap=cap), parse)
+            if stated > cap:
+                raise exchange.not_understood(f"a block of at most {cap} bytes", header)
+            data = bytes(exchange.read_exactly(stated))
+            self._end_block(exchange, terminated)
+            return self._parsed(exchange, data, parse)
+
+    def give_up(self, text: str, waited: float) -> NoReturn:
+        """Raise NoAnswer for something that was asked again and again in vain; the link is dirty afterwards."""
+        self.link.is_dirty = True
+        raise NoAnswer(self.address, text, waited, 0)
 
     def check_errors(self) -> tuple[ErrorEntry, ...]:
         """Empty the error queue; return the entries that are harmless.
@@ -159,7 +191,7 @@ class Session:
         entries = self._queue() if self.habits.errors else []
         for entry in entries:
             if entry.number not in self.habits.harmless:
-                raise InstrumentError(self.address, self._last_setting, entry.number, entry.words)
+                raise InstrumentError(self.address, self._last_setting, entry.number, entry.words, self.setting_line)
             _LOGGER.info("%s: harmless error %d %s", self.address, entry.number, entry.words)
         return tuple(entries)
 
@@ -184,13 +216,19 @@ class Session:
         if as_text(line).lstrip("+") != self.habits.confirmed:
             raise ValueError(f"{self.habits.confirmed!r} as confirmation")
 
-    def _check_block_header(self, exchange: Transaction, length: int) -> None:
+    def _block_header(self, exchange: Transaction) -> tuple[int | None, bytes]:
+        """Return the length a block states (None: an indefinite one) and its header as it came."""
         mark = bytes(exchange.read_exactly(2))
-        if not _begins_block(mark):
+        if mark[:1] != b"#" or not mark[1:].isdigit():
             raise exchange.not_understood("a block beginning with '#' and a digit", mark)
         digits = bytes(exchange.read_exactly(int(mark[1:])))
-        if digits and (not digits.isdigit() or int(digits) != length):
-            raise exchange.not_understood(f"a block of {length} bytes", mark + digits)
+        if digits and not digits.isdigit():
+            raise exchange.not_understood("a block's length in digits", mark + digits)
+        return int(digits) if digits else None, mark + digits
+
+    def _end_block(self, exchange: Transaction, terminated: bool) -> None:
+        if terminated and (rest := exchange.read_line()):
+            raise exchange.not_understood("a newline after the block", rest)
 
 
 def as_text(line: bytes) -> str:
@@ -205,7 +243,3 @@ def as_text(line: bytes) -> str:
     if not text.isascii() or not text.isprintable():
         raise ValueError("printable text")
     return text
-
-
-def _begins_block(mark: bytes) -> bool:
-    return mark[:1] == b"#" and mark[1:].isdigit()

@@ -1,0 +1,126 @@
+"""A function generator: sine, frequency, amplitude, offset, output; every number read back."""
+
+from __future__ import annotations
+
+import math
+from functools import partial
+
+from bandproof.drivers.dialect import GeneratorDialect
+from bandproof.drivers.instrument import Instrument
+from bandproof.drivers.scpi import ErrorEntry
+from bandproof.drivers.session import Session
+
+__all__ = ["Generator"]
+
+_PER_PEAK = {"peak": 1.0, "peak-to-peak": 2.0, "rms": 1 / math.sqrt(2)}  # of a sine
+
+
+class Generator(Instrument):
+    """A generator as its dialect describes it.
+
+    Parameters
+    ----------
+    session : Session
+        The conversation.
+    dialect : GeneratorDialect
+        What it understands.
+    ceiling : float
+        V; |offset| + peak amplitude is never set above it.
+
+    Notes
+    -----
+    Every method may raise `LinkClosed`, `LinkBroken`, `NoAnswer`, `ReplyError`, `InstrumentError` and `SettingRefused`.
+    The first four leave it unknown whether the setting was made (reopen, restore); after the last two the instrument
+    keeps the value it reads back. None of them changes whether the output is on, except `output` and `be_safe`.
+    """
+
+    def __init__(self, session: Session, dialect: GeneratorDialect, *, ceiling: float = math.inf) -> None:
+        super().__init__(session, dialect.identity)
+        self._dialect, self._ceiling = dialect, ceiling
+        self._amplitude = self._offset = 0.0
+
+    def be_safe(self) -> None:
+        """Turn the output off and see it confirmed; works on any open link, whatever was set before."""
+        self._forget("output")
+        self.output(False)
+
+    def set_load(self, load: float) -> float:
+        """Tell the load in ohms that amplitudes refer to (inf: the open circuit); return it.
+
+        Amplitude and offset count as unset afterwards: an instrument rescales them.
+
+        Raises
+        ------
+        ValueError
+            The instrument cannot be told, and assumes another load.
+        """
+        slot = self._dialect.load
+        if not slot.set:
+            if load != slot.fixed:
+                raise ValueError(f"load must be {slot.fixed:g} ohm, the dialect has no command for it, got {load!r}")
+            return load
+        self._remember("load", "", partial(self.set_load, load))
+        if math.isinf(load) and slot.high:
+            text = slot.set.format(value=slot.high)
+            self._once("load", text, partial(self._command_unread, text))
+            found = load
+        else:
+            found = self._set_number("load", slot, load)
+        self._forget("amplitude", "offset")
+        return found
+
+    def set_sine(self) -> None:
+        """Make the output a steady sine."""
+        self._remember("sine", "", self.set_sine)
+        shape = self._dialect.shape
+        for text in shape.sine[:-1]:
+            self._once(text, text, partial(self.session.command, text))
+        for text in shape.sine[-1:]:
+            self._once(text, text, partial(self._command_and_compare, text, shape.query, shape.is_sine))
+
+    def set_frequency(self, frequency: float) -> float:
+        """Set the frequency in Hz; return the one read back."""
+        self._remember("frequency", "", partial(self.set_frequency, frequency))
+        return self._set_number("frequency", self._dialect.frequency, frequency)
+
+    def set_amplitude(self, amplitude: float) -> float:
+        """Set the amplitude in V, peak, at the load assumed; return the one read back."""
+        self._check_ceiling(amplitude, self._offset)
+        self._remember("amplitude", "", partial(self.set_amplitude, amplitude))
+        factor = _PER_PEAK[self._dialect.amplitude.meaning]
+        self._amplitude = amplitude
+        return self._set_number("amplitude", self._dialect.amplitude, amplitude * factor) / factor
+
+    def set_offset(self, offset: float) -> float:
+        """Set the offset in V; return the one read back."""
+        self._check_ceiling(self._amplitude, offset)
+        self._remember("offset", "", partial(self.set_offset, offset))
+        self._offset = offset
+        return self._set_number("offset", self._dialect.offset, offset)
+
+    def output(self, on: bool) -> None:
+        """Turn the output on or off and see it confirmed; `restore` does this last."""
+        self._remember("output", "", partial(self.output, on), last=True)
+        self._set_toggle("output", self._dialect.output, on)
+
+    def reset(self) -> None:
+        """Bring the instrument to its start settings; see `Instrument.reset`."""
+        self._amplitude = self._offset = 0.0
+        super().reset()
+
+    def restore(self) -> None:
+        """Make all settings again, the output last; see `Instrument.restore`."""
+        output = self._journal.pop(("output", ""), None)
+        if output is not None:
+            self._journal["output", ""] = output
+        super().restore()
+
+    def _command_unread(self, text: str) -> tuple[ErrorEntry, ...]:
+        self.session.command(text)
+        return self.check_errors()
+
+    def _check_ceiling(self, amplitude: float, offset: float) -> None:
+        if not abs(offset) + abs(amplitude) <= self._ceiling:
+            raise ValueError(
+                f"|offset| + peak amplitude must not exceed {self._ceiling:g} V, got {abs(offset) + abs(amplitude):g} V"
+            )

@@ -1,0 +1,195 @@
+"""What every instrument does: identify, set and read back, remember its settings and replay them."""
+
+from __future__ import annotations
+
+import math
+import re
+from collections.abc import Callable
+from typing import Any, TypeVar
+
+from bandproof.drivers.dialect import Choice, Identity, Number, Toggle
+from bandproof.drivers.errors import SettingRefused
+from bandproof.drivers.scpi import ErrorEntry, parse_number, split_fields
+from bandproof.drivers.session import Session, as_text
+
+__all__ = ["Instrument"]
+
+T = TypeVar("T")
+
+
+class Instrument:
+    """Base of generator, scope and switch.
+
+    A setting that was made is remembered; made again alike, it costs no message. After `reopen` nothing counts as
+    set, and `restore` makes the remembered settings again.
+
+    Parameters
+    ----------
+    session : Session
+        The conversation.
+    identity : Identity
+        From the dialect.
+    """
+
+    def __init__(self, session: Session, identity: Identity) -> None:
+        self.session, self._identity = session, identity
+        self._journal: dict[tuple[str, object], Callable[[], object]] = {}
+        self._made: dict[str, Any] = {}
+
+    @property
+    def address(self) -> str:
+        """Where the instrument is, as PyVISA spells it."""
+        return self.session.address
+
+    def identify(self) -> str:
+        """Return what the instrument says it is, after comparing it with the dialect's pattern.
+
+        Raises
+        ------
+        ReplyError
+            It is not the kind of instrument the dialect is for; the link has to be reopened.
+        LinkClosed, LinkBroken, NoAnswer
+            See `Link.transaction`.
+        """
+        return self.session.ask(self._identity.query, self._checked_identity)
+
+    def reset(self) -> None:
+        """Bring the instrument to its start settings and forget old errors and all remembered settings.
+
+        Raises
+        ------
+        InstrumentProblem
+            See `Session.command`; the settings are then unknown.
+        """
+        self._journal.clear()
+        self._made.clear()
+        for text in (self._identity.clear, self._identity.reset):
+            if text:
+                self.session.command(text)
+
+    def check_errors(self) -> tuple[ErrorEntry, ...]:
+        """Empty the error queue; see `Session.check_errors`."""
+        return self.session.check_errors()
+
+    def reopen(self) -> None:
+        """Close and open the link; the instrument's settings count as unknown until `restore`.
+
+        Raises
+        ------
+        LinkBroken
+            It could not be opened.
+        """
+        self._made.clear()
+        self.session.link.reopen()
+
+    def restore(self) -> None:
+        """Make all remembered settings again, in their order.
+
+        Raises
+        ------
+        InstrumentProblem
+            Of the first setting that fails; reopen and restore again.
+        """
+        self._made.clear()
+        for again in list(self._journal.values()):
+            again()
+
+    def disconnect(self) -> None:
+        """Close the link; nothing is sent."""
+        self.session.link.close()
+
+    def _remember(self, slot: str, key: object, again: Callable[[], object], *, last: bool = False) -> None:
+        if last:
+            self._journal.pop((slot, key), None)
+        self._journal[slot, key] = again
+
+    def _once(self, slot: str, text: str, make: Callable[[], T]) -> T:
+        """Return what `make` returned when `slot` was last made with the same text, or make it now."""
+        made = self._made.get(slot)
+        if made is None or made[0] != text:
+            self._made.pop(slot, None)
+            self._made[slot] = made = (text, make())
+        result: T = made[1]
+        return result
+
+    def _forget(self, *slots: str) -> None:
+        for slot in slots:
+            self._made.pop(slot, None)
+
+    def _set_number(self, slot: str, number: Number, value: float, channel: str = "") -> float:
+        """Set a number in SI and return the value read back; the instrument's own errors come first."""
+        _check_limits(slot, number, value)
+        text = number.set.format(value=_spelt(number, value), channel=channel)
+        return self._once(slot + channel, text, lambda: self._set_and_read(number, value, text, channel))
+
+    def _set_and_read(self, number: Number, value: float, text: str, channel: str) -> float:
+        self.session.command(text)
+        if not number.query:
+            self.check_errors()
+            return value
+        found = self._read_number(number, channel)
+        self.check_errors()
+        if not _is_accepted(number, value, found):
+            low, high = number.readback
+            accepted = f"{low:.9g} to {high:.9g} times that, or within {number.absolute:g}"
+            raise SettingRefused(
+                self.address, text, f"{value:.9g}", f"{found:.9g}", accepted, self.session.setting_line
+            )
+        return found
+
+    def _read_number(self, number: Number, channel: str = "") -> float:
+        """Ask for a number and return it in SI."""
+        return self.session.ask(number.query.format(channel=channel), lambda line: _understood(number, line))
+
+    def _set_choice(self, slot: str, choice: Choice, word: str, channel: str = "") -> None:
+        if word not in choice.words:
+            raise ValueError(f"{slot} must be one of {', '.join(choice.words) or 'nothing'}, got {word!r}")
+        theirs = choice.words[word]
+        text, query = choice.set.format(value=theirs, channel=channel), choice.query.format(channel=channel)
+        self._once(slot + channel, text, lambda: self._command_and_compare(text, query, theirs))
+
+    def _set_toggle(self, slot: str, toggle: Toggle, on: bool, channel: str = "") -> None:
+        text = (toggle.on if on else toggle.off).format(channel=channel)
+        query, expected = toggle.query.format(channel=channel), toggle.is_on if on else toggle.is_off
+        self._once(slot + channel, text, lambda: self._command_and_compare(text, query, expected))
+
+    def _command_and_compare(self, text: str, query: str, expected: str) -> None:
+        self.session.command(text)
+        found = self.session.ask(query, as_text) if query else expected
+        self.check_errors()
+        if found.strip("\"'").upper() != expected.upper():
+            raise SettingRefused(self.address, text, expected, found, expected, self.session.setting_line)
+
+    def _checked_identity(self, line: bytes) -> str:
+        text = as_text(line)
+        if not re.search(self._identity.pattern, text):
+            raise ValueError(f"an identity that fits {self._identity.pattern!r}")
+        return text
+
+
+def _check_limits(slot: str, number: Number, value: float) -> None:
+    low, high = number.limits
+    if not low <= value <= high:
+        raise ValueError(f"{slot} must be from {low:g} to {high:g} by the dialect, got {value!r}")
+
+
+def _spelt(number: Number, value: float) -> str:
+    """Return a value in SI as the instrument wants it written."""
+    theirs = (1 / value if number.reciprocal else value) / number.unit
+    return format(round(theirs) if number.format == "d" else theirs, number.format)
+
+
+def _understood(number: Number, line: bytes) -> float:
+    """Return the value in SI of an instrument's answer."""
+    fields = split_fields(line)
+    if number.place >= len(fields):
+        raise ValueError(f"at least {number.place + 1} fields between commas")
+    theirs = parse_number(fields[number.place]) * number.unit
+    if not math.isfinite(theirs) or (number.reciprocal and theirs == 0):
+        raise ValueError("a finite number")
+    return 1 / theirs if number.reciprocal else theirs
+
+
+def _is_accepted(number: Number, asked: float, found: float) -> bool:
+    low, high = sorted(asked * limit for limit in number.readback)
+    return low <= found <= high or abs(found - asked) <= number.absolute

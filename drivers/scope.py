@@ -1,0 +1,241 @@
+"""A two-channel scope or digitizer: channels, record, acquisition, volts at the probe tips."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import partial
+from typing import TYPE_CHECKING, Literal
+
+from bandproof.drivers.dialect import Number, ScopeDialect
+from bandproof.drivers.instrument import Instrument
+from bandproof.drivers.record import read_channel
+from bandproof.drivers.session import Session, as_text
+
+if TYPE_CHECKING:
+    import numpy as np
+    from numpy.typing import NDArray
+
+__all__ = ["ChannelSetting", "Coupling", "Record", "RecordSetting", "Scope"]
+
+Coupling = Literal["DC", "AC"]
+
+
+@dataclass(frozen=True, slots=True)
+class ChannelSetting:
+    """How a channel is set, as read back; `range` (peak) and `offset` are volts at the probe tip."""
+
+    range: float
+    offset: float
+    coupling: Coupling
+    bandwidth_limit: bool
+    probe_factor: float
+
+
+@dataclass(frozen=True, slots=True)
+class RecordSetting:
+    """The record as read back; `duration` is points times sample interval, in s."""
+
+    sample_interval: float
+    points: int
+    duration: float
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Record:
+    """One acquisition of both channels.
+
+    Parameters
+    ----------
+    volts : (2, N) float64 array
+        At the probe tips; read-only.
+    sample_interval : float
+        s, the one really used.
+    overload : (2,) bool array
+        A sample stands at the end of the converter; read-only.
+    lsb : (2,) float64 array
+        V at the probe tip, one code of the converter; read-only.
+    """
+
+    volts: NDArray[np.float64]
+    sample_interval: float
+    overload: NDArray[np.bool_]
+    lsb: NDArray[np.float64]
+
+
+class Scope(Instrument):
+    """A scope as its dialect describes it.
+
+    Parameters
+    ----------
+    session : Session
+        The conversation.
+    dialect : ScopeDialect
+        What it understands.
+
+    Notes
+    -----
+    Every method may raise `LinkClosed`, `LinkBroken`, `NoAnswer`, `ReplyError`, `InstrumentError` and `SettingRefused`.
+    A scope drives nothing: after any of them the board is as it was, only the scope's settings may be unknown.
+    """
+
+    def __init__(self, session: Session, dialect: ScopeDialect) -> None:
+        super().__init__(session, dialect.identity)
+        self._dialect = dialect
+        self._channels: dict[int, ChannelSetting] = {}
+        self._record: RecordSetting | None = None
+
+    def be_safe(self) -> None:
+        """Do nothing: a scope drives nothing."""
+
+    def set_channel(
+        self,
+        channel: int,
+        *,
+        range: float,  # noqa: A002 -- the trade's word
+        offset: float = 0.0,
+        coupling: Coupling = "DC",
+        bandwidth_limit: bool = True,
+        probe_factor: float = 1.0,
+    ) -> ChannelSetting:
+        """Set a channel and return its setting as read back.
+
+        Parameters
+        ----------
+        channel : {1, 2}
+            First or second input.
+        range, offset : float
+            V at the probe tip, peak and middle.
+        coupling : {"DC", "AC"}
+            Of the input.
+        bandwidth_limit : bool
+            Ignored where the dialect has no command for it; the setting returned then says False.
+        probe_factor : float
+            10 for a 10:1 probe; multiplied in software where the instrument cannot.
+        """
+        options = {"range": range, "offset": offset, "coupling": coupling}
+        more = {"bandwidth_limit": bandwidth_limit, "probe_factor": probe_factor}
+        self._remember("channel", channel, partial(self.set_channel, channel, **options, **more))  # type: ignore[arg-type]
+        name = self._name(channel)
+        self._channels.pop(channel, None)
+        found_probe = self._set_probe(name, probe_factor)
+        self._set_coupling(name, coupling)
+        limited = self._set_bandwidth(name, bandwidth_limit)
+        software = 1.0 if self._dialect.probe_factor.set else probe_factor
+        found_range = self._set_range(name, range / software) * software
+        found_offset = self._set_offset(name, offset / software) * software
+        setting = ChannelSetting(found_range, found_offset, coupling, limited, found_probe)
+        self._channels[channel] = setting
+        return setting
+
+    def set_record(self, duration: float, points: int) -> RecordSetting:
+        """Set the record's duration in s and its points; return what is really used."""
+        self._remember("record", "", partial(self.set_record, duration, points))
+        self._record = None
+        text = f"{duration!r} {points}"
+        self._record = self._once("record", text, partial(self._set_and_read_record, duration, points))
+        return self._record
+
+    def acquire(self) -> Record:
+        """Take one record of both channels, at once, and return it in volts at the probe tips.
+
+        Raises
+        ------
+        ValueError
+            Channels or record have not been set.
+        """
+        import numpy as np
+
+        record, channels = self._settings()
+        self._once("prepare", "", self._prepare)
+        self._start_and_wait(record.duration)
+        traces = [
+            read_channel(self.session, self._dialect, self._name(number), record.points, setting)
+            for number, setting in channels
+        ]
+        self.check_errors()
+        volts, overload, lsb = (np.array(column) for column in zip(*traces, strict=True))
+        for array in (volts, overload, lsb):
+            array.flags.writeable = False
+        return Record(volts, record.sample_interval, overload, lsb)
+
+    def reopen(self) -> None:
+        """Close and open the link; see `Instrument.reopen`."""
+        self._channels.clear()
+        self._record = None
+        super().reopen()
+
+    def _settings(self) -> tuple[RecordSetting, list[tuple[int, ChannelSetting]]]:
+        if self._record is None or set(self._channels) != {1, 2}:
+            raise ValueError("set_channel(1), set_channel(2) and set_record must come before acquire")
+        return self._record, sorted(self._channels.items())
+
+    def _set_probe(self, name: str, factor: float) -> float:
+        if not self._dialect.probe_factor.set:
+            return factor
+        return self._set_number("probe_factor", self._dialect.probe_factor, factor, name)
+
+    def _set_coupling(self, name: str, coupling: Coupling) -> None:
+        if self._dialect.coupling.set:
+            self._set_choice("coupling", self._dialect.coupling, coupling, name)
+        elif coupling not in (self._dialect.coupling.words or {"DC": ""}):
+            raise ValueError(f"coupling must be what the instrument has without a command, got {coupling!r}")
+
+    def _set_bandwidth(self, name: str, limited: bool) -> bool:
+        if not self._dialect.bandwidth_limit.on:
+            return False
+        self._set_toggle("bandwidth_limit", self._dialect.bandwidth_limit, limited, name)
+        return limited
+
+    def _set_range(self, name: str, peak: float) -> float:
+        before = self._made.get("range" + name)
+        found = self._set_number("range", self._dialect.range, peak, name)
+        if self._made.get("range" + name) is not before:
+            self._forget("offset" + name)  # a new range may have moved or rounded it
+        return found
+
+    def _set_offset(self, name: str, offset: float) -> float:
+        if self._dialect.offset.set:
+            return self._set_number("offset", self._dialect.offset, offset, name)
+        if offset:
+            raise ValueError(f"offset must be 0, the dialect has no command for it, got {offset!r}")
+        return 0.0
+
+    def _set_and_read_record(self, duration: float, points: int) -> RecordSetting:
+        self._forget("points", "duration")
+        used = round(self._set_if_possible("points", self._dialect.points, points))
+        self._set_if_possible("duration", self._dialect.duration, duration)
+        interval = self._read_number(self._dialect.interval)
+        if self._dialect.points.query:  # the duration may have changed them
+            used = round(self._read_number(self._dialect.points))
+        return RecordSetting(interval, used, used * interval)
+
+    def _set_if_possible(self, slot: str, number: Number, value: float) -> float:
+        return self._set_number(slot, number, value) if number.set else self._read_number(number)
+
+    def _prepare(self) -> None:
+        for text in self._dialect.acquisition.prepare:
+            self.session.command(text)
+        self.check_errors()
+
+    def _start_and_wait(self, duration: float) -> None:
+        slot = self._dialect.acquisition
+        expected = duration + slot.latency
+        if slot.completes == "awaited":
+            self.session.command(slot.start, confirm=slot.complete, expected=expected)
+        else:
+            self.session.command(slot.start)
+            self._poll(expected)
+
+    def _poll(self, expected: float) -> None:
+        slot, clock = self._dialect.acquisition, self.session.link.clock
+        limit = 2.0 + 3 * expected  # bench seconds: as generous as the real clock's patience
+        end = clock.now() + limit
+        while self.session.ask(slot.complete, as_text) != slot.is_complete:
+            if clock.now() >= end:
+                self.session.give_up(slot.complete, limit)
+            clock.wait(slot.poll)
+
+    def _name(self, channel: int) -> str:
+        if not 1 <= channel <= min(2, len(self._dialect.channels)):
+            raise ValueError(f"channel must be 1 or 2, got {channel!r}")
+        return self._dialect.channels[channel - 1]
