@@ -1,6 +1,6 @@
 """Verdicts against limits.
 
-Source: JCGM 106:2012, conformance probability for a normal state of knowledge, and simple acceptance (a guard band of 0).
+Source: JCGM 106:2012, conformance probability for a normal state of knowledge; simple acceptance (no guard band).
 """
 
 from __future__ import annotations

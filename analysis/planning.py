@@ -38,7 +38,7 @@ def band_frequencies(f0: ArrayLike, q: ArrayLike) -> FloatArray:
     Examples
     --------
     >>> band_frequencies([1000.0], [2.0]).round(1)[0, [0, 5, 10]]
-    array([ 554.4, 1000. , 1803.9])
+    array([ 554.2, 1000. , 1804.2])
     """
     detuning = np.array(_DETUNINGS) / np.atleast_1d(np.asarray(q, dtype=np.float64))[:, None]
     x = 0.5 * detuning + np.sqrt(1 + 0.25 * detuning**2)
@@ -118,9 +118,9 @@ def dwell_after_step(
 ) -> float:
     """Return how long to wait after the generator changed before a record starts, in s.
 
-    The transient that is left, carried through the sine fit of the record (offset fitted too), must stay below eps of the
-    response at every one of the nodes, whatever the phases before and after the change. A slow coupling corner hardly
-    passes the fit, so that it costs no waiting.
+    The transient that is left, carried through the sine fit of the record (offset fitted too), must stay below eps of
+    the response at every one of the nodes, whatever the phases before and after the change. A slow coupling corner
+    hardly passes the fit, so that it costs no waiting.
 
     Parameters
     ----------
@@ -178,8 +178,7 @@ def _shortest(a: FloatArray, excess: Callable[[FloatArray], float], frequency: f
 
 
 def _steady_state(a: FloatArray, b: FloatArray, frequency: float) -> ComplexArray:
-    state: ComplexArray = np.linalg.solve(2j * np.pi * frequency * np.eye(len(a)) - a, b.astype(np.complex128))
-    return state
+    return np.asarray(np.linalg.solve(2j * np.pi * frequency * np.eye(len(a)) - a, b), dtype=np.complex128)
 
 
 def _fit_of_transient(a: FloatArray, c: FloatArray, frequency: float, duration: float) -> ComplexArray:
@@ -194,4 +193,5 @@ def _fit_of_transient(a: FloatArray, c: FloatArray, frequency: float, duration: 
     while len(course) < _SHAPE_SAMPLES:  # doubling: the second half is the first, propagated
         course = np.concatenate([course, course @ power])
         power = power @ power
-    return np.einsum("i,imn->mn", fit, course)
+    weights: ComplexArray = np.einsum("i,imn->mn", fit, course)
+    return weights
