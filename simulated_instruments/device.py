@@ -83,7 +83,7 @@ class Device:
         return self._values.get((name, suffixes), self._settings[name].parameter.default)
 
     def changed(self, name: str, suffixes: tuple[int, ...]) -> None:
-        """Take note that a setting took effect at `self.at`; for the instrument to override."""
+        """Take note that a setting took effect at `self.at`, or raise ScpiError; for the instrument to override."""
 
     def reset(self) -> None:
         """*RST: settings to their defaults, operations dropped; status and queue stay."""
@@ -151,8 +151,13 @@ class Device:
 
     def _access(self, setting: Setting) -> list[Command]:
         def store(suffixes: tuple[int, ...], value: Any) -> None:
-            self._values[setting.name, suffixes] = setting.rounded(value)
-            self.changed(setting.name, suffixes)
+            key, before = (setting.name, suffixes), self.value(setting.name, *suffixes)
+            self._values[key] = setting.rounded(value)
+            try:
+                self.changed(setting.name, suffixes)
+            except ScpiError:
+                self._values[key] = before
+                raise
 
         def show(suffixes: tuple[int, ...], extreme: float | None = None) -> bytes:
             return setting.parameter.show(self.value(setting.name, *suffixes) if extreme is None else extreme)

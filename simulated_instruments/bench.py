@@ -1,0 +1,235 @@
+"""A whole simulated bench: the world it stands for, its serving loop, and the handle on a process that runs it."""
+
+import asyncio
+import contextlib
+import json
+import subprocess
+import sys
+import tempfile
+import threading
+from collections.abc import Callable, Mapping
+from dataclasses import asdict, dataclass, field
+from pathlib import Path
+from typing import IO, Any
+
+from bandproof.analysis.network import Network, from_plain, to_plain
+from bandproof.simulated_instruments.device import Device, Timing
+from bandproof.simulated_instruments.faults import UNFINISHED, Fault, FaultPlan
+from bandproof.simulated_instruments.generator import Generator
+from bandproof.simulated_instruments.imperfections import Imperfections
+from bandproof.simulated_instruments.scope import Scope
+from bandproof.simulated_instruments.switch_supply import Switch
+from bandproof.simulated_instruments.timebase import Timebase, open_timebase
+from bandproof.simulated_instruments.transport import serve
+from bandproof.simulated_instruments.wiring import Wiring
+
+__all__ = ["Bench", "BenchNotStarted", "World", "instruments", "run", "serve_until_closed", "start"]
+
+
+class BenchNotStarted(Exception):
+    """The server process ended before it named its ports."""
+
+    def __init__(self, code: int | None, words: str) -> None:
+        super().__init__(code, words)
+        self.code, self.words = code, words
+
+    def __str__(self) -> str:
+        return f"the simulated bench ended with code {self.code} before it listened: {self.words.strip()[-2000:]}"
+
+
+@dataclass(frozen=True, slots=True)
+class World:
+    """Everything a simulated bench is.
+
+    Attributes
+    ----------
+    network : Network
+        As drawn, without the generator's output resistance.
+    scope : mapping
+        Channels 1 and 2 to a node, or to "switch".
+    routes : mapping
+        Channels of the switch to nodes.
+    seed, run : int
+        With step and attempt they seed the noise.
+    imperfections : Imperfections
+    timing : Timing
+    faults : tuple of Fault
+    clock : str or None
+        Path of the time file; None: real time.
+    """
+
+    network: Network
+    scope: Mapping[int, str]
+    routes: Mapping[str, str] = field(default_factory=dict)
+    seed: int = 0
+    run: int = 0
+    imperfections: Imperfections = field(default_factory=Imperfections)
+    timing: Timing = field(default_factory=Timing)
+    faults: tuple[Fault, ...] = ()
+    clock: str | None = None
+
+    def __post_init__(self) -> None:
+        if set(self.scope) != {1, 2}:
+            raise ValueError(f"scope must name what channels 1 and 2 see, found {dict(self.scope)!r}")
+
+    def as_plain(self) -> dict[str, Any]:
+        """Return a dictionary for JSON."""
+        return {
+            "network": to_plain(self.network),
+            "scope": {str(channel): node for channel, node in self.scope.items()},
+            "routes": dict(self.routes),
+            "seed": self.seed,
+            "run": self.run,
+            "imperfections": self.imperfections.as_plain(),
+            "timing": asdict(self.timing),
+            "faults": [fault.as_plain() for fault in self.faults],
+            "clock": None if self.clock is None else str(self.clock),
+        }
+
+    @classmethod
+    def from_plain(cls, plain: Mapping[str, Any]) -> "World":
+        """Return what `as_plain` gave, before or after JSON."""
+        return cls(
+            network=from_plain(plain["network"]),
+            scope={int(channel): node for channel, node in plain["scope"].items()},
+            routes=dict(plain["routes"]),
+            seed=plain["seed"],
+            run=plain["run"],
+            imperfections=Imperfections.from_plain(plain["imperfections"]),
+            timing=Timing(**plain["timing"]),
+            faults=tuple(Fault.from_plain(fault) for fault in plain["faults"]),
+            clock=plain["clock"],
+        )
+
+
+def instruments(world: World, timebase: Timebase, plan: FaultPlan) -> dict[str, Device]:
+    """Return the instruments of a world, by name, in front of one board."""
+    wiring = Wiring(
+        world.network,
+        scope=world.scope,
+        routes=world.routes,
+        imperfections=world.imperfections,
+        seed=world.seed,
+        run=world.run,
+    )
+
+    def never_completes() -> bool:
+        plan.count_record()
+        return plan.due("scope", (UNFINISHED,)) is not None
+
+    scope = Scope(
+        wiring,
+        imperfections=world.imperfections,
+        timing=world.timing,
+        seed=world.seed,
+        run=world.run,
+        mark=timebase.mark,
+        never_completes=never_completes,
+    )
+    generator = Generator(wiring.board, imperfections=world.imperfections, timing=world.timing)
+    return {"generator": generator, "scope": scope, "switch": Switch(wiring, timing=world.timing)}
+
+
+async def run(world: World, announce: Callable[[dict[str, int]], None], stop: asyncio.Event) -> None:
+    """Serve a world until `stop` is set; `announce` is handed the ports by instrument."""
+    timebase = open_timebase(None if world.clock is None else Path(world.clock))
+    plan = FaultPlan(world.faults, timebase)
+    devices = instruments(world, timebase, plan)
+    servers = {name: await serve(name, device, timebase, plan) for name, device in devices.items()}
+    announce({name: server.sockets[0].getsockname()[1] for name, server in servers.items()})
+    await stop.wait()
+    for server in servers.values():
+        server.close()
+
+
+def serve_until_closed(source: IO[str], target: IO[str]) -> None:
+    """Read a world as one line of JSON, write the ports as one line of JSON, serve until the source ends."""
+    world = World.from_plain(json.loads(source.readline()))
+
+    def announce(ports: dict[str, int]) -> None:
+        target.write(json.dumps(ports) + "\n")
+        target.flush()
+
+    async def main() -> None:
+        stop, loop = asyncio.Event(), asyncio.get_running_loop()
+
+        def watch() -> None:
+            while source.read(4096):
+                pass
+            loop.call_soon_threadsafe(stop.set)
+
+        threading.Thread(target=watch, daemon=True).start()
+        await run(world, announce, stop)
+
+    asyncio.run(main())
+
+
+@dataclass(slots=True)
+class Bench:
+    """A running simulated bench; a context manager that stops it.
+
+    `ports` are TCP ports on 127.0.0.1 of generator, scope and switch.
+    """
+
+    ports: dict[str, int]
+    process: subprocess.Popen[str]
+
+    def stop(self, patience: float = 5.0) -> None:
+        """End the server process, kill it if it does not end within `patience` s. May be called twice."""
+        if self.process.stdin is not None:
+            with contextlib.suppress(BrokenPipeError):
+                self.process.stdin.close()
+        try:
+            self.process.wait(patience)
+        except subprocess.TimeoutExpired:
+            self.process.kill()
+            self.process.wait()
+        if self.process.stdout is not None:
+            self.process.stdout.close()
+
+    def __enter__(self) -> "Bench":
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self.stop()
+
+
+def start(world: World) -> Bench:
+    """Start a server process for a world and wait until it listens.
+
+    The process ends when this one does, however it ends: its standard input closes. It is out of reach of the
+    terminal's Ctrl-C, so that the controller can still switch its generator off.
+
+    Raises
+    ------
+    BenchNotStarted
+        The process ended before it listened; its last words are in the text.
+    """
+    command = [sys.executable, "-m", "bandproof.simulated_instruments", "--world"]
+    with tempfile.TemporaryFile("w+") as errors:  # a pipe that nobody reads could fill and block the server
+        process = subprocess.Popen(
+            command,
+            stdin=subprocess.PIPE,
+            stdout=subprocess.PIPE,
+            stderr=errors,
+            text=True,
+            start_new_session=True,
+        )
+        line = _introduce(process, world)
+        if line:
+            return Bench(json.loads(line), process)
+        Bench({}, process).stop()
+        errors.seek(0)
+        raise BenchNotStarted(process.returncode, errors.read())
+
+
+def _introduce(process: subprocess.Popen[str], world: World) -> str:
+    """Hand the world over and return the line of ports, empty if the process ended."""
+    assert process.stdin is not None
+    assert process.stdout is not None
+    try:
+        process.stdin.write(json.dumps(world.as_plain()) + "\n")
+        process.stdin.flush()
+    except BrokenPipeError:
+        return ""
+    return process.stdout.readline()

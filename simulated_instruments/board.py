@@ -1,0 +1,214 @@
+"""The world behind the instruments: volts at the scope's inputs as a pure function of time and stamped events.
+
+Between two events everything is linear and time-invariant, so the solution is exact: steady state plus decaying modes,
+carried from event to event. An event is a change of the generator, of the routes, or of a channel's coupling. The
+generator's EMF is `offset + amplitude sin(2 pi frequency (t - event))`: its phase begins at each event of its own.
+
+Clipping is memoryless: a tap that is an op-amp output is limited to +-swing, and what lies behind that op-amp
+still sees the unlimited voltage; slew rate is not modelled.
+"""
+
+from bisect import bisect_right
+from collections.abc import Sequence
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from bandproof.analysis.network import GROUND, Network, state_space
+from bandproof.simulated_instruments.dynamics import ComplexArray, Dynamics, FloatArray
+
+__all__ = ["Board", "Drive", "FrontEnd", "Section"]
+
+HISTORY = 256  # events kept, arbitrary: more than fall into one record
+
+
+@dataclass(frozen=True, slots=True)
+class Drive:
+    """EMF of the generator: Hz, V peak, V."""
+
+    frequency: float = 1000.0
+    amplitude: float = 0.0
+    offset: float = 0.0
+
+
+@dataclass(frozen=True, slots=True)
+class Section:
+    """First-order section: w' = rate (input - w), output = through input + stored w; rate in 1/s.
+
+    A high-pass has through 1, stored -1; a low-pass 0, 1; a probe with an error e of its compensation 1 + e, -e.
+    """
+
+    rate: float
+    through: float
+    stored: float
+
+
+@dataclass(frozen=True, slots=True)
+class FrontEnd:
+    """What a channel looks at and through: a node (None: an open input), sections in order, grounded or not."""
+
+    node: str | None
+    sections: tuple[Section, ...] = ()
+    grounded: bool = False
+
+
+@dataclass(frozen=True, slots=True)
+class _Event:
+    at: float
+    drive_at: float
+    drive: Drive
+    front_ends: tuple[FrontEnd, ...]
+    dynamics: Dynamics
+    constant: FloatArray  # (n,) steady state of the constant inputs
+    phasor: ComplexArray  # (n,) steady state of the sine, peak, phase from drive_at
+    free: ComplexArray  # (n,) what decays, at the event
+
+
+@dataclass(slots=True)
+class Board:
+    """A drawn network behind the generator's output resistance, seen through front ends.
+
+    Parameters
+    ----------
+    network : Network
+        Including the generator's resistance; op-amps with finite gbw.
+    front_ends : sequence of FrontEnd
+        One per scope channel; the number and rates of their sections never change, only nodes and weights.
+
+    Raises
+    ------
+    ValueError
+        A node is unknown, or the network has no steady state at 0 Hz.
+    """
+
+    network: Network
+    front_ends: Sequence[FrontEnd]
+    _events: list[_Event] = field(init=False, default_factory=list)
+    _known: dict[tuple[FrontEnd, ...], Dynamics] = field(init=False, default_factory=dict)
+
+    def __post_init__(self) -> None:
+        drive, front_ends = Drive(), tuple(self.front_ends)
+        dynamics = self._dynamics(front_ends)
+        constant, phasor = self._steady(dynamics, drive)
+        free = np.zeros(len(constant), dtype=complex)  # the bench has been on for a long time
+        self._events.append(_Event(-1e9, 0.0, drive, front_ends, dynamics, constant, phasor, free))
+
+    @property
+    def drive(self) -> Drive:
+        """What the generator gives since its last event."""
+        return self._events[-1].drive
+
+    def set_drive(self, at: float, drive: Drive) -> None:
+        """Note what the generator gives from `at` on; its phase begins there."""
+        self._change(at, at, drive, self._events[-1].front_ends)
+
+    def set_front_end(self, at: float, channel: int, front_end: FrontEnd) -> None:
+        """Note what a channel (from 0) sees from `at` on."""
+        last = self._events[-1]
+        if last.front_ends[channel] == front_end:
+            return
+        front_ends = (*last.front_ends[:channel], front_end, *last.front_ends[channel + 1 :])
+        self._change(at, last.drive_at, last.drive, front_ends)
+
+    def volts(self, channel: int, first: float, interval: float, count: int, *, delay: float = 0.0) -> FloatArray:
+        """Return the volts a channel sees.
+
+        Parameters
+        ----------
+        channel : int
+            From 0.
+        first, interval : float
+            s: first instant and distance of instants.
+        count : int
+        delay : float
+            s by which the channel looks later.
+
+        Returns
+        -------
+        (count,) float array
+            V.
+        """
+        result = np.empty(count)
+        stamps = [event.at for event in self._events[1:]]
+        first += delay
+        at, done = bisect_right(stamps, first), 0
+        while done < count:
+            last = at == len(stamps)
+            stop = count if last else min(count, max(done, int(np.ceil((stamps[at] - first) / interval))))
+            if stop > done:
+                result[done:stop] = self._part(
+                    self._events[at], channel, first + done * interval, interval, stop - done
+                )
+            done, at = stop, at + 1
+        return result
+
+    def _part(self, event: _Event, channel: int, first: float, interval: float, count: int) -> FloatArray:
+        """Return volts while no event happens."""
+        front_end, system = event.front_ends[channel], event.dynamics
+        if front_end.grounded:
+            return np.zeros(count)
+        rows = np.array([2 * channel, 2 * channel + 1])  # through the front end; at the node
+        swing = self._swing(front_end.node)
+        rows = rows if np.isfinite(swing) else rows[:1]
+        inputs = self._inputs(event.drive)
+        constant = system.c[rows] @ event.constant + system.d[rows] @ inputs
+        phasor = system.c[rows] @ event.phasor + system.d[rows, 0] * event.drive.amplitude
+        start = event.drive.frequency * (first - event.drive_at) % 1.0
+        angle = 2 * np.pi * (start + event.drive.frequency * interval * np.arange(count))
+        volts: FloatArray = np.outer(phasor.real, np.sin(angle)) + np.outer(phasor.imag, np.cos(angle))
+        volts += constant[:, None]
+        volts += system.outputs(event.free, rows, first - event.at, interval, count)
+        if len(rows) == 1:
+            return np.asarray(volts[0])
+        return np.asarray(volts[0] - (volts[1] - np.clip(volts[1], -swing, swing)))
+
+    def _change(self, at: float, drive_at: float, drive: Drive, front_ends: tuple[FrontEnd, ...]) -> None:
+        last = self._events[-1]
+        at = max(at, last.at)
+        angle = 2 * np.pi * (last.drive.frequency * (at - last.drive_at) % 1.0)
+        state = last.constant + (last.phasor * np.exp(1j * angle)).imag + last.dynamics.later(last.free, at - last.at)
+        dynamics = self._dynamics(front_ends)
+        constant, phasor = self._steady(dynamics, drive)
+        angle = 2 * np.pi * (drive.frequency * (at - drive_at) % 1.0)
+        free = dynamics.free(state - constant - (phasor * np.exp(1j * angle)).imag)
+        self._events.append(_Event(at, drive_at, drive, front_ends, dynamics, constant, phasor, free))
+        del self._events[:-HISTORY]
+
+    def _inputs(self, drive: Drive) -> FloatArray:
+        return np.array([drive.offset, *(u.offset for u in self.network.opamps)])
+
+    def _steady(self, system: Dynamics, drive: Drive) -> tuple[FloatArray, ComplexArray]:
+        constant = system.constant(self._inputs(drive))
+        if drive.amplitude == 0:
+            return constant, np.zeros(len(constant), dtype=complex)
+        return constant, system.phasor(drive.frequency) * drive.amplitude
+
+    def _swing(self, node: str | None) -> float:
+        return min((u.swing for u in self.network.opamps if u.out == node), default=float("inf"))
+
+    def _dynamics(self, front_ends: tuple[FrontEnd, ...]) -> Dynamics:
+        if front_ends not in self._known:
+            self._known[front_ends] = _assemble(self.network, front_ends)
+        return self._known[front_ends]
+
+
+def _assemble(network: Network, front_ends: tuple[FrontEnd, ...]) -> Dynamics:
+    """Return the dynamics of network and front ends; outputs: per channel behind the front end, and at its node."""
+    board = state_space(network, [front_end.node or GROUND for front_end in front_ends])
+    n, extra = len(board.a), sum(len(front_end.sections) for front_end in front_ends)
+    a = np.zeros((n + extra, n + extra))
+    b = np.zeros((n + extra, board.b.shape[1]))
+    a[:n, :n], b[:n] = board.a, board.b
+    c, d = np.zeros((2 * len(front_ends), n + extra)), np.zeros((2 * len(front_ends), board.b.shape[1]))
+    state = n
+    for channel, front_end in enumerate(front_ends):
+        row, direct = np.concatenate([board.c[channel], np.zeros(extra)]), board.d[channel].copy()
+        c[2 * channel + 1], d[2 * channel + 1] = row, direct
+        for section in front_end.sections:
+            a[state], b[state] = section.rate * row, section.rate * direct
+            a[state, state] -= section.rate
+            row, direct = section.through * row, section.through * direct
+            row[state] += section.stored
+            state += 1
+        c[2 * channel], d[2 * channel] = row, direct
+    return Dynamics(a, b, c, d)

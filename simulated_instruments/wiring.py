@@ -1,0 +1,95 @@
+"""What the scope's channels are connected to: fixed nodes or the switch, through probes and couplings."""
+
+import math
+from collections.abc import Mapping
+
+import numpy as np
+
+from bandproof.analysis.network import Network
+from bandproof.simulated_instruments.board import Board, FrontEnd, Section
+from bandproof.simulated_instruments.imperfections import Imperfections
+
+__all__ = ["SWITCH", "Wiring"]
+
+SWITCH = "switch"  # stands for the node the closed route leads to
+
+
+class Wiring:
+    """Board, probes, routes and couplings of a bench.
+
+    Parameters
+    ----------
+    network : Network
+        As drawn, without the generator's output resistance.
+    scope : mapping
+        Channel (1, 2) to node or "switch".
+    routes : mapping
+        Switch channel to node.
+    imperfections : Imperfections
+    seed, run : int
+        For the scatter of reseated contacts.
+
+    Raises
+    ------
+    ValueError
+        A node is not in the network.
+    """
+
+    def __init__(
+        self,
+        network: Network,
+        *,
+        scope: Mapping[int, str],
+        routes: Mapping[str, str],
+        imperfections: Imperfections,
+        seed: int,
+        run: int,
+    ) -> None:
+        self.routes, self.closed = dict(routes), ""
+        self._imperfections, self._seed = imperfections, (seed, run)
+        self._taps = [scope[1], scope[2]]
+        self._couplings = ["DC", "DC"]
+        _check_nodes(network, [tap for tap in self._taps if tap != SWITCH] + list(routes.values()))
+        driven = network.driven_through(network.source_resistance + imperfections.output_resistance)
+        self.board = Board(driven, [self._front_end(channel) for channel in range(2)])
+
+    def couple(self, at: float, channel: int, coupling: str) -> None:
+        """Set a channel's (from 0) coupling: DC, AC or GRO."""
+        self._couplings[channel] = coupling
+        self.board.set_front_end(at, channel, self._front_end(channel))
+
+    def close(self, at: float, route: str) -> None:
+        """Close a route, the other ones open; the empty string opens all."""
+        self.closed = route
+        for channel, tap in enumerate(self._taps):
+            if tap == SWITCH:
+                self.board.set_front_end(at, channel, self._front_end(channel))
+
+    def contact(self, channel: int) -> float:
+        """Return the gain factor of the contact a channel (from 0) sees now."""
+        if self._taps[channel] != SWITCH or not self.closed or not self._imperfections.reseating:
+            return 1.0
+        draw = np.random.default_rng([*self._seed, int(self.closed), channel]).uniform(-1.0, 1.0)
+        return float(1 + self._imperfections.reseating * draw)
+
+    def _front_end(self, channel: int) -> FrontEnd:
+        tap, coupling = self._taps[channel], self._couplings[channel]
+        node = self.routes.get(self.closed) if tap == SWITCH else tap
+        return FrontEnd(node, tuple(self._sections(channel, coupling)), grounded=coupling == "GRO")
+
+    def _sections(self, channel: int, coupling: str) -> list[Section]:
+        """Return the probe and the coupling capacitor; the latter charges whether it is used or not."""
+        error, corner = self._imperfections.probe_compensation[channel], self._imperfections.ac_corner[channel]
+        found = []
+        if error and self._imperfections.probe_corner:
+            found.append(Section(2 * math.pi * self._imperfections.probe_corner, 1 + error, -error))
+        if corner:
+            found.append(Section(2 * math.pi * corner, 1.0, -1.0 if coupling == "AC" else 0.0))
+        return found
+
+
+def _check_nodes(network: Network, nodes: list[str]) -> None:
+    known = {*network.nodes, "0"}
+    for node in nodes:
+        if node not in known:
+            raise ValueError(f"there is no node {node!r} in the network; it has {', '.join(sorted(known))}")
