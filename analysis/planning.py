@@ -114,11 +114,13 @@ def dwell_after_step(
     duration: float,
     previous: float | None,
     eps: float = 1e-4,
+    nuisance: ArrayLike = (),
+    drift: bool = False,
     previous_level: float = 1.0,
 ) -> float:
     """Return how long to wait after the generator changed before a record starts, in s.
 
-    The transient that is left, carried through the sine fit of the record (offset fitted too), must stay below eps of
+    The transient that is left, carried through the sine fit of the record (as it will be made), must stay below eps of
     the response at every one of the nodes, whatever the phases before and after the change. A slow coupling corner
     hardly passes the fit, so that it costs no waiting.
 
@@ -136,6 +138,8 @@ def dwell_after_step(
         Hz, before the change; None: the output was off.
     eps : float
         Largest error relative to the response.
+    nuisance, drift
+        What the fit of the record takes along, as in `sine.fit_sines`; a drift absorbs most of a slow transient.
     previous_level : float
         EMF before the change over the EMF after it.
 
@@ -148,7 +152,7 @@ def dwell_after_step(
     steady = [(_steady_state(system.a, system.b[:, 0], frequency), 1.0)]
     if previous is not None:
         steady.append((_steady_state(system.a, system.b[:, 0], previous), previous_level))
-    weights = _fit_of_transient(system.a, system.c, frequency, duration)
+    weights = _fit_of_transient(system.a, system.c, frequency, duration, np.atleast_1d(nuisance), drift)
     allowed = eps * np.abs(response(network, [frequency], nodes)[:, 0])
     starts = np.stack([level * part for state, level in steady for part in (state, state.conj())], axis=1)
 
@@ -181,13 +185,17 @@ def _steady_state(a: FloatArray, b: FloatArray, frequency: float) -> ComplexArra
     return np.asarray(np.linalg.solve(2j * np.pi * frequency * np.eye(len(a)) - a, b), dtype=np.complex128)
 
 
-def _fit_of_transient(a: FloatArray, c: FloatArray, frequency: float, duration: float) -> ComplexArray:
+def _fit_of_transient(
+    a: FloatArray, c: FloatArray, frequency: float, duration: float, nuisance: FloatArray, drift: bool
+) -> ComplexArray:
     """Return (M, n): the phasor that a sine fit makes of a free transient, per unit of each state at its start."""
     from scipy.linalg import expm
 
     interval = duration / _SHAPE_SAMPLES
-    angle = 2 * np.pi * frequency * interval * np.arange(_SHAPE_SAMPLES)
-    inverse = np.linalg.pinv(np.stack([np.cos(angle), -np.sin(angle), np.ones_like(angle)], axis=-1))
+    line = np.arange(_SHAPE_SAMPLES) / _SHAPE_SAMPLES
+    angle = 2 * np.pi * duration * np.concatenate([[frequency], nuisance])[:, None] * line
+    columns = [np.cos(angle[0]), -np.sin(angle[0]), *np.cos(angle[1:]), *np.sin(angle[1:]), np.ones_like(line)]
+    inverse = np.linalg.pinv(np.stack([*columns, line] if drift else columns, axis=-1))
     fit = inverse[0] + 1j * inverse[1]
     course, power = c[None], expm(a * interval)
     while len(course) < _SHAPE_SAMPLES:  # doubling: the second half is the first, propagated

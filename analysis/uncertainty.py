@@ -63,7 +63,7 @@ class Row:
 
 @dataclass(frozen=True, slots=True)
 class Combined:
-    """A combined budget: rows, standard uncertainty u, type A part, effective dof, coverage factor, expanded U = k u."""
+    """A combined budget: rows, standard uncertainty, its type A part, effective dof, coverage factor k, U = k u."""
 
     rows: tuple[Row, ...]
     u: float
@@ -78,7 +78,8 @@ def combine(rows: Sequence[Row], *, coverage: float = 0.9545) -> Combined:
 
     Examples
     --------
-    >>> budget = combine([Row("fit", "A", "normal", 3.0, 1.0, inf, "fit"), Row("thru", "B", "normal", 2.0, 2.0, inf, "thru")])
+    >>> fit = Row("fit", "A", "normal", 3.0, 1.0, inf, "covariance of the fit")
+    >>> budget = combine([fit, Row("thru", "B", "normal", 2.0, 2.0, inf, "certificate")])
     >>> print(f"{budget.u:.3f} {budget.coverage_factor:.3f} {budget.expanded:.3f}")
     5.000 2.000 10.000
     """
