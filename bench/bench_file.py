@@ -1,0 +1,136 @@
+"""The bench file: instruments, wiring, ceilings and declared accuracy, every mistake reported at once."""
+
+import os
+from pathlib import Path
+from typing import Literal
+
+from bandproof.bench.errors import FileMistakes
+from bandproof.bench.reading import Mistakes, Table, nearest, parse_toml, read_text
+from bandproof.bench.types import Bench, Board, Instrument, Wire
+
+__all__ = ["check_wiring", "find_bench", "parse_bench", "read_bench"]
+
+Role = Literal["generator", "scope", "switch"]
+BY_HAND = "by hand"
+
+
+def find_bench(named: str | None, folder: Path = Path(".")) -> tuple[Path, str]:
+    """Return the bench file to use and why it was chosen: named, else the environment, else the only one in the folder.
+
+    Raises
+    ------
+    FileMistakes
+        None is named and the folder holds none, or several.
+    """
+    if named:
+        return Path(named), "named on the command line"
+    if from_environment := os.environ.get("BANDPROOF_BENCH"):
+        return Path(from_environment), "named by BANDPROOF_BENCH"
+    found = sorted(folder.glob("*.bench.toml"))
+    if len(found) == 1:
+        return found[0], "the only one in this folder"
+    which = ", ".join(path.name for path in found) or "none here"
+    raise FileMistakes(
+        str(folder), (f"which bench? {which}: name one with --bench or BANDPROOF_BENCH (`bandproof begin` writes one)",)
+    )
+
+
+def read_bench(path: Path) -> Bench:
+    """Return the bench a file describes; a dialect path is taken from the file's folder.
+
+    Raises
+    ------
+    FileMistakes
+        All mistakes found in the file, each with its key path.
+    """
+    return parse_bench(read_text(path), str(path))
+
+
+def parse_bench(text: str, path: str) -> Bench:
+    """Return the bench a text describes, as if it stood at ``path`` (FileMistakes with all mistakes)."""
+    mistakes = Mistakes(path)
+    top = Table(parse_toml(text, path), "", mistakes)
+    bench = _bench(top, text, Path(path).parent)
+    top.close()
+    mistakes.stop_if_any()
+    return bench
+
+
+def _bench(top: Table, text: str, folder: Path) -> Bench:
+    title, mains = top.text("title", "bench"), top.quantity("mains", "frequency")
+    ceiling, visa_library = top.quantity("ceiling", "voltage"), top.text("visa_library", "@py")
+    clock = top.text("simulated_clock", "")
+    generator, scope = top.table("generator"), top.table("scope")
+    frequency = generator.quantity("frequency_accuracy", "relative")
+    channel_gain = scope.quantity("channel_gain_accuracy", "relative")
+    instruments = {
+        "generator": _instrument("generator", generator, folder),
+        "scope": _instrument("scope", scope, folder),
+    }
+    if "switch" in top:
+        instruments["switch"] = _instrument("switch", top.table("switch"), folder)
+    return Bench(
+        title=title,
+        mains=mains,
+        ceiling=ceiling,
+        instruments=instruments,
+        wires=_wires(top.table("wiring"), "switch" in instruments),
+        probe_factors=_probes(top.table("probes")),
+        channel_gain=channel_gain,
+        generator_frequency=frequency,
+        visa_library=visa_library,
+        clock=str(folder / clock) if clock else None,
+        text=text,
+    )
+
+
+def _instrument(role: Role, table: Table, folder: Path) -> Instrument:
+    address, dialect = table.text("address"), table.text("dialect")
+    if dialect.endswith(".toml"):
+        dialect = str(folder / dialect)
+    table.close()
+    return Instrument(role, address, dialect)
+
+
+def _probes(table: Table) -> dict[int, float]:
+    factors = {channel: table.quantity(f"channel_{channel}", "number") for channel in (1, 2)}
+    table.close()
+    return factors
+
+
+def _wires(table: Table, has_switch: bool) -> dict[str, Wire]:
+    wires = {}
+    for name in table.names():
+        entry = table.table(name)
+        channel, route = entry.whole("channel", 1, 2), entry.text("route", "")
+        if route and route != BY_HAND and not has_switch:
+            entry.mistake("route", f'is a switch route, but there is no [switch]; write "{BY_HAND}" or add the table')
+        by_hand = route == BY_HAND
+        wires[name] = Wire(channel, None if by_hand or not route else route, by_hand)
+        entry.close()
+    return wires
+
+
+def check_wiring(board: Board, bench: Bench, path: str) -> None:
+    """Refuse a bench whose wiring does not reach the board's taps on two different channels.
+
+    Raises
+    ------
+    FileMistakes
+        Every tap that is not wired, or shares its channel with the other tap of its stage.
+    """
+    mistakes = Mistakes(path)
+    for stage in board.stages:
+        taps = (stage.tap_in, stage.tap_out)
+        for tap in taps:
+            if tap not in bench.wires:
+                mistakes.add(
+                    f"wiring.{tap}", f"missing; stage {stage.name!r} is measured there{nearest(tap, bench.wires)}"
+                )
+        channels = [bench.wires[tap].channel for tap in taps if tap in bench.wires]
+        if len(channels) == 2 and channels[0] == channels[1]:
+            mistakes.add(
+                f"wiring.{taps[1]}", f"is on channel {channels[0]} like {taps[0]!r}; a ratio needs both channels"
+            )
+    mistakes.findings[:] = dict.fromkeys(mistakes.findings)
+    mistakes.stop_if_any()

@@ -1,0 +1,178 @@
+"""From points to conclusions: the fit of each stage, its figures with their uncertainty, compared with the design."""
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from math import inf, isfinite, nan, sqrt
+
+import numpy as np
+from scipy.special import chdtrc
+
+from bandproof.analysis.decision import decide, worst
+from bandproof.analysis.fit import BandFit, fit_bands
+from bandproof.analysis.models import band_response
+from bandproof.analysis.types import ComplexArray, FloatArray
+from bandproof.analysis.uncertainty import Row, combine
+from bandproof.bench.circuit import Prediction, predict
+from bandproof.bench.picture import StageView
+from bandproof.bench.types import QUANTITIES, UNITS, Bench, Board, Comparison, Point, Quantity, Run, Stage, StageResult
+
+__all__ = ["StageFit", "evaluate", "fit_points", "usable", "views"]
+
+LEAST_LSB = 20.0  # peak; below, quantization is not white and costs 2.5 to 5 times the fit's own variance
+MODEL = "band+delay"
+_FEWEST = 3  # points: five unknowns, two data a point, and one to judge the fit by
+_SIGNIFICANT = 1e-3  # probability of a chi-square this large by noise alone
+
+
+@dataclass(frozen=True, slots=True)
+class StageFit:
+    """A stage's fit and the points it was made of."""
+
+    points: tuple[Point, ...]
+    fit: BandFit | None
+    reason: str
+
+
+def usable(points: Sequence[Point]) -> tuple[Point, ...]:
+    """Return the points that may enter a fit: curve points without overload, both channels at least 20 LSB peak."""
+    return tuple(
+        point
+        for point in points
+        if point.purpose in ("curve", "closing")
+        and "overload" not in point.flags
+        and all(level >= LEAST_LSB * lsb for level, lsb in zip(point.levels, point.lsb, strict=True))
+    )
+
+
+def fit_points(points: Sequence[Point]) -> StageFit:
+    """Fit the band model with delay to a stage's points; without a fit the reason is in words."""
+    used = usable(points)
+    if len({point.frequency for point in used}) < _FEWEST:
+        return StageFit(used, None, f"only {len(used)} usable points")
+    frequency, response, covariance = arrays(used)
+    fit = fit_bands(frequency[None], response[None], covariance[None])
+    sound = fit.status[0] in ("converged", "no progress") and all(map(isfinite, (fit.f0[0], fit.q[0], fit.u_f0[0])))
+    return StageFit(used, fit if sound else None, "" if sound else f"the fit ended with {fit.status[0]!r}")
+
+
+def arrays(points: Sequence[Point]) -> tuple[FloatArray, ComplexArray, FloatArray]:
+    """Return frequency (N,), response (N,) and covariance (N, 2, 2) of points."""
+    covariance = np.array([[[a, b], [b, c]] for a, b, c in (point.covariance for point in points)])
+    return np.array([p.frequency for p in points]), np.array([p.response for p in points]), covariance
+
+
+def evaluate(run: Run) -> tuple[StageResult, ...]:
+    """Return what is concluded about every stage that has points; one without a fit is undecided, and why."""
+    measured = {point.stage for point in run.points}
+    return tuple(
+        _stage_result(run.board, run.bench, stage, [p for p in run.points if p.stage == stage.name])
+        for stage in run.board.stages
+        if stage.name in measured
+    )
+
+
+def _stage_result(board: Board, bench: Bench, stage: Stage, points: Sequence[Point]) -> StageResult:
+    found = fit_points(points)
+    prediction = predict(board, stage)
+    figures = {quantity: _compared(stage, quantity, prediction, found, bench) for quantity in QUANTITIES}
+    fit = found.fit
+    dof = float(fit.dof[0]) if fit else 0.0
+    chi_square = float(fit.chi_square[0]) if fit and dof else nan
+    alarms = [f"{stage.name}: {found.reason}"] if found.reason else []
+    return StageResult(
+        name=stage.name,
+        kind=stage.kind,
+        verdict=worst(*(figure.verdict for figure in figures.values())),
+        model=MODEL,
+        figures=figures,
+        theta=tuple(fit.theta[0].tolist()) if fit else (),
+        theta_covariance=tuple(tuple(row) for row in fit.covariance[0].tolist()) if fit else (),
+        reduced_chi_square=chi_square,
+        points=len(found.points),
+        lack_of_fit=bool(dof) and float(chdtrc(dof, chi_square * dof)) < _SIGNIFICANT,
+        status=fit.status[0] if fit else found.reason,
+        alarms=tuple(alarms),
+    )
+
+
+def _compared(stage: Stage, quantity: Quantity, prediction: Prediction, found: StageFit, bench: Bench) -> Comparison:
+    limit = stage.limits[quantity]
+    value, repeatability = _measured(found.fit, quantity)
+    budget = combine(_rows(quantity, value, repeatability, bench)) if isfinite(value) else None
+    u = budget.u if budget else nan
+    decision = decide(value, 0.0 if budget is None else u, low=limit.lower, high=limit.upper, doubt=found.reason)
+    return Comparison(
+        quantity=quantity,
+        unit=UNITS[quantity],
+        designed=limit.designed,
+        predicted=prediction[quantity],
+        measured=value,
+        repeatability=repeatability,
+        standard_uncertainty=u,
+        expanded_uncertainty=budget.expanded if budget else nan,
+        coverage_factor=budget.coverage_factor if budget else nan,
+        rule=limit.rule,
+        lower_limit=limit.lower,
+        upper_limit=limit.upper,
+        verdict=decision.verdict,
+        conformance_probability=decision.probability,
+    )
+
+
+def _measured(fit: BandFit | None, quantity: Quantity) -> tuple[float, float]:
+    """Return a figure and its standard uncertainty from the records' noise."""
+    if fit is None:
+        return nan, nan
+    match quantity:
+        case "centre":
+            return float(fit.f0[0]), float(fit.u_f0[0])
+        case "q":
+            return float(fit.q[0]), float(fit.u_q[0])
+        case "gain":
+            return float(abs(fit.gain[0])), float(fit.u_gain[0])
+
+
+def _rows(quantity: Quantity, value: float, repeatability: float, bench: Bench) -> list[Row]:
+    """Return the rows known so far: noise, channel gains (for gain), the generator's frequency (for f0)."""
+    rows = [Row("repeatability", "A", "normal", repeatability, 1.0, inf, "noise of the records through the fit")]
+    if quantity == "gain":
+        # Two channels, each uniform within the half-width; a ratio has the difference of both.
+        declared = bench.channel_gain * sqrt(2.0 / 3.0)
+        rows.append(Row("channel gain", "B", "triangular", declared, value, inf, "declared in the bench file, no thru"))
+    if quantity == "centre":
+        declared = bench.generator_frequency / sqrt(3.0)
+        rows.append(Row("generator frequency", "B", "uniform", declared, value, inf, "declared in the bench file"))
+    return rows
+
+
+def views(run: Run, stages: Sequence[StageResult]) -> list[StageView]:
+    """Return what the picture draws: every stage that has a fit, over three decades around the designed centres."""
+    fitted = [stage for stage in stages if stage.theta]
+    centres = [stage.figures["centre"].designed for stage in fitted]
+    measured = [point.frequency for point in usable(run.points)]
+    if not fitted:
+        return []
+    grid = np.geomspace(min(*centres, *measured) / 1.5, max(*centres, *measured) * 1.5, 400)
+    return [_view(run, stage, grid) for stage in fitted]
+
+
+def _view(run: Run, stage: StageResult, grid: FloatArray) -> StageView:
+    points = usable([point for point in run.points if point.stage == stage.name])
+    frequency, response, covariance = arrays(points)
+    designed = [stage.figures[quantity].designed for quantity in QUANTITIES]
+    target = np.array([[np.log(designed[0]), np.log(designed[1]), -designed[2], 0.0, 0.0, 0.0, 0.0]])
+    along = response / np.abs(response)
+    variance = (
+        covariance[:, 0, 0] * along.real**2
+        + 2.0 * covariance[:, 0, 1] * along.real * along.imag
+        + covariance[:, 1, 1] * along.imag**2
+    )
+    return StageView(
+        result=stage,
+        frequency=grid,
+        designed=band_response(target, grid[None])[0],
+        at=frequency,
+        measured=response,
+        fitted=band_response(np.array([stage.theta]), frequency[None])[0],
+        uncertainty=np.sqrt(variance),
+    )

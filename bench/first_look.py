@@ -1,0 +1,85 @@
+"""What a stage's first records prove before it is driven: quiet without signal, the level asked for, the right tap."""
+
+from math import log10
+
+import numpy as np
+
+from bandproof.bench.circuit import predicted_response
+from bandproof.bench.errors import BenchFault
+from bandproof.bench.quantities import engineering
+from bandproof.bench.types import Bench, Board, Point, Stage
+
+__all__ = ["check_low_level", "check_quiet"]
+
+_LEVEL_OFF = 1.5  # a level off by more than this factor is no loading effect (50 Ω into 600 Ω takes 8 %); arbitrary
+_SEEN = 5.0  # a signal below this many residual rms is no signal; arbitrary
+_STRANGE = 2.0  # a response off by more than this factor is told; arbitrary
+
+
+def check_quiet(bench: Bench, stage: Stage, point: Point) -> None:
+    """Refuse a tap whose direct voltage fills its range: the signal would not fit.
+
+    Raises
+    ------
+    BenchFault
+        Names tap, channel and the voltage found.
+    """
+    for tap, offset, reach in zip((stage.tap_in, stage.tap_out), point.offsets, point.ranges, strict=True):
+        if abs(offset) > 0.5 * reach:
+            raise BenchFault(
+                f"{tap} (channel {bench.wires[tap].channel}) stands at {engineering(offset, 'V')} DC without signal, "
+                f"more than half of the {engineering(reach, 'V')} range: is the board powered, is it the right point?"
+            )
+
+
+def check_low_level(board: Board, bench: Bench, stage: Stage, point: Point) -> list[str]:
+    """Compare a stage's low-level point with what was set and predicted; return what is strange but no obstacle.
+
+    Raises
+    ------
+    BenchFault
+        No signal at a tap, or a level at the input tap that no loading explains.
+    """
+    taps = (stage.tap_in, stage.tap_out)
+    for tap, level, noise in zip(taps, point.levels, point.residuals, strict=True):
+        if level < _SEEN * noise / np.sqrt(point.samples / 2.0):
+            raise BenchFault(
+                f"no signal at {tap} (channel {bench.wires[tap].channel}) while the generator gives "
+                f"{engineering(point.amplitude, 'V')} at {engineering(point.frequency, 'Hz')}: check the probe, the "
+                "route to this test point and the board's supply"
+            )
+    _check_input(bench, stage, point)
+    return _strange_response(board, stage, point)
+
+
+def _check_input(bench: Bench, stage: Stage, point: Point) -> None:
+    ratio = point.levels[0] / point.amplitude
+    if 1.0 / _LEVEL_OFF <= ratio <= _LEVEL_OFF:
+        return
+    channel = bench.wires[stage.tap_in].channel
+    raise BenchFault(
+        f"{stage.tap_in} (channel {channel}) reads {engineering(point.levels[0], 'V')} where the generator was set to "
+        f"{engineering(point.amplitude, 'V')} (× {ratio:.3g}): {_cause(ratio)}"
+    )
+
+
+def _cause(ratio: float) -> str:
+    for factor, cause in (
+        (10.0, "probe factor 10 in the bench file, but the probe is × 1?"),
+        (0.1, "probe factor 1 in the bench file, but the probe is × 10?"),
+        (2.0, "the generator assumes a 50 Ω load: set it to high impedance"),
+        (0.5, "a 50 Ω load hangs on the generator, or the instrument counts peak to peak: check its dialect"),
+    ):
+        if abs(log10(ratio / factor)) < log10(1.25):
+            return cause
+    return "check the generator's dialect (peak, peak to peak or rms), its load assumption and the probe"
+
+
+def _strange_response(board: Board, stage: Stage, point: Point) -> list[str]:
+    expected = predicted_response(board, stage, np.array([point.frequency]))[0]
+    ratio = abs(point.response) / abs(expected)
+    if 1.0 / _STRANGE <= ratio <= _STRANGE:
+        return []
+    where = engineering(point.frequency, "Hz")
+    cause = "a wrong part, a wrong tap or a wrong probe factor"
+    return [f"{stage.name}: the low-level point at {where} is × {ratio:.3g} of the predicted gain: {cause}"]

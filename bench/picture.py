@@ -1,0 +1,184 @@
+"""One picture a run: every band's magnitude and phase on its design, residuals below, figures against limits beside.
+
+Drawn with the Figure API (no pyplot), readable in black and white, the same bytes for the same run.
+"""
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from bandproof.analysis.types import ComplexArray, FloatArray
+from bandproof.bench.quantities import engineering
+from bandproof.bench.types import QUANTITIES, StageResult
+
+if TYPE_CHECKING:
+    from matplotlib.axes import Axes
+    from matplotlib.figure import Figure
+
+__all__ = ["StageView", "draw", "save"]
+
+_MARKS = "osD^vP*X<>hp"  # one shape a band, repeated after twelve
+_SYMBOLS = {"centre": "f0", "q": "Q", "gain": "gain"}
+
+
+@dataclass(frozen=True)
+class StageView:
+    """What is drawn of a stage.
+
+    ``frequency`` (G,) Hz with ``designed`` (G,) complex; ``at`` (N,) Hz with ``measured`` and ``fitted`` (N,) complex
+    and ``uncertainty`` (N,), the standard uncertainty of each measured point's magnitude (ratio).
+    """
+
+    result: StageResult
+    frequency: FloatArray
+    designed: ComplexArray
+    at: FloatArray
+    measured: ComplexArray
+    fitted: ComplexArray
+    uncertainty: FloatArray
+
+
+def save(figure: "Figure", path: Path) -> None:
+    """Write the picture as SVG or PNG by the path's ending, without date or random names inside."""
+    import matplotlib
+
+    metadata: dict[str, Any] = {"Date": None} if path.suffix == ".svg" else {"Software": None}
+    with matplotlib.rc_context({"svg.hashsalt": "bandproof", "svg.fonttype": "path"}):
+        figure.savefig(path, metadata=metadata)
+
+
+def draw(views: Sequence[StageView], title: str) -> "Figure":
+    """Return the figure of a run's stages.
+
+    Parameters
+    ----------
+    views : sequence of StageView
+        In board order, at least one.
+    title : str
+        One line above the picture.
+    """
+    from matplotlib.figure import Figure
+
+    figure = Figure(figsize=(11.0, 7.6), layout="constrained")
+    grid = figure.add_gridspec(3, 2, width_ratios=(3.0, 1.25), height_ratios=(3.0, 2.0, 1.2))
+    magnitude = figure.add_subplot(grid[0, 0])
+    phase = figure.add_subplot(grid[1, 0], sharex=magnitude)
+    residual = figure.add_subplot(grid[2, 0], sharex=magnitude)
+    for number, view in enumerate(views):
+        mark = _MARKS[number % len(_MARKS)]
+        _draw_magnitude(magnitude, view, mark)
+        _draw_phase(phase, view, mark)
+        _draw_residual(residual, view, mark)
+    _dress(magnitude, phase, residual, views)
+    _draw_figures(figure.add_subplot(grid[:, 1]), views)
+    figure.suptitle(title, fontsize=11, x=0.01, ha="left")
+    return figure
+
+
+def _dB(ratio: ComplexArray | FloatArray | float) -> Any:
+    return 20.0 * np.log10(np.abs(ratio))
+
+
+def _draw_magnitude(axes: "Axes", view: StageView, mark: str) -> None:
+    axes.plot(view.frequency, _dB(view.designed), color="0.45", linewidth=1.0)
+    axes.plot(view.at, _dB(view.measured), mark, **_open_mark())
+    centre, gain = (view.result.figures[name] for name in ("centre", "gain"))
+    low, high = _dB(gain.lower_limit), _dB(gain.upper_limit)
+    left, right = centre.lower_limit, centre.upper_limit
+    axes.plot([left, right, right, left, left], [low, low, high, high, low], color="black", linewidth=0.9)
+    axes.annotate(
+        view.result.name, (centre.designed, high), (0, 4), textcoords="offset points", ha="center", fontsize=8
+    )
+
+
+def _open_mark() -> dict[str, Any]:
+    return {"markersize": 4.5, "markerfacecolor": "white", "markeredgecolor": "black", "markeredgewidth": 0.9}
+
+
+def _phase_deg(response: ComplexArray) -> Any:
+    """Degrees around the inverting band's 180, so that -90 … 90 is the band itself."""
+    return np.degrees(np.angle(-response))
+
+
+def _draw_phase(axes: "Axes", view: StageView, mark: str) -> None:
+    axes.plot(view.frequency, _phase_deg(view.designed), color="0.45", linewidth=1.0)
+    axes.plot(view.at, _phase_deg(view.measured), mark, **_open_mark())
+
+
+def _draw_residual(axes: "Axes", view: StageView, mark: str) -> None:
+    peak = view.result.figures["gain"].measured
+    error = 100.0 * np.abs(view.measured / view.fitted) - 100.0
+    weight = np.abs(view.measured) / peak
+    axes.errorbar(
+        view.at,
+        error * weight,
+        yerr=2.0 * 100.0 * view.uncertainty / peak,
+        fmt=mark,
+        ecolor="0.4",
+        elinewidth=0.8,
+        capsize=1.5,
+        **_open_mark(),
+    )
+
+
+def _dress(magnitude: "Axes", phase: "Axes", residual: "Axes", views: Sequence[StageView]) -> None:
+    magnitude.set_xscale("log")
+    lowest = min(float(view.frequency[0]) for view in views)
+    highest = max(float(view.frequency[-1]) for view in views)
+    magnitude.set_xlim(lowest, highest)
+    top = max(_dB(view.result.figures["gain"].upper_limit) for view in views)
+    drawn = np.concatenate([_dB(view.measured) for view in views])
+    magnitude.set_ylim(min(top - 22.0, float(np.min(drawn)) - 2.0), max(top, float(np.max(drawn))) + 3.0)
+    magnitude.set_ylabel("gain / dB")
+    magnitude.set_title(
+        "line: as designed   marks: measured   box: limits of centre and gain", loc="left", fontsize=8, pad=4
+    )
+    phase.set_ylabel("phase − 180° / °")
+    phase.set_yticks([-90, -45, 0, 45, 90])
+    phase.set_ylim(-100, 100)
+    residual.set_ylabel("measured − fit\n/ % of gain")
+    residual.axhline(0.0, color="0.45", linewidth=0.8)
+    residual.set_xlabel("frequency / Hz   (bars: ± 2 standard uncertainties)")
+    ticks = [mantissa * 10.0**decade for decade in range(-3, 12) for mantissa in (1.0, 2.0, 5.0)]
+    shown = [tick for tick in ticks if lowest <= tick <= highest]
+    residual.set_xticks(shown, labels=[engineering(tick, "") for tick in shown])
+    residual.minorticks_off()
+    for axes in (magnitude, phase, residual):
+        axes.grid(True, color="0.9", linewidth=0.6)
+        axes.tick_params(labelsize=8, labelbottom=axes is residual)
+        axes.yaxis.label.set_fontsize(9)
+    residual.xaxis.label.set_fontsize(9)
+
+
+def _draw_figures(axes: "Axes", views: Sequence[StageView]) -> None:
+    """Deviation of each figure in units of its own tolerance: between the two lines is inside the limits."""
+    rows = [(view.result, quantity) for view in views for quantity in QUANTITIES]
+    for row, (result, quantity) in enumerate(rows):
+        figure = result.figures[quantity]
+        room = figure.upper_limit if figure.measured >= figure.designed else figure.lower_limit
+        half = abs(room - figure.designed)
+        place = float(np.clip((figure.measured - figure.designed) / half, -1.9, 1.9))
+        mark = _MARKS[(row // len(QUANTITIES)) % len(_MARKS)]
+        face = "black" if figure.verdict == "fail" else "white"
+        axes.errorbar(
+            [place],
+            [row],
+            xerr=[min(figure.expanded_uncertainty / half, 2.0)],
+            fmt=mark,
+            ecolor="0.3",
+            elinewidth=0.9,
+            capsize=2.0,
+            **{**_open_mark(), "markerfacecolor": face},
+        )
+    axes.axvline(0.0, color="0.75", linewidth=0.8)
+    for edge in (-1.0, 1.0):
+        axes.axvline(edge, color="black", linewidth=1.0)
+    axes.set_yticks(range(len(rows)), labels=[f"{result.name}  {_SYMBOLS[q]}" for result, q in rows])
+    axes.set_ylim(len(rows) - 0.5, -0.5)
+    axes.set_xlim(-2.1, 2.1)
+    axes.set_xticks([-1, 0, 1], labels=["lower\nlimit", "design", "upper\nlimit"])
+    axes.tick_params(labelsize=7 if len(rows) > 45 else 8)
+    axes.set_title("figures against limits (± U; filled: fails)", fontsize=8, pad=4)

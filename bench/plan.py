@@ -1,0 +1,195 @@
+"""The plan: which records to take next, given what was measured so far. Pure and incremental; empty means done."""
+
+from collections.abc import Mapping, Sequence
+from math import floor, log, log10
+
+import numpy as np
+
+from bandproof.analysis.network import response
+from bandproof.analysis.planning import band_frequencies, dwell_after_step, plan_record, shift_from_mains
+from bandproof.analysis.types import FloatArray
+from bandproof.bench.circuit import Prediction, predict, predicted_response, stage_network, taps
+from bandproof.bench.errors import BadInput
+from bandproof.bench.evaluate import fit_points
+from bandproof.bench.types import Bench, Board, Point, Purpose, Stage, Step, Tone
+
+__all__ = ["Planner", "greatest_level"]
+
+HEADROOM = 1.2  # ranges hold the expected peak + 20 %
+LOW_LEVEL = 0.1  # of the sweep's level: proves wiring and level before the board is driven
+LONGEST = 1.0  # s, of a record
+SWING_SHARE, SLEW_SHARE = 0.5, 0.25  # no op-amp output beyond these shares of what it can
+_QUIET_SAMPLES = 2048
+_MOVED = log(1.15)  # a centre further than this from where it was looked for is looked at again; arbitrary
+_MOST_BATCHES = 3
+_OVERHEAD = 0.03  # s a record costs beyond dwell and duration, for the time left; arbitrary
+
+
+class Planner:
+    """Plans the records of a board on a bench, stage by stage.
+
+    Raises
+    ------
+    BadInput
+        A stage's circuit has no band near its designed centre, or no level is safe for it.
+    """
+
+    def __init__(self, board: Board, bench: Bench) -> None:
+        self._board, self._bench = board, bench
+        self._predictions = {stage.name: _predicted(board, stage) for stage in board.stages}
+        self._levels = {s.name: greatest_level(board, bench, s, self._predictions[s.name]) for s in board.stages}
+
+    def more(self, points: Sequence[Point]) -> tuple[Step, ...]:
+        """Return the next batch of steps; empty when every stage has what it needs."""
+        for stage in self._board.stages:
+            had = [point for point in points if point.stage == stage.name]
+            if steps := self._stage_steps(stage, had, first=len(points)):
+                return steps
+        return ()
+
+    def seconds_left(self, points: Sequence[Point]) -> float:
+        """Return an estimate of the bench seconds still needed."""
+        left = 0.0
+        for stage in self._board.stages:
+            had = [point for point in points if point.stage == stage.name]
+            curve = self._curve(stage, self._predictions[stage.name], 1.0, 1.0, 0)
+            left += sum(step.dwell + step.duration + _OVERHEAD for step in curve[max(0, len(had) - 2) :])
+        return left
+
+    def _stage_steps(self, stage: Stage, had: Sequence[Point], *, first: int) -> tuple[Step, ...]:
+        prediction = self._predictions[stage.name]
+        if not had:
+            return self._first_look(stage, prediction, first)
+        scale = _scale(self._board, stage, had)
+        batches = sum(point.purpose == "closing" for point in had)
+        if batches == 0:
+            return self._curve(stage, prediction, scale, 1.0, first)
+        if batches >= _MOST_BATCHES:
+            return ()
+        return self._again(stage, had, scale, batches, first)
+
+    def _again(self, stage: Stage, had: Sequence[Point], scale: float, batches: int, first: int) -> tuple[Step, ...]:
+        """Return another look where the band really is, or on a wider range, if the last batch asks for it."""
+        last = had[_last_batch(had) :]
+        looked_at = float(np.exp(np.mean(np.log([p.frequency for p in last if p.purpose == "curve"]))))
+        fitted = fit_points(had).fit
+        overloaded = sum("overload" in point.flags for point in last) > 2
+        found = self._predictions[stage.name]
+        if fitted is not None:
+            found = Prediction(float(fitted.f0[0]), float(fitted.q[0]), float(abs(fitted.gain[0])))
+            scale = 1.0
+        moved = fitted is not None and abs(log(found.centre / looked_at)) > _MOVED
+        if not (moved or overloaded) or not 0.1 < found.centre / stage.limits["centre"].designed < 10.0:
+            return ()
+        return self._curve(stage, found, scale, 2.5**batches if overloaded else 1.0, first)
+
+    def _first_look(self, stage: Stage, prediction: Prediction, first: int) -> tuple[Step, ...]:
+        level, low = self._levels[stage.name], LOW_LEVEL * self._levels[stage.name]
+        ranges = (HEADROOM * level, HEADROOM * level * prediction.gain)
+        quiet_time = max(2.0 / self._bench.mains, 3.0 / prediction.centre)
+        quiet = Step(first, stage.name, "no-signal", (), 0.0, quiet_time, _QUIET_SAMPLES, ranges)
+        frequency = float(self._clear_of_mains(np.array([prediction.centre]))[0])
+        low_ranges = (HEADROOM * low, HEADROOM * low * prediction.gain)
+        return quiet, self._step(first + 1, stage, "low-level", frequency, None, low, low_ranges)
+
+    def _curve(self, stage: Stage, at: Prediction, scale: float, widen: float, first: int) -> tuple[Step, ...]:
+        """Return the points round a band and the closing point, which repeats the first."""
+        level = self._levels[stage.name]
+        ranges = (HEADROOM * level, HEADROOM * level * at.gain * scale * widen)
+        frequencies = self._clear_of_mains(band_frequencies([at.centre], [at.q])[0])
+        sequence = [*map(float, frequencies), float(frequencies[0])]
+        previous = [None, *sequence[:-1]]
+        return tuple(
+            self._step(
+                first + i, stage, "curve" if i < len(frequencies) else "closing", frequency, before, level, ranges
+            )
+            for i, (frequency, before) in enumerate(zip(sequence, previous, strict=True))
+        )
+
+    def _clear_of_mains(self, frequencies: FloatArray) -> FloatArray:
+        return shift_from_mains(frequencies, mains=self._bench.mains, longest=0.1 * LONGEST)
+
+    def _step(
+        self,
+        index: int,
+        stage: Stage,
+        purpose: Purpose,
+        frequency: float,
+        previous: float | None,
+        level: float,
+        ranges: tuple[float, float],
+    ) -> Step:
+        record = plan_record(frequency, mains=self._bench.mains, longest=LONGEST)
+        dwell = dwell_after_step(
+            stage_network(self._board, stage),
+            taps(self._board, stage),
+            frequency,
+            duration=record.duration,
+            previous=previous,
+        )
+        tones = (Tone(frequency, level),)
+        return Step(index, stage.name, purpose, tones, dwell, record.duration, record.points, ranges)
+
+
+def greatest_level(board: Board, bench: Bench, stage: Stage, prediction: Prediction) -> float:
+    """Return the level in V peak a stage is swept at, two digits, rounded down.
+
+    Never above the bench's ceiling and the board's input maximum; with the parts anywhere in their tolerances the
+    op-amp's output stays below half its swing and a quarter of its slew rate.
+
+    Raises
+    ------
+    BadInput
+        No level above 1 mV is safe.
+    """
+    near = prediction.centre * np.geomspace(0.25, 4.0, 121)
+    gain = np.abs(predicted_response(board, stage, near))
+    spread = _gain_spread(board, stage, near)
+    slope = 2.0 * np.pi * float((gain * near).max()) * spread
+    level = min(
+        bench.ceiling,
+        board.input_maximum,
+        SWING_SHARE * board.op_amp.swing / (prediction.gain * spread),
+        SLEW_SHARE * board.op_amp.slew / slope,
+    )
+    if level < 1e-3:
+        raise BadInput(f"stage {stage.name!r}: no level above 1 mV is safe; check the op-amp's swing and slew rate")
+    step = 10.0 ** (floor(log10(level)) - 1)
+    return round(floor(level / step * (1.0 + 1e-12)) * step, 9)
+
+
+def _gain_spread(board: Board, stage: Stage, frequency: FloatArray) -> float:
+    """Return by what factor the peak may be higher with every part at its worst (sum of single effects)."""
+    network, (node_in, node_out) = stage_network(board, stage), taps(board, stage)
+    count = len(stage.parts)
+    values: Mapping[str, FloatArray] = {
+        f"{stage.name}.{part.name}": np.array(
+            [part.value, *(part.value * (1.0 + part.tolerance * (i == j)) for j in range(count))]
+        )
+        for i, part in enumerate(stage.parts)
+    }
+    volts = np.abs(response(network, frequency, [node_in, node_out], values=dict(values)))
+    peaks = (volts[:, 1] / volts[:, 0]).max(axis=1)
+    return float(1.0 + np.abs(peaks[1:] / peaks[0] - 1.0).sum())
+
+
+def _predicted(board: Board, stage: Stage) -> Prediction:
+    try:
+        return predict(board, stage)
+    except ValueError as problem:
+        raise BadInput(f"stage {stage.name!r}: its circuit makes no band ({problem}); check the parts") from problem
+
+
+def _scale(board: Board, stage: Stage, had: Sequence[Point]) -> float:
+    """Return how much higher than predicted the low-level point came out, within a decade."""
+    for point in had:
+        if point.purpose == "low-level":
+            expected = abs(predicted_response(board, stage, np.array([point.frequency]))[0])
+            return float(np.clip(abs(point.response) / expected, 0.1, 10.0))
+    return 1.0
+
+
+def _last_batch(had: Sequence[Point]) -> int:
+    """Return where the last finished batch begins."""
+    closings = [i for i, point in enumerate(had) if point.purpose == "closing"]
+    return closings[-2] + 1 if len(closings) > 1 else 0

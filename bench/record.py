@@ -1,0 +1,126 @@
+"""From one record to one point: the sine fit of both channels, their ratio, and the record's own checks."""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from bandproof.analysis.sine import channel_ratio, distortion, fit_sines, halves
+from bandproof.analysis.types import FloatArray
+from bandproof.bench.types import Point, Step
+
+__all__ = ["Taken", "hum_frequencies", "point_of"]
+
+HUM_BELOW = 1e3  # Hz; above, mains harmonics 2-5 are too far away to matter
+_HUM_HARMONICS = 5
+_DISTORTED = 10.0 ** (-40.0 / 20.0)
+
+
+@dataclass(frozen=True, slots=True)
+class Taken:
+    """A record as it was taken, tap in first.
+
+    ``volts`` (2, N) at the probe tips, ``sample_interval`` s, ``overload`` and ``lsb`` per tap, read-back
+    ``frequency`` and ``amplitude``, bench ``time`` at its start, ``attempt`` from 0, ``ranges`` read back.
+    """
+
+    volts: FloatArray
+    sample_interval: float
+    overload: tuple[bool, bool]
+    lsb: tuple[float, float]
+    ranges: tuple[float, float]
+    frequency: float
+    amplitude: float
+    time: float
+    attempt: int
+
+
+def hum_frequencies(frequency: float, duration: float, mains: float) -> FloatArray:
+    """Return the mains harmonics to fit beside a tone: 1 to 5 below 1 kHz, those the record can tell from it.
+
+    A harmonic nearer than 1/T is indistinguishable and is left out; the plan avoids such frequencies.
+    """
+    if frequency >= HUM_BELOW:
+        return np.zeros(0)
+    harmonics = mains * np.arange(1, _HUM_HARMONICS + 1)
+    apart = np.abs(harmonics - frequency) * duration >= 0.999
+    # A record must also hold one period of the difference between harmonics, or they are one and the same to it.
+    return harmonics[apart] if duration * mains >= 1.0 else np.zeros(0)
+
+
+def point_of(step: Step, taken: Taken, mains: float) -> Point:
+    """Return the point a record gives.
+
+    A record without signal gives levels and response 0; offsets and residuals are its content.
+    """
+    duration = taken.sample_interval * taken.volts.shape[1]
+    return (
+        _signal(step, taken, hum_frequencies(taken.frequency, duration, mains)) if step.tones else _quiet(step, taken)
+    )
+
+
+def _quiet(step: Step, taken: Taken) -> Point:
+    means, residuals = taken.volts.mean(axis=1), taken.volts.std(axis=1)
+    return _point(step, taken, 0j, (0.0, 0.0, 0.0), (0.0, 0.0), _pair(means), _pair(residuals), 0.0, 0.0, ())
+
+
+def _signal(step: Step, taken: Taken, hum: FloatArray) -> Point:
+    fit = fit_sines(taken.volts, taken.sample_interval, [taken.frequency], nuisance=hum)
+    ratio = channel_ratio(fit)
+    covariance = ratio.covariance[0]
+    settling = halves(taken.volts, taken.sample_interval, [taken.frequency], nuisance=hum)
+    moved = float((np.abs(settling.difference) / settling.threshold).max())
+    harmonics = float(distortion(taken.volts, taken.sample_interval, taken.frequency)[1])
+    flags = [name for name, seen in (("overload", any(taken.overload)), ("unsettled", not settling.is_settled)) if seen]
+    if harmonics > _DISTORTED and step.purpose != "low-level":
+        flags.append("distorted")
+    return _point(
+        step,
+        taken,
+        complex(ratio.value[0]),
+        (float(covariance[0, 0]), float(covariance[0, 1]), float(covariance[1, 1])),
+        _pair(np.abs(fit.phasor[:, 0])),
+        _pair(fit.offset),
+        _pair(fit.residual_rms),
+        harmonics,
+        moved,
+        tuple(flags),
+    )
+
+
+def _pair(values: FloatArray) -> tuple[float, float]:
+    return float(values[0]), float(values[1])
+
+
+def _point(
+    step: Step,
+    taken: Taken,
+    response: complex,
+    covariance: tuple[float, float, float],
+    levels: tuple[float, float],
+    offsets: tuple[float, float],
+    residuals: tuple[float, float],
+    harmonics: float,
+    settling: float,
+    flags: tuple[str, ...],
+) -> Point:
+    return Point(
+        step=step.index,
+        stage=step.stage,
+        purpose=step.purpose,
+        attempt=taken.attempt,
+        time=taken.time,
+        frequency=taken.frequency,
+        amplitude=taken.amplitude,
+        response=response,
+        covariance=covariance,
+        levels=levels,
+        offsets=offsets,
+        residuals=residuals,
+        lsb=taken.lsb,
+        ranges=taken.ranges,
+        sample_interval=taken.sample_interval,
+        samples=taken.volts.shape[1],
+        distortion=harmonics,
+        settling=settling,
+        flags=flags,
+    )

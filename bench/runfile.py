@@ -1,0 +1,288 @@
+"""The run file: everything of one run in one HDF5 file that stands up years later.
+
+A user block of 512 bytes says ``bandproof-run/1 sha256=...`` of all bytes that follow; it is checked before HDF5
+opens the file, because HDF5's own checksums leave text and attributes unprotected. The file is written once, at the
+end: a part file in the same folder, closed, digested, synced, renamed, the folder synced. It is never modified.
+"""
+
+import hashlib
+import io
+import json
+import os
+from collections.abc import Mapping
+from dataclasses import asdict, fields
+from pathlib import Path
+from typing import TYPE_CHECKING, Any, cast
+
+from bandproof.bench.bench_file import parse_bench
+from bandproof.bench.board_file import parse_board
+from bandproof.bench.errors import RunFileDamaged
+from bandproof.bench.types import Point, Run, Step, Tone
+
+if TYPE_CHECKING:
+    import h5py
+
+__all__ = ["SCHEMA", "digest_of", "read_result", "read_run", "write_run"]
+
+SCHEMA = "bandproof-run/1"
+_USER_BLOCK = 512
+_LARGEST = 4_000_000_000  # bytes read for a digest; arbitrary
+_PURPOSE = "S12"
+
+# name in the file: (field of Point, index within a tuple field or None, units)
+_COLUMNS: dict[str, tuple[str, int | None, str]] = {
+    "step": ("step", None, ""),
+    "purpose": ("purpose", None, ""),
+    "attempt": ("attempt", None, ""),
+    "time": ("time", None, "s"),
+    "frequency": ("frequency", None, "Hz"),
+    "amplitude": ("amplitude", None, "V"),
+    "response_real": ("response", 0, "V/V"),
+    "response_imag": ("response", 1, "V/V"),
+    "variance_real": ("covariance", 0, "1"),
+    "covariance_real_imag": ("covariance", 1, "1"),
+    "variance_imag": ("covariance", 2, "1"),
+    "level_in": ("levels", 0, "V"),
+    "level_out": ("levels", 1, "V"),
+    "offset_in": ("offsets", 0, "V"),
+    "offset_out": ("offsets", 1, "V"),
+    "residual_rms_in": ("residuals", 0, "V"),
+    "residual_rms_out": ("residuals", 1, "V"),
+    "lsb_in": ("lsb", 0, "V"),
+    "lsb_out": ("lsb", 1, "V"),
+    "range_in": ("ranges", 0, "V"),
+    "range_out": ("ranges", 1, "V"),
+    "sample_interval": ("sample_interval", None, "s"),
+    "samples": ("samples", None, ""),
+    "distortion": ("distortion", None, "V/V"),
+    "settling": ("settling", None, ""),
+    "flags": ("flags", None, ""),
+}
+
+
+def write_run(path: Path, run: Run, result: Mapping[str, Any]) -> str:
+    """Write a run file beside its final name, sync it, rename it; return its digest.
+
+    Raises
+    ------
+    OSError
+        The folder cannot be written. Nothing is left under the final name.
+    """
+    image = _image(run, result)
+    digest = hashlib.sha256(image).hexdigest()
+    part = path.with_name(path.name + ".part")
+    with part.open("wb") as file:
+        file.write(_user_block(digest) + image)
+        file.flush()
+        os.fsync(file.fileno())
+    part.rename(path)
+    _sync_folder(path.parent)
+    return digest
+
+
+def _user_block(digest: str) -> bytes:
+    return f"{SCHEMA} sha256={digest}\n".encode("ascii").ljust(_USER_BLOCK, b"\0")
+
+
+def _sync_folder(folder: Path) -> None:
+    handle = os.open(folder, os.O_RDONLY)
+    try:
+        os.fsync(handle)
+    finally:
+        os.close(handle)
+
+
+def _image(run: Run, result: Mapping[str, Any]) -> bytes:
+    import h5py
+
+    memory = io.BytesIO()
+    with h5py.File(memory, "w", libver=("v110", "v110"), userblock_size=_USER_BLOCK) as file:
+        file.attrs["schema"] = _fixed(SCHEMA)
+        for name, text in _texts(run, result).items():
+            _write_text(file, name, text)
+        for stage in dict.fromkeys(point.stage for point in run.points):
+            _write_points(file.create_group(f"points/{stage}"), [p for p in run.points if p.stage == stage])
+    return memory.getvalue()[_USER_BLOCK:]
+
+
+def _texts(run: Run, result: Mapping[str, Any]) -> dict[str, str]:
+    about = {name: getattr(run, name) for name in _ABOUT}
+    dialects = {f"texts/dialect_{role}": text for role, text in sorted(run.bench.dialect_texts.items())}
+    return {
+        "about": to_json(about),
+        "history": "".join(to_json(entry) + "\n" for entry in run.history),
+        "result": to_json(result),
+        "steps": "".join(to_json(asdict(step)) + "\n" for step in run.steps),
+        "texts/bench": run.bench.text,
+        "texts/board": run.board.text,
+        **dialects,
+    }
+
+
+_ABOUT = [
+    "run_id",
+    "serial",
+    "attempt",
+    "identities",
+    "version",
+    "started",
+    "ended",
+    "reason",
+    "bench_seconds",
+    "operator",
+    "note",
+    "alarms",
+]  # fields of Run kept as they are
+
+
+def to_json(value: object) -> str:
+    """Return the JSON text of a value: keys sorted, as short as can be, the same for the same value."""
+    return json.dumps(value, sort_keys=True, ensure_ascii=False, separators=(",", ":"), allow_nan=True)
+
+
+def _fixed(text: str) -> Any:
+    import numpy as np
+
+    return np.bytes_(text.encode("utf-8"))
+
+
+def _write_text(file: "h5py.Group", name: str, text: str) -> None:
+    import numpy as np
+
+    data = np.frombuffer(text.encode("utf-8"), dtype=np.uint8)
+    dataset = file.create_dataset(name, data=data, track_times=False)
+    dataset.attrs["encoding"] = _fixed("utf-8")
+
+
+def _write_points(group: "h5py.Group", points: list[Point]) -> None:
+    import numpy as np
+
+    for name, (field, part, units) in _COLUMNS.items():
+        column: Any = [_cell(getattr(point, field), part) for point in points]
+        if isinstance(column[0], str):
+            column = np.array([text.encode("ascii") for text in column])
+        dataset = group.create_dataset(name, data=np.asarray(column), track_times=False)
+        dataset.attrs["units"] = _fixed(units)
+
+
+def _cell(value: Any, part: int | None) -> Any:
+    if isinstance(value, complex):
+        return value.imag if part else value.real
+    if isinstance(value, tuple):
+        return " ".join(value) if part is None else value[part]
+    return value
+
+
+# --- reading ---
+
+
+def digest_of(path: Path) -> str:
+    """Return the digest a run file carries, after comparing it with the file's content.
+
+    Raises
+    ------
+    RunFileDamaged
+        The file cannot be read, is no run file, or its content is not what its digest says.
+    """
+    return _checked(path)[0]
+
+
+def _checked(path: Path) -> tuple[str, bytes]:
+    try:
+        if path.stat().st_size > _LARGEST:
+            raise RunFileDamaged(str(path), f"is larger than {_LARGEST // 10**9} GB, no run file is")
+        content = path.read_bytes()
+    except OSError as problem:
+        raise RunFileDamaged(str(path), f"cannot be read: {problem.strerror or problem}") from problem
+    head, image = content[:_USER_BLOCK], content[_USER_BLOCK:]
+    digest = hashlib.sha256(image).hexdigest()
+    if head != _user_block(digest):
+        raise RunFileDamaged(str(path), _what_is_wrong(head, len(content)))
+    return digest, content
+
+
+def _what_is_wrong(head: bytes, size: int) -> str:
+    if not head.startswith(b"bandproof-run/"):
+        return "is not a run file of this program" if size else "is empty"
+    if not head.startswith(SCHEMA.encode("ascii") + b" "):
+        return f"has a schema this version does not read ({head[:24]!r})"
+    return "is damaged: its content does not match its digest; use a copy, the figures in it cannot be trusted"
+
+
+def read_result(path: Path) -> dict[str, Any]:
+    """Return the result object stored in a run file (RunFileDamaged as digest_of)."""
+    with _opened(path) as file:
+        return cast(dict[str, Any], json.loads(_text(file, "result")))
+
+
+def read_run(path: Path) -> Run:
+    """Return a run as it was written.
+
+    Raises
+    ------
+    RunFileDamaged
+        The file is no run file, is damaged, or lacks what a run file has.
+    """
+    with _opened(path) as file:
+        try:
+            return _run(file)
+        except (KeyError, ValueError, TypeError) as problem:
+            raise RunFileDamaged(str(path), f"lacks what a run file has ({problem})") from problem
+
+
+def _opened(path: Path) -> "h5py.File":
+    import h5py
+
+    _, content = _checked(path)
+    try:
+        return h5py.File(io.BytesIO(content), "r")
+    except OSError as problem:
+        raise RunFileDamaged(str(path), f"is not HDF5 behind its user block ({problem})") from problem
+
+
+def _run(file: "h5py.File") -> Run:
+    from dataclasses import replace
+
+    about = json.loads(_text(file, "about"))
+    bench = parse_bench(_text(file, "texts/bench"), "bench text of the run")
+    dialects = {
+        name.removeprefix("dialect_"): _text(file, f"texts/{name}")
+        for name in file["texts"]
+        if name.startswith("dialect_")
+    }
+    points = [point for stage in file.get("points", ()) for point in _read_points(file[f"points/{stage}"], stage)]
+    return Run(
+        **{**about, "alarms": tuple(about["alarms"])},
+        board=parse_board(_text(file, "texts/board"), "board text of the run"),
+        bench=replace(bench, dialect_texts=dialects),
+        steps=tuple(step_from(json.loads(line)) for line in _text(file, "steps").splitlines()),
+        points=tuple(sorted(points, key=lambda point: point.step)),
+        history=tuple(json.loads(line) for line in _text(file, "history").splitlines()),
+    )
+
+
+def _text(file: "h5py.Group", name: str) -> str:
+    return bytes(file[name][()]).decode("utf-8")
+
+
+def step_from(plain: dict[str, Any]) -> Step:
+    """Return a Step from its JSON form."""
+    tones = tuple(Tone(**tone) for tone in plain["tones"])
+    return Step(**{**plain, "tones": tones, "ranges": (plain["ranges"][0], plain["ranges"][1])})
+
+
+def _read_points(group: "h5py.Group", stage: str) -> list[Point]:
+    columns = {name: group[name][()].tolist() for name in _COLUMNS}
+    return [
+        _point(stage, {name: column[row] for name, column in columns.items()}) for row in range(len(columns["step"]))
+    ]
+
+
+def _point(stage: str, row: dict[str, Any]) -> Point:
+    values: dict[str, Any] = {"stage": stage}
+    for name, (field, part, _) in _COLUMNS.items():
+        value = row[name].decode("ascii") if isinstance(row[name], bytes) else row[name]
+        values[field] = value if part is None else (*values.get(field, ()), value)
+    values["response"] = complex(*values["response"])
+    values["flags"] = tuple(values["flags"].split())
+    return Point(**{field.name: values[field.name] for field in fields(Point)})

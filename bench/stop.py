@@ -1,0 +1,41 @@
+"""Stopping on request: Ctrl-C and SIGTERM set a flag that the sweep reads between two exchanges with an instrument."""
+
+import signal
+from collections.abc import Iterator
+from contextlib import contextmanager
+from types import FrameType
+
+from bandproof.bench.errors import Stopped
+
+__all__ = ["Stop", "watching_signals"]
+
+
+class Stop:
+    """The flag. ``check`` raises Stopped once a stop was requested."""
+
+    def __init__(self) -> None:
+        self.requested = ""
+
+    def request(self, how: str) -> None:
+        """Ask for a stop; the first reason is kept."""
+        self.requested = self.requested or how
+
+    def check(self) -> None:
+        """Raise Stopped if a stop was requested."""
+        if self.requested:
+            raise Stopped(self.requested)
+
+
+@contextmanager
+def watching_signals(stop: Stop) -> Iterator[None]:
+    """While inside, Ctrl-C and SIGTERM request a stop instead of ending the process where it stands."""
+
+    def on_signal(number: int, _frame: FrameType | None) -> None:
+        stop.request("Ctrl-C" if number == signal.SIGINT else signal.Signals(number).name)
+
+    before = {number: signal.signal(number, on_signal) for number in (signal.SIGINT, signal.SIGTERM)}
+    try:
+        yield
+    finally:
+        for number, handler in before.items():
+            signal.signal(number, handler)

@@ -1,0 +1,67 @@
+"""What a person reads at the end of a run: one line per band and figure, 80 columns, plain text."""
+
+from collections.abc import Iterable, Sequence
+from math import isfinite, log10
+
+from bandproof.bench.quantities import decimals, engineering, with_uncertainty
+from bandproof.bench.types import QUANTITIES, Comparison, Quantity, StageResult
+
+__all__ = ["dB", "summary_lines"]
+
+_TITLES: dict[Quantity, str] = {
+    "centre": "Centre frequency f0",
+    "q": "Q = f0 / (-3 dB bandwidth)",
+    "gain": "Gain at f0",
+}
+_HEADINGS = ("band", "designed", "predicted", "measured ± U", "deviation", "verdict")
+_WIDTHS = (12, 10, 10, 24, 10, 9)  # band, designed, predicted, measured ± U, deviation, verdict
+
+
+def dB(ratio: float) -> float:
+    """Return a voltage ratio in decibels."""
+    return 20.0 * log10(abs(ratio))
+
+
+def summary_lines(stages: Sequence[StageResult]) -> list[str]:
+    """Return the lines of the table: per figure, one line per band."""
+    lines: list[str] = []
+    for quantity in QUANTITIES:
+        lines += ["", _TITLES[quantity], _row(_HEADINGS), *_rows(quantity, stages)]
+    return lines
+
+
+def _rows(quantity: Quantity, stages: Iterable[StageResult]) -> list[str]:
+    return [_row([stage.name, *_cells(stage.figures[quantity])]) for stage in stages]
+
+
+def _row(cells: Sequence[str]) -> str:
+    name, *rest = cells
+    padded = [f"{name:<{_WIDTHS[0]}}", *(f"{cell:>{width}}" for cell, width in zip(rest, _WIDTHS[1:], strict=True))]
+    return "".join(padded).rstrip()
+
+
+def _cells(figure: Comparison) -> list[str]:
+    if figure.quantity == "gain":
+        return [*_gain_cells(figure), figure.verdict]
+    deviation = f"{100.0 * figure.deviation:+.2f} %" if isfinite(figure.deviation) else "-"
+    return [
+        engineering(figure.designed, figure.unit),
+        engineering(figure.predicted, figure.unit),
+        with_uncertainty(figure.measured, figure.expanded_uncertainty, figure.unit),
+        deviation,
+        figure.verdict,
+    ]
+
+
+def _gain_cells(figure: Comparison) -> list[str]:
+    """Decibels; U is half the span between the gain's ends, which is symmetric enough below 3 dB."""
+    relative = figure.expanded_uncertainty / figure.measured
+    expanded = 0.5 * (dB(1.0 + relative) - dB(1.0 - relative)) if 0.0 < relative < 1.0 else float("nan")
+    places = max(0, decimals(expanded)) if isfinite(expanded) else 2
+    shown = f"{dB(figure.measured):.{places}f} ± {expanded:.{places}f} dB"
+    return [
+        f"{dB(figure.designed):.4g} dB",
+        f"{dB(figure.predicted):.4g} dB",
+        shown,
+        f"{dB(figure.measured / figure.designed):+.2f} dB",
+    ]

@@ -1,0 +1,151 @@
+"""The sweep: carries out steps on the instruments, in the order that is safe, one message at a time.
+
+Order of a run: generator off, then per stage wiring (generator off), a record without signal, one low-level point, the
+curve, the closing point, generator off. The generator stays on from the first to the last point of a stage: switching
+it per point would wear its relay and restart the settling.
+"""
+
+from collections.abc import Callable
+from dataclasses import dataclass, field
+
+from bandproof.bench.errors import BenchFault
+from bandproof.bench.first_look import check_low_level, check_quiet
+from bandproof.bench.instruments import Devices
+from bandproof.bench.journal import Journal
+from bandproof.bench.operator import Operator
+from bandproof.bench.plan import Planner
+from bandproof.bench.record import Taken, point_of
+from bandproof.bench.stop import Stop
+from bandproof.bench.types import Bench, Board, Point, Stage, Step
+from bandproof.drivers.clock import Clock
+
+__all__ = ["Sweep"]
+
+REPEATS = 2  # most repetitions of a record that had not settled
+
+
+@dataclass
+class Sweep:
+    """One run of a board on opened instruments.
+
+    ``progress`` is called with (steps done, steps planned, bench seconds still to come, stage) after every step.
+    """
+
+    board: Board
+    bench: Bench
+    devices: Devices
+    clock: Clock
+    operator: Operator
+    journal: Journal
+    stop: Stop = field(default_factory=Stop)
+    progress: Callable[[int, int, float, str], None] = lambda done, planned, left, stage: None
+    planner: Planner | None = None
+    repeats: int = REPEATS
+    dwell_factor: float = 1.0
+
+    def run(self) -> None:
+        """Measure until the plan asks for no more.
+
+        Raises
+        ------
+        InstrumentProblem, BenchFault
+            The bench failed; what was measured is in the journal; the generator is still to be made safe.
+        Stopped
+            A stop was requested.
+        """
+        planner = self.planner or Planner(self.board, self.bench)
+        self._start, self._stage = self.clock.now(), ""
+        while steps := planner.more(tuple(self.journal.points)):
+            self.journal.planned(steps)
+            for step in steps:
+                self._carry_out(step)
+                left = planner.seconds_left(self.journal.points)
+                self.progress(len(self.journal.points), len(self.journal.steps), left, step.stage)
+        self.devices.generator.be_safe()
+
+    def _carry_out(self, step: Step) -> None:
+        stage = self.board.stage(step.stage)
+        if step.setup != self._stage:
+            self._wire(stage)
+            self._stage = step.setup
+        point = self._measured(step, stage)
+        self.journal.measured(point)
+        self._look(step, stage, point)
+
+    def _wire(self, stage: Stage) -> None:
+        """Connect a stage's taps with the generator off."""
+        self.stop.check()
+        self.devices.generator.be_safe()
+        for tap in (stage.tap_in, stage.tap_out):
+            wire = self.bench.wires[tap]
+            if wire.route is not None and self.devices.switch is not None:
+                self.devices.switch.close(wire.route)
+            elif wire.by_hand:
+                node = self.board.points[tap].node
+                self.operator.confirm(
+                    f"The generator is off. Put the probe of channel {wire.channel} on test point {tap!r} (node {node})"
+                )
+        self.journal.told(self.clock.now() - self._start, "wired", stage=stage.name)
+
+    def _measured(self, step: Step, stage: Stage) -> Point:
+        """Take a step's record, again while it has not settled, at most `repeats` times more."""
+        for attempt in range(self.repeats + 1):
+            point = point_of(step, self._taken(step, stage, attempt), self.bench.mains)
+            if "unsettled" not in point.flags:
+                return point
+        self.journal.alarm(f"{step.stage}: the record at {step.frequency:.6g} Hz had not settled")
+        return point
+
+    def _taken(self, step: Step, stage: Stage, attempt: int) -> Taken:
+        self.stop.check()
+        self.clock.mark(step.index, attempt)
+        channels = [self.bench.wires[tap].channel for tap in (stage.tap_in, stage.tap_out)]
+        ranges = self._set_scope(step, channels)
+        frequency, amplitude = self._set_generator(step)
+        self.clock.wait(step.dwell * self.dwell_factor)
+        self.stop.check()
+        began = self.clock.now() - self._start
+        record = self.devices.scope.acquire()
+        order = [channel - 1 for channel in channels]
+        return Taken(
+            volts=record.volts[order],
+            sample_interval=record.sample_interval,
+            overload=(bool(record.overload[order[0]]), bool(record.overload[order[1]])),
+            lsb=(float(record.lsb[order[0]]), float(record.lsb[order[1]])),
+            ranges=ranges,
+            frequency=frequency,
+            amplitude=amplitude,
+            time=began,
+            attempt=attempt,
+        )
+
+    def _set_scope(self, step: Step, channels: list[int]) -> tuple[float, float]:
+        found = [
+            self.devices.scope.set_channel(channel, range=wanted, probe_factor=self.bench.probe_factors[channel]).range
+            for channel, wanted in zip(channels, step.ranges, strict=True)
+        ]
+        self.devices.scope.set_record(step.duration, step.samples)
+        return found[0], found[1]
+
+    def _set_generator(self, step: Step) -> tuple[float, float]:
+        """Set the tone and make sure the output is on (or off, for a record without signal)."""
+        generator = self.devices.generator
+        if not step.tones:
+            generator.output(False)
+            return 0.0, 0.0
+        if step.amplitude > self.bench.ceiling:
+            raise BenchFault(
+                f"a step asks for {step.amplitude:g} V, above the bench's ceiling {self.bench.ceiling:g} V"
+            )
+        amplitude = generator.set_amplitude(step.amplitude)
+        frequency = generator.set_frequency(step.frequency)
+        generator.output(True)
+        return frequency, amplitude
+
+    def _look(self, step: Step, stage: Stage, point: Point) -> None:
+        """Check the first records of a stage: they prove wiring, probes, level and supply before the sweep."""
+        if step.purpose == "no-signal":
+            check_quiet(self.bench, stage, point)
+        elif step.purpose == "low-level":
+            for alarm in check_low_level(self.board, self.bench, stage, point):
+                self.journal.alarm(alarm)

@@ -1,0 +1,288 @@
+"""The values that travel the road: asked (Board, Bench, Step), measured (Point), concluded (Comparison, Result).
+
+All frozen; SI inside; plain enough to be written as JSON and read back unchanged.
+"""
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from typing import Any, Literal
+
+__all__ = [
+    "Bench",
+    "Board",
+    "Comparison",
+    "Instrument",
+    "Limit",
+    "OpAmpData",
+    "Part",
+    "Point",
+    "Purpose",
+    "Stage",
+    "StageResult",
+    "Step",
+    "TestPoint",
+    "Tone",
+    "Verdict",
+    "Wire",
+]
+
+Verdict = Literal["pass", "fail", "undecided"]
+Purpose = Literal["no-signal", "low-level", "curve", "closing"]
+Quantity = Literal["centre", "q", "gain"]
+
+QUANTITIES: tuple[Quantity, ...] = ("centre", "q", "gain")
+UNITS: Mapping[Quantity, str] = {"centre": "Hz", "q": "", "gain": "V/V"}
+
+
+# --- asked ---
+
+
+@dataclass(frozen=True, slots=True)
+class Part:
+    """A resistor or capacitor as drawn: its name in the stage, value in SI and relative tolerance."""
+
+    name: str
+    value: float
+    tolerance: float
+
+
+@dataclass(frozen=True, slots=True)
+class Limit:
+    """What a figure was designed to be and the limits it must keep."""
+
+    designed: float
+    lower: float
+    upper: float
+    rule: str = "simple"
+
+
+@dataclass(frozen=True, slots=True)
+class OpAmpData:
+    """The op-amp of a board: gain-bandwidth product in Hz, slew rate in V/s, greatest output in V peak."""
+
+    gbw: float
+    slew: float
+    swing: float
+
+
+@dataclass(frozen=True, slots=True)
+class TestPoint:
+    """A place a probe can reach: its node in the circuit, its source resistance in Ω."""
+
+    __test__ = False  # not a test class, whatever pytest thinks of the name
+    name: str
+    node: str
+    source_resistance: float
+
+
+@dataclass(frozen=True, slots=True)
+class Stage:
+    """One band of a board: taps, limits per figure, circuit and parts."""
+
+    name: str
+    kind: Literal["band"]
+    tap_in: str
+    tap_out: str
+    limits: Mapping[Quantity, Limit]
+    circuit: str
+    parts: tuple[Part, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class Board:
+    """A board as designed; ``text`` is the file it was read from."""
+
+    title: str
+    drawing: str
+    revision: str
+    input_maximum: float
+    op_amp: OpAmpData
+    points: Mapping[str, TestPoint]
+    stages: tuple[Stage, ...]
+    text: str
+    frequencies: Literal["nominal", "exact"] = "nominal"
+
+    def stage(self, name: str) -> Stage:
+        """Return a stage by name (KeyError when there is none)."""
+        for stage in self.stages:
+            if stage.name == name:
+                return stage
+        raise KeyError(name)
+
+
+@dataclass(frozen=True, slots=True)
+class Instrument:
+    """Where an instrument is and which dialect it understands."""
+
+    role: Literal["generator", "scope", "switch"]
+    address: str
+    dialect: str
+
+
+@dataclass(frozen=True, slots=True)
+class Wire:
+    """How a test point reaches the scope: a channel, and a switch route or the operator's hands (neither: fixed)."""
+
+    channel: int
+    route: str | None = None
+    by_hand: bool = False
+
+
+@dataclass(frozen=True, slots=True)
+class Bench:
+    """A bench: instruments, wiring, ceilings and what is declared about its accuracy.
+
+    ``channel_gain`` and ``generator_frequency`` are half-widths of rectangular distributions (relative).
+    """
+
+    title: str
+    mains: float
+    ceiling: float
+    instruments: Mapping[str, Instrument]
+    wires: Mapping[str, Wire]
+    probe_factors: Mapping[int, float]
+    channel_gain: float
+    generator_frequency: float
+    visa_library: str
+    clock: str | None
+    text: str
+    dialect_texts: Mapping[str, str] = field(default_factory=dict)
+
+
+@dataclass(frozen=True, slots=True)
+class Tone:
+    """One sine of a step: frequency in Hz, level in V peak at the generator's open output."""
+
+    frequency: float
+    amplitude: float
+
+
+@dataclass(frozen=True, slots=True)
+class Step:
+    """One record to take: where, with which tones, the waits in s, the ranges in V peak at the probe tips."""
+
+    index: int
+    stage: str
+    purpose: Purpose
+    tones: tuple[Tone, ...]
+    dwell: float
+    duration: float
+    samples: int
+    ranges: tuple[float, float]
+
+    @property
+    def frequency(self) -> float:
+        """Frequency of the first tone in Hz, 0 for a record without signal."""
+        return self.tones[0].frequency if self.tones else 0.0
+
+    @property
+    def amplitude(self) -> float:
+        """Level of the first tone in V peak, 0 for a record without signal."""
+        return self.tones[0].amplitude if self.tones else 0.0
+
+    @property
+    def setup(self) -> str:
+        """What the steps that share wiring have in common: the stage."""
+        return self.stage
+
+
+# --- measured ---
+
+
+@dataclass(frozen=True, slots=True)
+class Point:
+    """What one step gave.
+
+    ``frequency`` and ``amplitude`` are read back; ``response`` is H(tap out)/H(tap in) with the 2 × 2 covariance of
+    its real and imaginary part; ``levels`` are the peak volts of both channels, ``offsets`` their mean, ``residuals``
+    their residual rms; ``flags`` name what the record's own checks found.
+    """
+
+    step: int
+    stage: str
+    purpose: Purpose
+    attempt: int
+    time: float
+    frequency: float
+    amplitude: float
+    response: complex
+    covariance: tuple[float, float, float]
+    levels: tuple[float, float]
+    offsets: tuple[float, float]
+    residuals: tuple[float, float]
+    lsb: tuple[float, float]
+    ranges: tuple[float, float]
+    sample_interval: float
+    samples: int
+    distortion: float
+    settling: float
+    flags: tuple[str, ...]
+
+
+# --- concluded ---
+
+
+@dataclass(frozen=True, slots=True)
+class Comparison:
+    """One figure of one stage, measured against designed."""
+
+    quantity: Quantity
+    unit: str
+    designed: float
+    predicted: float
+    measured: float
+    repeatability: float
+    standard_uncertainty: float
+    expanded_uncertainty: float
+    coverage_factor: float
+    rule: str
+    lower_limit: float
+    upper_limit: float
+    verdict: Verdict
+    conformance_probability: float
+
+    @property
+    def deviation(self) -> float:
+        """Relative deviation from the designed value."""
+        return self.measured / self.designed - 1.0
+
+
+@dataclass(frozen=True, slots=True)
+class StageResult:
+    """What is concluded about a stage: its fit and its figures."""
+
+    name: str
+    kind: str
+    verdict: Verdict | None
+    model: str
+    figures: Mapping[Quantity, Comparison]
+    theta: tuple[float, ...]
+    theta_covariance: tuple[tuple[float, ...], ...]
+    reduced_chi_square: float
+    points: int
+    lack_of_fit: bool
+    status: str
+    alarms: tuple[str, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class Run:
+    """A whole run: who, what, with what, every point, how it ended."""
+
+    run_id: str
+    serial: str
+    attempt: int
+    board: Board
+    bench: Bench
+    identities: Mapping[str, str]
+    version: str
+    started: str
+    ended: Literal["complete", "cut_short"]
+    reason: str
+    bench_seconds: float
+    operator: str
+    note: str
+    steps: tuple[Step, ...]
+    points: tuple[Point, ...]
+    alarms: tuple[str, ...]
+    history: tuple[Mapping[str, Any], ...]

@@ -1,0 +1,37 @@
+"""``fit``: stored runs fitted again."""
+
+from pathlib import Path
+
+import click
+
+__all__ = ["command"]
+
+
+@click.command("fit")
+@click.argument("run_paths", metavar="RUN...", nargs=-1, required=True, type=click.Path(path_type=Path))
+@click.option("--json", "as_json", is_flag=True, help="Print one result object per run and nothing else.")
+def command(run_paths: tuple[Path, ...], as_json: bool) -> int:
+    """Fit stored runs again; nothing that was measured is changed, the new result is a file beside the run.
+
+    \b
+    Example:
+      bandproof fit runs/TB-0001/1/run.h5
+    """
+    from bandproof.bench.evaluate import evaluate
+    from bandproof.bench.job import Outcome
+    from bandproof.bench.refits import keep_refit
+    from bandproof.bench.result import result_object
+    from bandproof.bench.runfile import read_run
+    from bandproof.bench.verbs.run import show, wall
+
+    codes = []
+    for path in run_paths:
+        begin = wall()
+        run = read_run(path)
+        stages = evaluate(run)
+        result = result_object(run, stages, {"run": path.name, "picture": None, "report": None})
+        refit = keep_refit(path, result)
+        outcome = Outcome(run, stages, result, path.parent, None)
+        codes.append(show(outcome, wall() - begin, as_json))
+        click.echo(f"  refit    {refit}", err=as_json)
+    return max(codes)

@@ -1,0 +1,158 @@
+"""``sweep``: the whole job on a real bench; and what every job prints."""
+
+import json
+import secrets
+import sys
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+import click
+
+from bandproof.bench.types import Bench
+
+if TYPE_CHECKING:
+    from bandproof.bench.job import Outcome
+    from bandproof.drivers.clock import Clock
+
+__all__ = ["Progress", "clock_of", "command", "exit_code", "show"]
+
+
+def clock_of(bench: Bench) -> "Clock":
+    """Return the real clock, or the shared one of a simulated bench that names its clock file."""
+    from bandproof.drivers.clock import RealClock, VirtualClock
+
+    return VirtualClock(bench.clock) if bench.clock else RealClock()
+
+
+class Progress:
+    """Progress on standard error: one line that is rewritten on a terminal, a line per stage elsewhere."""
+
+    def __init__(self) -> None:
+        self._stage, self._live = "", sys.stderr.isatty()
+
+    def __call__(self, done: int, planned: int, left: float, stage: str) -> None:
+        """Tell how far the run is: records done and planned so far, bench seconds left, stage."""
+        if self._live:
+            text = (
+                f"\r{stage:<12} record {done} of {planned} planned so far, about {_duration(left)} of bench time left"
+            )
+            click.echo(f"{text:<79}", err=True, nl=False)
+        elif stage != self._stage:
+            click.echo(f"measuring {stage}, about {_duration(left)} of bench time left", err=True)
+        self._stage = stage
+
+    def close(self) -> None:
+        """Leave the line."""
+        if self._live and self._stage:
+            click.echo("\r" + " " * 79 + "\r", err=True, nl=False)
+
+
+def _duration(seconds: float) -> str:
+    return f"{seconds:.0f} s" if seconds < 100.0 else f"{seconds / 60.0:.0f} min"
+
+
+def show(outcome: "Outcome", wall_seconds: float, as_json: bool) -> int:
+    """Print a job's outcome and return the exit code."""
+    from bandproof.bench.summary import summary_lines
+
+    if as_json:
+        files = {kind: str(outcome.folder / name) if name else None for kind, name in outcome.result["files"].items()}
+        click.echo(json.dumps({**outcome.result, "wall_seconds": round(wall_seconds, 3), "files": files}, indent=1))
+        return exit_code(outcome)
+    run, result = outcome.run, outcome.result
+    click.echo(f"{run.board.title}   serial {run.serial}, attempt {run.attempt}, {run.started}")
+    for line in summary_lines(outcome.stages):
+        click.echo(line)
+    click.echo("")
+    for alarm in result["alarms"]:
+        click.echo(f"note: {alarm}")
+    if outcome.problem is not None:
+        click.echo(f"CUT SHORT: {outcome.problem}")
+        click.echo("No verdict. What was measured is kept.")
+    else:
+        click.echo(f"Board: {str(result['verdict']).upper()}   {_counts(outcome)}")
+    click.echo(
+        f"{result['points']} points in {run.bench_seconds:.1f} s of bench time ({wall_seconds:.1f} s by the wall)"
+    )
+    for kind in ("run", "picture"):
+        click.echo(f"  {kind:<8} {outcome.folder / result['files'][kind]}")
+    return exit_code(outcome)
+
+
+def _counts(outcome: "Outcome") -> str:
+    verdicts = [figure.verdict for stage in outcome.stages for figure in stage.figures.values()]
+    return ", ".join(f"{verdicts.count(word)} {word}" for word in dict.fromkeys(sorted(verdicts)))
+
+
+def exit_code(outcome: "Outcome") -> int:
+    """Return the exit code of an outcome: by verdict, or 3 and 5 for a run that was cut short."""
+    from bandproof.bench.errors import Stopped
+    from bandproof.bench.verbs.console import BENCH_FAULT, INTERRUPTED, VERDICT_CODES
+
+    if outcome.problem is not None:
+        return INTERRUPTED if isinstance(outcome.problem, Stopped) else BENCH_FAULT
+    return VERDICT_CODES[outcome.result["verdict"]]
+
+
+@click.command("sweep")
+@click.argument("board_path", metavar="BOARD", type=click.Path(path_type=Path))
+@click.option("--bench", "bench_path", help="Bench file; else BANDPROOF_BENCH, else the only *.bench.toml here.")
+@click.option("--serial", required=True, help="The board's serial number: letters, digits and . _ -")
+@click.option(
+    "--folder", type=click.Path(path_type=Path), default=Path("runs"), show_default=True, help="Where runs go."
+)
+@click.option("--operator", "name", default="", help="Who does this; kept in the run file.")
+@click.option("--note", default="", help="A remark; kept in the run file.")
+@click.option("--json", "as_json", is_flag=True, help="Print the result object and nothing else.")
+def command(
+    board_path: Path, bench_path: str | None, serial: str, folder: Path, name: str, note: str, as_json: bool
+) -> int:
+    """Sweep BOARD on a real bench: every stage, fit, compare with the design, decide, keep the record.
+
+    \b
+    Example:
+      bandproof sweep my.board.toml --bench my.bench.toml --serial TB-0001
+    """
+    from bandproof.bench.bench_file import check_wiring, find_bench, read_bench
+    from bandproof.bench.board_file import read_board
+    from bandproof.bench.job import Job, new_attempt
+    from bandproof.bench.operator import Absent, AtTerminal
+    from bandproof.bench.stop import Stop, watching_signals
+
+    path, why = find_bench(bench_path)
+    board, bench = read_board(board_path), read_bench(path)
+    check_wiring(board, bench, str(path))
+    click.echo(f"bench: {path} ({why})", err=as_json)
+    clock, stop, progress = clock_of(bench), Stop(), Progress()
+    place, attempt = new_attempt(folder, serial)
+    job = Job(
+        board=board,
+        bench=bench,
+        serial=serial,
+        attempt=attempt,
+        run_id=secrets.token_hex(8),
+        folder=place,
+        clock=clock,
+        operator=AtTerminal(_ask) if sys.stdin.isatty() else Absent(),
+        stop=stop,
+        progress=progress,
+        operator_name=name,
+        note=note,
+    )
+    begin = wall()
+    with watching_signals(stop):
+        outcome = job.carry_out()
+    progress.close()
+    return show(outcome, wall() - begin, as_json)
+
+
+def wall() -> float:
+    """Return monotonic seconds by the wall."""
+    from bandproof.drivers.clock import RealClock
+
+    return RealClock().now()
+
+
+def _ask(request: str) -> str:
+    click.echo(request, err=True, nl=False)
+    return input()
