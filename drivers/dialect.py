@@ -149,6 +149,8 @@ class Acquisition:
         The answer that says so.
     poll : float
         Seconds between two questions.
+    abort : str
+        Ends an acquisition that does not complete; sent after reopening.
     latency : float
         Seconds from start to the first sample.
     """
@@ -159,6 +161,7 @@ class Acquisition:
     completes: Literal["awaited", "polled"] = "awaited"
     is_complete: str = "1"
     poll: float = 0.01
+    abort: str = ""
     latency: float = 0.05
 
 

@@ -41,8 +41,9 @@ class Generator(Instrument):
 
     def be_safe(self) -> None:
         """Turn the output off and see it confirmed; works on any open link, whatever was set before."""
+        self._remember("output", "", partial(self.output, False), last=True)
         self._forget("output")
-        self.output(False)
+        self._command_and_see(self._dialect.output.off, self._dialect.output.query, self._dialect.output.is_off)
 
     def set_load(self, load: float) -> float:
         """Tell the load in ohms that amplitudes refer to (inf: the open circuit); return it.

@@ -72,15 +72,19 @@ class Instrument:
         return self.session.check_errors()
 
     def reopen(self) -> None:
-        """Close and open the link; the instrument's settings count as unknown until `restore`.
+        """Close and open the link and end what was pending; settings count as unknown until `restore`.
+
+        Errors still in the instrument's queue belong to what failed before; they are cleared.
 
         Raises
         ------
-        LinkBroken
-            It could not be opened.
+        LinkBroken, NoAnswer, ReplyError
+            It could not be opened, or did not answer: reopen again.
         """
         self._made.clear()
         self.session.link.reopen()
+        for text in self._recovery():
+            self.session.command(text)
 
     def restore(self) -> None:
         """Make all remembered settings again, in their order.
@@ -97,6 +101,10 @@ class Instrument:
     def disconnect(self) -> None:
         """Close the link; nothing is sent."""
         self.session.link.close()
+
+    def _recovery(self) -> tuple[str, ...]:
+        """Return what ends the instrument's pending work and forgets its old errors."""
+        return (self._identity.clear,) if self._identity.clear else ()
 
     def _remember(self, slot: str, key: object, again: Callable[[], object], *, last: bool = False) -> None:
         if last:
@@ -154,9 +162,12 @@ class Instrument:
         self._once(slot + channel, text, lambda: self._command_and_compare(text, query, expected))
 
     def _command_and_compare(self, text: str, query: str, expected: str) -> None:
+        self._command_and_see(text, query, expected)
+        self.check_errors()
+
+    def _command_and_see(self, text: str, query: str, expected: str) -> None:
         self.session.command(text)
         found = self.session.ask(query, as_text) if query else expected
-        self.check_errors()
         if found.strip("\"'").upper() != expected.upper():
             raise SettingRefused(self.address, text, expected, found, expected, self.session.setting_line)
 

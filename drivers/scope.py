@@ -158,11 +158,21 @@ class Scope(Instrument):
             array.flags.writeable = False
         return Record(volts, record.sample_interval, overload, lsb)
 
+    def reset(self) -> None:
+        """Bring the instrument to its start settings; see `Instrument.reset`."""
+        self._channels.clear()
+        self._record = None
+        super().reset()
+
     def reopen(self) -> None:
-        """Close and open the link; see `Instrument.reopen`."""
+        """Close and open the link, end an acquisition still pending; see `Instrument.reopen`."""
         self._channels.clear()
         self._record = None
         super().reopen()
+
+    def _recovery(self) -> tuple[str, ...]:
+        abort = self._dialect.acquisition.abort
+        return ((abort,) if abort else ()) + super()._recovery()
 
     def _settings(self) -> tuple[RecordSetting, list[tuple[int, ChannelSetting]]]:
         if self._record is None or set(self._channels) != {1, 2}:
