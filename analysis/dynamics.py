@@ -143,10 +143,10 @@ _EMF = ""  # the node behind the source resistance; no user's node has an empty 
 
 def _quadratic(rows: Mapping[str, FloatArray], parts: Sequence[Resistor | Capacitor]) -> FloatArray:
     """Return the sum over parts of admittance times the outer product of its voltage row."""
-    across = np.array([rows[part.a] - rows[part.b] for part in parts]).reshape(len(parts), -1)
-    value = np.array([1 / p.resistance if isinstance(p, Resistor) else p.capacitance for p in parts])
     width = len(rows[GROUND])
-    result: FloatArray = (across.T * value) @ across if len(parts) else np.zeros((width, width))
+    across = np.array([rows[part.a] - rows[part.b] for part in parts]).reshape(len(parts), width)
+    value = np.array([1 / p.resistance if isinstance(p, Resistor) else p.capacitance for p in parts])
+    result: FloatArray = (across.T * value) @ across
     return result
 
 

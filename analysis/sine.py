@@ -16,6 +16,7 @@ from bandproof.analysis.types import ComplexArray, FloatArray
 __all__ = ["Ratio", "Settling", "SineFit", "channel_ratio", "distortion", "fit_clock_and_sines", "fit_sines", "halves"]
 
 _SETTLING_FACTOR = 3.0  # |difference| over its own rms; exceeded by noise alone once in 8000: exp(-9)
+_CLOCK_REACH = 0.5  # cycles over the record; arbitrary, Gauss-Newton is sure within 0.3 and lost at 1
 _CLOCK_STEPS = 30  # arbitrary; Gauss-Newton needs about five
 
 
@@ -147,6 +148,9 @@ def fit_clock_and_sines(
         fit = _solve(y, design, tones, others)
         step, variance, slope = _clock_step(y, design, fit, sample_interval, clock)
         clock += step
+        leading = tones[np.abs(fit.phasor).max(axis=0).argmax()]
+        if not abs(clock - 1) * leading * y.shape[1] * sample_interval < _CLOCK_REACH:
+            break
         if abs(step) <= 1e-14 * clock + 1e-9 * variance**0.5:
             return _with_clock(fit, clock, variance, slope)
     raise ValueError(f"no clock ratio settles near the stated {tones[0]:g} Hz: start nearer to the true frequency")
