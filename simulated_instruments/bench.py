@@ -69,6 +69,8 @@ class World:
     clock: str | None = None
 
     def __post_init__(self) -> None:
+        if self.seed < 0 or self.run < 0:
+            raise ValueError(f"seed and run must not be negative, found {self.seed!r} and {self.run!r}")
         if set(self.scope) != {1, 2}:
             raise ValueError(f"scope must name what channels 1 and 2 see, found {dict(self.scope)!r}")
 

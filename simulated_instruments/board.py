@@ -130,20 +130,18 @@ class Board:
         """
         result = np.empty(count)
         stamps = [event.at for event in self._events[1:]]
-        first += delay
-        at, done = bisect_right(stamps, first), 0
+        at, done = bisect_right(stamps, first + delay), 0
         while done < count:
             last = at == len(stamps)
-            stop = count if last else min(count, max(done, int(np.ceil((stamps[at] - first) / interval))))
+            stop = count if last else min(count, max(done, int(np.ceil((stamps[at] - first - delay) / interval))))
             if stop > done:
-                result[done:stop] = self._part(
-                    self._events[at], channel, first + done * interval, interval, stop - done
-                )
+                ahead = delay + done * interval
+                result[done:stop] = self._part(self._events[at], channel, first, ahead, interval, stop - done)
             done, at = stop, at + 1
         return result
 
-    def _part(self, event: _Event, channel: int, first: float, interval: float, count: int) -> FloatArray:
-        """Return volts while no event happens."""
+    def _part(self, event: _Event, channel: int, first: float, ahead: float, interval: float, count: int) -> FloatArray:
+        """Return volts while no event happens, from `ahead` after `first` on."""
         front_end, system = event.front_ends[channel], event.dynamics
         if front_end.grounded:
             return np.zeros(count)
@@ -153,11 +151,11 @@ class Board:
         inputs = self._inputs(event.drive)
         constant = system.c[rows] @ event.constant + system.d[rows] @ inputs
         phasor = system.c[rows] @ event.phasor + system.d[rows, 0] * event.drive.amplitude
-        start = event.drive.frequency * (first - event.drive_at) % 1.0
+        start = event.drive.frequency * (_elapsed(event.drive_at, first) + ahead) % 1.0
         angle = 2 * np.pi * (start + event.drive.frequency * interval * np.arange(count))
         volts: FloatArray = np.outer(phasor.real, np.sin(angle)) + np.outer(phasor.imag, np.cos(angle))
         volts += constant[:, None]
-        volts += system.outputs(event.free, rows, first - event.at, interval, count)
+        volts += system.outputs(event.free, rows, _elapsed(event.at, first) + ahead, interval, count)
         if len(rows) == 1:
             return np.asarray(volts[0])
         return np.asarray(volts[0] - (volts[1] - np.clip(volts[1], -swing, swing)))
@@ -165,11 +163,15 @@ class Board:
     def _change(self, at: float, drive_at: float, drive: Drive, front_ends: tuple[FrontEnd, ...]) -> None:
         last = self._events[-1]
         at = max(at, last.at)
-        angle = 2 * np.pi * (last.drive.frequency * (at - last.drive_at) % 1.0)
-        state = last.constant + (last.phasor * np.exp(1j * angle)).imag + last.dynamics.later(last.free, at - last.at)
+        angle = 2 * np.pi * (last.drive.frequency * _elapsed(last.drive_at, at) % 1.0)
+        state = (
+            last.constant
+            + (last.phasor * np.exp(1j * angle)).imag
+            + last.dynamics.later(last.free, _elapsed(last.at, at))
+        )
         dynamics = self._dynamics(front_ends)
         constant, phasor = self._steady(dynamics, drive)
-        angle = 2 * np.pi * (drive.frequency * (at - drive_at) % 1.0)
+        angle = 2 * np.pi * (drive.frequency * _elapsed(drive_at, at) % 1.0)
         free = dynamics.free(state - constant - (phasor * np.exp(1j * angle)).imag)
         self._events.append(_Event(at, drive_at, drive, front_ends, dynamics, constant, phasor, free))
         del self._events[:-HISTORY]
@@ -190,6 +192,11 @@ class Board:
         if front_ends not in self._known:
             self._known[front_ends] = _assemble(self.network, front_ends)
         return self._known[front_ends]
+
+
+def _elapsed(earlier: float, later: float) -> float:
+    """Return the s between two instants in whole ns, so that the rounding of late instants leaves no trace."""
+    return round(later - earlier, 9)
 
 
 def _assemble(network: Network, front_ends: tuple[FrontEnd, ...]) -> Dynamics:

@@ -16,6 +16,8 @@ from bandproof.simulated_instruments.syntax import ScpiError, Unit, units
 
 __all__ = ["Answer", "Device", "Setting", "Timing"]
 
+REPLY_LIMIT = 4_000_000  # bytes of replies to one message, arbitrary: ten of the longest records
+
 
 @dataclass(frozen=True, slots=True)
 class Timing:
@@ -142,6 +144,9 @@ class Device:
                 return
             if reply is not None:
                 replies.append(reply)
+            if sum(map(len, replies)) > REPLY_LIMIT:
+                replies.clear()
+                raise ScpiError(-430)
             indefinite = indefinite or command.indefinite
 
     def _execute(self, command: Command, suffixes: tuple[int, ...], unit: Unit) -> bytes | None:

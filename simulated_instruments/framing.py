@@ -64,11 +64,11 @@ class Framer:
             return None
         while (mark := _MARKS.search(self._buffer, self._position)) is not None:
             if mark[0].endswith(b"\n"):
-                return mark.end() - 1
+                return mark.end() - 1 if mark.end() <= MESSAGE_LIMIT + 1 else Overrun(-363)
+            if mark.end() == len(self._buffer) and _is_open(mark[0]):
+                self._position = mark.start()
+                break
             if mark[0][:1] != b"#":
-                if mark.end() == len(self._buffer) and (len(mark[0]) == 1 or mark[0][-1:] != mark[0][:1]):
-                    self._position = mark.start()
-                    break
                 self._position = mark.end()
                 continue
             resolved = self._block(mark)
@@ -78,7 +78,7 @@ class Framer:
             if resolved > len(self._buffer):
                 return None
         else:
-            self._position = max(self._position, len(self._buffer) - 1)
+            self._position = max(self._position, len(self._buffer))
         return Overrun(-363) if len(self._buffer) > MESSAGE_LIMIT else None
 
     def _block(self, mark: re.Match[bytes]) -> int | Overrun | None:
@@ -94,3 +94,10 @@ class Framer:
             return mark.end()
         end = start + 2 + count + int(digits)
         return Overrun(-223) if end > MESSAGE_LIMIT else end
+
+
+def _is_open(mark: bytes) -> bool:
+    """Return whether a string or an indefinite block may go on with the next bytes."""
+    if mark[:1] == b"#":
+        return mark[1:2] == b"0"
+    return len(mark) == 1 or mark[-1:] != mark[:1]

@@ -67,7 +67,7 @@ class Connection(asyncio.Protocol):
 
     def data_received(self, data: bytes) -> None:
         """Take bytes."""
-        self._waiting.extend(self._framer.feed(data))
+        self._waiting.extend(message for message in self._framer.feed(data) if message)
         self._pump()
 
     def _pump(self) -> None:

@@ -10,6 +10,7 @@ import re
 from pathlib import Path
 
 import pytest
+
 from bandproof.simulated_instruments.device import Device, Setting, Timing
 from bandproof.simulated_instruments.error_texts import TEXTS, event_bit
 from bandproof.simulated_instruments.parameters import Blob, Boolean, Choice, Decimal, Integer, Quoted
