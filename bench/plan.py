@@ -1,5 +1,6 @@
 """The plan: which records to take next, given what was measured so far. Pure and incremental; empty means done."""
 
+from collections import Counter
 from collections.abc import Mapping, Sequence
 from math import floor, log, log10
 
@@ -38,6 +39,8 @@ class Planner:
         self._board, self._bench = board, bench
         self._predictions = {stage.name: _predicted(board, stage) for stage in board.stages}
         self._levels = {s.name: greatest_level(board, bench, s, self._predictions[s.name]) for s in board.stages}
+        self._costs: dict[str, list[float]] = {}
+        self._dwells: dict[tuple[str, float, float | None], float] = {}
 
     def more(self, points: Sequence[Point]) -> tuple[Step, ...]:
         """Return the next batch of steps; empty when every stage has what it needs."""
@@ -49,12 +52,15 @@ class Planner:
 
     def seconds_left(self, points: Sequence[Point]) -> float:
         """Return an estimate of the bench seconds still needed."""
-        left = 0.0
-        for stage in self._board.stages:
-            had = [point for point in points if point.stage == stage.name]
+        had = Counter(point.stage for point in points)
+        return sum(sum(self._seconds(stage)[max(0, had[stage.name] - 2) :]) for stage in self._board.stages)
+
+    def _seconds(self, stage: Stage) -> list[float]:
+        """Return what each record of a stage's curve costs, as first planned."""
+        if stage.name not in self._costs:
             curve = self._curve(stage, self._predictions[stage.name], 1.0, 1.0, 0)
-            left += sum(step.dwell + step.duration + _OVERHEAD for step in curve[max(0, len(had) - 2) :])
-        return left
+            self._costs[stage.name] = [step.dwell + step.duration + _OVERHEAD for step in curve]
+        return self._costs[stage.name]
 
     def _stage_steps(self, stage: Stage, had: Sequence[Point], *, first: int) -> tuple[Step, ...]:
         prediction = self._predictions[stage.name]
@@ -120,15 +126,18 @@ class Planner:
         ranges: tuple[float, float],
     ) -> Step:
         record = plan_record(frequency, mains=self._bench.mains, longest=LONGEST)
-        dwell = dwell_after_step(
-            stage_network(self._board, stage),
-            taps(self._board, stage),
-            frequency,
-            duration=record.duration,
-            previous=previous,
-        )
+        dwell = self._dwell(stage, frequency, previous, record.duration)
         tones = (Tone(frequency, level),)
         return Step(index, stage.name, purpose, tones, dwell, record.duration, record.points, ranges)
+
+    def _dwell(self, stage: Stage, frequency: float, previous: float | None, duration: float) -> float:
+        key = (stage.name, frequency, previous)
+        if key not in self._dwells:
+            network = stage_network(self._board, stage)
+            self._dwells[key] = dwell_after_step(
+                network, taps(self._board, stage), frequency, duration=duration, previous=previous
+            )
+        return self._dwells[key]
 
 
 def greatest_level(board: Board, bench: Bench, stage: Stage, prediction: Prediction) -> float:

@@ -2,6 +2,8 @@
 
 import json
 import tempfile
+from collections.abc import Iterator
+from contextlib import closing, contextmanager
 from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -12,9 +14,10 @@ from bandproof.bench.errors import BadInput
 from bandproof.bench.types import Bench, Board, Instrument
 
 if TYPE_CHECKING:
+    from bandproof.drivers.clock import VirtualClock
     from bandproof.simulated_instruments.bench import World
 
-__all__ = ["command"]
+__all__ = ["command", "simulated", "world_of"]
 
 Drawn = dict[str, dict[str, float]]
 
@@ -64,7 +67,8 @@ def _defect(parse: Any, text: str, board: Board) -> tuple[str, str, float]:
     return stage, part, value
 
 
-def _world(board: Board, bench: Bench, drawn: Drawn, seed: int, run: int, clock: str | None) -> "World":
+def world_of(board: Board, bench: Bench, drawn: Drawn, seed: int, run: int) -> "World":
+    """Return the world of a rehearsal: the drawn board behind a reference bench, in real time."""
     from bandproof.bench.circuit import board_network
     from bandproof.simulated_instruments.bench import World
     from bandproof.simulated_instruments.imperfections import Imperfections
@@ -78,7 +82,6 @@ def _world(board: Board, bench: Bench, drawn: Drawn, seed: int, run: int, clock:
         seed=seed,
         run=run,
         imperfections=Imperfections.reference(seed),
-        clock=clock,
     )
 
 
@@ -91,36 +94,44 @@ def _at(bench: Bench, ports: dict[str, int], clock: str | None) -> Bench:
     return replace(bench, instruments=instruments, clock=clock)
 
 
+@contextmanager
+def simulated(world: "World", bench: Bench) -> "Iterator[tuple[Bench, VirtualClock]]":
+    """Run a world as a process of its own in virtual time; yield the bench at its ports and the shared clock."""
+    from bandproof.drivers.clock import VirtualClock, create_clock_file
+    from bandproof.simulated_instruments.bench import start
+
+    with tempfile.TemporaryDirectory(prefix="bandproof-") as temporary:
+        time_file = str(Path(temporary) / "bench.time")
+        create_clock_file(time_file)
+        with start(replace(world, clock=time_file)) as server, closing(VirtualClock(time_file)) as clock:
+            yield _at(bench, server.ports, time_file), clock
+
+
 def _rehearse(board: Board, bench: Bench, drawn: Drawn, seed: int, folder: Path, as_json: bool) -> int:
     from bandproof.bench.job import Job, new_attempt
     from bandproof.bench.operator import Absent
     from bandproof.bench.stop import Stop, watching_signals
     from bandproof.bench.verbs.run import Progress, show, wall
-    from bandproof.drivers.clock import VirtualClock, create_clock_file
-    from bandproof.simulated_instruments.bench import start
 
     begin = wall()
     serial = f"rehearsal-{seed}"
     place, attempt = new_attempt(folder, serial)
     stop, progress = Stop(), Progress()
-    with tempfile.TemporaryDirectory(prefix="bandproof-") as temporary:
-        time_file = str(Path(temporary) / "bench.time")
-        create_clock_file(time_file)
-        world = _world(board, bench, drawn, seed, attempt, time_file)
-        _write_truth(place / "truth.json", board, drawn, world)
-        with start(world) as simulated, watching_signals(stop):
-            outcome = Job(
-                board=board,
-                bench=_at(bench, simulated.ports, time_file),
-                serial=serial,
-                attempt=attempt,
-                run_id=f"rehearsal-{seed}-{attempt}",
-                folder=place,
-                clock=VirtualClock(time_file),
-                operator=Absent(),
-                stop=stop,
-                progress=progress,
-            ).carry_out()
+    world = world_of(board, bench, drawn, seed, attempt)
+    _write_truth(place / "truth.json", board, drawn, world)
+    with simulated(world, bench) as (reachable, clock), watching_signals(stop):
+        outcome = Job(
+            board=board,
+            bench=reachable,
+            serial=serial,
+            attempt=attempt,
+            run_id=f"rehearsal-{seed}-{attempt}",
+            folder=place,
+            clock=clock,
+            operator=Absent(),
+            stop=stop,
+            progress=progress,
+        ).carry_out()
     progress.close()
     return show(outcome, wall() - begin, as_json)
 
@@ -146,8 +157,8 @@ def _serve(board: Board, bench: Bench, drawn: Drawn, seed: int, folder: Path) ->
     from bandproof.simulated_instruments.bench import start
 
     folder.mkdir(parents=True, exist_ok=True)
-    with start(_world(board, bench, drawn, seed, 1, None)) as simulated:
-        served = _at(bench, simulated.ports, None)
+    with start(world_of(board, bench, drawn, seed, 1)) as server:
+        served = _at(bench, server.ports, None)
         path = folder / "served.bench.toml"
         text = bench.text
         for role, instrument in bench.instruments.items():
