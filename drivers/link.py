@@ -90,7 +90,9 @@ class Link:
             limit = self.clock.patience(0.0)
             try:
                 self._port = self._opener(self.address, self._library, limit)
-            except Exception as problem:  # PyVISA-py raises bare Exceptions here
+            except Exception as problem:
+                if type(problem) is not Exception and not isinstance(problem, _foreign()):
+                    raise  # PyVISA-py raises bare Exceptions here; others are mistakes of ours
                 raise LinkBroken(self.address, "open", _reason(problem), limit) from problem
             self.is_dirty = self._was_closed = False
 

@@ -91,4 +91,4 @@ class ExchangeLog:
 
 
 def _readable(head: bytes) -> str:
-    return repr(bytes(head[:EXCERPT]))[2:-1]
+    return bytes(head[:EXCERPT]).decode("latin-1").encode("unicode_escape").decode("ascii")

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import select
 import socket
+from functools import cache
 from typing import TYPE_CHECKING, Any, cast
 
 if TYPE_CHECKING:
@@ -140,16 +141,19 @@ def _milliseconds(limit: float) -> int:
     return max(1, round(limit * 1000))
 
 
+@cache
 def translated() -> tuple[type[BaseException], ...]:
     """Return the foreign errors that mean trouble with the instrument; others are mistakes of ours and pass.
 
-    One row for each source: the operating system, PyVISA, PyVISA-py's protocols (HiSLIP raises RuntimeError, RPC its
-    own class and EOFError, wrong addresses ValueError).
+    One word for each source: the operating system, PyVISA, PyVISA-py's protocols (HiSLIP raises RuntimeError, RPC and
+    VXI-11 their own and EOFError, wrong addresses ValueError). The table is built once, when first needed.
     """
     from pyvisa.errors import Error
     from pyvisa_py.protocols.rpc import RPCError
+    from pyvisa_py.protocols.vxi11 import Vxi11Error
+    from pyvisa_py.protocols.xdrlib import Error as XdrError
 
-    return (OSError, Error, RuntimeError, EOFError, ValueError, RPCError)
+    return (OSError, Error, RuntimeError, EOFError, ValueError, RPCError, Vxi11Error, XdrError)
 
 
 def is_timeout(problem: BaseException) -> bool:

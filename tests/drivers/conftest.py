@@ -142,7 +142,8 @@ class Registers:
     def __call__(self, message: bytes) -> bytes:
         text = message.decode()
         if text in self.fixed:
-            return self.fixed[text] + b"\n"
+            reply = self.fixed[text]
+            return (reply.pop(0) if isinstance(reply, list) else reply) + b"\n"
         if "?" in text:
             return self.values.get(text.replace("?", "").strip(), "0").encode() + b"\n"
         head, _, value = text.partition(" ")
