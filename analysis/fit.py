@@ -13,6 +13,9 @@ from bandproof.analysis.types import BoolArray, ComplexArray, FloatArray, IndexA
 __all__ = ["BandFit", "fit_bands"]
 
 
+_OFFSET = 1e-6  # of the variables' own uncertainty; arbitrary, far below anything that is reported
+
+
 @dataclass(frozen=True, slots=True, eq=False)
 class BandFit:
     """Fitted bands of S stages.
@@ -115,9 +118,11 @@ def fit_bands(
         whole = theta[which]
         whole[:, free] = variables
         model, jacobian = band_jacobian(whole, f[which])
-        return _whiten(white[which], (model - h[which])[..., None])[..., 0], _whiten(white[which], jacobian[..., free])
+        difference = (model - h[which])[..., None]
+        whole_white = _whiten(white[which], np.concatenate([jacobian[..., free], difference], axis=-1))
+        return whole_white[..., -1], whole_white[..., :-1]
 
-    found = least_squares(weighted, theta[:, free], step_limit=step_limit)
+    found = least_squares(weighted, theta[:, free], step_limit=step_limit, offset=_OFFSET)
     theta[:, free] = found.theta
     return _summary(theta, free, found.covariance, found.squares, dof, found.status, response, frequency)
 
@@ -186,6 +191,10 @@ def _whitening(covariance: FloatArray, mask: BoolArray) -> FloatArray:
 
 def _whiten(white: FloatArray, values: ComplexArray) -> FloatArray:
     """Return complex (S, N, P) values as whitened real (S, 2N, P)."""
-    first = white[..., 0, None] * values.real
-    second = white[..., 1, None] * values.real + white[..., 2, None] * values.imag
-    return np.concatenate([first, second], axis=1)
+    points = values.shape[1]
+    result = np.empty((len(values), 2 * points, values.shape[2]))
+    np.multiply(white[..., 0, None], values.real, out=result[:, :points])
+    np.multiply(white[..., 2, None], values.imag, out=result[:, points:])
+    if white[..., 1].any():
+        result[:, points:] += white[..., 1, None] * values.real
+    return result

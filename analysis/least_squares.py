@@ -21,10 +21,7 @@ Status: TypeAlias = Literal["converged", "no progress", "step limit", "not finit
 Residual: TypeAlias = Callable[[FloatArray, IndexArray], tuple[FloatArray, FloatArray]]
 """Takes theta (A, P) and the numbers (A,) of the problems meant; returns residuals (A, N) and Jacobian (A, N, P)."""
 
-# The cosine between the residual and what the parameters can still reach: the distance to the minimum is this fraction
-# of the parameters' own uncertainty (D. M. Bates, D. G. Watts, relative offset).
-_OFFSET = 1e-8
-# Or: the undamped step is this small beside the parameters, which a residual at the rounding limit needs.
+# Converged, too, when the undamped step is this small beside the parameters: a residual at the rounding limit needs it.
 _STEP = 1e-12
 _NEAR = 1e-5  # arbitrary; its square lies well above the rounding of a sum of squares
 
@@ -44,7 +41,9 @@ class LeastSquares:
     status: tuple[Status, ...]
 
 
-def least_squares(function: Residual, start: FloatArray, *, step_limit: int = 500) -> LeastSquares:
+def least_squares(
+    function: Residual, start: FloatArray, *, step_limit: int = 500, offset: float = 1e-8
+) -> LeastSquares:
     """Minimize the sums of squared residuals of S problems at once.
 
     Parameters
@@ -54,6 +53,9 @@ def least_squares(function: Residual, start: FloatArray, *, step_limit: int = 50
     start : (S, P) float array
     step_limit : int
         Most steps for any problem.
+    offset : float
+        Converged when the cosine between the residual and what the parameters can still reach is below it: the distance
+        to the minimum is then this fraction of the parameters' own uncertainty (D. M. Bates, D. G. Watts).
 
     Returns
     -------
@@ -68,7 +70,7 @@ def least_squares(function: Residual, start: FloatArray, *, step_limit: int = 50
     >>> least_squares(growth, np.array([[0.1]])).theta.round(6)
     array([[0.693147]])
     """
-    run = _Run(function, np.array(start, dtype=np.float64))
+    run = _Run(function, np.array(start, dtype=np.float64), offset)
     for _ in range(step_limit):
         if not len(run.active):
             break
@@ -79,8 +81,8 @@ def least_squares(function: Residual, start: FloatArray, *, step_limit: int = 50
 class _Run:
     """State of the problems; `active` numbers those still moving, every other array keeps all S rows."""
 
-    def __init__(self, function: Residual, theta: FloatArray) -> None:
-        self.function, self.theta = function, theta
+    def __init__(self, function: Residual, theta: FloatArray, offset: float) -> None:
+        self.function, self.theta, self.offset = function, theta, offset
         count, parameters = theta.shape
         self.active = np.arange(count)
         with np.errstate(all="ignore"):
@@ -132,28 +134,33 @@ class _Run:
         at, residual, jacobian = at[sound], residual[sound], jacobian[sound]
         if not len(at):
             return
-        q, self.triangle[at] = np.linalg.qr(jacobian)
-        self.projected[at] = np.einsum("snp,sn->sp", q, residual)
+        # The triangle of (J, r) holds the triangle of J and, in its last column, r projected: Q is never formed.
+        triangle = _triangle(np.concatenate([jacobian, residual[..., None]], axis=2))
+        self.triangle[at], self.projected[at] = triangle[..., :-1], triangle[..., -1]
         self.scale[at] = np.maximum(self.scale[at], np.linalg.norm(jacobian, axis=1))
 
     def _damped(self, at: IndexArray, damping: FloatArray) -> FloatArray:
         """Return the steps (A, P) of some problems, columns scaled, by QR of the triangle over the damping."""
         scale = np.where(self.scale[at] > 0, self.scale[at], 1.0)
         parameters = scale.shape[1]
-        upper = self.triangle[at] / scale[:, None, :]
-        lower = np.sqrt(damping)[:, None, None] * np.eye(parameters)
-        q, r = np.linalg.qr(np.concatenate([upper, lower], axis=1))
-        right = np.einsum("skp,sk->sp", q[:, :parameters], -self.projected[at])
-        step: FloatArray = np.linalg.solve(r, right[..., None])[..., 0] / scale
+        augmented = np.zeros((len(at), 2 * parameters, parameters + 1))
+        augmented[:, :parameters, :-1] = self.triangle[at] / scale[:, None, :]
+        augmented[:, :parameters, -1] = -self.projected[at]
+        augmented[:, parameters:, :-1] = np.sqrt(damping)[:, None, None] * np.eye(parameters)
+        triangle = _triangle(augmented)
+        step: FloatArray = np.linalg.solve(triangle[..., :-1], triangle[..., -1:])[..., 0] / scale
         return step
 
     def _stop(self, refused: IndexArray) -> None:
         """Retire the problems that have arrived, and those whose damped steps have become too short to matter."""
         at = self.active
         reach = np.linalg.norm(self.projected[at], axis=1)
-        arrived = reach <= _OFFSET * np.sqrt(self.squares[at])
+        arrived = reach <= self.offset * np.sqrt(self.squares[at])
         self.words[at[arrived]] = "converged"
         refused = np.intersect1d(at[~arrived], refused)
+        if not len(refused):
+            self.active = at[~arrived]
+            return
         full = self._damped(refused, np.full(len(refused), 1e-30))
         size = np.linalg.norm(self.scale[refused] * self.theta[refused], axis=1)
         short = np.linalg.norm(self.scale[refused] * full, axis=1) <= _STEP * size
@@ -164,6 +171,19 @@ class _Run:
     def result(self) -> LeastSquares:
         """Return what was reached."""
         scale = np.where(self.scale > 0, self.scale, 1.0)
-        inverse = np.linalg.pinv(self.triangle / scale[:, None, :], rcond=1e-15) / scale[..., None]
+        scaled = self.triangle / scale[:, None, :]
+        try:
+            inverse = np.linalg.inv(scaled) / scale[..., None]
+        except np.linalg.LinAlgError:  # somewhere a parameter has no effect
+            inverse = np.linalg.pinv(scaled, rcond=1e-15) / scale[..., None]
         covariance: FloatArray = inverse @ np.swapaxes(inverse, 1, 2)
         return LeastSquares(self.theta, self.squares, covariance, self.steps, tuple(self.words))
+
+
+def _triangle(matrix: FloatArray) -> FloatArray:
+    """Return the square upper part of R for (A, N, P + 1) matrices, (A, P, P + 1), filled with zeros where N < P."""
+    parameters = matrix.shape[2] - 1
+    r = np.asarray(np.linalg.qr(matrix, mode="r"), dtype=np.float64)[:, :parameters]
+    missing = parameters - r.shape[1]
+    whole: FloatArray = np.pad(r, ((0, 0), (0, missing), (0, 0))) if missing else r
+    return whole

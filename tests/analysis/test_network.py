@@ -31,7 +31,12 @@ def board() -> Network:
     )
     return Network(
         (*stage.resistors, Resistor("R_bias", "a", "0", 1e4)),
-        (*stage.capacitors, Capacitor("C_in", "in", "a", 10e-6), Capacitor("C_load", "out", "0", 1e-12)),
+        (
+            *stage.capacitors,
+            Capacitor("C_in", "in", "a", 10e-6),
+            Capacitor("C_load", "out", "0", 1e-12),
+            Capacitor("C_stray", "x", "0", 50e-12),
+        ),
         stage.opamps,
         source_resistance=50.0,
     )
