@@ -40,7 +40,11 @@ class Generator(Instrument):
         self._amplitude = self._offset = 0.0
 
     def be_safe(self) -> None:
-        """Turn the output off and see it confirmed; works on any open link, whatever was set before."""
+        """Turn the output off and see it confirmed, whatever was set before; a dirty or closed link is reopened."""
+        link = self.session.link
+        if link.is_dirty or not link.is_open:
+            self._made.clear()
+            link.reopen()
         self._remember("output", "", partial(self.output, False), last=True)
         self._forget("output")
         self._command_and_see(self._dialect.output.off, self._dialect.output.query, self._dialect.output.is_off)
@@ -89,15 +93,19 @@ class Generator(Instrument):
         self._check_ceiling(amplitude, self._offset)
         self._remember("amplitude", "", partial(self.set_amplitude, amplitude))
         factor = _PER_PEAK[self._dialect.amplitude.meaning]
-        self._amplitude = amplitude
-        return self._set_number("amplitude", self._dialect.amplitude, amplitude * factor) / factor
+        self._amplitude = max(self._amplitude, abs(amplitude))  # until the new one is confirmed
+        found = self._set_number("amplitude", self._dialect.amplitude, amplitude * factor) / factor
+        self._amplitude = abs(amplitude)
+        return found
 
     def set_offset(self, offset: float) -> float:
         """Set the offset in V; return the one read back."""
         self._check_ceiling(self._amplitude, offset)
         self._remember("offset", "", partial(self.set_offset, offset))
-        self._offset = offset
-        return self._set_number("offset", self._dialect.offset, offset)
+        self._offset = max(self._offset, abs(offset))
+        found = self._set_number("offset", self._dialect.offset, offset)
+        self._offset = abs(offset)
+        return found
 
     def output(self, on: bool) -> None:
         """Turn the output on or off and see it confirmed; `restore` does this last."""
@@ -110,8 +118,12 @@ class Generator(Instrument):
         super().reset()
 
     def restore(self) -> None:
-        """Make all settings again, the output last; see `Instrument.restore`."""
+        """Make all settings again with the output off, then the output as it was; see `Instrument.restore`.
+
+        The instrument may still hold older settings: made one by one, they could pass the ceiling on their way.
+        """
         output = self._journal.pop(("output", ""), None)
+        self.be_safe()
         if output is not None:
             self._journal["output", ""] = output
         super().restore()

@@ -186,6 +186,26 @@ def test_be_safe_turns_the_output_off_even_with_errors_in_the_queue(generator):
     assert port.messages[-3:] == [b"RUN 0", b"*OPC?", b"RUN?"]
 
 
+def test_be_safe_reopens_a_link_that_is_dirty_or_closed(generator):
+    made, _, instrument = generator
+    made.output(True)
+    for spoil in (made.disconnect, lambda: setattr(made.session.link, "is_dirty", True)):
+        instrument.values["RUN"] = "1"
+        spoil()
+        made.be_safe()
+        assert instrument.values["RUN"] == "0"
+
+
+def test_an_amplitude_that_was_not_confirmed_still_counts_against_the_ceiling(generator):
+    made, _, instrument = generator
+    made.set_amplitude(4.0)
+    instrument.fixed["LEVEL?"] = b"4"
+    with pytest.raises(SettingRefused):
+        made.set_amplitude(1.0)
+    with pytest.raises(ValueError, match="must not exceed"):
+        made.set_offset(2.0)
+
+
 def test_be_safe_demands_that_the_output_says_it_is_off(generator):
     made, _, instrument = generator
     instrument.fixed["RUN?"] = b"1"
@@ -193,7 +213,7 @@ def test_be_safe_demands_that_the_output_says_it_is_off(generator):
         made.be_safe()
 
 
-def test_restore_makes_all_settings_again_the_output_last(generator):
+def test_restore_makes_all_settings_again_between_output_off_and_on(generator):
     made, port, instrument = generator
     made.set_sine()
     made.output(True)
@@ -206,6 +226,7 @@ def test_restore_makes_all_settings_again_the_output_last(generator):
     made.restore()
     assert [message for message in port.messages if b"?" not in message] == [
         b"*CLS",
+        b"RUN 0",
         b"WAVE 0",
         b"KHZ 2.000000",
         b"LEVEL 1",
@@ -234,7 +255,7 @@ def test_a_wrong_kind_of_instrument_is_noticed(build, registers):
     with pytest.raises(ReplyError, match=r"answered '\*IDN\?'.*fits 'Oscillator'"):
         made.identify()
     with pytest.raises(LinkClosed):
-        made.be_safe()
+        made.output(True)
 
 
 SCOPE = """

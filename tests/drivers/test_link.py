@@ -269,3 +269,32 @@ def replying_to_queries():
                     connection.sendall(b"1\n")
 
     return behave
+
+
+@pytest.mark.parametrize("is_reached", [True, False], ids=["socket", "VISA alone"])
+def test_replies_come_whole_whether_or_not_the_socket_can_be_reached(loopback, linked, monkeypatch, is_reached):
+    if not is_reached:
+        monkeypatch.setattr("bandproof.drivers.visa._socket_of", lambda resource: None)
+    block = bytes(range(256)) * 400
+
+    def behave(connection, stop):
+        with connection.makefile("rb") as lines:
+            for line in lines:
+                connection.sendall(definite_block(block) + b"\n" if line == b"B?\n" else line)
+
+    session = Session(linked(loopback(behave), limit=5.0))
+    for _ in range(2):
+        assert session.ask("A?", as_text) == "A?"
+        assert session.ask_block("B?", len(block)) == block
+
+
+def test_silence_ends_at_the_limit_where_the_socket_cannot_be_reached(talk, monkeypatch):
+    monkeypatch.setattr("bandproof.drivers.visa._socket_of", lambda resource: None)
+    session, address = talk(lambda connection, stop: stop.wait() and None)
+    fails_in_time(lambda: session.ask("A?", as_text), NoAnswer, address, "'A?'", "0.3 s")
+
+
+def test_a_visa_library_that_is_not_installed_is_a_broken_link():
+    link = Link("TCPIP::127.0.0.1::5025::SOCKET", RealClock(), visa_library="@absent")
+    with pytest.raises(LinkBroken, match=r"'open'.*absent"):
+        link.open()
