@@ -138,10 +138,10 @@ async def run(world: World, announce: Callable[[dict[str, int]], None], stop: as
     plan = FaultPlan(world.faults, timebase)
     devices = instruments(world, timebase, plan)
     servers = {name: await serve(name, device, timebase, plan) for name, device in devices.items()}
-    announce({name: server.sockets[0].getsockname()[1] for name, server in servers.items()})
+    announce({name: server.port for name, server in servers.items()})
     await stop.wait()
     for server in servers.values():
-        server.close()
+        await server.close()
 
 
 def serve_until_closed(source: IO[str], target: IO[str]) -> None:

@@ -18,9 +18,10 @@ from bandproof.simulated_instruments.faults import FaultPlan
 from bandproof.simulated_instruments.framing import Framer, Overrun
 from bandproof.simulated_instruments.timebase import Timebase
 
-__all__ = ["Connection", "serve"]
+__all__ = ["Connection", "Server", "serve"]
 
 WAITING_LIMIT = 1000  # messages, arbitrary
+TURN = 20  # messages one client may have executed before the others have their turn, arbitrary
 DRIP = 0.3  # s between bytes of a dripping reply
 CHUNK = b"1" * 65536  # of an endless reply
 
@@ -35,10 +36,15 @@ class Connection(asyncio.Protocol):
     device : Device
     timebase : Timebase
     plan : FaultPlan
+    others : set of Connection
+        The open connections, among which this one counts itself.
     """
 
-    def __init__(self, name: str, device: Device, timebase: Timebase, plan: FaultPlan) -> None:
+    def __init__(
+        self, name: str, device: Device, timebase: Timebase, plan: FaultPlan, others: "set[Connection]"
+    ) -> None:
         self._name, self._device, self._timebase, self._plan = name, device, timebase, plan
+        self._others = others
         self._framer = Framer()
         self._waiting: deque[bytes | Overrun] = deque()
         self._late: list[bytes] = []
@@ -49,12 +55,19 @@ class Connection(asyncio.Protocol):
         """Send small replies at once."""
         assert isinstance(transport, asyncio.Transport)
         self._transport = transport
+        self._others.add(self)
         transport.get_extra_info("socket").setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
 
     def connection_lost(self, exc: Exception | None) -> None:
         """Forget the client; the instrument goes on."""
         self._transport = None
         self._waiting.clear()
+        self._others.discard(self)
+
+    def drop(self) -> None:
+        """End the connection at once."""
+        if self._transport is not None:
+            self._transport.abort()
 
     def pause_writing(self) -> None:
         """Work on nothing more while the client does not read."""
@@ -71,8 +84,14 @@ class Connection(asyncio.Protocol):
         self._pump()
 
     def _pump(self) -> None:
+        turn = 0
         while self._waiting and not self._busy and not self._full and self._transport is not None:
+            if turn == TURN:  # others shall be heard too
+                self._busy = True
+                asyncio.get_running_loop().call_soon(self._go_on)
+                break
             self._take(self._waiting.popleft())
+            turn += 1
         if self._transport is not None:
             if len(self._waiting) > WAITING_LIMIT or self._full:
                 self._transport.pause_reading()
@@ -98,6 +117,10 @@ class Connection(asyncio.Protocol):
             asyncio.get_running_loop().call_later(wait, self._ready, answer.reply)
         else:
             self._reply(answer.reply)
+
+    def _go_on(self) -> None:
+        self._busy = False
+        self._pump()
 
     def _ready(self, reply: bytes) -> None:
         self._busy = False
@@ -157,7 +180,25 @@ def _lie(reply: bytes) -> bytes:
     return f"#{len(length)}{length}".encode("ascii") + reply[2 + count :]
 
 
-async def serve(name: str, device: Device, timebase: Timebase, plan: FaultPlan) -> asyncio.Server:
-    """Return a server of one instrument on a loopback port the system chose."""
-    loop = asyncio.get_running_loop()
-    return await loop.create_server(lambda: Connection(name, device, timebase, plan), "127.0.0.1", 0)
+class Server:
+    """A listening server of one instrument; `port` is the system's choice. Closing it drops its clients."""
+
+    def __init__(self, listener: asyncio.Server, connections: set[Connection]) -> None:
+        self._listener, self._connections = listener, connections
+        self.port: int = listener.sockets[0].getsockname()[1]
+
+    async def close(self) -> None:
+        """Listen no more and drop the clients."""
+        self._listener.close()
+        for connection in self._connections:
+            connection.drop()
+        await asyncio.sleep(0)  # lets the loop close what was dropped
+
+
+async def serve(name: str, device: Device, timebase: Timebase, plan: FaultPlan) -> Server:
+    """Return a server of one instrument on a loopback port."""
+    connections: set[Connection] = set()
+    listener = await asyncio.get_running_loop().create_server(
+        lambda: Connection(name, device, timebase, plan, connections), "127.0.0.1", 0
+    )
+    return Server(listener, connections)

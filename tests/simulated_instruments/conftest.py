@@ -36,6 +36,10 @@ class Client:
     def line(self):
         return self.file.readline().decode("latin-1").rstrip("\n")
 
+    def reply_with(self, newlines):
+        """Return a reply that has newlines inside, as bytes."""
+        return b"".join(self.file.readline() for _ in range(newlines + 1))
+
     def block(self, message):
         self.send(message)
         count = int(self.file.read(2)[1:])
@@ -105,10 +109,10 @@ def serving(device, timebase, faults=()):
     async def main():
         box["loop"], box["stop"] = asyncio.get_running_loop(), asyncio.Event()
         server = await serve("scope", device, timebase, FaultPlan(faults, timebase))
-        box["port"] = server.sockets[0].getsockname()[1]
+        box["port"] = server.port
         ready.set()
         await box["stop"].wait()
-        server.close()
+        await server.close()
 
     thread = threading.Thread(target=asyncio.run, args=(main(),))
     thread.start()

@@ -31,6 +31,7 @@ def identified(row):
 
 
 CASES = rows("scpi_cases.csv")
+OVER_TCP = ("H02", "H15", "H19", "H25", "P13", "P20", "S01", "B04", "B05", "B06", "E03", "E11", "E23", "E24")
 
 
 def conformance_device():
@@ -94,6 +95,18 @@ def test_conformance_case_is_answered_as_the_standard_says(row):
         assert_reply(send(device, message), expect)
     number = int(send(device, b"SYST:ERR?").split(b",")[0])
     assert is_expected_error(number, row["error_after"])
+
+
+@pytest.mark.parametrize("row", [identified(row) for row in CASES if row["id"] in OVER_TCP])
+def test_conformance_case_holds_over_tcp(row, served, connect):
+    with served(conformance_device()) as port:
+        client = connect(port)
+        client.ask("*RST;*CLS;*ESE 0;*SRE 0;*ESR?")
+        for part, expect in zip(row["send"].split(" | "), row["expect"].split(" | "), strict=True):
+            client.send(unescaped(part) + b"\n")
+            if expect != "-":
+                assert_reply(client.reply_with(unescaped(expect).count(b"\n")), expect)
+        assert is_expected_error(int(client.ask("SYST:ERR?").split(",")[0]), row["error_after"])
 
 
 def test_full_queue_keeps_the_oldest_and_ends_in_overflow_case_E04():
