@@ -226,11 +226,28 @@ def _design(samples: int, sample_interval: float, frequency: FloatArray, *, drif
     matrix[2 * len(frequency)] = 1.0
     if drift:
         matrix[-1] = np.linspace(-0.5, 0.5, samples)
-    q, r = np.linalg.qr(matrix.T)
-    size = np.abs(np.diag(r))
-    if size.min() <= 1e-10 * size.max():
-        raise ValueError("two of the tones cannot be told apart in this record: lengthen it or move one of them")
-    return _Design(q, np.linalg.solve(r, np.eye(columns)), drift)
+    inverse = _orthonormal(matrix)
+    q = inverse.T @ matrix
+    again = _orthonormal(q)  # Cholesky QR twice is as good as Householder's and several times faster (Yamamoto et al. 2015, from memory)
+    return _Design(np.ascontiguousarray((again.T @ q).T), inverse @ again, drift)
+
+
+def _orthonormal(rows: FloatArray) -> FloatArray:
+    """Return the upper triangle whose transpose makes the rows orthonormal.
+
+    Raises
+    ------
+    ValueError
+        The rows are linearly dependent to about eight digits.
+    """
+    try:
+        lower = np.linalg.cholesky(rows @ rows.T)
+    except np.linalg.LinAlgError as dependent:
+        raise ValueError(
+            "two of the tones cannot be told apart in this record: lengthen it or move one of them"
+        ) from dependent
+    triangle: FloatArray = np.linalg.inv(lower).T
+    return triangle
 
 
 def _solve(y: FloatArray, design: _Design, tones: FloatArray, others: FloatArray) -> SineFit:
