@@ -228,7 +228,8 @@ def _design(samples: int, sample_interval: float, frequency: FloatArray, *, drif
         matrix[-1] = np.linspace(-0.5, 0.5, samples)
     inverse = _orthonormal(matrix)
     q = inverse.T @ matrix
-    again = _orthonormal(q)  # Cholesky QR twice is as good as Householder's and several times faster (Yamamoto et al. 2015, from memory)
+    # Cholesky QR twice is as good as Householder's, much faster (Y. Yamamoto et al., ETNA 44, 2015; from memory)
+    again = _orthonormal(q)
     return _Design(np.ascontiguousarray((again.T @ q).T), inverse @ again, drift)
 
 

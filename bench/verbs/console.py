@@ -1,5 +1,6 @@
 """The command line's edge: runs a verb, turns every expected error into one message and an exit code."""
 
+import os
 import sys
 import tempfile
 import traceback
@@ -32,6 +33,8 @@ EXIT_CODES: tuple[tuple[type[BaseException], int], ...] = (  # the first that fi
 
 def main() -> None:
     """Run the command line of this process and exit."""
+    # Before numpy is loaded, here and in child processes: for matrices as small as ours threads only cost.
+    os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
     sys.exit(run(sys.argv[1:]))
 
 
