@@ -24,8 +24,7 @@ def main(arguments: list[str]) -> int:
     """Run the command and return its exit code: 0, or 2 for bad input."""
     options = _parser().parse_args(arguments)
     if options.world:
-        serve_until_closed(sys.stdin, sys.stdout)
-        return 0
+        return _serve_world()
     try:
         network = parse_netlist(Path(options.netlist).read_text(encoding="utf-8"))
         world = _world(network, options)
@@ -35,6 +34,14 @@ def main(arguments: list[str]) -> int:
         return _refuse("\n".join(f"{options.netlist}: {mistake}" for mistake in mistakes.mistakes))
     except (OSError, UnicodeDecodeError, ValueError) as error:
         return _refuse(f"{options.netlist}: {error}")
+    return 0
+
+
+def _serve_world() -> int:
+    try:
+        serve_until_closed(sys.stdin, sys.stdout)
+    except (OSError, ValueError) as error:
+        return _refuse(f"world: {error}")
     return 0
 
 

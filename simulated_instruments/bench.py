@@ -3,6 +3,7 @@
 import asyncio
 import contextlib
 import json
+import os
 import subprocess
 import sys
 import tempfile
@@ -24,6 +25,10 @@ from bandproof.simulated_instruments.transport import serve
 from bandproof.simulated_instruments.wiring import Wiring
 
 __all__ = ["Bench", "BenchNotStarted", "World", "instruments", "run", "serve_until_closed", "start"]
+
+
+# The matrices are small: threads of a linear algebra library would only wait for each other.
+_ONE_THREAD = {"OPENBLAS_NUM_THREADS": "1", "OMP_NUM_THREADS": "1", "MKL_NUM_THREADS": "1"}
 
 
 class BenchNotStarted(Exception):
@@ -216,6 +221,7 @@ def start(world: World) -> Bench:
             stderr=errors,
             text=True,
             start_new_session=True,
+            env=os.environ | _ONE_THREAD,
         )
         line = _introduce(process, world)
         if line:

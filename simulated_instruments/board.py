@@ -15,7 +15,7 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from bandproof.analysis.network import GROUND, Network, state_space
-from bandproof.simulated_instruments.dynamics import ComplexArray, Dynamics, FloatArray
+from bandproof.simulated_instruments.dynamics import ComplexArray, Dynamics, FloatArray, sum_of_exponentials
 
 __all__ = ["Board", "Drive", "FrontEnd", "Section"]
 
@@ -152,8 +152,9 @@ class Board:
         constant = system.c[rows] @ event.constant + system.d[rows] @ inputs
         phasor = system.c[rows] @ event.phasor + system.d[rows, 0] * event.drive.amplitude
         start = event.drive.frequency * (_elapsed(event.drive_at, first) + ahead) % 1.0
-        angle = 2 * np.pi * (start + event.drive.frequency * interval * np.arange(count))
-        volts: FloatArray = np.outer(phasor.real, np.sin(angle)) + np.outer(phasor.imag, np.cos(angle))
+        sine = (phasor * np.exp(2j * np.pi * start) / 1j)[:, None]
+        step = np.array([2j * np.pi * event.drive.frequency * interval])
+        volts = sum_of_exponentials(sine, step, count)
         volts += constant[:, None]
         volts += system.outputs(event.free, rows, _elapsed(event.at, first) + ahead, interval, count)
         if len(rows) == 1:

@@ -4,10 +4,12 @@ The usual road is the eigen-decomposition of `a`. Where eigenvectors nearly coin
 instance) it would lose digits, and the matrix exponential serves instead.
 """
 
+import math
+
 import numpy as np
 from numpy.typing import NDArray
 
-__all__ = ["REMAINDER", "ComplexArray", "Dynamics", "FloatArray"]
+__all__ = ["REMAINDER", "ComplexArray", "Dynamics", "FloatArray", "sum_of_exponentials"]
 
 FloatArray = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
@@ -69,10 +71,7 @@ class Dynamics:
             return self._by_doubling(self.later(free, elapsed), rows, interval, count)
         weights = self._taps[rows] * (free * np.exp(self.rates * elapsed))
         alive = np.any(np.abs(weights) > REMAINDER, axis=0)
-        growth = (
-            np.exp(np.outer(self.rates[alive] * interval, np.arange(count))) if alive.any() else np.zeros((0, count))
-        )
-        return np.asarray((weights[:, alive] @ growth).real)
+        return sum_of_exponentials(weights[:, alive], self.rates[alive] * interval, count)
 
     def _by_doubling(self, state: FloatArray, rows: NDArray[np.intp], interval: float, count: int) -> FloatArray:
         taps = self.c[rows]
@@ -88,3 +87,24 @@ class Dynamics:
         from scipy.linalg import expm  # rarely needed, and slow to import
 
         return np.asarray(expm(self.a * elapsed), dtype=np.float64)
+
+
+def sum_of_exponentials(weights: ComplexArray, steps: ComplexArray, count: int) -> FloatArray:
+    """Return the real parts of sums of weight exp(step n) for n = 0 ... count - 1.
+
+    Parameters
+    ----------
+    weights : (M, P) complex array
+    steps : (P,) complex array
+    count : int
+
+    Returns
+    -------
+    (M, count) float array
+        As products of two short tables of exponentials, which takes far fewer of them than samples.
+    """
+    inner = max(1, math.isqrt(count))
+    outer = -(-count // inner)
+    coarse = weights[:, None, :] * np.exp(np.outer(inner * np.arange(outer), steps))
+    fine = np.exp(np.outer(steps, np.arange(inner)))
+    return np.asarray((coarse @ fine).real.reshape(len(weights), -1)[:, :count])

@@ -99,6 +99,9 @@ class Connection(asyncio.Protocol):
                 self._transport.resume_reading()
 
     def _take(self, message: bytes | Overrun) -> None:
+        if self._late and self._transport is not None:
+            self._transport.writelines(self._late)
+            self._late.clear()
         if isinstance(message, Overrun):
             self._device.refuse(message.number)
             return
@@ -128,12 +131,10 @@ class Connection(asyncio.Protocol):
         self._pump()
 
     def _reply(self, reply: bytes) -> None:
-        late, self._late = self._late, []
         kinds = names.REPLY_FAULTS | names.BLOCK_FAULTS if reply[:1] == b"#" else names.REPLY_FAULTS
         fault = self._plan.due(self._name, kinds)
         if self._mute or self._transport is None:
             return
-        self._transport.writelines(late)
         if fault is None:
             self._transport.write(reply)
         else:

@@ -53,6 +53,15 @@ def test_late_answer_is_taken_for_the_next_one(faulty):
     assert client.ask("FREQ 333;FREQ?") == "222"
 
 
+def test_late_answer_comes_with_the_next_message_even_if_that_asks_nothing(faulty):
+    client = faulty(Fault("late-answer", 3, "generator"), instrument="generator")()
+    client.send("FREQ 111;FREQ?")
+    nothing_more(client)
+    client.send("FREQ 222")
+    assert client.line() == "111"
+    assert client.ask("FREQ?") == "222"
+
+
 def test_late_answer_does_not_follow_to_a_new_connection(faulty):
     open_again = faulty(Fault("late-answer", 3, "generator"), instrument="generator")
     client = open_again()

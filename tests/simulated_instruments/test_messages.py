@@ -80,6 +80,26 @@ def test_any_chunking_of_a_stream_gives_the_same_messages(stream, cuts):
     assert pieces == whole
 
 
+@pytest.mark.parametrize(
+    "stream",
+    [
+        b'DISP:TEXT "a #15 b";TEXT?\n*IDN?\n*CLS\n',
+        b"DATA:BLOC #0a #15\n*IDN?\n",
+        b"DATA:BLOC #210ab\ncd#15\n\n\n,#13\n;\n*CLS\n",
+        b"DISP:TEXT 'it''s' , #15\n\n\n\n\n;FOO\n",
+        b"DISP:TEXT \"open #15\nDISP:TEXT 'a\"b',#11\n\n",
+        b"DATA:BLOC #3\nDATA:BLOC #\nDATA:BLOC #3004\n\n\n\n\n",
+    ],
+)
+def test_cut_at_any_byte_a_stream_gives_the_same_messages(stream):
+    whole = list(Framer().feed(stream))
+    for cut in range(len(stream)):
+        framer = Framer()
+        assert [*framer.feed(stream[:cut]), *framer.feed(stream[cut:])] == whole
+    framer = Framer()
+    assert [message for byte in stream for message in framer.feed(bytes([byte]))] == whole
+
+
 @given(st.binary(max_size=3000))
 def test_a_block_is_one_message_and_comes_back_whole(data):
     device, framer = small_device(), Framer()
