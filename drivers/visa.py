@@ -58,7 +58,7 @@ class VisaPort:
             return self._visa_write(bytes(data))
         if not select.select([], [self._socket], [], limit)[1]:
             raise TimeoutError("the instrument does not read")
-        self._socket.settimeout(max(limit, 0.001))  # PyVISA-py's send blocks for ever otherwise
+        self._socket.settimeout(max(limit, 0.001))  # a send that finds less room than its piece would block
         return self._visa_write(bytes(data[:PIECE]))
 
     def read(self, count: int, limit: float, *, line: bool) -> bytes:

@@ -140,6 +140,16 @@ def test_a_refused_setting_does_not_count_as_made(generator):
     assert port.messages.count(b"KHZ 1.000000") == 2
 
 
+def test_after_a_refused_setting_the_one_before_it_is_sent_again(generator):
+    made, port, instrument = generator
+    made.set_frequency(1000.0)
+    instrument.fixed["KHZ?"] = b"1"
+    with pytest.raises(SettingRefused):
+        made.set_frequency(2000.0)
+    made.set_frequency(1000.0)
+    assert port.messages.count(b"KHZ 1.000000") == 2
+
+
 def test_a_value_outside_the_dialects_limits_is_not_sent(generator):
     made, port, _ = generator
     with pytest.raises(ValueError, match="frequency must be from 1 to 1e\\+06"):
