@@ -70,10 +70,21 @@ class Ratio:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Settling:
-    """First half of a record against its second: difference and threshold in V peak, both (C, K)."""
+    """First half of a record against its second, (C, K): phasor, difference and threshold in V peak."""
 
+    phasor: ComplexArray
     difference: ComplexArray
     threshold: FloatArray
+
+    def of_ratio(self, *, numerator: int = 1, denominator: int = 0) -> Settling:
+        """Return the same comparison for the ratio of two channels, relative to it, (1, K).
+
+        What both channels share leaves no trace in it: a clock a few ppm off turns the phasors of a long record.
+        """
+        relative = self.difference / self.phasor
+        threshold = np.hypot(*(self.threshold[c] / np.abs(self.phasor[c]) for c in (numerator, denominator)))
+        moved = relative[numerator] - relative[denominator]
+        return Settling(np.ones_like(moved)[None], moved[None], threshold[None])
 
     @property
     def is_settled(self) -> bool:
@@ -180,15 +191,27 @@ def halves(
 ) -> Settling:
     """Compare the phasors of the first and the second half of a record.
 
-    The threshold comes from the halves' own noise; noise alone exceeds it about once in 8000 tones.
+    One fit of the whole record in which each tone may step in the middle; offset and nuisance tones may not, so that
+    hum which half a record could not tell from a tone does no harm. The threshold comes from the record's own noise,
+    which alone exceeds it about once in 8000 tones.
     """
     y = np.atleast_2d(np.asarray(volts, dtype=np.float64))
-    half = y.shape[1] // 2
-    first = fit_sines(y[:, :half], sample_interval, frequency, nuisance=nuisance, drift=drift)
-    second = fit_sines(y[:, half : 2 * half], sample_interval, frequency, nuisance=nuisance, drift=drift)
-    back = np.exp(-2j * np.pi * first.frequency * half * sample_interval)  # to the first half's time zero
-    variance = np.trace(first.covariance + second.covariance, axis1=-2, axis2=-1)
-    return Settling(second.phasor * back - first.phasor, _SETTLING_FACTOR * np.sqrt(variance))
+    tones, others = (np.atleast_1d(np.asarray(f, dtype=np.float64)) for f in (frequency, nuisance))
+    samples, k = y.shape[1], len(tones)
+    rows = _rows(samples, sample_interval, np.concatenate([tones, others]), drift=drift)
+    steps = rows[: 2 * k] * np.where(np.arange(samples) < samples // 2, -0.5, 0.5)
+    design = _orthogonalized(np.concatenate([steps, rows]), drift=drift)
+    projected = y @ design.q
+    stepped = projected @ design.inverse[: 2 * k].T
+    residual = y - projected @ design.q.T
+    unit = (design.inverse[: 2 * k] ** 2).sum(axis=1).reshape(k, 2).sum(axis=1)
+    variance = np.einsum("cn,cn->c", residual, residual)[:, None] / (samples - len(design.inverse)) * unit
+    phasor = projected @ design.inverse[2 * k : 4 * k].T
+    return Settling(
+        phasor[:, 0::2] + 1j * phasor[:, 1::2],
+        stepped[:, 0::2] + 1j * stepped[:, 1::2],
+        _SETTLING_FACTOR * np.sqrt(variance),
+    )
 
 
 def distortion(
@@ -215,7 +238,11 @@ class _Design:
 
 
 def _design(samples: int, sample_interval: float, frequency: FloatArray, *, drift: bool) -> _Design:
-    """Return the columns cos, -sin per tone, a constant, and a line from -1/2 to 1/2."""
+    return _orthogonalized(_rows(samples, sample_interval, frequency, drift=drift), drift=drift)
+
+
+def _rows(samples: int, sample_interval: float, frequency: FloatArray, *, drift: bool) -> FloatArray:
+    """Return the rows cos, -sin per tone, a constant, and a line from -1/2 to 1/2."""
     columns = 2 * len(frequency) + 1 + drift
     if samples <= columns:
         raise ValueError(f"a record of {samples} samples is too short for {columns} parameters")
@@ -226,6 +253,10 @@ def _design(samples: int, sample_interval: float, frequency: FloatArray, *, drif
     matrix[2 * len(frequency)] = 1.0
     if drift:
         matrix[-1] = np.linspace(-0.5, 0.5, samples)
+    return matrix
+
+
+def _orthogonalized(matrix: FloatArray, *, drift: bool) -> _Design:
     inverse = _orthonormal(matrix)
     q = inverse.T @ matrix
     # Cholesky QR twice is as good as Householder's, much faster (Y. Yamamoto et al., ETNA 44, 2015; from memory)

@@ -67,7 +67,7 @@ def _signal(step: Step, taken: Taken, hum: FloatArray) -> Point:
     fit = fit_sines(taken.volts, taken.sample_interval, [taken.frequency], nuisance=hum)
     ratio = channel_ratio(fit)
     covariance = ratio.covariance[0]
-    settling = halves(taken.volts, taken.sample_interval, [taken.frequency], nuisance=hum)
+    settling = halves(taken.volts, taken.sample_interval, [taken.frequency], nuisance=hum).of_ratio()
     moved = float((np.abs(settling.difference) / settling.threshold).max())
     harmonics = float(distortion(taken.volts, taken.sample_interval, taken.frequency)[1])
     flags = [name for name, seen in (("overload", any(taken.overload)), ("unsettled", not settling.is_settled)) if seen]
