@@ -1,0 +1,39 @@
+"""Finding instruments: what VISA lists is asked for its identity and nothing else."""
+
+import socket
+import threading
+
+from bandproof.drivers import find
+from bandproof.drivers.clock import RealClock
+
+
+def answering(words: bytes | None) -> tuple[str, list[bytes]]:
+    """Return the address of a server for one client, and what it will have heard; None closes without a word."""
+    server = socket.create_server(("127.0.0.1", 0))
+    heard: list[bytes] = []
+
+    def serve() -> None:
+        with server, server.accept()[0] as connection:
+            heard.append(connection.recv(1000))
+            if words is not None:
+                connection.sendall(words)
+                heard.append(connection.recv(1000))
+
+    threading.Thread(target=serve, daemon=True).start()
+    return f"TCPIP::127.0.0.1::{server.getsockname()[1]}::SOCKET", heard
+
+
+def test_every_listed_address_is_asked_for_its_identity_and_nothing_else(monkeypatch):
+    good, heard = answering(b"SOMEBODY,SOMETHING,0,0\n")
+    mute, _ = answering(None)
+    monkeypatch.setattr(find, "listed", lambda library: (good, mute))
+    found = dict(find.find_instruments(RealClock(margin=0.5)))
+    assert found[good] == "SOMEBODY,SOMETHING,0,0"
+    assert "no identity" in found[mute]
+    assert mute in found[mute]
+    assert heard == [b"*IDN?\n", b""]
+
+
+def test_a_bare_machine_lists_nothing_and_says_nothing(capsys):
+    assert list(find.find_instruments(RealClock(margin=0.2))) == []
+    assert capsys.readouterr() == ("", "")
