@@ -28,6 +28,11 @@ class Devices:
     scope: Scope
     switch: Switch | None
 
+    def all(self) -> tuple[Generator | Scope | Switch, ...]:
+        """Return the instruments that are there, the generator first."""
+        found = (self.generator, self.scope, self.switch)
+        return tuple(instrument for instrument in found if instrument is not None)
+
     def identities(self) -> dict[str, str]:
         """Return what each instrument says it is, by role."""
         found = {"generator": self.generator.identify(), "scope": self.scope.identify()}

@@ -7,6 +7,7 @@ it per point would wear its relay and restart the settling.
 
 from collections.abc import Callable
 from dataclasses import dataclass, field
+from math import inf
 
 from bandproof.bench.errors import BenchFault
 from bandproof.bench.first_look import check_low_level, check_quiet
@@ -55,6 +56,7 @@ class Sweep:
         """
         planner = self.planner or Planner(self.board, self.bench)
         self._start, self._stage = self.clock.now(), ""
+        self._prepare()
         while steps := planner.more(tuple(self.journal.points)):
             self.journal.planned(steps)
             for step in steps:
@@ -62,6 +64,17 @@ class Sweep:
                 left = planner.seconds_left(self.journal.points)
                 self.progress(len(self.journal.points), len(self.journal.steps), left, step.stage)
         self.devices.generator.be_safe()
+
+    def _prepare(self) -> None:
+        """Bring the instruments from whatever they were left at to a quiet start: output off before anything else."""
+        generator = self.devices.generator
+        generator.be_safe()
+        for instrument in self.devices.all():
+            self.stop.check()
+            instrument.reset()
+        generator.set_load(inf)
+        generator.set_sine()
+        generator.set_offset(0.0)
 
     def _carry_out(self, step: Step) -> None:
         stage = self.board.stage(step.stage)

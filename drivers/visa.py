@@ -16,7 +16,7 @@ if TYPE_CHECKING:
     from pyvisa import ResourceManager
     from pyvisa.resources import MessageBasedResource
 
-__all__ = ["VisaPort", "is_timeout", "translated"]
+__all__ = ["VisaPort", "is_timeout", "listed", "translated"]
 
 PEEK = 1 << 18  # bytes taken in one raw read; bounds memory (a 2 MB block takes 8 to 30 reads)
 PIECE = 4096  # bytes PyVISA-py sends at a time; a larger piece would be cut, and a cut one is an error there
@@ -120,6 +120,11 @@ def _manager(library: str) -> ResourceManager:
 
         _managers[library] = ResourceManager(library)
     return _managers[library]
+
+
+def listed(library: str) -> tuple[str, ...]:
+    """Return the addresses a VISA library lists by itself."""
+    return tuple(_manager(library).list_resources("?*"))
 
 
 def _socket_of(resource: Any) -> socket.socket | None:
