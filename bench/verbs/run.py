@@ -3,6 +3,7 @@
 import json
 import secrets
 import sys
+import textwrap
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -65,18 +66,23 @@ def show(outcome: "Outcome", wall_seconds: float, as_json: bool) -> int:
         click.echo(line)
     click.echo("")
     for alarm in result["alarms"]:
-        click.echo(f"note: {alarm}")
+        click.echo(_wrapped(f"note: {alarm}"))
     if outcome.problem is not None:
-        click.echo(f"CUT SHORT: {outcome.problem}")
+        click.echo(_wrapped(f"CUT SHORT: {outcome.problem}"))
         click.echo("No verdict. What was measured is kept.")
     else:
         click.echo(f"Board: {str(result['verdict']).upper()}   {_counts(outcome)}")
     click.echo(
         f"{result['points']} points in {run.bench_seconds:.1f} s of bench time ({wall_seconds:.1f} s by the wall)"
     )
-    for kind in ("run", "picture"):
-        click.echo(f"  {kind:<8} {outcome.folder / result['files'][kind]}")
+    for kind, name in result["files"].items():
+        if name:
+            click.echo(f"  {kind:<8} {outcome.folder / name}")
     return exit_code(outcome)
+
+
+def _wrapped(text: str) -> str:
+    return textwrap.fill(text, 80, subsequent_indent="  ", break_long_words=False, break_on_hyphens=False)
 
 
 def _counts(outcome: "Outcome") -> str:
