@@ -4,7 +4,7 @@ from collections.abc import Iterable, Sequence
 from math import isfinite, log10
 
 from bandproof.bench.quantities import decimals, engineering, with_uncertainty
-from bandproof.bench.types import QUANTITIES, Comparison, Quantity, StageResult
+from bandproof.bench.types import QUANTITIES, Comparison, Quantity, StageResult, Verdict
 
 __all__ = ["dB", "summary_lines"]
 
@@ -14,6 +14,7 @@ _TITLES: dict[Quantity, str] = {
     "gain": "Gain at f0",
 }
 _HEADINGS = ("band", "designed", "predicted", "measured ± U", "deviation", "verdict")
+_WORDS: dict[Verdict, str] = {"pass": "pass", "fail": "FAIL", "undecided": "undecided"}
 _WIDTHS = (12, 10, 10, 24, 10, 9)  # band, designed, predicted, measured ± U, deviation, verdict
 
 
@@ -42,14 +43,14 @@ def _row(cells: Sequence[str]) -> str:
 
 def _cells(figure: Comparison) -> list[str]:
     if figure.quantity == "gain":
-        return [*_gain_cells(figure), figure.verdict]
+        return [*_gain_cells(figure), _WORDS[figure.verdict]]
     deviation = f"{100.0 * figure.deviation:+.2f} %" if isfinite(figure.deviation) else "-"
     return [
         engineering(figure.designed, figure.unit),
         engineering(figure.predicted, figure.unit),
         with_uncertainty(figure.measured, figure.expanded_uncertainty, figure.unit),
         deviation,
-        figure.verdict,
+        _WORDS[figure.verdict],
     ]
 
 

@@ -4,12 +4,14 @@ from pathlib import Path
 
 import click
 
+from bandproof.bench.errors import BadInput
+
 __all__ = ["command"]
 
 
 @click.command("fit")
 @click.argument("run_paths", metavar="RUN...", nargs=-1, required=True, type=click.Path(path_type=Path))
-@click.option("--json", "as_json", is_flag=True, help="Print one result object per run and nothing else.")
+@click.option("--json", "as_json", is_flag=True, help="Print the result object and nothing else; for one RUN.")
 def command(run_paths: tuple[Path, ...], as_json: bool) -> int:
     """Fit stored runs again; nothing that was measured is changed, the new result is a file beside the run.
 
@@ -24,6 +26,8 @@ def command(run_paths: tuple[Path, ...], as_json: bool) -> int:
     from bandproof.bench.runfile import read_run
     from bandproof.bench.verbs.run import show, wall
 
+    if as_json and len(run_paths) > 1:
+        raise BadInput("--json prints one object: name one RUN")
     codes = []
     for path in run_paths:
         begin = wall()
