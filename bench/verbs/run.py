@@ -61,7 +61,8 @@ def show(outcome: "Outcome", wall_seconds: float, as_json: bool) -> int:
         click.echo(json.dumps({**outcome.result, "wall_seconds": round(wall_seconds, 3), "files": files}, indent=1))
         return exit_code(outcome)
     run, result = outcome.run, outcome.result
-    click.echo(f"{run.board.title}   serial {run.serial}, attempt {run.attempt}, {run.started}")
+    click.echo(run.board.title)
+    click.echo(f"serial {run.serial}, attempt {run.attempt}, {run.started[:16].replace('T', ' ')} UTC")
     for line in summary_lines(outcome.stages):
         click.echo(line)
     click.echo("")

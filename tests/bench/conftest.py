@@ -2,17 +2,21 @@
 
 from collections.abc import Callable
 from dataclasses import dataclass, replace
+from pathlib import Path
 from typing import Any
 
 import pytest
 
+from bandproof.bench.board_file import parse_board
 from bandproof.bench.circuit import draw_parts
 from bandproof.bench.instruments import opened
 from bandproof.bench.journal import Journal
-from bandproof.bench.operator import Absent
-from bandproof.bench.rehearsal import demo_board, rehearsal_bench
+from bandproof.bench.job import Job, Outcome
+from bandproof.bench.operator import Absent, Operator
+from bandproof.bench.rehearsal import DEMO_BOARD, demo_board, demo_text, rehearsal_bench
+from bandproof.bench.stop import Stop
 from bandproof.bench.sweep import Sweep
-from bandproof.bench.types import Board
+from bandproof.bench.types import Bench, Board
 from bandproof.bench.verbs.rehearse import simulated, world_of
 from bandproof.simulated_instruments.bench import World
 
@@ -30,7 +34,10 @@ class Swept:
 
 @pytest.fixture(scope="session")
 def swept() -> Callable[..., Swept]:
-    """Return a maker of sweeps: seed, defects {(stage, part): value}, faults, options of Sweep."""
+    """Return a maker of sweeps: seed, defects {(stage, part): value}, options of Sweep.
+
+    `change` alters the world, `rewire` what the controller believes of its bench; `log` is the exchange log's path.
+    """
 
     def make(
         seed: int,
@@ -38,6 +45,9 @@ def swept() -> Callable[..., Swept]:
         board: Board | None = None,
         defects: dict[tuple[str, str], float] | None = None,
         change: Callable[[World], World] = lambda world: world,
+        rewire: Callable[[Bench], Bench] = lambda bench: bench,
+        operator: Operator | None = None,
+        log: Path | None = None,
         raises: type[Exception] | tuple[type[Exception], ...] = (),
         **options: Any,
     ) -> Swept:
@@ -49,9 +59,10 @@ def swept() -> Callable[..., Swept]:
         world = change(world_of(board, bench, drawn, seed, 1))
         journal, problem = Journal(), None
         with simulated(world, bench) as (reachable, clock):
+            reachable = rewire(reachable)
             try:
-                with opened(reachable, clock, None) as devices:
-                    Sweep(board, reachable, devices, clock, Absent(), journal, **options).run()
+                with opened(reachable, clock, log) as devices:
+                    Sweep(board, reachable, devices, clock, operator or Absent(), journal, **options).run()
             except raises as found:
                 problem = found
         return Swept(board, drawn, world, journal, problem)
@@ -64,3 +75,37 @@ def one_band() -> Board:
     """The demo board's lowest stage alone."""
     board = demo_board()
     return replace(board, stages=board.stages[:1])
+
+
+def band_text(count: int) -> str:
+    """Return the text of a board file with the demo's first bands only."""
+    head, *stages = demo_text(DEMO_BOARD).split("\n[stages.")
+    return "\n[stages.".join([head, *stages[:count]]) + "\n"
+
+
+@pytest.fixture(scope="session")
+def one_band_text() -> str:
+    """The text of a board file with the demo's lowest stage alone."""
+    return band_text(1)
+
+
+@pytest.fixture(scope="session")
+def outcome(tmp_path_factory: pytest.TempPathFactory) -> Outcome:
+    """What a whole job on a board of two bands left; its files are in `outcome.folder`."""
+    board = parse_board(band_text(2), "two bands")
+    bench = rehearsal_bench(board)
+    world = world_of(board, bench, draw_parts(board, 11), 11, 1)
+    with simulated(world, bench) as (reachable, clock):
+        return Job(
+            board=board,
+            bench=reachable,
+            serial="TB-0011",
+            attempt=1,
+            run_id="eleven",
+            folder=tmp_path_factory.mktemp("outcome"),
+            clock=clock,
+            operator=Absent(),
+            stop=Stop(),
+            progress=lambda *_: None,
+            note="Ω µ ± 'quoted' \"twice\"",
+        ).carry_out()
