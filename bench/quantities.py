@@ -9,7 +9,7 @@ import math
 import re
 from typing import Literal
 
-__all__ = ["Kind", "QuantityError", "engineering", "read_quantity", "read_tolerance", "with_uncertainty"]
+__all__ = ["Kind", "QuantityError", "engineering", "read_quantity", "read_tolerance", "shown", "with_uncertainty"]
 
 Kind = Literal[
     "frequency", "resistance", "capacitance", "voltage", "time", "slew", "gain", "relative", "tolerance", "number"
@@ -27,7 +27,8 @@ def _spellings(units: tuple[str, ...], prefixes: dict[str, float]) -> dict[str, 
 _RELATIVE = {"%": 1e-2, "ppm": 1e-6}
 _UNITS: dict[Kind, dict[str, float]] = {
     "frequency": _spellings(("Hz",), {"m": 1e-3, **_MEGA}),
-    "resistance": _spellings(("Ω", "Ω", "ohm"), _RESISTANCE),
+    # The second ohm is the sign U+2126, written so that no editor turns it into the first, the Greek letter.
+    "resistance": _spellings(("Ω", "\u2126", "ohm"), _RESISTANCE),
     "capacitance": _spellings(("F",), _MILLI),
     "voltage": _spellings(("V",), {**_MILLI, "k": 1e3}),
     "time": _spellings(("s",), _MILLI),
@@ -53,8 +54,9 @@ _CODE: dict[Kind, dict[str, float]] = {
     "resistance": {"R": 1.0, "k": 1e3, "K": 1e3, "M": 1e6, "G": 1e9},
     "capacitance": {"p": 1e-12, "n": 1e-9, "u": 1e-6, "µ": 1e-6, "μ": 1e-6},
 }
-_NUMBER = re.compile(r"([+-]?\d+(?:\.\d+)?(?:[eE][+-]?\d+)?)\s*(\S*)")
-_CODED = re.compile(r"(\d+)([A-Za-zµμ])(\d*)")
+_NUMBER = re.compile(r"([+-]?[0-9]+(?:\.[0-9]+)?(?:[eE][+-]?[0-9]+)?)\s*(\S*)")  # \d would read every script's digits
+_CODED = re.compile(r"(?=.*[0-9])([0-9]*)([A-Za-zµμ])([0-9]*)")
+_SHOWN = 60  # characters of what was found that a message repeats; arbitrary
 
 
 class QuantityError(ValueError):
@@ -94,35 +96,57 @@ def read_quantity(text: str | float, kind: Kind) -> float:
     (4700.0, 2500.0)
     """
     if isinstance(text, bool) or not isinstance(text, (str, int, float)):
-        raise QuantityError(str(text), kind, f"found {text!r}")
-    written = text.strip() if isinstance(text, str) else repr(text)
+        raise QuantityError(shown(text), kind, f"found {shown(text)}")
+    written = text.strip() if isinstance(text, str) else _printed(text)
     if kind in _CODE and (coded := _CODED.fullmatch(written)) and coded[2] in _CODE[kind]:
-        return _times(float(f"{coded[1]}.{coded[3] or 0}"), _CODE[kind][coded[2]])
+        return _times(float(f"{coded[1] or 0}.{coded[3] or 0}"), _CODE[kind][coded[2]], written, kind)
     match = _NUMBER.fullmatch(written)
     if match is None:
-        reason = "a decimal comma is not read (write a point)" if re.search(r"\d,\d", written) else f"found {written!r}"
+        reason = (
+            "a decimal comma is not read (write a point)" if re.search(r"\d,\d", written) else f"found {shown(written)}"
+        )
         raise QuantityError(written, kind, reason)
     return _scaled(float(match[1]), match[2], written, kind)
 
 
 def _scaled(number: float, unit: str, written: str, kind: Kind) -> float:
     if not math.isfinite(number):
-        raise QuantityError(written, kind, f"{written!r} is out of range")
+        raise _out_of_range(written, kind)
     if unit not in _UNITS[kind]:
         raise QuantityError(
-            written, kind, f"unknown unit {unit!r} in {written!r}" if unit else f"no unit in {written!r}"
+            written, kind, f"unknown unit {shown(unit)} in {shown(written)}" if unit else f"no unit in {shown(written)}"
         )
     if unit == "dB":
         ratio = 10.0 ** (number / 20.0) if abs(number) < 1e3 else math.inf
         if math.isinf(ratio):
-            raise QuantityError(written, kind, f"{written!r} is out of range")
+            raise _out_of_range(written, kind)
         return ratio
-    return _times(number, _UNITS[kind][unit])
+    return _times(number, _UNITS[kind][unit], written, kind)
 
 
-def _times(number: float, factor: float) -> float:
+def _times(number: float, factor: float, written: str, kind: Kind) -> float:
     # Dividing by an exact power of ten keeps 4.7 nF the nearest number to 4.7e-9; multiplying by 1e-9 does not.
-    return number / round(1.0 / factor) if factor < 1.0 else number * factor
+    value = number / round(1.0 / factor) if factor < 1.0 else number * factor
+    if not math.isfinite(value):
+        raise _out_of_range(written, kind)
+    return value
+
+
+def _out_of_range(written: str, kind: Kind) -> QuantityError:
+    return QuantityError(written, kind, f"{shown(written)} is out of range")
+
+
+def shown(found: object) -> str:
+    """Return what was found as a message repeats it, cut short; never raises, whatever a file holds."""
+    text = _printed(found)
+    return text if len(text) <= _SHOWN else text[:_SHOWN] + "..."
+
+
+def _printed(found: object) -> str:
+    try:
+        return repr(found)
+    except ValueError:  # a whole number of more digits than Python prints
+        return "a number of thousands of digits"
 
 
 def read_tolerance(text: str | float) -> tuple[float, float]:
@@ -141,7 +165,7 @@ def read_tolerance(text: str | float) -> tuple[float, float]:
             return 1.0 / width, width
     elif 0.0 < width < 1.0:
         return 1.0 - width, 1.0 + width
-    raise QuantityError(str(text), "tolerance", f"{text!r} is not a usable width")
+    raise QuantityError(shown(text), "tolerance", f"{shown(text)} is not a usable width")
 
 
 _PREFIXES = {-12: "p", -9: "n", -6: "µ", -3: "m", 0: "", 3: "k", 6: "M", 9: "G"}
@@ -173,9 +197,11 @@ def with_uncertainty(value: float, expanded: float, unit: str) -> str:
         return f"{engineering(value, unit)} ± unknown" if math.isfinite(value) else "not found"
     power = _power(value)
     scale = 10.0**power
-    places = max(0, decimals(expanded / scale))
+    digits = decimals(expanded / scale)
+    places = max(0, digits)
+    shown_value, shown_width = (round(number / scale, digits) for number in (value, expanded))
     tail = f" {_PREFIXES[power]}{unit}".rstrip()
-    return f"{value / scale:.{places}f} ± {expanded / scale:.{places}f}{tail}"
+    return f"{shown_value:.{places}f} ± {shown_width:.{places}f}{tail}"
 
 
 def decimals(expanded: float) -> int:

@@ -7,7 +7,7 @@ from pathlib import Path
 from typing import Any, TypeVar
 
 from bandproof.bench.errors import FileMistakes
-from bandproof.bench.quantities import Kind, QuantityError, read_quantity, read_tolerance
+from bandproof.bench.quantities import Kind, QuantityError, read_quantity, read_tolerance, shown
 
 __all__ = ["Mistakes", "Table", "nearest", "parse_toml", "read_text"]
 
@@ -41,9 +41,11 @@ def read_text(path: Path) -> str:
         The file is missing, unreadable, too large or not UTF-8; says which.
     """
     try:
-        if path.stat().st_size > _LARGEST_FILE:
+        with path.open("rb") as file:
+            content = file.read(_LARGEST_FILE + 1)  # bounded, whatever stands behind the name
+        if len(content) > _LARGEST_FILE:
             raise FileMistakes(str(path), (f"the file is larger than {_LARGEST_FILE // 1_000_000} MB",))
-        return path.read_bytes().decode("utf-8")
+        return content.decode("utf-8-sig")  # some editors put a byte order mark before the text
     except OSError as problem:
         raise FileMistakes(str(path), (f"cannot be read: {problem.strerror or problem}",)) from problem
     except UnicodeDecodeError as problem:
@@ -92,7 +94,7 @@ class Table:
         if found is None:
             return default or ""
         if not isinstance(found, str) or (default is None and not found.strip()):
-            self.mistake(key, f"found {found!r}; expected a text")
+            self.mistake(key, f"found {shown(found)}; expected a text")
             return default or ""
         return found
 
@@ -102,7 +104,7 @@ class Table:
         if found is None:
             return low if default is None else default
         if isinstance(found, bool) or not isinstance(found, int) or not low <= found <= high:
-            self.mistake(key, f"found {found!r}; expected a whole number from {low} to {high}")
+            self.mistake(key, f"found {shown(found)}; expected a whole number from {low} to {high}")
             return low
         return found
 
@@ -133,7 +135,7 @@ class Table:
         if found is None:
             return default or accepted[0]
         if found not in accepted:
-            self.mistake(key, f"found {found!r}; expected {' | '.join(accepted)}{nearest(str(found), accepted)}")
+            self.mistake(key, f"found {shown(found)}; expected {' | '.join(accepted)}{nearest(shown(found), accepted)}")
             return default or accepted[0]
         return str(found)
 
@@ -141,7 +143,7 @@ class Table:
         """Return a sub-table; an empty one when it is missing and optional."""
         found = self._take(key, "a table", {} if optional else None)
         if found is not None and not isinstance(found, dict):
-            self.mistake(key, f"found {found!r}; expected a table")
+            self.mistake(key, f"found {shown(found)}; expected a table")
         return Table(found if isinstance(found, dict) else {}, self.path(key), self._mistakes)
 
     def peek(self, key: str) -> Any:
@@ -172,5 +174,5 @@ def nearest(word: str, accepted: Iterable[str]) -> str:
 
 def _positive(value: float, found: object, kind: Kind, positive: bool) -> float:
     if positive and value <= 0.0:
-        raise QuantityError(str(found), kind, f"{found!r} is not above zero")
+        raise QuantityError(shown(found), kind, f"{shown(found)} is not above zero")
     return value
