@@ -4,7 +4,7 @@ from pathlib import Path
 from typing import Literal, cast
 
 from bandproof.bench.quantities import Kind, QuantityError, read_quantity
-from bandproof.bench.reading import Mistakes, Table, parse_toml, read_text
+from bandproof.bench.reading import Mistakes, Table, nearest, parse_toml, read_text
 from bandproof.bench.types import Board, Limit, OpAmpData, Part, Quantity, Stage, TestPoint
 
 __all__ = ["STAGE_PARTS", "parse_board", "parse_defect", "read_board"]
@@ -160,7 +160,10 @@ def _check_taps(board: Board, mistakes: Mistakes) -> None:
         for key, tap in (("from", stage.tap_in), ("to", stage.tap_out)):
             if tap and tap not in board.points:
                 known = ", ".join(board.points) or "none"
-                mistakes.add(f"stages.{stage.name}.{key}", f"no test point {tap!r}; points known: {known}")
+                mistakes.add(
+                    f"stages.{stage.name}.{key}",
+                    f"no test point {tap!r}; points known: {known}{nearest(tap, board.points)}",
+                )
         if stage.tap_in and stage.tap_in == stage.tap_out:
             mistakes.add(f"stages.{stage.name}", "from and to are the same test point")
 
