@@ -10,8 +10,8 @@ import pytest
 from bandproof.bench.board_file import parse_board
 from bandproof.bench.circuit import draw_parts
 from bandproof.bench.instruments import opened
-from bandproof.bench.journal import Journal
 from bandproof.bench.job import Job, Outcome
+from bandproof.bench.journal import Journal
 from bandproof.bench.operator import Absent, Operator
 from bandproof.bench.rehearsal import DEMO_BOARD, demo_board, demo_text, rehearsal_bench
 from bandproof.bench.stop import Stop
