@@ -1,8 +1,8 @@
 """The plan: which records to take next, given what was measured so far. Pure and incremental; empty means done."""
 
 from collections import Counter
-from collections.abc import Mapping, Sequence
-from math import floor, log, log10
+from collections.abc import Sequence
+from math import ceil, floor, log, log10
 
 import numpy as np
 
@@ -32,7 +32,8 @@ class Planner:
     Raises
     ------
     BadInput
-        A stage's circuit has no band near its designed centre, or no level is safe for it.
+        A stage's circuit has no band near its designed centre, no level is safe for it, or its band is too low for
+        the longest record.
     """
 
     def __init__(self, board: Board, bench: Bench) -> None:
@@ -41,6 +42,8 @@ class Planner:
         self._levels = {s.name: greatest_level(board, bench, s, self._predictions[s.name]) for s in board.stages}
         self._costs: dict[str, list[float]] = {}
         self._dwells: dict[tuple[str, float, float | None], float] = {}
+        for stage in board.stages:  # now, so that what cannot be planned is told before anything is driven
+            self._seconds(stage)
 
     def more(self, points: Sequence[Point]) -> tuple[Step, ...]:
         """Return the next batch of steps; empty when every stage has what it needs."""
@@ -125,7 +128,10 @@ class Planner:
         level: float,
         ranges: tuple[float, float],
     ) -> Step:
-        record = plan_record(frequency, mains=self._bench.mains, longest=LONGEST)
+        try:
+            record = plan_record(frequency, mains=self._bench.mains, longest=LONGEST)
+        except ValueError as problem:
+            raise BadInput(f"stage {stage.name!r}: {problem}") from problem
         dwell = self._dwell(stage, frequency, previous, record.duration)
         tones = (Tone(frequency, level),)
         return Step(index, stage.name, purpose, tones, dwell, record.duration, record.points, ranges)
@@ -151,14 +157,14 @@ def greatest_level(board: Board, bench: Bench, stage: Stage, prediction: Predict
     BadInput
         No level above 1 mV is safe.
     """
-    near = prediction.centre * np.geomspace(0.25, 4.0, 121)
-    gain = np.abs(predicted_response(board, stage, near))
-    spread = _gain_spread(board, stage, near)
-    slope = 2.0 * np.pi * float((gain * near).max()) * spread
+    # Two octaves each way, so dense that no peak is missed by more than 0.1 %: (Q ln 16 / points)**2 / 2.
+    near = prediction.centre * np.geomspace(0.25, 4.0, max(121, ceil(62.0 * prediction.q)))
+    gain = _greatest(board, stage, near, np.ones_like(near))
+    slope = _greatest(board, stage, near, 2.0 * np.pi * near)
     level = min(
         bench.ceiling,
         board.input_maximum,
-        SWING_SHARE * board.op_amp.swing / (prediction.gain * spread),
+        SWING_SHARE * board.op_amp.swing / gain,
         SLEW_SHARE * board.op_amp.slew / slope,
     )
     if level < 1e-3:
@@ -167,19 +173,23 @@ def greatest_level(board: Board, bench: Bench, stage: Stage, prediction: Predict
     return round(floor(level / step * (1.0 + 1e-12)) * step, 9)
 
 
-def _gain_spread(board: Board, stage: Stage, frequency: FloatArray) -> float:
-    """Return by what factor the peak may be higher with every part at its worst (sum of single effects)."""
+def _greatest(board: Board, stage: Stage, frequency: FloatArray, weight: FloatArray) -> float:
+    """Return the greatest weighted |H| with every part at its worst end: the product of the parts' single effects.
+
+    For a band the product is above every corner of the tolerances (tests/bench/test_plan.py); their sum is not.
+    """
     network, (node_in, node_out) = stage_network(board, stage), taps(board, stage)
-    count = len(stage.parts)
-    values: Mapping[str, FloatArray] = {
+    ends = [(part, sign) for sign in (0.0, 1.0, -1.0) for part in stage.parts]
+    values = {
         f"{stage.name}.{part.name}": np.array(
-            [part.value, *(part.value * (1.0 + part.tolerance * (i == j)) for j in range(count))]
+            [part.value * (1.0 + sign * part.tolerance * (part is moved)) for moved, sign in ends]
         )
-        for i, part in enumerate(stage.parts)
+        for part in stage.parts
     }
-    volts = np.abs(response(network, frequency, [node_in, node_out], values=dict(values)))
-    peaks = (volts[:, 1] / volts[:, 0]).max(axis=1)
-    return float(1.0 + np.abs(peaks[1:] / peaks[0] - 1.0).sum())
+    volts = np.abs(response(network, frequency, [node_in, node_out], values=values))
+    nominal, up, down = (weight * volts[:, 1] / volts[:, 0]).max(axis=1).reshape(3, -1)
+    effects = np.maximum(np.maximum(up, down) / nominal, 1.0)
+    return float(nominal[0] * effects.prod())
 
 
 def _predicted(board: Board, stage: Stage) -> Prediction:
