@@ -98,8 +98,8 @@ class Planner:
         quiet_time = max(2.0 / self._bench.mains, 3.0 / prediction.centre)
         quiet = Step(first, stage.name, "no-signal", (), 0.0, quiet_time, _QUIET_SAMPLES, ranges)
         frequency = float(self._clear_of_mains(np.array([prediction.centre]))[0])
-        low_ranges = (HEADROOM * low, HEADROOM * low * prediction.gain)
-        return quiet, self._step(first + 1, stage, "low-level", frequency, None, low, low_ranges)
+        # The sweep's own ranges: a level ten times too high (a wrong probe factor) must be seen as what it is.
+        return quiet, self._step(first + 1, stage, "low-level", frequency, None, low, ranges)
 
     def _curve(self, stage: Stage, at: Prediction, scale: float, widen: float, first: int) -> tuple[Step, ...]:
         """Return the points round a band and the closing point, which repeats the first."""
