@@ -1,6 +1,6 @@
 """What a person reads at the end of a run: one line per band and figure, 80 columns, plain text."""
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Iterator, Sequence
 from math import isfinite, log10
 
 from bandproof.bench.quantities import decimals, engineering, with_uncertainty
@@ -27,18 +27,21 @@ def summary_lines(stages: Sequence[StageResult]) -> list[str]:
     """Return the lines of the table: per figure, one line per band."""
     lines: list[str] = []
     for quantity in QUANTITIES:
-        lines += ["", _TITLES[quantity], _row(_HEADINGS), *_rows(quantity, stages)]
+        lines += ["", _TITLES[quantity], *_row(_HEADINGS), *_rows(quantity, stages)]
     return lines
 
 
-def _rows(quantity: Quantity, stages: Iterable[StageResult]) -> list[str]:
-    return [_row([stage.name, *_cells(stage.figures[quantity])]) for stage in stages]
+def _rows(quantity: Quantity, stages: Iterable[StageResult]) -> Iterator[str]:
+    for stage in stages:
+        yield from _row([stage.name, *_cells(stage.figures[quantity])])
 
 
-def _row(cells: Sequence[str]) -> str:
+def _row(cells: Sequence[str]) -> list[str]:
+    """Return a row of the table, on two lines where the name is longer than its column."""
     name, *rest = cells
-    padded = [f"{name:<{_WIDTHS[0]}}", *(f"{cell:>{width}}" for cell, width in zip(rest, _WIDTHS[1:], strict=True))]
-    return "".join(padded).rstrip()
+    above, name = ([name], "") if len(name) >= _WIDTHS[0] else ([], name)
+    figures = (f" {cell:>{width - 1}}" for cell, width in zip(rest, _WIDTHS[1:], strict=True))
+    return [*above, f"{name:<{_WIDTHS[0]}}{''.join(figures)}"]
 
 
 def _cells(figure: Comparison) -> list[str]:
@@ -55,14 +58,20 @@ def _cells(figure: Comparison) -> list[str]:
 
 
 def _gain_cells(figure: Comparison) -> list[str]:
-    """Decibels; U is half the span between the gain's ends, which is symmetric enough below 3 dB."""
-    relative = figure.expanded_uncertainty / figure.measured
-    expanded = 0.5 * (dB(1.0 + relative) - dB(1.0 - relative)) if 0.0 < relative < 1.0 else float("nan")
-    places = max(0, decimals(expanded)) if isfinite(expanded) else 2
-    shown = f"{dB(figure.measured):.{places}f} ± {expanded:.{places}f} dB"
+    found = isfinite(figure.measured)
     return [
         f"{dB(figure.designed):.4g} dB",
         f"{dB(figure.predicted):.4g} dB",
-        shown,
-        f"{dB(figure.measured / figure.designed):+.2f} dB",
+        _gain(figure) if found else "not found",
+        f"{dB(figure.measured / figure.designed):+.2f} dB" if found else "-",
     ]
+
+
+def _gain(figure: Comparison) -> str:
+    """Decibels; U is half the span between the gain's ends, which is symmetric enough below 3 dB."""
+    relative = figure.expanded_uncertainty / figure.measured
+    if not 0.0 < relative < 1.0:
+        return f"{dB(figure.measured):.2f} dB ± unknown"
+    expanded = 0.5 * (dB(1.0 + relative) - dB(1.0 - relative))
+    places = max(0, decimals(expanded))
+    return f"{dB(figure.measured):.{places}f} ± {expanded:.{places}f} dB"
