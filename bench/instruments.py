@@ -2,13 +2,13 @@
 
 from collections.abc import Iterator
 from contextlib import closing, contextmanager
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 
 from bandproof.bench.errors import BenchFault
 from bandproof.bench.types import Bench
 from bandproof.drivers.clock import Clock
-from bandproof.drivers.dialect import Dialect, GeneratorDialect, ScopeDialect, SwitchDialect, load
+from bandproof.drivers.dialect import Dialect, GeneratorDialect, ScopeDialect, SwitchDialect, load, parse, source
 from bandproof.drivers.errors import InstrumentProblem
 from bandproof.drivers.generator import Generator
 from bandproof.drivers.link import Link
@@ -17,7 +17,7 @@ from bandproof.drivers.scope import Scope
 from bandproof.drivers.session import Session
 from bandproof.drivers.switch import Switch
 
-__all__ = ["Devices", "load_dialects", "opened"]
+__all__ = ["Devices", "load_dialects", "opened", "with_dialect_texts"]
 
 
 @dataclass(slots=True)
@@ -32,6 +32,13 @@ class Devices:
         """Return the instruments that are there, the generator first."""
         found = (self.generator, self.scope, self.switch)
         return tuple(instrument for instrument in found if instrument is not None)
+
+    def role_of(self, address: str) -> str:
+        """Return what the instrument at an address does on this bench."""
+        for role, instrument in (("generator", self.generator), ("scope", self.scope), ("switch", self.switch)):
+            if instrument is not None and instrument.address == address:
+                return role
+        return "instrument"
 
     def identities(self) -> dict[str, str]:
         """Return what each instrument says it is, by role."""
@@ -65,12 +72,20 @@ def opened(bench: Bench, clock: Clock, log_path: Path | None) -> Iterator[Device
         devices = _devices(bench, sessions, dialects)
         try:
             yield devices
+        except BaseException as problem:
+            _leave_safe(devices.generator, problem)
+            raise
+        else:
+            _leave_safe(devices.generator, None)
         finally:
-            try:
-                _leave_safe(devices.generator)
-            finally:
-                for session in sessions.values():
-                    session.link.close()
+            for session in sessions.values():
+                session.link.close()
+
+
+def with_dialect_texts(bench: Bench) -> Bench:
+    """Return the bench with the texts of its dialects, so that a run keeps what it was made with (DialectMistakes)."""
+    texts = {role: source(instrument.dialect) for role, instrument in bench.instruments.items()}
+    return replace(bench, dialect_texts={**texts, **bench.dialect_texts})
 
 
 def load_dialects(bench: Bench) -> dict[str, Dialect]:
@@ -83,7 +98,12 @@ def load_dialects(bench: Bench) -> dict[str, Dialect]:
     BenchFault
         A dialect is for another kind of instrument than the place it is named at.
     """
-    dialects = {role: load(instrument.dialect) for role, instrument in bench.instruments.items()}
+    dialects = {
+        role: parse(bench.dialect_texts[role], instrument.dialect)
+        if role in bench.dialect_texts
+        else load(instrument.dialect)
+        for role, instrument in bench.instruments.items()
+    }
     for role, dialect in dialects.items():
         if dialect.kind != role:
             raise BenchFault(
@@ -104,20 +124,22 @@ def _devices(bench: Bench, sessions: dict[str, Session], dialects: dict[str, Dia
     )
 
 
-def _leave_safe(generator: Generator) -> None:
-    """Switch the generator off, over a fresh connection if the old one is broken."""
+def _leave_safe(generator: Generator, after: BaseException | None) -> None:
+    """Switch the generator off, over a fresh connection if the old one is broken; once more if that fails."""
     link = generator.session.link
     if not link.is_open and not link.is_dirty:
-        return  # it was never reached: nothing of ours is on
+        return  # it was never reached
     try:
-        if link.is_dirty:
-            generator.reopen()
         generator.be_safe()
-    except InstrumentProblem as first:
+    except InstrumentProblem:
         try:
             generator.reopen()
             generator.be_safe()
         except InstrumentProblem as problem:
+            if not generator.has_driven:
+                return  # nothing of ours is on; what went wrong before is on its way to the user
+            first = f"{after}\n" if after is not None else ""
             raise BenchFault(
-                f"the generator at {generator.address} could not be switched off: switch it off by hand now ({problem})"
-            ) from first
+                f"{first}THE GENERATOR MAY STILL BE ON: {generator.address} could not be switched off, "
+                f"switch it off by hand now ({problem})"
+            ) from after

@@ -1,44 +1,49 @@
-"""The whole job on one board: open, sweep, fit, compare, keep. Used alike by a real bench and a rehearsal."""
+"""The whole job on one board: open, sweep, fit, compare, keep; begun or resumed, on a real bench or in a rehearsal."""
 
 import re
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
+from contextlib import closing
 from dataclasses import dataclass
 from importlib.metadata import version
 from pathlib import Path
-from typing import Any, Literal
+from typing import Any, Protocol
 
-from bandproof.bench.errors import BadInput, BenchProblem
-from bandproof.bench.evaluate import evaluate
-from bandproof.bench.instruments import opened
+from bandproof.bench.errors import BadInput, BenchFault, BenchProblem
+from bandproof.bench.finish import Outcome, finish
+from bandproof.bench.instruments import Devices, opened, with_dialect_texts
 from bandproof.bench.journal import Journal
 from bandproof.bench.operator import Operator
-from bandproof.bench.result import result_object
-from bandproof.bench.runfile import write_run
+from bandproof.bench.recovery import plainly
+from bandproof.bench.resumption import ResumeRefused, check_again, check_identities
 from bandproof.bench.stop import Stop
 from bandproof.bench.sweep import Sweep
-from bandproof.bench.types import Bench, Board, Run, StageResult
+from bandproof.bench.types import Bench, Board
 from bandproof.drivers.clock import Clock
 from bandproof.drivers.errors import InstrumentProblem
 
-__all__ = ["Job", "Outcome", "new_attempt"]
+__all__ = ["Job", "Progress", "new_attempt"]
 
+LOG = "exchange.log"
 _SERIAL = re.compile(r"[A-Za-z0-9._-]{1,64}")
 
 
-@dataclass(frozen=True, slots=True)
-class Outcome:
-    """What a job ended in: the run, its stages, the result object as stored, where the files are."""
+class Progress(Protocol):
+    """Told how far a run is: records done and planned so far, bench seconds left, stage; closed at its end."""
 
-    run: Run
-    stages: tuple[StageResult, ...]
-    result: dict[str, Any]
-    folder: Path
-    problem: Exception | None
+    def __call__(self, done: int, planned: int, left: float, stage: str) -> None:
+        """Tell how far it is."""
+
+    def close(self) -> None:
+        """Tell that no more will come."""
 
 
 @dataclass(frozen=True)
 class Job:
-    """Everything a job needs; ``run_id`` names the run, ``folder`` is the attempt's own."""
+    """What a job needs.
+
+    ``rehearsal`` is what a rehearsal was asked for (seed, defects, faults): a resume starts the same simulated bench
+    again. ``begin_journal`` makes the journal of a new run in its folder.
+    """
 
     board: Board
     bench: Bench
@@ -49,9 +54,13 @@ class Job:
     clock: Clock
     operator: Operator
     stop: Stop
-    progress: Callable[[int, int, float, str], None]
+    progress: Progress
     operator_name: str = ""
     note: str = ""
+    keep_raw: bool = False
+    rehearsal: Mapping[str, Any] | None = None
+    bench_path: str = ""
+    begin_journal: Callable[[Path, dict[str, Any]], Journal] = Journal.begin
 
     def carry_out(self) -> Outcome:
         """Sweep the board and leave run file and picture; a run that cannot end is kept as cut short.
@@ -59,71 +68,89 @@ class Job:
         Raises
         ------
         InstrumentProblem, BenchFault, Stopped
-            Nothing was measured: there is nothing to keep.
-        FileMistakes
-            A dialect cannot be used.
+            Nothing was measured, or the run's folder cannot be written.
+        FileMistakes, DialectMistakes
+            A file cannot be used.
         """
-        journal, identities = Journal(), dict[str, str]()
-        started = self.clock.utc().isoformat(timespec="seconds")
-        begin = self.clock.now()
-        problem: Exception | None = None
+        return self._carried_out(None)
+
+    def go_on(self, journal: Journal) -> Outcome:
+        """Go on where a journal stands, after measuring its last point again.
+
+        Raises
+        ------
+        ResumeRefused
+            Other instruments answer, or the last point reads something else; nothing was changed.
+        InstrumentProblem, BenchFault, Stopped
+            As for ``carry_out``.
+        """
+        journal.resumed(self.clock.utc().isoformat(timespec="seconds"))
+        return self._carried_out(journal)
+
+    def _carried_out(self, journal: Journal | None) -> Outcome:
+        bench = with_dialect_texts(self.bench)
+        problem, words = None, ""
         try:
-            with opened(self.bench, self.clock, self.folder / "exchange.log") as devices:
-                identities |= devices.identities()
-                Sweep(
-                    self.board,
-                    self.bench,
-                    devices,
-                    self.clock,
-                    self.operator,
-                    journal,
-                    stop=self.stop,
-                    progress=self.progress,
-                ).run()
+            with opened(bench, self.clock, self.folder / LOG) as devices:
+                identities = devices.identities()
+                if journal is None:
+                    journal = self.begin_journal(self.folder, self._head(bench, identities))
+                    self._sweep(devices, bench, journal).run()
+                else:
+                    check_identities(journal, identities)
+                    sweep = self._sweep(devices, bench, journal)
+                    check_again(sweep, journal)
+                    sweep.run()
         except (InstrumentProblem, BenchProblem) as failure:
-            if not journal.points:
+            if journal is None or not journal.points or isinstance(failure, ResumeRefused):
                 raise
-            problem = failure
-        return self._kept(journal, identities, started, self.clock.now() - begin, problem)
+            problem, words = failure, plainly(failure, devices)
+        except OSError as failure:
+            raise _no_room(self.folder, failure) from failure
+        with closing(journal):
+            return finish(journal, self.folder, problem, words)
 
-    def _kept(
-        self, journal: Journal, identities: dict[str, str], started: str, seconds: float, problem: Exception | None
-    ) -> Outcome:
-        ended: Literal["complete", "cut_short"] = "complete" if problem is None else "cut_short"
-        run = Run(
-            run_id=self.run_id,
-            serial=self.serial,
-            attempt=self.attempt,
-            board=self.board,
-            bench=self.bench,
-            identities=identities,
-            version=version("bandproof"),
-            started=started,
-            ended=ended,
-            reason=str(problem or ""),
-            bench_seconds=round(seconds, 6),
-            operator=self.operator_name or "not stated",
-            note=self.note,
-            steps=tuple(journal.steps),
-            points=tuple(journal.points),
-            alarms=tuple(journal.alarms),
-            history=tuple(journal.history),
+    def _sweep(self, devices: Devices, bench: Bench, journal: Journal) -> Sweep:
+        sweep = Sweep(
+            self.board,
+            bench,
+            devices,
+            self.clock,
+            self.operator,
+            journal,
+            stop=self.stop,
+            progress=self.progress,
+            keep_raw=self.keep_raw,
+            start=journal.head["clock_start"],
         )
-        stages = evaluate(run)
-        files = {"run": "run.h5", "picture": "picture.svg", "report": None}
-        result = result_object(run, stages, files)
-        write_run(self.folder / "run.h5", run, result)
-        _draw(run, stages, self.folder / "picture.svg")
-        return Outcome(run, stages, result, self.folder, problem)
+        sweep.prepare()
+        return sweep
+
+    def _head(self, bench: Bench, identities: Mapping[str, str]) -> dict[str, Any]:
+        return {
+            "run_id": self.run_id,
+            "serial": self.serial,
+            "attempt": self.attempt,
+            "version": version("bandproof"),
+            "started": self.clock.utc().isoformat(timespec="seconds"),
+            "clock_start": self.clock.now(),
+            "operator": self.operator_name or "not stated",
+            "note": self.note,
+            "identities": dict(identities),
+            "board": self.board.text,
+            "bench": bench.text,
+            "bench_path": self.bench_path,
+            "dialects": dict(bench.dialect_texts),
+            "keep_raw": self.keep_raw,
+            "rehearsal": dict(self.rehearsal) if self.rehearsal is not None else None,
+        }
 
 
-def _draw(run: Run, stages: tuple[StageResult, ...], path: Path) -> None:
-    from bandproof.bench.evaluate import views
-    from bandproof.bench.picture import draw, save
-
-    drawn = views(run, stages)
-    if drawn:
-        save(draw(drawn, f"{run.board.title}   serial {run.serial}, attempt {run.attempt}"), path)
+def _no_room(folder: Path, failure: OSError) -> BenchFault:
+    return BenchFault(
+        f"{folder} cannot be written ({failure.strerror or failure}). The generator is off; every finished record is "
+        f"in the journal there. Mend it, then: bandproof resume {folder}"
+    )
 
 
 def new_attempt(folder: Path, serial: str) -> tuple[Path, int]:

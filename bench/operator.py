@@ -4,6 +4,7 @@ from collections.abc import Callable
 from typing import Protocol
 
 from bandproof.bench.errors import OperatorNeeded
+from bandproof.bench.stop import Stop
 
 __all__ = ["Absent", "AtTerminal", "Operator"]
 
@@ -32,13 +33,14 @@ class Absent:
 class AtTerminal:
     """A person at a terminal, asked with one line and answering with Enter."""
 
-    def __init__(self, ask: Callable[[str], str]) -> None:
-        self._ask = ask
+    def __init__(self, ask: Callable[[str], str], stop: Stop) -> None:
+        self._ask, self._stop = ask, stop
 
     def confirm(self, request: str) -> None:
         """Print the request and wait for Enter; end of input counts as nobody there."""
         try:
-            answer = self._ask(f"{request}  [Enter when done, q to stop] ")
+            with self._stop.at_once():
+                answer = self._ask(f"{request}  [Enter when done, q to stop] ")
         except EOFError as nobody:
             raise OperatorNeeded(request) from nobody
         if answer.strip().lower().startswith("q"):

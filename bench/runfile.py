@@ -9,15 +9,17 @@ import hashlib
 import io
 import json
 import os
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import asdict, fields
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, cast
 
+from bandproof.analysis.types import FloatArray
 from bandproof.bench.bench_file import parse_bench
 from bandproof.bench.board_file import parse_board
 from bandproof.bench.errors import RunFileDamaged
-from bandproof.bench.types import Point, Run, Step, Tone
+from bandproof.bench.plain import step_from, to_json
+from bandproof.bench.types import Point, Run
 
 if TYPE_CHECKING:
     import h5py
@@ -60,15 +62,23 @@ _COLUMNS: dict[str, tuple[str, int | None, str]] = {
 }
 
 
-def write_run(path: Path, run: Run, result: Mapping[str, Any]) -> str:
+def write_run(
+    path: Path,
+    run: Run,
+    result: Mapping[str, Any],
+    *,
+    raw: Callable[[int], FloatArray | None] = lambda index: None,
+) -> str:
     """Write a run file beside its final name, sync it, rename it; return its digest.
+
+    ``raw`` gives the record (2, N) V kept for the run's point of that index, or None.
 
     Raises
     ------
     OSError
         The folder cannot be written. Nothing is left under the final name.
     """
-    image = _image(run, result)
+    image = _image(run, result, raw)
     digest = hashlib.sha256(image).hexdigest()
     part = path.with_name(path.name + ".part")
     with part.open("wb") as file:
@@ -92,7 +102,7 @@ def _sync_folder(folder: Path) -> None:
         os.close(handle)
 
 
-def _image(run: Run, result: Mapping[str, Any]) -> bytes:
+def _image(run: Run, result: Mapping[str, Any], raw: Callable[[int], FloatArray | None]) -> bytes:
     import h5py
 
     memory = io.BytesIO()
@@ -102,6 +112,9 @@ def _image(run: Run, result: Mapping[str, Any]) -> bytes:
             _write_text(file, name, text)
         for stage in dict.fromkeys(point.stage for point in run.points):
             _write_points(file.create_group(f"points/{stage}"), [p for p in run.points if p.stage == stage])
+        for index, point in enumerate(run.points):
+            if (volts := raw(index)) is not None:
+                _write_raw(file.create_group(f"raw/{point.step:06d}"), volts)
     return memory.getvalue()[_USER_BLOCK:]
 
 
@@ -135,11 +148,6 @@ _ABOUT = [
 ]  # fields of Run kept as they are
 
 
-def to_json(value: object) -> str:
-    """Return the JSON text of a value: keys sorted, as short as can be, the same for the same value."""
-    return json.dumps(value, sort_keys=True, ensure_ascii=False, separators=(",", ":"), allow_nan=True)
-
-
 def _fixed(text: str) -> Any:
     import numpy as np
 
@@ -163,6 +171,12 @@ def _write_points(group: "h5py.Group", points: list[Point]) -> None:
             column = np.array([text.encode("ascii") for text in column])
         dataset = group.create_dataset(name, data=np.asarray(column), track_times=False)
         dataset.attrs["units"] = _fixed(units)
+
+
+def _write_raw(group: "h5py.Group", volts: FloatArray) -> None:
+    for name, channel in zip(("volts_in", "volts_out"), volts, strict=True):
+        dataset = group.create_dataset(name, data=channel.astype("<f4"), track_times=False)
+        dataset.attrs["units"] = _fixed("V")
 
 
 def _cell(value: Any, part: int | None) -> Any:
@@ -263,12 +277,6 @@ def _run(file: "h5py.File") -> Run:
 
 def _text(file: "h5py.Group", name: str) -> str:
     return bytes(file[name][()]).decode("utf-8")
-
-
-def step_from(plain: dict[str, Any]) -> Step:
-    """Return a Step from its JSON form."""
-    tones = tuple(Tone(**tone) for tone in plain["tones"])
-    return Step(**{**plain, "tones": tones, "ranges": (plain["ranges"][0], plain["ranges"][1])})
 
 
 def _read_points(group: "h5py.Group", stage: str) -> list[Point]:

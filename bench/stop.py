@@ -15,10 +15,23 @@ class Stop:
 
     def __init__(self) -> None:
         self.requested = ""
+        self._at_once = False
+
+    @contextmanager
+    def at_once(self) -> Iterator[None]:
+        """While inside, a request raises Stopped at once: for waiting on a person, with no exchange in flight."""
+        self._at_once = True
+        try:
+            self.check()
+            yield
+        finally:
+            self._at_once = False
 
     def request(self, how: str) -> None:
         """Ask for a stop; the first reason is kept."""
         self.requested = self.requested or how
+        if self._at_once:
+            self.check()
 
     def check(self) -> None:
         """Raise Stopped if a stop was requested."""

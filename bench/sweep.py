@@ -7,8 +7,10 @@ it per point would wear its relay and restart the settling.
 
 from collections.abc import Callable
 from dataclasses import dataclass, field
+from datetime import datetime
 from math import inf
 
+from bandproof.analysis.types import FloatArray
 from bandproof.bench.errors import BenchFault
 from bandproof.bench.first_look import check_low_level, check_quiet
 from bandproof.bench.instruments import Devices
@@ -16,12 +18,15 @@ from bandproof.bench.journal import Journal
 from bandproof.bench.operator import Operator
 from bandproof.bench.plan import Planner
 from bandproof.bench.record import Taken, point_of
+from bandproof.bench.recovery import Recovery
 from bandproof.bench.stop import Stop
 from bandproof.bench.types import Bench, Board, Point, Stage, Step
 from bandproof.drivers.clock import Clock
+from bandproof.drivers.errors import InstrumentProblem
 
 __all__ = ["Sweep"]
 
+LONG_PAUSE = 60.0  # s between two records, beyond what they take; arbitrary
 REPEATS = 2  # most repetitions of a record that had not settled
 
 
@@ -29,7 +34,8 @@ REPEATS = 2  # most repetitions of a record that had not settled
 class Sweep:
     """One run of a board on opened instruments.
 
-    ``progress`` is called with (steps done, steps planned, bench seconds still to come, stage) after every step.
+    ``progress`` is called with (steps done, steps planned, bench seconds still to come, stage) after every step;
+    ``start`` is the clock at which the run began. Call ``prepare`` first, then ``run``.
     """
 
     board: Board
@@ -43,29 +49,41 @@ class Sweep:
     planner: Planner | None = None
     repeats: int = REPEATS
     dwell_factor: float = 1.0
+    keep_raw: bool = False
+    start: float | None = None
+
+    def __post_init__(self) -> None:
+        """Without a given start, the bench time of points counts from now."""
+        self._stage = ""
+        self._last_seen: tuple[float, datetime] | None = None
+        self._start = self.clock.now() if self.start is None else self.start
+
+    def elapsed(self) -> float:
+        """Return the bench time of the run in s."""
+        return self.clock.now() - self._start
 
     def run(self) -> None:
-        """Measure until the plan asks for no more.
+        """Measure until the plan asks for no more, from wherever the journal stands.
 
         Raises
         ------
         InstrumentProblem, BenchFault
-            The bench failed; what was measured is in the journal; the generator is still to be made safe.
+            The bench failed beyond recovery; what was measured is in the journal; the generator is still to be made
+            safe.
         Stopped
             A stop was requested.
+        OSError
+            The journal cannot be written.
         """
         planner = self.planner or Planner(self.board, self.bench)
-        self._start, self._stage = self.clock.now(), ""
-        self._prepare()
-        while steps := planner.more(tuple(self.journal.points)):
-            self.journal.planned(steps)
+        while steps := self._next(planner):
             for step in steps:
                 self._carry_out(step)
                 left = planner.seconds_left(self.journal.points)
                 self.progress(len(self.journal.points), len(self.journal.steps), left, step.stage)
         self.devices.generator.be_safe()
 
-    def _prepare(self) -> None:
+    def prepare(self) -> None:
         """Bring the instruments from whatever they were left at to a quiet start: output off before anything else."""
         generator = self.devices.generator
         generator.be_safe()
@@ -76,14 +94,59 @@ class Sweep:
         generator.set_sine()
         generator.set_offset(0.0)
 
+    def repeat(self, step: Step) -> Point:
+        """Measure a step once more without keeping it."""
+        return self._recovered(step)[0]
+
+    def continue_at(self, elapsed: float) -> None:
+        """Let the bench time go on at so many seconds."""
+        self._start = self.clock.now() - elapsed
+
+    def _next(self, planner: Planner) -> tuple[Step, ...]:
+        """Return the steps planned and not yet measured, else the next batch, which is kept before it is run."""
+        waiting = tuple(self.journal.steps[len(self.journal.points) :])
+        if waiting:
+            return waiting
+        steps = planner.more(tuple(self.journal.points))
+        if steps:
+            self.journal.planned(steps)
+        return steps
+
     def _carry_out(self, step: Step) -> None:
-        stage = self.board.stage(step.stage)
-        if step.setup != self._stage:
-            self._wire(stage)
-            self._stage = step.setup
-        point = self._measured(step, stage)
-        self.journal.measured(point)
-        self._look(step, stage, point)
+        self._watch_clock(step)
+        began = self.clock.now()
+        point, volts = self._recovered(step)
+        self._last_seen = self.clock.now(), self.clock.utc()
+        self.journal.measured(point, began=began, finished=self.clock.now(), volts=volts if self.keep_raw else None)
+        self._look(step, self.board.stage(step.stage), point)
+
+    def _watch_clock(self, step: Step) -> None:
+        """Tell of time that passed while nobody measured, and of a computer's clock that was set."""
+        now, utc = self.clock.now(), self.clock.utc()
+        if self._last_seen is not None:
+            passed, by_the_wall = now - self._last_seen[0], (utc - self._last_seen[1]).total_seconds()
+            if max(passed, by_the_wall) > LONG_PAUSE:
+                self.journal.told(self.elapsed(), "pause", step=step.index, seconds=round(max(passed, by_the_wall), 3))
+                self.journal.alarm(f"{step.stage}: nothing was measured for {max(passed, by_the_wall):.0f} s")
+            elif by_the_wall < -1.0:
+                self.journal.told(self.elapsed(), "clock set back", step=step.index, seconds=round(-by_the_wall, 3))
+                self.journal.alarm(f"{step.stage}: the computer's clock was set back by {-by_the_wall:.0f} s")
+
+    def _recovered(self, step: Step) -> tuple[Point, FloatArray]:
+        """Measure a step, again after what an instrument can get over, a bounded number of times."""
+        recovery = Recovery(self.devices, self.journal, self.elapsed)
+        attempt = 0
+        while True:
+            try:
+                stage = self.board.stage(step.stage)
+                if step.setup != self._stage:
+                    self._stage = ""
+                    self._wire(stage)
+                    self._stage = step.setup
+                return self._settled(step, stage, attempt)
+            except InstrumentProblem as problem:
+                attempt += self.repeats + 1
+                recovery.after(problem, step)
 
     def _wire(self, stage: Stage) -> None:
         """Connect a stage's taps with the generator off."""
@@ -98,16 +161,18 @@ class Sweep:
                 self.operator.confirm(
                     f"The generator is off. Put the probe of channel {wire.channel} on test point {tap!r} (node {node})"
                 )
-        self.journal.told(self.clock.now() - self._start, "wired", stage=stage.name)
+        self.journal.told(self.elapsed(), "wired", stage=stage.name)
 
-    def _measured(self, step: Step, stage: Stage) -> Point:
+    def _settled(self, step: Step, stage: Stage, first: int) -> tuple[Point, FloatArray]:
         """Take a step's record, again while it has not settled, at most `repeats` times more."""
-        for attempt in range(self.repeats + 1):
-            point = point_of(step, self._taken(step, stage, attempt), self.bench.mains)
+        for attempt in range(first, first + self.repeats + 1):
+            taken = self._taken(step, stage, attempt)
+            point = point_of(step, taken, self.bench.mains)
             if "unsettled" not in point.flags:
-                return point
-        self.journal.alarm(f"{step.stage}: the record at {step.frequency:.6g} Hz had not settled")
-        return point
+                break
+        else:
+            self.journal.alarm(f"{step.stage}: the record at {step.frequency:.6g} Hz had not settled")
+        return point, taken.volts
 
     def _taken(self, step: Step, stage: Stage, attempt: int) -> Taken:
         self.stop.check()
@@ -117,7 +182,7 @@ class Sweep:
         frequency, amplitude = self._set_generator(step)
         self.clock.wait(step.dwell * self.dwell_factor)
         self.stop.check()
-        began = self.clock.now() - self._start
+        began = self.elapsed()
         record = self.devices.scope.acquire()
         order = [channel - 1 for channel in channels]
         return Taken(

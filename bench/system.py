@@ -95,7 +95,6 @@ if sys.platform == "win32":
 else:
     import fcntl
     import pty
-    import tty
 
     STOP_SIGNALS: tuple[signal.Signals, ...] = (signal.SIGINT, signal.SIGTERM, signal.SIGHUP)
 
@@ -152,7 +151,6 @@ else:
         """
         far, near = pty.openpty()
         try:
-            tty.setraw(near)
             yield far, os.ttyname(near)  # with no near end open, reading the far one would fail
         finally:
             os.close(near)

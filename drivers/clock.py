@@ -37,6 +37,13 @@ class Clock(Protocol):
     def mark(self, step: int, attempt: int) -> None:
         """Tell a simulated bench which step and attempt follow; a real one need not know."""
 
+    @property
+    def is_virtual(self) -> bool:
+        """Whether the time is a rehearsal's."""
+
+    def catch_up(self, t: float) -> None:
+        """In a rehearsal, let time pass until t; a real bench's time cannot be chosen."""
+
 
 class RealClock:
     """Time of the wall; `margin` and `factor` make the patience: margin + factor * expected.
@@ -75,6 +82,14 @@ class RealClock:
     def mark(self, step: int, attempt: int) -> None:
         """Do nothing: a real bench counts nothing."""
 
+    @property
+    def is_virtual(self) -> bool:
+        """Return False."""
+        return False
+
+    def catch_up(self, t: float) -> None:
+        """Do nothing."""
+
 
 class VirtualClock:
     """Time of a rehearsal: one number in a mapped file that the simulated instruments share.
@@ -88,7 +103,7 @@ class VirtualClock:
     """
 
     def __init__(self, path: str | Path, *, patience: float = 2.0) -> None:
-        self._patience = patience
+        self._patience, self._utc_shift = patience, 0.0
         with open(path, "r+b") as file:
             self._memory = mmap.mmap(file.fileno(), CLOCK_FILE_SIZE)
 
@@ -113,20 +128,33 @@ class VirtualClock:
 
     def utc(self) -> datetime:
         """Return the fixed epoch plus the time that passed."""
-        return EPOCH + timedelta(seconds=self.now())
+        return EPOCH + timedelta(seconds=self.now() + self._utc_shift)
+
+    def shift_utc(self, seconds: float) -> None:
+        """Set the date and time forward or back, as somebody may do on a real computer; durations stay."""
+        self._utc_shift += seconds
 
     def mark(self, step: int, attempt: int) -> None:
         """Write step and attempt, which seed the simulated noise and place the faults."""
         struct.pack_into("<QQ", self._memory, 8, step, attempt)
+
+    @property
+    def is_virtual(self) -> bool:
+        """Return True."""
+        return True
+
+    def catch_up(self, t: float) -> None:
+        """Move the time on to exactly t; a t that has passed is left alone."""
+        struct.pack_into("<d", self._memory, 0, max(t, self.now()))
 
     def close(self) -> None:
         """Unmap the file; the clock cannot be used afterwards."""
         self._memory.close()
 
 
-def create_clock_file(path: str | Path) -> None:
-    """Write a clock file at time 0, step 0, attempt 0; an existing file is set back."""
-    Path(path).write_bytes(bytes(CLOCK_FILE_SIZE))
+def create_clock_file(path: str | Path, t: float = 0.0) -> None:
+    """Write a clock file at time t, step 0, attempt 0; an existing file is written over."""
+    Path(path).write_bytes(struct.pack("<d", t).ljust(CLOCK_FILE_SIZE, b"\0"))
 
 
 def _checked(duration: float) -> float:

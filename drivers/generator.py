@@ -38,6 +38,12 @@ class Generator(Instrument):
         super().__init__(session, dialect.identity)
         self._dialect, self._ceiling = dialect, ceiling
         self._amplitude = self._offset = 0.0
+        self._driven = False
+
+    @property
+    def has_driven(self) -> bool:
+        """Whether the output was ever switched on through this object, whatever came of it."""
+        return self._driven
 
     def be_safe(self) -> None:
         """Turn the output off and see it confirmed, whatever was set before; a dirty or closed link is reopened."""
@@ -109,6 +115,7 @@ class Generator(Instrument):
 
     def output(self, on: bool) -> None:
         """Turn the output on or off and see it confirmed; `restore` does this last."""
+        self._driven = self._driven or on
         self._remember("output", "", partial(self.output, on), last=True)
         self._set_toggle("output", self._dialect.output, on)
 

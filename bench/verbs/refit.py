@@ -20,7 +20,7 @@ def command(run_paths: tuple[Path, ...], as_json: bool) -> int:
       bandproof fit runs/TB-0001/1/run.h5
     """
     from bandproof.bench.evaluate import evaluate
-    from bandproof.bench.job import Outcome
+    from bandproof.bench.finish import Outcome
     from bandproof.bench.refits import keep_refit
     from bandproof.bench.result import result_object
     from bandproof.bench.runfile import read_run

@@ -4,20 +4,26 @@ import json
 import tempfile
 from collections.abc import Iterator
 from contextlib import closing, contextmanager
-from dataclasses import replace
+from dataclasses import asdict, dataclass, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import click
 
 from bandproof.bench.errors import BadInput
+from bandproof.bench.reading import nearest
 from bandproof.bench.types import Bench, Board, Instrument
+from bandproof.bench.verbs.run import carried_out, job_of, of_head
 
 if TYPE_CHECKING:
+    from bandproof.bench.journal import Journal
     from bandproof.drivers.clock import VirtualClock
     from bandproof.simulated_instruments.bench import World
+    from bandproof.simulated_instruments.faults import Fault
 
-__all__ = ["command", "simulated", "world_of"]
+__all__ = ["Rehearsal", "command", "resume_rehearsal", "simulated", "world_of"]
+
+_DEFAULT_STEP = 5  # where a fault strikes when no step is named: inside the first curve; arbitrary
 
 Drawn = dict[str, dict[str, float]]
 
@@ -26,11 +32,20 @@ Drawn = dict[str, dict[str, float]]
 @click.argument("board_path", metavar="[BOARD]", required=False, type=click.Path(path_type=Path))
 @click.option("--seed", default=1, show_default=True, help="Draws the board's parts and the bench's imperfections.")
 @click.option("--defect", "defects", multiple=True, metavar="STAGE.PART=VALUE", help="Build in a wrong part.")
+@click.option("--fault", "faults", multiple=True, metavar="NAME[@STEP]", help="Let something go wrong, at a record.")
+@click.option("--raw", is_flag=True, help="Keep every record in the run file.")
 @click.option("--folder", type=click.Path(path_type=Path), default=Path("rehearsals"), show_default=True)
 @click.option("--serve", is_flag=True, help="Only run the simulated bench, in real time, until Ctrl-C.")
 @click.option("--json", "as_json", is_flag=True, help="Print the result object and nothing else.")
 def command(
-    board_path: Path | None, seed: int, defects: tuple[str, ...], folder: Path, serve: bool, as_json: bool
+    board_path: Path | None,
+    seed: int,
+    defects: tuple[str, ...],
+    faults: tuple[str, ...],
+    raw: bool,
+    folder: Path,
+    serve: bool,
+    as_json: bool,
 ) -> int:
     """Do the whole job on simulated instruments; without BOARD on the demo board, an invented talkback equalizer.
 
@@ -41,30 +56,67 @@ def command(
     Example:
       bandproof rehearse --seed 7
       bandproof rehearse --defect low.R_shunt=3k4
+      bandproof rehearse --fault late-answer@20
     """
-    from bandproof.bench.board_file import parse_defect, read_board
-    from bandproof.bench.circuit import draw_parts
+    from bandproof.bench.board_file import read_board
     from bandproof.bench.rehearsal import demo_board, rehearsal_bench
 
     if seed < 0:
         raise BadInput(f"--seed {seed}: a seed is 0 or more")
     board = read_board(board_path) if board_path else demo_board()
-    drawn = draw_parts(board, seed)
-    for text in defects:
-        stage, part, value = _defect(parse_defect, text, board)
-        drawn[stage][part] = value
+    rehearsal = Rehearsal(seed, defects, faults)
+    rehearsal.drawn(board)
+    rehearsal.split_faults()
     bench = rehearsal_bench(board)
     if serve:
-        return _serve(board, bench, drawn, seed, folder)
-    return _rehearse(board, bench, drawn, seed, folder, as_json)
+        return _serve(rehearsal, board, bench, folder)
+    return _rehearse(rehearsal, board, bench, folder, raw, as_json)
 
 
-def _defect(parse: Any, text: str, board: Board) -> tuple[str, str, float]:
-    try:
-        stage, part, value = parse(text, board)
-    except ValueError as problem:
-        raise BadInput(f"--defect {problem}") from problem
-    return stage, part, value
+@dataclass(frozen=True)
+class Rehearsal:
+    """What a rehearsal was asked for; with a board, a bench and a run number it makes the simulated world."""
+
+    seed: int
+    defects: tuple[str, ...] = ()
+    faults: tuple[str, ...] = ()
+
+    def drawn(self, board: Board) -> Drawn:
+        """Return the board's parts as drawn, defects built in (BadInput for one that names no part)."""
+        from bandproof.bench.board_file import parse_defect
+        from bandproof.bench.circuit import draw_parts
+
+        drawn = draw_parts(board, self.seed)
+        for text in self.defects:
+            try:
+                stage, part, value = parse_defect(text, board)
+            except ValueError as problem:
+                raise BadInput(f"--defect {problem}") from problem
+            drawn[stage][part] = value
+        return drawn
+
+    def world(self, board: Board, bench: Bench, run: int) -> "World":
+        """Return the simulated world in real time."""
+        return replace(world_of(board, bench, self.drawn(board), self.seed, run), faults=self.split_faults()[1])
+
+    def split_faults(self) -> "tuple[dict[str, int], tuple[Fault, ...]]":
+        """Return what befalls the controller (name to step), and what the simulated bench does (BadInput)."""
+        from bandproof.bench.mishaps import MISHAPS
+        from bandproof.simulated_instruments.faults import NAMES, Fault
+
+        mishaps, faults = dict[str, int](), list[Fault]()
+        for text in self.faults:
+            name, _, step = text.partition("@")
+            if name not in (*MISHAPS, *NAMES) or not (step or "0").isdigit():
+                known = sorted((*MISHAPS, *NAMES))
+                raise BadInput(
+                    f"--fault {text}: write NAME or NAME@STEP; faults known: {', '.join(known)}{nearest(name, known)}"
+                )
+            if name in MISHAPS:
+                mishaps[name] = int(step or _DEFAULT_STEP)
+            else:
+                faults.append(Fault(name, int(step or _DEFAULT_STEP)))
+        return mishaps, tuple(faults)
 
 
 def world_of(board: Board, bench: Bench, drawn: Drawn, seed: int, run: int) -> "World":
@@ -97,45 +149,55 @@ def _at(bench: Bench, ports: dict[str, int], clock: str | None) -> Bench:
 
 
 @contextmanager
-def simulated(world: "World", bench: Bench) -> "Iterator[tuple[Bench, VirtualClock]]":
-    """Run a world as a process of its own in virtual time; yield the bench at its ports and the shared clock."""
+def simulated(world: "World", bench: Bench, *, t: float = 0.0) -> "Iterator[tuple[Bench, VirtualClock]]":
+    """Run a world as a process of its own in virtual time from t; yield the bench at its ports and the clock."""
     from bandproof.drivers.clock import VirtualClock, create_clock_file
     from bandproof.simulated_instruments.bench import start
 
     with tempfile.TemporaryDirectory(prefix="bandproof-") as temporary:
         time_file = str(Path(temporary) / "bench.time")
-        create_clock_file(time_file)
+        create_clock_file(time_file, t)
         with start(replace(world, clock=time_file)) as server, closing(VirtualClock(time_file)) as clock:
             yield _at(bench, server.ports, time_file), clock
 
 
-def _rehearse(board: Board, bench: Bench, drawn: Drawn, seed: int, folder: Path, as_json: bool) -> int:
-    from bandproof.bench.job import Job, new_attempt
-    from bandproof.bench.operator import Absent
-    from bandproof.bench.stop import Stop, watching_signals
-    from bandproof.bench.verbs.run import Progress, show, wall
+def _rehearse(rehearsal: Rehearsal, board: Board, bench: Bench, folder: Path, raw: bool, as_json: bool) -> int:
+    from bandproof.bench.job import new_attempt
+    from bandproof.bench.mishaps import struck
 
-    begin = wall()
-    serial = f"rehearsal-{seed}"
+    serial = f"rehearsal-{rehearsal.seed}"
     place, attempt = new_attempt(folder, serial)
-    stop, progress = Stop(), Progress()
-    world = world_of(board, bench, drawn, seed, attempt)
-    _write_truth(place / "truth.json", board, drawn, world)
-    with simulated(world, bench) as (reachable, clock), watching_signals(stop):
-        outcome = Job(
+    world = rehearsal.world(board, bench, attempt)
+    _write_truth(place / "truth.json", board, rehearsal.drawn(board), world)
+    with simulated(world, bench) as (reachable, clock):
+        job = job_of(
             board=board,
             bench=reachable,
             serial=serial,
             attempt=attempt,
-            run_id=f"rehearsal-{seed}-{attempt}",
+            run_id=f"rehearsal-{rehearsal.seed}-{attempt}",
             folder=place,
             clock=clock,
-            operator=Absent(),
-            stop=stop,
-            progress=progress,
-        ).carry_out()
-    progress.close()
-    return show(outcome, wall() - begin, as_json)
+            keep_raw=raw,
+            rehearsal=asdict(rehearsal),
+            begin_journal=struck(rehearsal.split_faults()[0], clock),
+        )
+        return carried_out(job, as_json=as_json)
+
+
+def resume_rehearsal(journal: "Journal", folder: Path, *, as_json: bool) -> int:
+    """Go on with a rehearsal on a simulated bench started again, its clock a little before where it stopped."""
+    from bandproof.bench.finish import board_and_bench
+    from bandproof.bench.resumption import EARLIER
+
+    head = journal.head
+    asked = head["rehearsal"]
+    rehearsal = Rehearsal(asked["seed"], tuple(asked["defects"]), tuple(asked["faults"]))
+    board, bench = board_and_bench(journal)
+    t = journal.began[-1] - EARLIER if journal.began else head["clock_start"]
+    with simulated(rehearsal.world(board, bench, head["attempt"]), bench, t=t) as (reachable, clock):
+        job = job_of(board=board, bench=reachable, folder=folder, clock=clock, **of_head(head))
+        return carried_out(job, journal=journal, as_json=as_json)
 
 
 def _write_truth(path: Path, board: Board, drawn: Drawn, world: "World") -> None:
@@ -153,13 +215,13 @@ def _write_truth(path: Path, board: Board, drawn: Drawn, world: "World") -> None
     path.write_text(json.dumps(truth, indent=1) + "\n", encoding="utf-8")
 
 
-def _serve(board: Board, bench: Bench, drawn: Drawn, seed: int, folder: Path) -> int:
+def _serve(rehearsal: Rehearsal, board: Board, bench: Bench, folder: Path) -> int:
     import signal
 
     from bandproof.simulated_instruments.bench import start
 
     folder.mkdir(parents=True, exist_ok=True)
-    with start(world_of(board, bench, drawn, seed, 1)) as server:
+    with start(rehearsal.world(board, bench, 1)) as server:
         served = _at(bench, server.ports, None)
         path = folder / "served.bench.toml"
         text = bench.text

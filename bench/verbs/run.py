@@ -5,17 +5,19 @@ import secrets
 import sys
 import textwrap
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import click
 
 from bandproof.bench.types import Bench
 
 if TYPE_CHECKING:
-    from bandproof.bench.job import Outcome
+    from bandproof.bench.finish import Outcome
+    from bandproof.bench.job import Job
+    from bandproof.bench.journal import Journal
     from bandproof.drivers.clock import Clock
 
-__all__ = ["Progress", "clock_of", "command", "exit_code", "show"]
+__all__ = ["carried_out", "clock_of", "command", "exit_code", "job_of", "of_head", "show", "wall"]
 
 
 def clock_of(bench: Bench) -> "Clock":
@@ -70,7 +72,7 @@ def show(outcome: "Outcome", wall_seconds: float, as_json: bool) -> int:
         click.echo(_wrapped(f"note: {alarm}"))
     if outcome.problem is not None:
         click.echo(_wrapped(f"CUT SHORT: {outcome.problem}"))
-        click.echo("No verdict. What was measured is kept.")
+        click.echo(f"No verdict. What was measured is kept; to go on:  bandproof resume {outcome.folder}")
     else:
         click.echo(f"Board: {str(result['verdict']).upper()}   {_counts(outcome)}")
     click.echo(
@@ -110,9 +112,10 @@ def exit_code(outcome: "Outcome") -> int:
 )
 @click.option("--operator", "name", default="", help="Who does this; kept in the run file.")
 @click.option("--note", default="", help="A remark; kept in the run file.")
+@click.option("--raw", is_flag=True, help="Keep every record in the run file.")
 @click.option("--json", "as_json", is_flag=True, help="Print the result object and nothing else.")
 def command(
-    board_path: Path, bench_path: str | None, serial: str, folder: Path, name: str, note: str, as_json: bool
+    board_path: Path, bench_path: str | None, serial: str, folder: Path, name: str, note: str, raw: bool, as_json: bool
 ) -> int:
     """Sweep BOARD on a real bench: every stage, fit, compare with the design, decide, keep the record.
 
@@ -122,34 +125,56 @@ def command(
     """
     from bandproof.bench.bench_file import check_wiring, find_bench, read_bench
     from bandproof.bench.board_file import read_board
-    from bandproof.bench.job import Job, new_attempt
-    from bandproof.bench.operator import Absent, AtTerminal
-    from bandproof.bench.stop import Stop, watching_signals
+    from bandproof.bench.job import new_attempt
 
     path, why = find_bench(bench_path)
     board, bench = read_board(board_path), read_bench(path)
     check_wiring(board, bench, str(path))
     click.echo(f"bench: {path} ({why})", err=as_json)
-    clock, stop, progress = clock_of(bench), Stop(), Progress()
     place, attempt = new_attempt(folder, serial)
-    job = Job(
+    job = job_of(
         board=board,
         bench=bench,
         serial=serial,
         attempt=attempt,
         run_id=secrets.token_hex(8),
         folder=place,
-        clock=clock,
-        operator=AtTerminal(_ask) if sys.stdin.isatty() else Absent(),
-        stop=stop,
-        progress=progress,
+        clock=clock_of(bench),
         operator_name=name,
         note=note,
+        keep_raw=raw,
+        bench_path=str(path.resolve()),
     )
+    return carried_out(job, as_json=as_json)
+
+
+def job_of(**facts: Any) -> "Job":
+    """Return a job with a person to ask where there is a terminal, progress on standard error, a flag to stop."""
+    from bandproof.bench.job import Job
+    from bandproof.bench.operator import Absent, AtTerminal
+    from bandproof.bench.stop import Stop
+
+    stop = Stop()
+    operator = AtTerminal(_ask, stop) if sys.stdin.isatty() and not facts.get("rehearsal") else Absent()
+    return Job(operator=operator, stop=stop, progress=Progress(), **facts)
+
+
+def of_head(head: dict[str, Any]) -> dict[str, Any]:
+    """Return what a job is told again when it is resumed, from its journal's head."""
+    kept = ("serial", "attempt", "run_id", "note", "keep_raw", "rehearsal", "bench_path")
+    return {**{name: head[name] for name in kept}, "operator_name": head["operator"]}
+
+
+def carried_out(job: "Job", *, as_json: bool, journal: "Journal | None" = None) -> int:
+    """Carry a job out, or go on with its journal, print the outcome and return the exit code."""
+    from bandproof.bench.stop import watching_signals
+
     begin = wall()
-    with watching_signals(stop):
-        outcome = job.carry_out()
-    progress.close()
+    try:
+        with watching_signals(job.stop):
+            outcome = job.carry_out() if journal is None else job.go_on(journal)
+    finally:
+        job.progress.close()
     return show(outcome, wall() - begin, as_json)
 
 

@@ -22,6 +22,7 @@ VERBS = (
     Verb("rehearse", "rehearse", "the whole job on simulated instruments"),
     Verb("bench", "contact", "contact every instrument of a bench and leave it safe"),
     Verb("sweep", "run", "sweep a board on a real bench, fit, compare, record"),
+    Verb("resume", "resume", "go on where a run stopped"),
     Verb("fit", "refit", "fit stored runs again, changing nothing that was measured"),
     Verb("verify", "integrity", "check that a run file is as it was written"),
 )

@@ -1,0 +1,93 @@
+"""The end of a run: its journal becomes a run, is evaluated, and is kept as run file and picture."""
+
+from dataclasses import dataclass, replace
+from pathlib import Path
+from typing import Any, Literal
+
+from bandproof.bench.bench_file import parse_bench
+from bandproof.bench.board_file import parse_board
+from bandproof.bench.evaluate import evaluate, views
+from bandproof.bench.journal import Journal
+from bandproof.bench.result import result_object
+from bandproof.bench.runfile import digest_of, read_result, read_run, write_run
+from bandproof.bench.types import Bench, Board, Run, StageResult
+
+__all__ = ["CUT_SHORT", "PICTURE", "RUN", "Outcome", "board_and_bench", "finish", "run_of"]
+
+RUN, CUT_SHORT, PICTURE = "run.h5", "run.cut_short-{}.h5", "picture.svg"
+
+
+@dataclass(frozen=True, slots=True)
+class Outcome:
+    """What a job ended in: the run, its stages, the result object as stored, where the files are."""
+
+    run: Run
+    stages: tuple[StageResult, ...]
+    result: dict[str, Any]
+    folder: Path
+    problem: Exception | None
+
+
+def finish(journal: Journal, folder: Path, problem: Exception | None, reason: str) -> Outcome:
+    """Write run file, picture and the journal's last line; a run that was cut short has the reason in words.
+
+    A run file that is already there, from a run killed before its journal's last line, is kept as it is.
+
+    Raises
+    ------
+    OSError
+        The folder cannot be written; nothing is left under a final name that is not whole.
+    """
+    run = run_of(journal, "complete" if problem is None else "cut_short", reason)
+    path = folder / RUN if problem is None else _free(folder)
+    if path.exists():
+        run, result = read_run(path), read_result(path)
+        stages = evaluate(run)
+    else:
+        stages = evaluate(run)
+        result = result_object(run, stages, {"run": path.name, "picture": PICTURE, "report": None})
+        write_run(path, run, result, raw=journal.volts)
+    _draw(run, stages, folder / PICTURE)
+    journal.ended(run.ended, path.name, digest_of(path))
+    return Outcome(run, stages, result, folder, problem)
+
+
+def run_of(journal: Journal, ended: Literal["complete", "cut_short"], reason: str) -> Run:
+    """Return the run a journal tells of."""
+    head = journal.head
+    board, bench = board_and_bench(journal)
+    kept = ("run_id", "serial", "attempt", "identities", "version", "started", "operator", "note")
+    return Run(
+        **{name: head[name] for name in kept},
+        board=board,
+        bench=bench,
+        ended=ended,
+        reason=reason,
+        bench_seconds=round(journal.finished[-1] - head["clock_start"], 6) if journal.finished else 0.0,
+        steps=tuple(journal.steps),
+        points=tuple(journal.points),
+        alarms=tuple(journal.alarms),
+        history=tuple(journal.history),
+    )
+
+
+def board_and_bench(journal: Journal) -> tuple[Board, Bench]:
+    """Return board and bench from the texts a run began with, whatever has become of the files."""
+    head = journal.head
+    bench = parse_bench(head["bench"], head["bench_path"] or "the run's bench file")
+    return parse_board(head["board"], "the run's board file"), replace(bench, dialect_texts=head["dialects"])
+
+
+def _free(folder: Path) -> Path:
+    number = 1
+    while (folder / CUT_SHORT.format(number)).exists():
+        number += 1
+    return folder / CUT_SHORT.format(number)
+
+
+def _draw(run: Run, stages: tuple[StageResult, ...], path: Path) -> None:
+    drawn = views(run, stages)
+    if drawn:
+        from bandproof.bench.picture import draw, save
+
+        save(draw(drawn, f"{run.board.title}   serial {run.serial}, attempt {run.attempt}"), path)
