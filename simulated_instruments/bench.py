@@ -118,10 +118,11 @@ def instruments(world: World, timebase: Timebase, plan: FaultPlan) -> dict[str, 
         imperfections=world.imperfections,
         seed=world.seed,
         run=world.run,
+        conditions=plan.conditions,
     )
 
-    def never_completes() -> bool:
-        plan.count_record()
+    def never_completes(at: float) -> bool:
+        plan.count_record(at)
         return plan.due("scope", (UNFINISHED,)) is not None
 
     scope = Scope(
@@ -132,8 +133,13 @@ def instruments(world: World, timebase: Timebase, plan: FaultPlan) -> dict[str, 
         run=world.run,
         mark=timebase.mark,
         never_completes=never_completes,
+        conditions=plan.conditions,
     )
-    generator = Generator(wiring.board, imperfections=world.imperfections, timing=world.timing)
+    generator = Generator(
+        wiring.board, imperfections=world.imperfections, timing=world.timing, conditions=plan.conditions
+    )
+    plan.follow(generator.disturbed)
+    plan.follow(wiring.disturbed)
     return {"generator": generator, "scope": scope, "switch": Switch(wiring, timing=world.timing)}
 
 

@@ -45,11 +45,15 @@ class Section:
 
 @dataclass(frozen=True, slots=True)
 class FrontEnd:
-    """What a channel looks at and through: a node (None: an open input), sections in order, grounded or not."""
+    """What a channel looks at and through: a node (None: an open input), sections in order, grounded or not.
+
+    `limit`, in V, is the greatest magnitude the node reaches, if its op-amp's swing is not smaller still.
+    """
 
     node: str | None
     sections: tuple[Section, ...] = ()
     grounded: bool = False
+    limit: float = float("inf")
 
 
 @dataclass(frozen=True, slots=True)
@@ -146,7 +150,7 @@ class Board:
         if front_end.grounded:
             return np.zeros(count)
         rows = np.array([2 * channel, 2 * channel + 1])  # through the front end; at the node
-        swing = self._swing(front_end.node)
+        swing = min(front_end.limit, self._swing(front_end.node))
         rows = rows if np.isfinite(swing) else rows[:1]
         inputs = self._inputs(event.drive)
         constant = system.c[rows] @ event.constant + system.d[rows] @ inputs

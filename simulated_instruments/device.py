@@ -74,7 +74,7 @@ class Device:
         self, identity: str, *, settings: Sequence[Setting], commands: Sequence[Command] = (), timing: Timing
     ) -> None:
         self.identity, self.timing, self.status = identity, timing, Status()
-        self.at = 0.0
+        self.at = -math.inf  # time may have begun anywhere
         self._settings = {setting.name: setting for setting in settings}
         self._values: dict[tuple[str, tuple[int, ...]], Any] = {}
         declared = [command for setting in settings for command in self._access(setting)]

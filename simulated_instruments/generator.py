@@ -4,6 +4,9 @@ Levels are those of the EMF, thus of the open output: the instrument has no load
 begins the sine anew at the instant it takes effect.
 """
 
+from collections.abc import Mapping
+
+from bandproof.simulated_instruments import faults
 from bandproof.simulated_instruments.board import Board, Drive
 from bandproof.simulated_instruments.device import Device, Setting, Timing
 from bandproof.simulated_instruments.imperfections import Imperfections
@@ -13,6 +16,8 @@ from bandproof.simulated_instruments.syntax import ScpiError
 __all__ = ["Generator"]
 
 CEILING = 10.0  # V, |offset| + amplitude
+ASTRAY = 1.02  # frequency of a generator at fault over the one it answers
+ASSUMED = 2.0  # open-circuit volts over those an instrument shows that assumes its own resistance as load
 _LEVEL = "[SOURce]:VOLTage[:LEVel][:IMMediate]"
 
 
@@ -24,10 +29,19 @@ class Generator(Device):
     board : Board
     imperfections : Imperfections
     timing : Timing
+    conditions : mapping
+        Faults that hold (see `FaultPlan`); looked up whenever the board is driven.
     """
 
-    def __init__(self, board: Board, *, imperfections: Imperfections, timing: Timing) -> None:
-        self._board, self._imperfections = board, imperfections
+    def __init__(
+        self,
+        board: Board,
+        *,
+        imperfections: Imperfections,
+        timing: Timing,
+        conditions: Mapping[str, float] = faults.NO_CONDITIONS,
+    ) -> None:
+        self._board, self._imperfections, self._conditions = board, imperfections, conditions
 
         def frequency(value: float) -> float:
             return _step(value, imperfections.frequency_resolution)
@@ -51,22 +65,30 @@ class Generator(Device):
         """Drive the board with what is set."""
         if abs(self.value("offset")) + self.value("amplitude") > CEILING * (1 + 1e-9):
             raise ScpiError(-221, "offset and amplitude exceed the output")
-        self._drive()
+        self._board.set_drive(self.at, self._given())
+
+    def disturbed(self, at: float) -> None:
+        """Take note that faults began to hold."""
+        given = self._given()
+        if given != self._board.drive:
+            self._board.set_drive(at, given)
 
     def reset(self) -> None:
         """Take the defaults, thus output off."""
         super().reset()
-        self._drive()
+        self._board.set_drive(self.at, self._given())
 
-    def _drive(self) -> None:
+    def _given(self) -> Drive:
+        """Return what the board gets of what is set."""
         frequency = self.value("frequency")
-        if self.value("output"):
-            amplitude = self.value("amplitude") * self._imperfections.level(frequency)
-            offset = self.value("offset")
-        else:
-            amplitude, offset = 0.0, 0.0
         actual = frequency * (1 + self._imperfections.frequency_error)
-        self._board.set_drive(self.at, Drive(actual, amplitude, offset))
+        if faults.OFF_FREQUENCY in self._conditions:
+            actual *= ASTRAY
+        if not self.value("output") or faults.OPEN_OUTPUT in self._conditions:
+            return Drive(actual)
+        factor = ASSUMED if faults.WRONG_LOAD in self._conditions else 1.0
+        amplitude = self.value("amplitude") * self._imperfections.level(frequency)
+        return Drive(actual, factor * amplitude, factor * self.value("offset"))
 
 
 def _step(value: float, step: float) -> float:

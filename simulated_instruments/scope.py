@@ -6,11 +6,12 @@ range / 32768 + offset. A trigger other than immediate is not modelled and refus
 effect: the input's bandwidth is far above what the network is simulated for.
 """
 
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 
 import numpy as np
 
+from bandproof.simulated_instruments import faults
 from bandproof.simulated_instruments.commands import Command
 from bandproof.simulated_instruments.device import Device, Setting, Timing
 from bandproof.simulated_instruments.dynamics import FloatArray
@@ -23,6 +24,7 @@ __all__ = ["Scope"]
 
 SAMPLE_STEP = 1e-9  # s
 MOST_POINTS = 100_000
+DRIFT = 0.05 / 60  # 1/s, of channel 2 when it drifts
 _FORMATS = Choice(("REAL", "INTeger", "ASCii"), "REAL")
 _LENGTHS = {"REAL": 32, "INT": 16, "ASC": 0}  # bits a sample; 0: as many characters as it takes
 
@@ -36,7 +38,8 @@ class _Acquisition:
     points: int
     ranges: tuple[float, float]
     offsets: tuple[float, float]
-    contacts: tuple[float, float]
+    gains: tuple[float, float]
+    hum: tuple[float, float]
     seed: tuple[int, int, int, int]
 
 
@@ -53,7 +56,9 @@ class Scope(Device):
     mark : callable
         Returns the controller's step and attempt, or None where nobody names them: then records are counted.
     never_completes : callable
-        Asked at each arming whether this acquisition shall never complete.
+        Asked at each arming, and told its instant, whether this acquisition shall never complete.
+    conditions : mapping
+        Faults that hold (see `FaultPlan`).
     """
 
     def __init__(
@@ -65,8 +70,10 @@ class Scope(Device):
         seed: int,
         run: int,
         mark: Callable[[], tuple[int, int] | None],
-        never_completes: Callable[[], bool] = lambda: False,
+        never_completes: Callable[[float], bool] = lambda at: False,
+        conditions: Mapping[str, float] = faults.NO_CONDITIONS,
     ) -> None:
+        self._conditions = conditions
         self._wiring, self._imperfections, self._seed = wiring, imperfections, (seed, run)
         self._mark, self._never_completes, self._count = mark, never_completes, 0
         self._armed: _Acquisition | None = None
@@ -108,6 +115,7 @@ class Scope(Device):
     def _arm(self, suffixes: tuple[int, ...]) -> None:
         if self.at < self.status.pending_until:
             raise ScpiError(-213)
+        endless = self._never_completes(self.at)
         self._count += 1
         step, attempt = self._mark() or (self._count, 0)
         self._records.clear()
@@ -117,11 +125,20 @@ class Scope(Device):
             points=self.value("points"),
             ranges=(self.value("range", 1), self.value("range", 2)),
             offsets=(self.value("offset", 1), self.value("offset", 2)),
-            contacts=(self._wiring.contact(0), self._wiring.contact(1)),
+            gains=(self._gain(0), self._gain(1)),
+            hum=(self._wiring.hum(0), self._wiring.hum(1)),
             seed=(*self._seed, step, attempt),
         )
-        duration = float("inf") if self._never_completes() else self._armed.interval * self._armed.points
+        duration = float("inf") if endless else self._armed.interval * self._armed.points
         self.status.begin(self.at, self.at + duration)
+
+    def _gain(self, channel: int) -> float:
+        """Return the gain factor of a channel (from 0) now, but for that of its range."""
+        world, since = self._imperfections, self._conditions.get(faults.DRIFT)
+        drifted = 1 + world.drift[channel] * self.at
+        if channel == 1 and since is not None:
+            drifted *= 1 + DRIFT * (self.at - since)
+        return (1 + world.channel_gain[channel]) * drifted * self._wiring.gain(channel)
 
     def _abort(self) -> None:
         if self.at < self.status.pending_until:
@@ -156,12 +173,11 @@ class Scope(Device):
         world = self._imperfections
         interval = armed.interval * (1 + world.timebase_error)
         volts = self._wiring.board.volts(channel, armed.start, interval, armed.points, delay=world.skew[channel])
-        if world.hum[channel]:  # mains is not locked to the bench: its phase is drawn for each record
+        if armed.hum[channel]:  # mains is not locked to the bench: its phase is drawn for each record
             phase = 2 * np.pi * np.random.default_rng([*armed.seed, 2]).uniform()
             angle = 2 * np.pi * world.hum_frequency * interval * np.arange(armed.points)
-            volts = volts + world.hum[channel] * np.sin(angle + phase)
-        gain = (1 + world.channel_gain[channel]) * (1 + world.drift[channel] * armed.start) * armed.contacts[channel]
-        return volts * gain * (1 + world.range_gain[channel][RANGES.index(armed.ranges[channel])])
+            volts = volts + armed.hum[channel] * np.sin(angle + phase)
+        return volts * armed.gains[channel] * (1 + world.range_gain[channel][RANGES.index(armed.ranges[channel])])
 
     def _convert(self, volts: FloatArray, armed: _Acquisition, channel: int) -> FloatArray:
         """Return what the converter makes of volts: non-linearity, noise, rounding, end codes."""

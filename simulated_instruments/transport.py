@@ -108,6 +108,7 @@ class Connection(asyncio.Protocol):
         if self._unanswered:
             self._device.refuse(-410)
             self._unanswered = False
+        self._plan.look(self._timebase.now())
         if self._plan.due(self._name, (names.ERROR_ENTRY,)):
             self._device.refuse(-240, "fault asked for")
         answer = self._device.message(message, self._timebase.now())
@@ -187,6 +188,11 @@ class Server:
     def __init__(self, listener: asyncio.Server, connections: set[Connection]) -> None:
         self._listener, self._connections = listener, connections
         self.port: int = listener.sockets[0].getsockname()[1]
+
+    @property
+    def clients(self) -> int:
+        """How many clients are connected."""
+        return len(self._connections)
 
     async def close(self) -> None:
         """Listen no more and drop the clients."""

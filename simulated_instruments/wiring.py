@@ -6,12 +6,16 @@ from collections.abc import Mapping
 import numpy as np
 
 from bandproof.analysis.network import Network
+from bandproof.simulated_instruments import faults
 from bandproof.simulated_instruments.board import Board, FrontEnd, Section
 from bandproof.simulated_instruments.imperfections import Imperfections
 
 __all__ = ["SWITCH", "Wiring"]
 
 SWITCH = "switch"  # stands for the node the closed route leads to
+HUM = 0.05  # V peak, of strong hum
+DIVISION = 0.1  # of a 10:1 probe
+SAGGED = 0.6  # V, swing of op-amps that clip
 
 
 class Wiring:
@@ -28,6 +32,8 @@ class Wiring:
     imperfections : Imperfections
     seed, run : int
         For the scatter of reseated contacts.
+    conditions : mapping
+        Faults that hold (see `FaultPlan`). Unpowered, op-amp outputs are at 0 V and the other nodes stay as they were.
 
     Raises
     ------
@@ -44,9 +50,11 @@ class Wiring:
         imperfections: Imperfections,
         seed: int,
         run: int,
+        conditions: Mapping[str, float] = faults.NO_CONDITIONS,
     ) -> None:
         self.routes, self.closed = dict(routes), ""
-        self._imperfections, self._seed = imperfections, (seed, run)
+        self._imperfections, self._seed, self._conditions = imperfections, (seed, run), conditions
+        self._outputs = {u.out for u in network.opamps}
         self._taps = [scope[1], scope[2]]
         self._couplings = ["DC", "DC"]
         _check_nodes(network, [tap for tap in self._taps if tap != SWITCH] + list(routes.values()))
@@ -61,21 +69,39 @@ class Wiring:
     def close(self, at: float, route: str) -> None:
         """Close a route, the other ones open; the empty string opens all."""
         self.closed = route
-        for channel, tap in enumerate(self._taps):
-            if tap == SWITCH:
-                self.board.set_front_end(at, channel, self._front_end(channel))
+        self.disturbed(at)
 
-    def contact(self, channel: int) -> float:
-        """Return the gain factor of the contact a channel (from 0) sees now."""
-        if self._taps[channel] != SWITCH or not self.closed or not self._imperfections.reseating:
+    def disturbed(self, at: float) -> None:
+        """Look at the board through what the channels are connected to from `at` on."""
+        for channel in range(len(self._taps)):
+            self.board.set_front_end(at, channel, self._front_end(channel))
+
+    def gain(self, channel: int) -> float:
+        """Return the factor that contact and probe of a channel (from 0) have now."""
+        division = DIVISION if channel == 1 and faults.WRONG_PROBE in self._conditions else 1.0
+        return division * self._contact(channel)
+
+    def hum(self, channel: int) -> float:
+        """Return the mains hum, in V peak, that a channel (from 0) picks up now."""
+        return self._imperfections.hum[channel] + (HUM if faults.HUM in self._conditions else 0.0)
+
+    def _tap(self, channel: int) -> str:
+        return self._taps[1 - channel if faults.SWAPPED in self._conditions else channel]
+
+    def _contact(self, channel: int) -> float:
+        if self._tap(channel) != SWITCH or not self.closed or not self._imperfections.reseating:
             return 1.0
         draw = np.random.default_rng([*self._seed, int(self.closed), channel]).uniform(-1.0, 1.0)
         return float(1 + self._imperfections.reseating * draw)
 
     def _front_end(self, channel: int) -> FrontEnd:
-        tap, coupling = self._taps[channel], self._couplings[channel]
+        tap, coupling, limit = self._tap(channel), self._couplings[channel], math.inf
         node = self.routes.get(self.closed) if tap == SWITCH else tap
-        return FrontEnd(node, tuple(self._sections(channel, coupling)), grounded=coupling == "GRO")
+        if node in self._outputs and faults.UNPOWERED in self._conditions:
+            node = None
+        elif node in self._outputs and faults.CLIPPED in self._conditions:
+            limit = SAGGED
+        return FrontEnd(node, tuple(self._sections(channel, coupling)), grounded=coupling == "GRO", limit=limit)
 
     def _sections(self, channel: int, coupling: str) -> list[Section]:
         """Return the probe and the coupling capacitor; the latter charges whether it is used or not."""
