@@ -103,9 +103,11 @@ class Job:
                     sweep.run()
         except (InstrumentProblem, BenchProblem) as failure:
             if journal is None or not journal.points or isinstance(failure, ResumeRefused):
+                _close(journal)
                 raise
             problem, words = failure, plainly(failure, devices)
         except OSError as failure:
+            _close(journal)
             raise _no_room(self.folder, failure) from failure
         with closing(journal):
             return finish(journal, self.folder, problem, words)
@@ -144,6 +146,11 @@ class Job:
             "keep_raw": self.keep_raw,
             "rehearsal": dict(self.rehearsal) if self.rehearsal is not None else None,
         }
+
+
+def _close(journal: Journal | None) -> None:
+    if journal is not None:
+        journal.close()
 
 
 def _no_room(folder: Path, failure: OSError) -> BenchFault:
