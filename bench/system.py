@@ -95,6 +95,7 @@ if sys.platform == "win32":
 else:
     import fcntl
     import pty
+    import tty
 
     STOP_SIGNALS: tuple[signal.Signals, ...] = (signal.SIGINT, signal.SIGTERM, signal.SIGHUP)
 
@@ -151,6 +152,7 @@ else:
         """
         far, near = pty.openpty()
         try:
+            tty.setraw(near)
             yield far, os.ttyname(near)  # with no near end open, reading the far one would fail
         finally:
             os.close(near)

@@ -16,7 +16,7 @@ if TYPE_CHECKING:
     from pyvisa import ResourceManager
     from pyvisa.resources import MessageBasedResource
 
-__all__ = ["VisaPort", "is_timeout", "listed", "translated"]
+__all__ = ["VisaPort", "is_timeout", "listed", "prepare", "translated"]
 
 PEEK = 1 << 18  # bytes taken in one raw read; bounds memory (a 2 MB block takes 8 to 30 reads)
 PIECE = 4096  # bytes PyVISA-py sends at a time; a larger piece would be cut, and a cut one is an error there
@@ -120,6 +120,12 @@ def _manager(library: str) -> ResourceManager:
 
         _managers[library] = ResourceManager(library)
     return _managers[library]
+
+
+def prepare(library: str) -> None:
+    """Load a VISA library and what translates its errors, which takes a while; no connection is opened."""
+    _manager(library)
+    translated()
 
 
 def listed(library: str) -> tuple[str, ...]:

@@ -60,11 +60,13 @@ def test_the_lock_of_a_killed_sweep_is_free_and_its_file_stays_stale(holder):
     assert is_free(A)
 
 
-def test_the_lock_ends_with_the_block_even_by_an_error():
+def test_the_lock_ends_with_the_block_even_by_an_error_and_leaves_no_file_open():
+    before = os.listdir("/proc/self/fd")
     with pytest.raises(ZeroDivisionError), locked([A], who="SN-1"):
         raise ZeroDivisionError
     assert is_free(A)
     assert lock_path(A).read_bytes() == b""
+    assert os.listdir("/proc/self/fd") == before
 
 
 def test_one_process_cannot_have_a_lock_twice():
