@@ -98,6 +98,8 @@ class Job:
                     self._sweep(devices, bench, journal).run()
                 else:
                     check_identities(journal, identities)
+                    if not journal.points:
+                        self.clock.catch_up(journal.head["clock_start"])
                     sweep = self._sweep(devices, bench, journal)
                     check_again(sweep, journal)
                     sweep.run()

@@ -114,7 +114,7 @@ class VirtualClock:
 
     def wait(self, duration: float) -> None:
         """Move the time on by `duration` seconds, at once."""
-        struct.pack_into("<d", self._memory, 0, self.now() + _checked(duration))
+        self._set(self.now() + _checked(duration))
 
     def patience(self, expected: float) -> float:
         """Return the short limit by the wall, in seconds."""
@@ -134,6 +134,10 @@ class VirtualClock:
         """Set the date and time forward or back, as somebody may do on a real computer; durations stay."""
         self._utc_shift += seconds
 
+    def _set(self, t: float) -> None:
+        # Whole nanoseconds: sums in another order, as after a resume, then give the same number.
+        struct.pack_into("<d", self._memory, 0, round(t, 9))
+
     def mark(self, step: int, attempt: int) -> None:
         """Write step and attempt, which seed the simulated noise and place the faults."""
         struct.pack_into("<QQ", self._memory, 8, step, attempt)
@@ -145,7 +149,7 @@ class VirtualClock:
 
     def catch_up(self, t: float) -> None:
         """Move the time on to exactly t; a t that has passed is left alone."""
-        struct.pack_into("<d", self._memory, 0, max(t, self.now()))
+        self._set(max(t, self.now()))
 
     def close(self) -> None:
         """Unmap the file; the clock cannot be used afterwards."""

@@ -58,7 +58,7 @@ class VirtualTimebase:
     def reach(self, ready_at: float) -> float:
         """Move virtual time forwards to ready_at; nobody has to wait."""
         if math.isfinite(ready_at) and ready_at > self.now():
-            _TIME.pack_into(self._map, 0, ready_at)
+            _TIME.pack_into(self._map, 0, round(ready_at, 9))  # whole ns, as the controller counts
         return 0.0
 
     def mark(self) -> tuple[int, int]:

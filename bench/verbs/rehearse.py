@@ -194,7 +194,7 @@ def resume_rehearsal(journal: "Journal", folder: Path, *, as_json: bool) -> int:
     asked = head["rehearsal"]
     rehearsal = Rehearsal(asked["seed"], tuple(asked["defects"]), tuple(asked["faults"]))
     board, bench = board_and_bench(journal)
-    t = journal.began[-1] - EARLIER if journal.began else head["clock_start"]
+    t = (journal.began[-1] if journal.began else head["clock_start"]) - EARLIER
     with simulated(rehearsal.world(board, bench, head["attempt"]), bench, t=t) as (reachable, clock):
         job = job_of(board=board, bench=reachable, folder=folder, clock=clock, **of_head(head))
         return carried_out(job, journal=journal, as_json=as_json)
