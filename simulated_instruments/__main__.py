@@ -97,7 +97,7 @@ async def _serve(world: World) -> None:
         sys.stdout.write("Ctrl-C ends\n")
         sys.stdout.flush()
 
-    await run(world, announce, asyncio.Event())
+    await run(world, announce, asyncio.get_running_loop().create_future())
 
 
 def _refuse(words: str) -> int:

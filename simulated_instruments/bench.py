@@ -8,9 +8,10 @@ import subprocess
 import sys
 import tempfile
 import threading
-from collections.abc import Callable, Mapping
+from collections.abc import Awaitable, Callable, Mapping
 from dataclasses import asdict, dataclass, field
 from pathlib import Path
+from types import MappingProxyType
 from typing import IO, Any
 
 from bandproof.analysis.network import Network, from_plain, to_plain
@@ -21,7 +22,7 @@ from bandproof.simulated_instruments.imperfections import Imperfections
 from bandproof.simulated_instruments.scope import Scope
 from bandproof.simulated_instruments.switch_supply import Switch
 from bandproof.simulated_instruments.timebase import Timebase, open_timebase
-from bandproof.simulated_instruments.transport import serve
+from bandproof.simulated_instruments.transport import Server, serve
 from bandproof.simulated_instruments.wiring import Wiring
 
 __all__ = ["Bench", "BenchNotStarted", "World", "instruments", "run", "serve_until_closed", "start"]
@@ -29,6 +30,10 @@ __all__ = ["Bench", "BenchNotStarted", "World", "instruments", "run", "serve_unt
 
 # The matrices are small: threads of a linear algebra library would only wait for each other.
 _ONE_THREAD = {"OPENBLAS_NUM_THREADS": "1", "OMP_NUM_THREADS": "1", "MKL_NUM_THREADS": "1"}
+LINGER = 2.0  # s by the wall that outputs may stay on without an owner, arbitrary: a guard takes well under 1 s
+_POLL = 0.02  # s between looks at them
+_STOP = "stop"  # the line that ends a server process at once
+POSIX_PROCESS: Mapping[str, Any] = MappingProxyType({"start_new_session": True})
 
 
 class BenchNotStarted(Exception):
@@ -143,20 +148,35 @@ def instruments(world: World, timebase: Timebase, plan: FaultPlan) -> dict[str, 
     return {"generator": generator, "scope": scope, "switch": Switch(wiring, timing=world.timing)}
 
 
-async def run(world: World, announce: Callable[[dict[str, int]], None], stop: asyncio.Event) -> None:
-    """Serve a world until `stop` is set; `announce` is handed the ports by instrument."""
+async def run(world: World, announce: Callable[[dict[str, int]], None], end: Awaitable[float]) -> None:
+    """Serve a world until `end` is done; `announce` is handed the ports by instrument.
+
+    The result of `end` is how long, in s by the wall, somebody may still need to switch the generator off.
+    """
     timebase = open_timebase(None if world.clock is None else Path(world.clock))
     plan = FaultPlan(world.faults, timebase)
     devices = instruments(world, timebase, plan)
     servers = {name: await serve(name, device, timebase, plan) for name, device in devices.items()}
     announce({name: server.port for name, server in servers.items()})
-    await stop.wait()
+    await _quiet(devices["generator"], servers["generator"], await end)
     for server in servers.values():
         await server.close()
 
 
-def serve_until_closed(source: IO[str], target: IO[str]) -> None:
-    """Read a world as one line of JSON, write the ports as one line of JSON, serve until the source ends."""
+async def _quiet(generator: Device, server: Server, limit: float) -> None:
+    """Wait until the output is off and nobody is connected who may wait for the answer, at most `limit` s."""
+    loop = asyncio.get_running_loop()
+    last = loop.time() + limit
+    while loop.time() < last and (generator.value("output") or server.clients):
+        await asyncio.sleep(_POLL)
+
+
+def serve_until_closed(source: IO[str], target: IO[str], *, linger: float = LINGER) -> None:
+    """Read a world as one line of JSON, write the ports as one line of JSON, serve until told to stop.
+
+    A line "stop" ends the serving at once. A source that ends without it belonged to an owner that died: the serving
+    goes on until the generator's output is off and its clients are gone, at most `linger` s by the wall.
+    """
     world = World.from_plain(json.loads(source.readline()))
 
     def announce(ports: dict[str, int]) -> None:
@@ -164,15 +184,16 @@ def serve_until_closed(source: IO[str], target: IO[str]) -> None:
         target.flush()
 
     async def main() -> None:
-        stop, loop = asyncio.Event(), asyncio.get_running_loop()
+        loop = asyncio.get_running_loop()
+        end: asyncio.Future[float] = loop.create_future()
 
         def watch() -> None:
-            while source.read(4096):
+            while (line := source.readline(4096)) and line.strip() != _STOP:
                 pass
-            loop.call_soon_threadsafe(stop.set)
+            loop.call_soon_threadsafe(end.set_result, 0.0 if line else linger)
 
         threading.Thread(target=watch, daemon=True).start()
-        await run(world, announce, stop)
+        await run(world, announce, end)
 
     asyncio.run(main())
 
@@ -189,9 +210,7 @@ class Bench:
 
     def stop(self, patience: float = 5.0) -> None:
         """End the server process, kill it if it does not end within `patience` s. May be called twice."""
-        if self.process.stdin is not None:
-            with contextlib.suppress(BrokenPipeError):
-                self.process.stdin.close()
+        self._tell()
         try:
             self.process.wait(patience)
         except subprocess.TimeoutExpired:
@@ -200,6 +219,17 @@ class Bench:
         if self.process.stdout is not None:
             self.process.stdout.close()
 
+    def _tell(self) -> None:
+        """Send the line that ends the process, if it still listens, and close its standard input."""
+        pipe = self.process.stdin
+        if pipe is None or pipe.closed:
+            return
+        with contextlib.suppress(OSError):
+            pipe.write(_STOP + "\n")
+            pipe.flush()
+        with contextlib.suppress(OSError):
+            pipe.close()
+
     def __enter__(self) -> "Bench":
         return self
 
@@ -207,11 +237,18 @@ class Bench:
         self.stop()
 
 
-def start(world: World) -> Bench:
+def start(world: World, *, process_options: Mapping[str, Any] = POSIX_PROCESS) -> Bench:
     """Start a server process for a world and wait until it listens.
 
-    The process ends when this one does, however it ends: its standard input closes. It is out of reach of the
-    terminal's Ctrl-C, so that the controller can still switch its generator off.
+    The process ends by itself after this one does, however it ends, because its standard input closes: within `LINGER`
+    s, earlier when somebody switches the generator off.
+
+    Parameters
+    ----------
+    world : World
+    process_options : mapping
+        Keyword options of `subprocess.Popen` that keep the process out of reach of the terminal's Ctrl-C, so that the
+        controller can still switch its generator off. The default is for POSIX.
 
     Raises
     ------
@@ -226,8 +263,8 @@ def start(world: World) -> Bench:
             stdout=subprocess.PIPE,
             stderr=errors,
             text=True,
-            start_new_session=True,
             env=os.environ | _ONE_THREAD,
+            **process_options,
         )
         line = _introduce(process, world)
         if line:

@@ -58,10 +58,16 @@ class Dynamics:
         return self._inverse @ state if self._modal else state.astype(np.complex128)
 
     def later(self, free: ComplexArray, elapsed: float) -> FloatArray:
-        """Return the deviation (n,) after some s."""
+        """Return the deviation (n,) after some s; what is below REMAINDER is forgotten for good.
+
+        So a bench that was switched on later agrees to the last bit with one that has seen more.
+        """
         if self._modal:
-            return np.asarray((self._vectors @ (free * np.exp(self.rates * elapsed))).real)
-        return np.asarray(self._exponential(elapsed) @ free.real)
+            modes = free * np.exp(self.rates * elapsed)
+            modes[np.abs(modes) < REMAINDER] = 0.0  # vectors have length 1: no state is larger
+            return np.asarray((self._vectors @ modes).real)
+        state = np.asarray(self._exponential(elapsed) @ free.real)
+        return state if np.abs(state).max(initial=0.0) > REMAINDER else np.zeros_like(state)
 
     def outputs(
         self, free: ComplexArray, rows: NDArray[np.intp], elapsed: float, interval: float, count: int

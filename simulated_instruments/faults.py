@@ -133,6 +133,8 @@ class FaultPlan:
 
     def look(self, now: float) -> None:
         """Let the conditions of which the step is reached begin."""
+        if not self._faults:
+            return
         step, _ = self._mark()
         waiting = {fault.name for fault in self._faults if fault.name in CONDITIONS and fault.step <= step}
         begun = waiting - self.conditions.keys()
