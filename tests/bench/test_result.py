@@ -14,7 +14,7 @@ from bandproof.bench.summary import dB, summary_lines
 TEXT, NUMBER, FLAG, WHOLE = str, float, bool, int
 MAYBE = (str, type(None))
 
-# The example object of DESIGN section 9, its keys in its order, with the type each value has there.
+# The result object as documented, its keys in their order, with the type each value has.
 PARAMETER = {
     "unit": TEXT,
     "designed": NUMBER,
@@ -77,7 +77,7 @@ def concluded(outcome):
     return json.loads(json.dumps(result_object(outcome.run, outcome.stages, FILES), allow_nan=False))
 
 
-def test_the_result_object_has_the_keys_and_types_of_the_design(outcome):
+def test_the_result_object_has_the_keys_and_types_documented(outcome):
     result = concluded(outcome)
     check_tree(result, RESULT)
     assert result["schema"] == "bandproof-result/1"

@@ -78,7 +78,7 @@ def test_the_same_run_gives_the_same_bytes(run, tmp_path):
 
 
 def test_the_digest_is_that_of_all_bytes_behind_the_user_block(written):
-    """The user block's form is DESIGN's: `bandproof-run/1 sha256=...`; sha256 by hashlib."""
+    """The user block's form is documented: `bandproof-run/1 sha256=...`; sha256 by hashlib."""
     content = written.read_bytes()
     digest = hashlib.sha256(content[512:]).hexdigest()
     assert content[:512].rstrip(b"\0") == f"bandproof-run/1 sha256={digest}\n".encode()

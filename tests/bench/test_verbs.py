@@ -25,7 +25,7 @@ from bandproof.drivers.dialect import source
 from bandproof.simulated_instruments.bench import start
 from bandproof.simulated_instruments.faults import Fault
 
-PASS, BOARD_FAILS, BAD_INPUT, BENCH_FAULT, UNDECIDED, INTERRUPTED = range(6)  # DESIGN section 9
+PASS, BOARD_FAILS, BAD_INPUT, BENCH_FAULT, UNDECIDED, INTERRUPTED = range(6)  # as documented in --help
 
 
 @pytest.fixture
