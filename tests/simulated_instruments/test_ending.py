@@ -31,7 +31,8 @@ def owned(world):
             open(answer_reading) as answers,
             open(answer_writing, "w") as target,
         ):
-            thread = threading.Thread(target=serve_until_closed, args=(source, target), kwargs={"linger": linger})
+            serving = {"target": serve_until_closed, "args": (source, target), "kwargs": {"linger": linger}}
+            thread = threading.Thread(**serving, daemon=True)
             owner.write(json.dumps(world().as_plain()) + "\n")
             owner.flush()
             thread.start()
@@ -78,6 +79,7 @@ def test_left_alone_it_serves_until_the_output_is_off_and_that_was_answered(owne
         controller = on(connect, ports["generator"])
         owner.close()
         controller.close()
+        assert not ends(LOOKS), "nobody is connected, but the output is on"
         guard = connect(ports["generator"])
         assert guard.ask("OUTP?") == "1"
         assert guard.ask("OUTP OFF;*OPC?") == "1"
@@ -89,7 +91,7 @@ def test_left_alone_it_serves_until_the_output_is_off_and_that_was_answered(owne
 
 def test_left_alone_with_the_output_off_it_ends(owned, connect):
     with owned(LONG) as (owner, ports, ends):
-        connect(ports["scope"])
+        assert connect(ports["scope"]).ask("*OPC?") == "1"
         owner.close()
         assert ends()
 
