@@ -1,1 +1,1 @@
-"""Placeholder."""
+"""The controller: files, plan, sweep, run file, evaluation, picture, commands."""

@@ -1,17 +1,23 @@
 """The bench file: instruments, wiring, ceilings and declared accuracy, every mistake reported at once."""
 
 import os
+import re
 from pathlib import Path
 from typing import Literal
 
 from bandproof.bench.errors import FileMistakes
 from bandproof.bench.reading import Mistakes, Table, nearest, parse_toml, read_text
 from bandproof.bench.types import Bench, Board, Instrument, Wire
+from bandproof.drivers.dialect import load
+from bandproof.drivers.schema import DialectMistakes
 
 __all__ = ["check_wiring", "find_bench", "parse_bench", "read_bench"]
 
 Role = Literal["generator", "scope", "switch"]
 BY_HAND = "by hand"
+_ADDRESS = re.compile(r"(TCPIP|USB|GPIB|ASRL|PXI|VXI)[^:\s]*(::[^:\s]+)+", re.IGNORECASE)  # interfaces of VPP-4.3
+_EXAMPLE = '"TCPIP::192.0.2.10::5025::SOCKET"'
+_USUAL_SKEW = 100e-9  # s, each channel; arbitrary, far above what two inputs of one scope differ by
 
 
 def find_bench(named: str | None, folder: Path = Path(".")) -> tuple[Path, str]:
@@ -43,17 +49,41 @@ def read_bench(path: Path) -> Bench:
     FileMistakes
         All mistakes found in the file, each with its key path.
     """
-    return parse_bench(read_text(path), str(path))
+    mistakes = Mistakes(str(path))
+    bench = _parsed(read_text(path), mistakes)
+    _check_dialects(bench, mistakes)
+    mistakes.stop_if_any()
+    return bench
 
 
 def parse_bench(text: str, path: str) -> Bench:
-    """Return the bench a text describes, as if it stood at ``path`` (FileMistakes with all mistakes)."""
+    """Return the bench a text describes, as if it stood at ``path``; dialects are not looked at (FileMistakes)."""
     mistakes = Mistakes(path)
-    top = Table(parse_toml(text, path), "", mistakes)
-    bench = _bench(top, text, Path(path).parent)
-    top.close()
+    bench = _parsed(text, mistakes)
     mistakes.stop_if_any()
     return bench
+
+
+def _parsed(text: str, mistakes: Mistakes) -> Bench:
+    top = Table(parse_toml(text, mistakes.path), "", mistakes)
+    bench = _bench(top, text, Path(mistakes.path).parent)
+    top.close()
+    return bench
+
+
+def _check_dialects(bench: Bench, mistakes: Mistakes) -> None:
+    """Note every dialect that is missing, wrong, or for another kind of instrument."""
+    for role, instrument in bench.instruments.items():
+        if not instrument.dialect:
+            continue
+        try:
+            kind = load(instrument.dialect).kind
+        except DialectMistakes as problem:
+            for finding in problem.findings:
+                mistakes.add(f"{role}.dialect", f"{instrument.dialect}: {finding}")
+            continue
+        if kind != role:
+            mistakes.add(f"{role}.dialect", f"{instrument.dialect!r} is for a {kind}; name one for a {role}")
 
 
 def _bench(top: Table, text: str, folder: Path) -> Bench:
@@ -63,6 +93,7 @@ def _bench(top: Table, text: str, folder: Path) -> Bench:
     generator, scope = top.table("generator"), top.table("scope")
     frequency = generator.quantity("frequency_accuracy", "relative")
     channel_gain = scope.quantity("channel_gain_accuracy", "relative")
+    channel_skew = scope.quantity("channel_skew", "time", _USUAL_SKEW)
     instruments = {
         "generator": _instrument("generator", generator, folder),
         "scope": _instrument("scope", scope, folder),
@@ -77,6 +108,7 @@ def _bench(top: Table, text: str, folder: Path) -> Bench:
         wires=_wires(top.table("wiring"), "switch" in instruments),
         probe_factors=_probes(top.table("probes")),
         channel_gain=channel_gain,
+        channel_skew=channel_skew,
         generator_frequency=frequency,
         visa_library=visa_library,
         clock=str(folder / clock) if clock else None,
@@ -86,6 +118,8 @@ def _bench(top: Table, text: str, folder: Path) -> Bench:
 
 def _instrument(role: Role, table: Table, folder: Path) -> Instrument:
     address, dialect = table.text("address"), table.text("dialect")
+    if address and not _ADDRESS.fullmatch(address):
+        table.mistake("address", f"found {address!r}; expected an address as VISA spells it, such as {_EXAMPLE}")
     if dialect.endswith(".toml"):
         dialect = str(folder / dialect)
     table.close()

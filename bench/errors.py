@@ -59,7 +59,7 @@ class OperatorNeeded(BenchFault):
 
     def __str__(self) -> str:
         return (
-            f"somebody must: {self.request}; nobody can answer here, or the answer was to stop. "
+            f"somebody must: {self.request}; nobody can answer here. "
             "Run it on a terminal, or wire the tap through a switch in the bench file"
         )
 

@@ -1,18 +1,17 @@
 """From points to conclusions: the fit of each stage, its figures with their uncertainty, compared with the design."""
 
 from collections.abc import Sequence
-from dataclasses import dataclass
 from math import inf, isfinite, nan, sqrt
 
 import numpy as np
-from scipy.special import chdtrc
 
 from bandproof.analysis.decision import decide, worst
 from bandproof.analysis.fit import BandFit, fit_bands
 from bandproof.analysis.models import band_response
-from bandproof.analysis.types import ComplexArray, FloatArray
-from bandproof.analysis.uncertainty import Row, combine
+from bandproof.analysis.types import FloatArray
+from bandproof.analysis.uncertainty import Combined, Row, combine
 from bandproof.bench.circuit import Prediction, predict
+from bandproof.bench.misfit import StageFit, arrays, look_for_misfit
 from bandproof.bench.picture import StageView
 from bandproof.bench.types import QUANTITIES, UNITS, Bench, Board, Comparison, Point, Quantity, Run, Stage, StageResult
 
@@ -21,16 +20,6 @@ __all__ = ["StageFit", "evaluate", "fit_points", "usable", "views"]
 LEAST_LSB = 20.0  # peak; below, quantization is not white and costs 2.5 to 5 times the fit's own variance
 MODEL = "band+delay"
 _FEWEST = 3  # points: five unknowns, two data a point, and one to judge the fit by
-_SIGNIFICANT = 1e-3  # probability of a chi-square this large by noise alone
-
-
-@dataclass(frozen=True, slots=True)
-class StageFit:
-    """A stage's fit and the points it was made of."""
-
-    points: tuple[Point, ...]
-    fit: BandFit | None
-    reason: str
 
 
 def usable(points: Sequence[Point]) -> tuple[Point, ...]:
@@ -48,17 +37,16 @@ def fit_points(points: Sequence[Point]) -> StageFit:
     """Fit the band model with delay to a stage's points; without a fit the reason is in words."""
     used = usable(points)
     if len({point.frequency for point in used}) < _FEWEST:
-        return StageFit(used, None, f"only {len(used)} usable points")
+        return StageFit(used, None, f"only {len(used)} usable points{_lost(points)}")
     frequency, response, covariance = arrays(used)
     fit = fit_bands(frequency[None], response[None], covariance[None])
     sound = fit.status[0] in ("converged", "no progress") and all(map(isfinite, (fit.f0[0], fit.q[0], fit.u_f0[0])))
     return StageFit(used, fit if sound else None, "" if sound else f"the fit ended with {fit.status[0]!r}")
 
 
-def arrays(points: Sequence[Point]) -> tuple[FloatArray, ComplexArray, FloatArray]:
-    """Return frequency (N,), response (N,) and covariance (N, 2, 2) of points."""
-    covariance = np.array([[[a, b], [b, c]] for a, b, c in (point.covariance for point in points)])
-    return np.array([p.frequency for p in points]), np.array([p.response for p in points]), covariance
+def _lost(points: Sequence[Point]) -> str:
+    overloaded = sum("overload" in point.flags for point in points)
+    return f", {overloaded} were overloaded" if overloaded else ""
 
 
 def evaluate(run: Run) -> tuple[StageResult, ...]:
@@ -74,11 +62,13 @@ def evaluate(run: Run) -> tuple[StageResult, ...]:
 def _stage_result(board: Board, bench: Bench, stage: Stage, points: Sequence[Point]) -> StageResult:
     found = fit_points(points)
     prediction = predict(board, stage)
-    figures = {quantity: _compared(stage, quantity, prediction, found, bench) for quantity in QUANTITIES}
+    misfit = look_for_misfit(board, bench, stage, points, found)
+    u = {quantity: _budget(found.fit, quantity, bench) for quantity in QUANTITIES}
+    doubt = found.reason or misfit.doubt({name: budget.expanded for name, budget in u.items() if budget is not None})
+    figures = {name: _compared(stage, name, prediction, found.fit, u[name], doubt) for name in QUANTITIES}
     fit = found.fit
-    dof = float(fit.dof[0]) if fit else 0.0
-    chi_square = float(fit.chi_square[0]) if fit and dof else nan
-    alarms = [f"{stage.name}: {found.reason}"] if found.reason else []
+    alarms = [doubt] if doubt else []
+    alarms += [*misfit.alarms, *_outside_by_design(stage, prediction)]
     return StageResult(
         name=stage.name,
         kind=stage.kind,
@@ -87,20 +77,38 @@ def _stage_result(board: Board, bench: Bench, stage: Stage, points: Sequence[Poi
         figures=figures,
         theta=tuple(fit.theta[0].tolist()) if fit else (),
         theta_covariance=tuple(tuple(row) for row in fit.covariance[0].tolist()) if fit else (),
-        reduced_chi_square=chi_square,
+        reduced_chi_square=misfit.reduced_chi_square,
         points=len(found.points),
-        lack_of_fit=bool(dof) and float(chdtrc(dof, chi_square * dof)) < _SIGNIFICANT,
+        lack_of_fit=misfit.significant,
         status=fit.status[0] if fit else found.reason,
-        alarms=tuple(alarms),
+        alarms=tuple(f"{stage.name}: {alarm}" for alarm in alarms),
     )
 
 
-def _compared(stage: Stage, quantity: Quantity, prediction: Prediction, found: StageFit, bench: Bench) -> Comparison:
+def _outside_by_design(stage: Stage, prediction: Prediction) -> list[str]:
+    """Return what the stage's own parts cannot keep, so that the board is not blamed for its drawing."""
+    return [
+        f"its parts as drawn should give {quantity} {prediction[quantity]:.4g}, outside its own limits "
+        f"{limit.lower:.4g} to {limit.upper:.4g}: look at the design first"
+        for quantity, limit in stage.limits.items()
+        if not limit.lower <= prediction[quantity] <= limit.upper
+    ]
+
+
+def _budget(fit: BandFit | None, quantity: Quantity, bench: Bench) -> Combined | None:
+    if fit is None:
+        return None
+    value, repeatability = _measured(fit, quantity)
+    return combine(_rows(quantity, value, repeatability, bench))
+
+
+def _compared(
+    stage: Stage, quantity: Quantity, prediction: Prediction, fit: BandFit | None, budget: Combined | None, doubt: str
+) -> Comparison:
     limit = stage.limits[quantity]
-    value, repeatability = _measured(found.fit, quantity)
-    budget = combine(_rows(quantity, value, repeatability, bench)) if isfinite(value) else None
+    value, repeatability = _measured(fit, quantity)
     u = budget.u if budget else nan
-    decision = decide(value, 0.0 if budget is None else u, low=limit.lower, high=limit.upper, doubt=found.reason)
+    decision = decide(value, 0.0 if budget is None else u, low=limit.lower, high=limit.upper, doubt=doubt)
     return Comparison(
         quantity=quantity,
         unit=UNITS[quantity],

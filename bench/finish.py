@@ -2,10 +2,11 @@
 
 from dataclasses import dataclass, replace
 from pathlib import Path
-from typing import Any, Literal
+from typing import Any
 
 from bandproof.bench.bench_file import parse_bench
 from bandproof.bench.board_file import parse_board
+from bandproof.bench.errors import Stopped
 from bandproof.bench.evaluate import evaluate, views
 from bandproof.bench.journal import Journal
 from bandproof.bench.result import result_object
@@ -25,11 +26,10 @@ class Outcome:
     stages: tuple[StageResult, ...]
     result: dict[str, Any]
     folder: Path
-    problem: Exception | None
 
 
-def finish(journal: Journal, folder: Path, problem: Exception | None, reason: str) -> Outcome:
-    """Write run file, picture and the journal's last line; a run that was cut short has the reason in words.
+def finish(journal: Journal, folder: Path, problem: Exception | None, words: str) -> Outcome:
+    """Write run file, picture and the journal's last line; a problem that cut the run short is kept in words.
 
     A run file that is already there, from a run killed before its journal's last line, is kept as it is.
 
@@ -38,7 +38,7 @@ def finish(journal: Journal, folder: Path, problem: Exception | None, reason: st
     OSError
         The folder cannot be written; nothing is left under a final name that is not whole.
     """
-    run = run_of(journal, "complete" if problem is None else "cut_short", reason)
+    run = run_of(journal, problem, words)
     path = folder / RUN if problem is None else _free(folder)
     if path.exists():
         run, result = read_run(path), read_result(path)
@@ -49,11 +49,11 @@ def finish(journal: Journal, folder: Path, problem: Exception | None, reason: st
         write_run(path, run, result, raw=journal.volts)
     _draw(run, stages, folder / PICTURE)
     journal.ended(run.ended, path.name, digest_of(path))
-    return Outcome(run, stages, result, folder, problem)
+    return Outcome(run, stages, result, folder)
 
 
-def run_of(journal: Journal, ended: Literal["complete", "cut_short"], reason: str) -> Run:
-    """Return the run a journal tells of."""
+def run_of(journal: Journal, problem: Exception | None, words: str) -> Run:
+    """Return the run a journal tells of, complete or cut short by a problem."""
     head = journal.head
     board, bench = board_and_bench(journal)
     kept = ("run_id", "serial", "attempt", "identities", "version", "started", "operator", "note")
@@ -61,8 +61,9 @@ def run_of(journal: Journal, ended: Literal["complete", "cut_short"], reason: st
         **{name: head[name] for name in kept},
         board=board,
         bench=bench,
-        ended=ended,
-        reason=reason,
+        ended="complete" if problem is None else "cut_short",
+        reason=words,
+        stopped=isinstance(problem, Stopped),
         bench_seconds=round(journal.finished[-1] - head["clock_start"], 6) if journal.finished else 0.0,
         steps=tuple(journal.steps),
         points=tuple(journal.points),

@@ -9,9 +9,10 @@ from bandproof.bench.errors import BenchFault
 from bandproof.bench.quantities import engineering
 from bandproof.bench.types import Bench, Board, Point, Stage
 
-__all__ = ["check_low_level", "check_quiet"]
+__all__ = ["check_low_level", "check_quiet", "level_problem", "strange_response"]
 
 _LEVEL_OFF = 1.5  # a level off by more than this factor is no loading effect (50 Ω into 600 Ω takes 8 %); arbitrary
+_LEVEL_MOVED = 0.15  # of the level: flatness and loading move it less along a band; arbitrary
 _SEEN = 5.0  # a signal below this many residual rms is no signal; arbitrary
 _STRANGE = 2.0  # a response off by more than this factor is told; arbitrary
 
@@ -49,7 +50,25 @@ def check_low_level(board: Board, bench: Bench, stage: Stage, point: Point) -> l
                 "route to this test point and the board's supply"
             )
     _check_input(bench, stage, point)
-    return _strange_response(board, stage, point)
+    return strange_response(board, stage, point)
+
+
+def level_problem(stage: Stage, low_level: Point | None, point: Point) -> str:
+    """Return what is wrong with the level at the input tap against the low-level point, or nothing.
+
+    A generator that somebody switched off, or that protects itself, and a cable knocked off leave a record that fits
+    nothing and says nothing: its level does.
+    """
+    if low_level is None or point.purpose not in ("curve", "closing"):
+        return ""
+    expected = low_level.levels[0] / low_level.amplitude * point.amplitude
+    if abs(point.levels[0] / expected - 1.0) <= _LEVEL_MOVED:
+        return ""
+    return (
+        f"the signal at {stage.tap_in} is {engineering(point.levels[0], 'V')} where {engineering(expected, 'V')} were "
+        f"expected from the low-level point ({engineering(point.frequency, 'Hz')}): is the generator's output still "
+        "on, is a cable off, does somebody else use the bench?"
+    )
 
 
 def _check_input(bench: Bench, stage: Stage, point: Point) -> None:
@@ -75,7 +94,8 @@ def _cause(ratio: float) -> str:
     return "check the generator's dialect (peak, peak to peak or rms), its load assumption and the probe"
 
 
-def _strange_response(board: Board, stage: Stage, point: Point) -> list[str]:
+def strange_response(board: Board, stage: Stage, point: Point) -> list[str]:
+    """Return in words that a low-level point is far from what is predicted, or nothing."""
     expected = predicted_response(board, stage, np.array([point.frequency]))[0]
     ratio = abs(point.response) / abs(expected)
     if 1.0 / _STRANGE <= ratio <= _STRANGE:

@@ -1,16 +1,18 @@
 """The instruments of a bench: opened, identified, made safe on every road out."""
 
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from contextlib import closing, contextmanager
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 
+from bandproof.bench.bench_file import parse_bench
 from bandproof.bench.errors import BenchFault
 from bandproof.bench.types import Bench
 from bandproof.drivers.clock import Clock
 from bandproof.drivers.dialect import Dialect, GeneratorDialect, ScopeDialect, SwitchDialect, load, parse, source
 from bandproof.drivers.errors import InstrumentProblem
 from bandproof.drivers.generator import Generator
+from bandproof.drivers.lifeline import Lifeline
 from bandproof.drivers.link import Link
 from bandproof.drivers.log import ExchangeLog
 from bandproof.drivers.scope import Scope
@@ -22,11 +24,17 @@ __all__ = ["Devices", "load_dialects", "opened", "with_dialect_texts"]
 
 @dataclass(slots=True)
 class Devices:
-    """The opened instruments of a bench."""
+    """The opened instruments of a bench.
+
+    ``declared`` has the addresses as the bench file has them, by role; ``await_lifeline`` comes before the output is
+    switched on.
+    """
 
     generator: Generator
     scope: Scope
     switch: Switch | None
+    declared: dict[str, str] = field(default_factory=dict)
+    await_lifeline: Callable[[], None] = lambda: None
 
     def all(self) -> tuple[Generator | Scope | Switch, ...]:
         """Return the instruments that are there, the generator first."""
@@ -41,16 +49,34 @@ class Devices:
         return "instrument"
 
     def identities(self) -> dict[str, str]:
-        """Return what each instrument says it is, by role."""
-        found = {"generator": self.generator.identify(), "scope": self.scope.identify()}
-        if self.switch is not None:
-            found["switch"] = self.switch.identify()
-        return found
+        """Return what each instrument says it is, by role.
+
+        Raises
+        ------
+        BenchFault
+            An instrument does not answer as its dialect says; nothing was set.
+        InstrumentProblem
+            What the drivers met.
+        """
+        return {self.role_of(instrument.address): self._identified(instrument) for instrument in self.all()}
+
+    def _identified(self, instrument: Generator | Scope | Switch) -> str:
+        """Return what an instrument says it is, after a question only its kind can answer (BenchFault)."""
+        words = instrument.identify()
+        if (problem := instrument.is_understood()) is not None:
+            role = self.role_of(instrument.address)
+            raise BenchFault(
+                f"the instrument at {instrument.address} does not answer as the {role} its dialect describes; it says "
+                f"{words or 'nothing'!r}. Is it another instrument, or is the dialect wrong? ({problem})"
+            ) from problem
+        return words
 
 
 @contextmanager
-def opened(bench: Bench, clock: Clock, log_path: Path | None) -> Iterator[Devices]:
+def opened(bench: Bench, clock: Clock, log_path: Path | None, lifeline: Lifeline | None = None) -> Iterator[Devices]:
     """Yield the bench's instruments; the generator is off when this ends, however it ends, if it can be reached.
+
+    A lifeline is told when the generator was left off.
 
     Raises
     ------
@@ -70,16 +96,25 @@ def opened(bench: Bench, clock: Clock, log_path: Path | None) -> Iterator[Device
             for role, dialect in dialects.items()
         }
         devices = _devices(bench, sessions, dialects)
+        if lifeline is not None:
+            devices.await_lifeline = lifeline.await_ready
         try:
             yield devices
         except BaseException as problem:
             _leave_safe(devices.generator, problem)
+            _tell(lifeline)
             raise
         else:
             _leave_safe(devices.generator, None)
+            _tell(lifeline)
         finally:
             for session in sessions.values():
                 session.link.close()
+
+
+def _tell(lifeline: Lifeline | None) -> None:
+    if lifeline is not None:
+        lifeline.done()
 
 
 def with_dialect_texts(bench: Bench) -> Bench:
@@ -121,6 +156,7 @@ def _devices(bench: Bench, sessions: dict[str, Session], dialects: dict[str, Dia
         Generator(sessions["generator"], generator, ceiling=bench.ceiling),
         Scope(sessions["scope"], scope),
         Switch(sessions["switch"], switch) if isinstance(switch, SwitchDialect) else None,
+        {role: instrument.address for role, instrument in parse_bench(bench.text, bench.title).instruments.items()},
     )
 
 
@@ -136,8 +172,8 @@ def _leave_safe(generator: Generator, after: BaseException | None) -> None:
             generator.reopen()
             generator.be_safe()
         except InstrumentProblem as problem:
-            if not generator.has_driven:
-                return  # nothing of ours is on; what went wrong before is on its way to the user
+            if after is not None and not generator.has_driven:
+                return  # nothing of ours is on, and what went wrong is on its way to the user
             first = f"{after}\n" if after is not None else ""
             raise BenchFault(
                 f"{first}THE GENERATOR MAY STILL BE ON: {generator.address} could not be switched off, "

@@ -2,7 +2,7 @@
 
 import re
 from collections.abc import Callable, Mapping
-from contextlib import closing
+from contextlib import AbstractContextManager, closing, nullcontext
 from dataclasses import dataclass
 from importlib.metadata import version
 from pathlib import Path
@@ -12,14 +12,17 @@ from bandproof.bench.errors import BadInput, BenchFault, BenchProblem
 from bandproof.bench.finish import Outcome, finish
 from bandproof.bench.instruments import Devices, opened, with_dialect_texts
 from bandproof.bench.journal import Journal
+from bandproof.bench.locks import locked
 from bandproof.bench.operator import Operator
 from bandproof.bench.recovery import plainly
 from bandproof.bench.resumption import ResumeRefused, check_again, check_identities
 from bandproof.bench.stop import Stop
 from bandproof.bench.sweep import Sweep
+from bandproof.bench.system import detached
 from bandproof.bench.types import Bench, Board
 from bandproof.drivers.clock import Clock
 from bandproof.drivers.errors import InstrumentProblem
+from bandproof.drivers.lifeline import Lifeline
 
 __all__ = ["Job", "Progress", "new_attempt"]
 
@@ -91,7 +94,11 @@ class Job:
         bench = with_dialect_texts(self.bench)
         problem, words = None, ""
         try:
-            with opened(bench, self.clock, self.folder / LOG) as devices:
+            with (
+                self._lock(),
+                self._lifeline(bench) as lifeline,
+                opened(bench, self.clock, self.folder / LOG, lifeline) as devices,
+            ):
                 identities = devices.identities()
                 if journal is None:
                     journal = self.begin_journal(self.folder, self._head(bench, identities))
@@ -113,6 +120,23 @@ class Job:
             raise _no_room(self.folder, failure) from failure
         with closing(journal):
             return finish(journal, self.folder, problem, words)
+
+    def _lock(self) -> AbstractContextManager[None]:
+        """Return the lock of this bench; a rehearsal's instruments are its own."""
+        if self.rehearsal is not None:
+            return nullcontext()
+        addresses = [instrument.address for instrument in self.bench.instruments.values()]
+        return locked(addresses, who=f"the sweep of serial number {self.serial}")
+
+    def _lifeline(self, bench: Bench) -> Lifeline:
+        """Return the process that switches the generator off should this one be killed."""
+        return Lifeline.start(
+            bench.instruments["generator"].address,
+            dialect_text=bench.dialect_texts["generator"],
+            visa_library=bench.visa_library,
+            clock_path=bench.clock,
+            popen_options=detached(),
+        )
 
     def _sweep(self, devices: Devices, bench: Bench, journal: Journal) -> Sweep:
         sweep = Sweep(

@@ -3,7 +3,7 @@
 from collections.abc import Callable
 from typing import Protocol
 
-from bandproof.bench.errors import OperatorNeeded
+from bandproof.bench.errors import OperatorNeeded, Stopped
 from bandproof.bench.stop import Stop
 
 __all__ = ["Absent", "AtTerminal", "Operator"]
@@ -18,7 +18,9 @@ class Operator(Protocol):
         Raises
         ------
         OperatorNeeded
-            Nobody can, or the person refused.
+            Nobody can.
+        Stopped
+            The person asked to stop.
         """
 
 
@@ -44,4 +46,4 @@ class AtTerminal:
         except EOFError as nobody:
             raise OperatorNeeded(request) from nobody
         if answer.strip().lower().startswith("q"):
-            raise OperatorNeeded(request)
+            raise Stopped("the operator")

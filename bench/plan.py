@@ -32,16 +32,17 @@ class Planner:
     Raises
     ------
     BadInput
-        A stage's circuit has no band near its designed centre, no level is safe for it, or its band is too low for
-        the longest record.
+        A stage's circuit has no band near its designed centre, no level is safe for it, its stages are in series, or
+        a band is too low for the longest record.
     """
 
     def __init__(self, board: Board, bench: Bench) -> None:
+        _refuse_series(board)
         self._board, self._bench = board, bench
         self._predictions = {stage.name: _predicted(board, stage) for stage in board.stages}
         self._levels = {s.name: greatest_level(board, bench, s, self._predictions[s.name]) for s in board.stages}
         self._costs: dict[str, list[float]] = {}
-        self._dwells: dict[tuple[str, float, float | None], float] = {}
+        self._dwells: dict[tuple[str, float, float | None, float], float] = {}
         for stage in board.stages:  # now, so that what cannot be planned is told before anything is driven
             self._seconds(stage)
 
@@ -61,7 +62,7 @@ class Planner:
     def _seconds(self, stage: Stage) -> list[float]:
         """Return what each record of a stage's curve costs, as first planned."""
         if stage.name not in self._costs:
-            curve = self._curve(stage, self._predictions[stage.name], 1.0, 1.0, 0)
+            curve = self._curve(stage, self._predictions[stage.name], 1.0, 1.0, 0, self._look_at(stage), LOW_LEVEL)
             self._costs[stage.name] = [step.dwell + step.duration + _OVERHEAD for step in curve]
         return self._costs[stage.name]
 
@@ -72,7 +73,7 @@ class Planner:
         scale = _scale(self._board, stage, had)
         batches = sum(point.purpose == "closing" for point in had)
         if batches == 0:
-            return self._curve(stage, prediction, scale, 1.0, first)
+            return self._curve(stage, prediction, scale, 1.0, first, self._look_at(stage), LOW_LEVEL)
         if batches >= _MOST_BATCHES:
             return ()
         return self._again(stage, had, scale, batches, first)
@@ -90,29 +91,44 @@ class Planner:
         moved = fitted is not None and abs(log(found.centre / looked_at)) > _MOVED
         if not (moved or overloaded) or not 0.1 < found.centre / stage.limits["centre"].designed < 10.0:
             return ()
-        return self._curve(stage, found, scale, 2.5**batches if overloaded else 1.0, first)
+        return self._curve(stage, found, scale, 2.5**batches if overloaded else 1.0, first, last[-1].frequency, 1.0)
 
     def _first_look(self, stage: Stage, prediction: Prediction, first: int) -> tuple[Step, ...]:
         level, low = self._levels[stage.name], LOW_LEVEL * self._levels[stage.name]
         ranges = (HEADROOM * level, HEADROOM * level * prediction.gain)
         quiet_time = max(2.0 / self._bench.mains, 3.0 / prediction.centre)
         quiet = Step(first, stage.name, "no-signal", (), 0.0, quiet_time, _QUIET_SAMPLES, ranges)
-        frequency = float(self._clear_of_mains(np.array([prediction.centre]))[0])
+        frequency = self._look_at(stage)
         # The sweep's own ranges: a level ten times too high (a wrong probe factor) must be seen as what it is.
         return quiet, self._step(first + 1, stage, "low-level", frequency, None, low, ranges)
 
-    def _curve(self, stage: Stage, at: Prediction, scale: float, widen: float, first: int) -> tuple[Step, ...]:
-        """Return the points round a band and the closing point, which repeats the first."""
-        level = self._levels[stage.name]
-        ranges = (HEADROOM * level, HEADROOM * level * at.gain * scale * widen)
+    def _look_at(self, stage: Stage) -> float:
+        """Return the frequency of a stage's low-level point: the predicted centre, clear of mains."""
+        return float(self._clear_of_mains(np.array([self._predictions[stage.name].centre]))[0])
+
+    def _curve(
+        self,
+        stage: Stage,
+        at: Prediction,
+        scale: float,
+        widen: float,
+        first: int,
+        before: float,
+        before_level: float,
+    ) -> tuple[Step, ...]:
+        """Return the points round a band and the closing point, which repeats the first.
+
+        Until then the generator is at the frequency and the part of the level given as ``before``.
+        """
+        level, swing = self._levels[stage.name], self._board.op_amp.swing
+        # No op-amp gives more than its swing, whatever a fit or a first look says.
+        ranges = (HEADROOM * level * widen, HEADROOM * min(swing, level * at.gain * scale * widen))
         frequencies = self._clear_of_mains(band_frequencies([at.centre], [at.q])[0])
         sequence = [*map(float, frequencies), float(frequencies[0])]
-        previous = [None, *sequence[:-1]]
+        previous = [(before, before_level), *((frequency, 1.0) for frequency in sequence[:-1])]
         return tuple(
-            self._step(
-                first + i, stage, "curve" if i < len(frequencies) else "closing", frequency, before, level, ranges
-            )
-            for i, (frequency, before) in enumerate(zip(sequence, previous, strict=True))
+            self._step(first + i, stage, "curve" if i < len(frequencies) else "closing", frequency, was, level, ranges)
+            for i, (frequency, was) in enumerate(zip(sequence, previous, strict=True))
         )
 
     def _clear_of_mains(self, frequencies: FloatArray) -> FloatArray:
@@ -124,7 +140,7 @@ class Planner:
         stage: Stage,
         purpose: Purpose,
         frequency: float,
-        previous: float | None,
+        previous: tuple[float, float] | None,
         level: float,
         ranges: tuple[float, float],
     ) -> Step:
@@ -136,12 +152,19 @@ class Planner:
         tones = (Tone(frequency, level),)
         return Step(index, stage.name, purpose, tones, dwell, record.duration, record.points, ranges)
 
-    def _dwell(self, stage: Stage, frequency: float, previous: float | None, duration: float) -> float:
-        key = (stage.name, frequency, previous)
+    def _dwell(self, stage: Stage, frequency: float, previous: tuple[float, float] | None, duration: float) -> float:
+        """Return the dwell after a change from a frequency at a part of the level, or from no signal."""
+        before, part = previous or (None, 1.0)
+        key = (stage.name, frequency, before, part)
         if key not in self._dwells:
             network = stage_network(self._board, stage)
             self._dwells[key] = dwell_after_step(
-                network, taps(self._board, stage), frequency, duration=duration, previous=previous
+                network,
+                taps(self._board, stage),
+                frequency,
+                duration=duration,
+                previous=before,
+                previous_level=part,
             )
         return self._dwells[key]
 
@@ -190,6 +213,17 @@ def _greatest(board: Board, stage: Stage, frequency: FloatArray, weight: FloatAr
     nominal, up, down = (weight * volts[:, 1] / volts[:, 0]).max(axis=1).reshape(3, -1)
     effects = np.maximum(np.maximum(up, down) / nominal, 1.0)
     return float(nominal[0] * effects.prod())
+
+
+def _refuse_series(board: Board) -> None:
+    """Levels are planned at the board's input: stages behind one another are not planned yet."""
+    first = board.stages[0]
+    for stage in board.stages:
+        if stage.tap_in != first.tap_in:
+            raise BadInput(
+                f"stage {stage.name!r} is measured from {stage.tap_in!r}, stage {first.name!r} from {first.tap_in!r}: "
+                "stages in series are not planned yet, measure all from the board's input"
+            )
 
 
 def _predicted(board: Board, stage: Stage) -> Prediction:

@@ -195,7 +195,7 @@ def with_uncertainty(value: float, expanded: float, unit: str) -> str:
     """
     if not (math.isfinite(value) and math.isfinite(expanded) and expanded > 0.0):
         return f"{engineering(value, unit)} ± unknown" if math.isfinite(value) else "not found"
-    power = _power(value)
+    power = _power(value) if unit else 0
     scale = 10.0**power
     digits = decimals(expanded / scale)
     places = max(0, digits)

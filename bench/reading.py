@@ -63,8 +63,9 @@ def parse_toml(text: str, path: str) -> dict[str, Any]:
 class Table:
     """One table of a file; hands out checked values and knows which keys were asked for."""
 
-    def __init__(self, content: dict[str, Any], where: str, mistakes: Mistakes) -> None:
+    def __init__(self, content: dict[str, Any], where: str, mistakes: Mistakes, *, absent: bool = False) -> None:
         self._content, self._where, self._mistakes = content, where, mistakes
+        self._absent = absent  # the table itself was missed already: its keys need no word of their own
         self._known: list[str] = []
 
     @property
@@ -83,7 +84,7 @@ class Table:
     def _take(self, key: str, accepted: str, default: T | None) -> Any:
         self._known.append(key)
         if key not in self._content:
-            if default is None:
+            if default is None and not self._absent:
                 self.mistake(key, f"missing; expected {accepted}")
             return None
         return self._content[key]
@@ -144,7 +145,8 @@ class Table:
         found = self._take(key, "a table", {} if optional else None)
         if found is not None and not isinstance(found, dict):
             self.mistake(key, f"found {shown(found)}; expected a table")
-        return Table(found if isinstance(found, dict) else {}, self.path(key), self._mistakes)
+        content, absent = (found, False) if isinstance(found, dict) else ({}, not optional)
+        return Table(content, self.path(key), self._mistakes, absent=absent)
 
     def peek(self, key: str) -> Any:
         """Return a value as it stands, or None, without counting as asked for."""

@@ -69,8 +69,12 @@ class Recovery:
 
 
 def plainly(problem: BaseException, devices: Devices) -> str:
-    """Return an error's words with what the instruments do instead of where they are: the same from run to run."""
+    """Return an error's words, each address with what it is for and as the bench file has it.
+
+    The ports of a rehearsal differ from run to run; what is kept of it must not.
+    """
     text = str(problem)
     for instrument in devices.all():
-        text = text.replace(instrument.address, f"the {devices.role_of(instrument.address)}")
+        role = devices.role_of(instrument.address)
+        text = text.replace(instrument.address, f"the {role} at {devices.declared.get(role, instrument.address)}")
     return text

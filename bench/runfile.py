@@ -19,6 +19,7 @@ from bandproof.bench.bench_file import parse_bench
 from bandproof.bench.board_file import parse_board
 from bandproof.bench.errors import RunFileDamaged
 from bandproof.bench.plain import step_from, to_json
+from bandproof.bench.system import sync_folder
 from bandproof.bench.types import Point, Run
 
 if TYPE_CHECKING:
@@ -81,25 +82,21 @@ def write_run(
     image = _image(run, result, raw)
     digest = hashlib.sha256(image).hexdigest()
     part = path.with_name(path.name + ".part")
-    with part.open("wb") as file:
-        file.write(_user_block(digest) + image)
-        file.flush()
-        os.fsync(file.fileno())
-    part.rename(path)
-    _sync_folder(path.parent)
+    try:
+        with part.open("wb") as file:
+            file.write(_user_block(digest) + image)
+            file.flush()
+            os.fsync(file.fileno())
+        part.rename(path)
+    except OSError:
+        part.unlink(missing_ok=True)
+        raise
+    sync_folder(path.parent)
     return digest
 
 
 def _user_block(digest: str) -> bytes:
     return f"{SCHEMA} sha256={digest}\n".encode("ascii").ljust(_USER_BLOCK, b"\0")
-
-
-def _sync_folder(folder: Path) -> None:
-    handle = os.open(folder, os.O_RDONLY)
-    try:
-        os.fsync(handle)
-    finally:
-        os.close(handle)
 
 
 def _image(run: Run, result: Mapping[str, Any], raw: Callable[[int], FloatArray | None]) -> bytes:
@@ -141,6 +138,7 @@ _ABOUT = [
     "started",
     "ended",
     "reason",
+    "stopped",
     "bench_seconds",
     "operator",
     "note",
@@ -226,7 +224,10 @@ def _what_is_wrong(head: bytes, size: int) -> str:
 def read_result(path: Path) -> dict[str, Any]:
     """Return the result object stored in a run file (RunFileDamaged as digest_of)."""
     with _opened(path) as file:
-        return cast(dict[str, Any], json.loads(_text(file, "result")))
+        try:
+            return cast(dict[str, Any], json.loads(_text(file, "result")))
+        except (KeyError, ValueError, TypeError) as problem:
+            raise RunFileDamaged(str(path), f"lacks what a run file has ({problem})") from problem
 
 
 def read_run(path: Path) -> Run:

@@ -1,4 +1,4 @@
-"""Stopping on request: Ctrl-C and SIGTERM set a flag that the sweep reads between two exchanges with an instrument."""
+"""Stopping on request: Ctrl-C, SIGTERM and a closed terminal set a flag, read between two exchanges."""
 
 import signal
 from collections.abc import Iterator
@@ -6,6 +6,7 @@ from contextlib import contextmanager
 from types import FrameType
 
 from bandproof.bench.errors import Stopped
+from bandproof.bench.system import STOP_SIGNALS
 
 __all__ = ["Stop", "watching_signals"]
 
@@ -41,12 +42,12 @@ class Stop:
 
 @contextmanager
 def watching_signals(stop: Stop) -> Iterator[None]:
-    """While inside, Ctrl-C and SIGTERM request a stop instead of ending the process where it stands."""
+    """While inside, the signals that end a process request a stop instead of ending it where it stands."""
 
     def on_signal(number: int, _frame: FrameType | None) -> None:
         stop.request("Ctrl-C" if number == signal.SIGINT else signal.Signals(number).name)
 
-    before = {number: signal.signal(number, on_signal) for number in (signal.SIGINT, signal.SIGTERM)}
+    before = {number: signal.signal(number, on_signal) for number in STOP_SIGNALS}
     try:
         yield
     finally:

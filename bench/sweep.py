@@ -12,7 +12,7 @@ from math import inf
 
 from bandproof.analysis.types import FloatArray
 from bandproof.bench.errors import BenchFault
-from bandproof.bench.first_look import check_low_level, check_quiet
+from bandproof.bench.first_look import check_low_level, check_quiet, level_problem, strange_response
 from bandproof.bench.instruments import Devices
 from bandproof.bench.journal import Journal
 from bandproof.bench.operator import Operator
@@ -116,9 +116,25 @@ class Sweep:
         self._watch_clock(step)
         began = self.clock.now()
         point, volts = self._recovered(step)
+        point, volts = self._second_look(step, point, volts)
         self._last_seen = self.clock.now(), self.clock.utc()
         self.journal.measured(point, began=began, finished=self.clock.now(), volts=volts if self.keep_raw else None)
         self._look(step, self.board.stage(step.stage), point)
+
+    def _second_look(self, step: Step, point: Point, volts: FloatArray) -> tuple[Point, FloatArray]:
+        """Ask whoever put a probe by hand to look again when the first signal says it is on another point."""
+        stage = self.board.stage(step.stage)
+        by_hand = any(self.bench.wires[tap].by_hand for tap in (stage.tap_in, stage.tap_out))
+        if step.purpose != "low-level" or not by_hand or not strange_response(self.board, stage, point):
+            return point, volts
+        self.devices.generator.be_safe()
+        ratio = abs(point.response)
+        self.operator.confirm(
+            f"The generator is off. The gain between {stage.tap_in!r} and {stage.tap_out!r} reads {ratio:.3g}, far "
+            "from what was designed. Look whether both probes are on these points, and move them if not"
+        )
+        self.journal.told(self.elapsed(), "probes looked at again", stage=stage.name, read=ratio)
+        return self._recovered(step)
 
     def _watch_clock(self, step: Step) -> None:
         """Tell of time that passed while nobody measured, and of a computer's clock that was set."""
@@ -168,11 +184,18 @@ class Sweep:
         for attempt in range(first, first + self.repeats + 1):
             taken = self._taken(step, stage, attempt)
             point = point_of(step, taken, self.bench.mains)
-            if "unsettled" not in point.flags:
-                break
-        else:
-            self.journal.alarm(f"{step.stage}: the record at {step.frequency:.6g} Hz had not settled")
+            wrong_level = level_problem(stage, self._low_level(step), point)
+            if "unsettled" not in point.flags and not wrong_level:
+                return point, taken.volts
+        if wrong_level:
+            raise BenchFault(wrong_level)
+        self.journal.alarm(f"{step.stage}: the record at {step.frequency:.6g} Hz had not settled")
         return point, taken.volts
+
+    def _low_level(self, step: Step) -> Point | None:
+        """Return the low-level point of a step's stage, if it was measured."""
+        points = (p for p in self.journal.points if p.stage == step.stage and p.purpose == "low-level")
+        return next(points, None)
 
     def _taken(self, step: Step, stage: Stage, attempt: int) -> Taken:
         self.stop.check()
@@ -217,6 +240,7 @@ class Sweep:
             )
         amplitude = generator.set_amplitude(step.amplitude)
         frequency = generator.set_frequency(step.frequency)
+        self.devices.await_lifeline()
         generator.output(True)
         return frequency, amplitude
 

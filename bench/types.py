@@ -132,7 +132,8 @@ class Wire:
 class Bench:
     """A bench: instruments, wiring, ceilings and what is declared about its accuracy.
 
-    ``channel_gain`` and ``generator_frequency`` are half-widths of rectangular distributions (relative).
+    ``channel_gain`` and ``generator_frequency`` are half-widths of rectangular distributions (relative),
+    ``channel_skew`` that of each channel's delay in s.
     """
 
     title: str
@@ -142,6 +143,7 @@ class Bench:
     wires: Mapping[str, Wire]
     probe_factors: Mapping[int, float]
     channel_gain: float
+    channel_skew: float
     generator_frequency: float
     visa_library: str
     clock: str | None
@@ -267,7 +269,7 @@ class StageResult:
 
 @dataclass(frozen=True, slots=True)
 class Run:
-    """A whole run: who, what, with what, every point, how it ended."""
+    """A whole run: who, what, with what, every point, how it ended (``stopped``: cut short because somebody asked)."""
 
     run_id: str
     serial: str
@@ -279,6 +281,7 @@ class Run:
     started: str
     ended: Literal["complete", "cut_short"]
     reason: str
+    stopped: bool
     bench_seconds: float
     operator: str
     note: str

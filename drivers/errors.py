@@ -9,14 +9,16 @@
       ReplyError        an answer came and was not understood
       InstrumentError   the instrument reported an error
       SettingRefused    the instrument took another value than it was given
+      BeyondLimits      it was asked for what its dialect says it cannot; nothing was sent
 
 After `LinkBroken`, `NoAnswer` and `ReplyError` the link is dirty: it refuses everything until it is reopened, because a
-late answer would be taken for the next one. After `InstrumentError` and `SettingRefused` it is still in step.
+late answer would be taken for the next one. After the others it is still in step. `BeyondLimits` is a `ValueError` too.
 """
 
 from __future__ import annotations
 
 __all__ = [
+    "BeyondLimits",
     "InstrumentError",
     "InstrumentProblem",
     "LinkBroken",
@@ -131,6 +133,19 @@ class SettingRefused(InstrumentProblem):
             f"{self.address} was given {self.asked} by {_short(self.command)} and reads back {self.found} "
             f"(accepted: {self.accepted}): ask for a value the instrument can set, or correct the dialect"
             f"{self._where()}"
+        )
+
+
+class BeyondLimits(InstrumentProblem, ValueError):
+    """The dialect says that the instrument cannot be set so; nothing was sent, the link is in step."""
+
+    def __init__(self, address: str, command: str, rule: str, line: int = 0) -> None:
+        super().__init__(address, command, rule, line)
+        self.address, self.command, self.rule, self.line = address, command, rule, line
+
+    def __str__(self) -> str:
+        return (
+            f"{self.address}: {self.rule}: nothing was sent; ask for what it can, or correct the dialect{self._where()}"
         )
 
 

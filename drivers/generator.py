@@ -68,7 +68,8 @@ class Generator(Instrument):
         slot = self._dialect.load
         if not slot.set:
             if load != slot.fixed:
-                raise ValueError(f"load must be {slot.fixed:g} ohm, the dialect has no command for it, got {load!r}")
+                rule = f"load must be {slot.fixed:g} ohm, the dialect has no command for it, got {load!r}"
+                raise self._beyond("load", rule)
             return load
         self._remember("load", "", partial(self.set_load, load))
         if math.isinf(load) and slot.high:
@@ -135,12 +136,16 @@ class Generator(Instrument):
             self._journal["output", ""] = output
         super().restore()
 
+    def _telling_query(self) -> str:
+        return self._dialect.output.query
+
     def _command_unread(self, text: str) -> tuple[ErrorEntry, ...]:
         self.session.command(text)
         return self.check_errors()
 
     def _check_ceiling(self, amplitude: float, offset: float) -> None:
         if not abs(offset) + abs(amplitude) <= self._ceiling:
-            raise ValueError(
+            rule = (
                 f"|offset| + peak amplitude must not exceed {self._ceiling:g} V, got {abs(offset) + abs(amplitude):g} V"
             )
+            raise self._beyond("amplitude", rule)

@@ -8,7 +8,7 @@ from collections.abc import Callable
 from typing import Any, TypeVar
 
 from bandproof.drivers.dialect import Choice, Identity, Number, Toggle
-from bandproof.drivers.errors import SettingRefused
+from bandproof.drivers.errors import BeyondLimits, InstrumentProblem, SettingRefused
 from bandproof.drivers.scpi import ErrorEntry, parse_number, split_fields
 from bandproof.drivers.session import Session, as_text
 
@@ -42,7 +42,7 @@ class Instrument:
         return self.session.address
 
     def identify(self) -> str:
-        """Return what the instrument says it is, after comparing it with the dialect's pattern.
+        """Return what the instrument says it is, after comparing it with the dialect's pattern; "" if it cannot say.
 
         Raises
         ------
@@ -51,7 +51,28 @@ class Instrument:
         LinkClosed, LinkBroken, NoAnswer
             See `Link.transaction`.
         """
+        if not self._identity.query:
+            return ""
         return self.session.ask(self._identity.query, self._checked_identity)
+
+    def is_understood(self) -> InstrumentProblem | None:
+        """Ask one query that only this kind of instrument answers; return what went wrong, or None.
+
+        A wrong instrument refuses it; the link may be dirty afterwards. Nothing is set.
+        """
+        query = self._telling_query()
+        if not query:
+            return None
+        try:
+            self.session.ask(query, as_text)
+            self.check_errors()
+        except InstrumentProblem as problem:
+            return problem
+        return None
+
+    def _telling_query(self) -> str:
+        """Return a query whose answer tells the kind of instrument, or nothing."""
+        return ""
 
     def reset(self) -> None:
         """Bring the instrument to its start settings and forget old errors and all remembered settings.
@@ -126,7 +147,9 @@ class Instrument:
 
     def _set_number(self, slot: str, number: Number, value: float, channel: str = "") -> float:
         """Set a number in SI and return the value read back; the instrument's own errors come first."""
-        _check_limits(slot, number, value)
+        low, high = number.limits
+        if not low <= value <= high:
+            raise self._beyond(slot, f"{slot} must be from {low:g} to {high:g} by the dialect, got {value!r}")
         text = number.set.format(value=_spelt(number, value), channel=channel)
         return self._once(slot + channel, text, lambda: self._set_and_read(number, value, text, channel))
 
@@ -151,7 +174,7 @@ class Instrument:
 
     def _set_choice(self, slot: str, choice: Choice, word: str, channel: str = "") -> None:
         if word not in choice.words:
-            raise ValueError(f"{slot} must be one of {', '.join(choice.words) or 'nothing'}, got {word!r}")
+            raise self._beyond(slot, f"{slot} must be one of {', '.join(choice.words) or 'nothing'}, got {word!r}")
         theirs = choice.words[word]
         text, query = choice.set.format(value=theirs, channel=channel), choice.query.format(channel=channel)
         self._once(slot + channel, text, lambda: self._command_and_compare(text, query, theirs))
@@ -171,17 +194,14 @@ class Instrument:
         if found.strip("\"'").upper() != expected.upper():
             raise SettingRefused(self.address, text, expected, found, expected, self.session.setting_line)
 
+    def _beyond(self, slot: str, rule: str) -> BeyondLimits:
+        return BeyondLimits(self.address, slot, rule)
+
     def _checked_identity(self, line: bytes) -> str:
         text = as_text(line)
         if not re.search(self._identity.pattern, text):
             raise ValueError(f"an identity that fits {self._identity.pattern!r}")
         return text
-
-
-def _check_limits(slot: str, number: Number, value: float) -> None:
-    low, high = number.limits
-    if not low <= value <= high:
-        raise ValueError(f"{slot} must be from {low:g} to {high:g} by the dialect, got {value!r}")
 
 
 def _spelt(number: Number, value: float) -> str:

@@ -174,6 +174,9 @@ class Scope(Instrument):
         abort = self._dialect.acquisition.abort
         return ((abort,) if abort else ()) + super()._recovery()
 
+    def _telling_query(self) -> str:
+        return self._dialect.interval.query.format(channel=self._dialect.channels[0])
+
     def _settings(self) -> tuple[RecordSetting, list[tuple[int, ChannelSetting]]]:
         if self._record is None or set(self._channels) != {1, 2}:
             raise ValueError("set_channel(1), set_channel(2) and set_record must come before acquire")
@@ -188,7 +191,7 @@ class Scope(Instrument):
         if self._dialect.coupling.set:
             self._set_choice("coupling", self._dialect.coupling, coupling, name)
         elif coupling not in (self._dialect.coupling.words or {"DC": ""}):
-            raise ValueError(f"coupling must be what the instrument has without a command, got {coupling!r}")
+            raise self._beyond("coupling", f"coupling must be what it has without a command, got {coupling!r}")
 
     def _set_bandwidth(self, name: str, limited: bool) -> bool:
         if not self._dialect.bandwidth_limit.on:
@@ -207,7 +210,7 @@ class Scope(Instrument):
         if self._dialect.offset.set:
             return self._set_number("offset", self._dialect.offset, offset, name)
         if offset:
-            raise ValueError(f"offset must be 0, the dialect has no command for it, got {offset!r}")
+            raise self._beyond("offset", f"offset must be 0, the dialect has no command for it, got {offset!r}")
         return 0.0
 
     def _set_and_read_record(self, duration: float, points: int) -> RecordSetting:

@@ -1,1 +1,1 @@
-"""Placeholder."""
+"""The commands, one module each; table.py lists them, console.py runs them."""

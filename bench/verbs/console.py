@@ -12,6 +12,7 @@ from bandproof.bench.errors import BadInput, BenchFault, Stopped
 from bandproof.bench.types import Verdict
 from bandproof.bench.verbs.table import group
 from bandproof.drivers.errors import InstrumentProblem
+from bandproof.drivers.schema import DialectMistakes
 
 __all__ = ["EXIT_CODES", "VERDICT_CODES", "main", "run"]
 
@@ -22,6 +23,7 @@ VERDICT_CODES: dict[Verdict | None, int] = {"pass": DONE, "fail": BOARD_FAILS, "
 
 EXIT_CODES: tuple[tuple[type[BaseException], int], ...] = (  # the first that fits
     (BadInput, BAD_INPUT),
+    (DialectMistakes, BAD_INPUT),
     (BenchFault, BENCH_FAULT),
     (InstrumentProblem, BENCH_FAULT),
     (OSError, BENCH_FAULT),  # a folder that cannot be written, a full disk

@@ -22,12 +22,14 @@ def command(bench_path: Path | None, find: bool) -> int:
         return _find()
     from bandproof.bench.bench_file import find_bench, read_bench
     from bandproof.bench.instruments import opened
+    from bandproof.bench.locks import locked
     from bandproof.bench.verbs.run import clock_of
 
     path, why = find_bench(str(bench_path) if bench_path else None)
     bench = read_bench(path)
     click.echo(f"bench: {path} ({why})")
-    with opened(bench, clock_of(bench), None) as devices:
+    addresses = [instrument.address for instrument in bench.instruments.values()]
+    with locked(addresses, who="bandproof bench"), opened(bench, clock_of(bench), None) as devices:
         for role, identity in devices.identities().items():
             click.echo(f"  {role:<10}{bench.instruments[role].address}  {bench.instruments[role].dialect}")
             click.echo(f"  {'':<10}{identity}")

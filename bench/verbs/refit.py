@@ -24,7 +24,7 @@ def command(run_paths: tuple[Path, ...], as_json: bool) -> int:
     from bandproof.bench.refits import keep_refit
     from bandproof.bench.result import result_object
     from bandproof.bench.runfile import read_run
-    from bandproof.bench.verbs.run import show, wall
+    from bandproof.bench.verbs.run import show, wall, worst_code
 
     if as_json and len(run_paths) > 1:
         raise BadInput("--json prints one object: name one RUN")
@@ -35,7 +35,7 @@ def command(run_paths: tuple[Path, ...], as_json: bool) -> int:
         stages = evaluate(run)
         result = result_object(run, stages, {"run": path.name, "picture": None, "report": None})
         refit = keep_refit(path, result)
-        outcome = Outcome(run, stages, result, path.parent, None)
+        outcome = Outcome(run, stages, result, path.parent)
         codes.append(show(outcome, wall() - begin, as_json))
         click.echo(f"  refit    {refit}", err=as_json)
-    return max(codes)
+    return worst_code(codes)

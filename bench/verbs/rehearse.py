@@ -216,8 +216,7 @@ def _write_truth(path: Path, board: Board, drawn: Drawn, world: "World") -> None
 
 
 def _serve(rehearsal: Rehearsal, board: Board, bench: Bench, folder: Path) -> int:
-    import signal
-
+    from bandproof.bench.system import wait_for_stop
     from bandproof.simulated_instruments.bench import start
 
     folder.mkdir(parents=True, exist_ok=True)
@@ -231,8 +230,6 @@ def _serve(rehearsal: Rehearsal, board: Board, bench: Bench, folder: Path) -> in
         for role, instrument in served.instruments.items():
             click.echo(f"{role:<10}{instrument.address}")
         click.echo(f"bench file: {path}\nIt answers until Ctrl-C. Try, in another terminal:  bandproof bench {path}")
-        try:
-            signal.pause()
-        except KeyboardInterrupt:
-            click.echo("")
+        wait_for_stop()
+        click.echo("")
     return 0

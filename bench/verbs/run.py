@@ -4,6 +4,7 @@ import json
 import secrets
 import sys
 import textwrap
+from collections.abc import Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -70,8 +71,8 @@ def show(outcome: "Outcome", wall_seconds: float, as_json: bool) -> int:
     click.echo("")
     for alarm in result["alarms"]:
         click.echo(_wrapped(f"note: {alarm}"))
-    if outcome.problem is not None:
-        click.echo(_wrapped(f"CUT SHORT: {outcome.problem}"))
+    if run.ended == "cut_short":
+        click.echo(_wrapped(f"CUT SHORT: {run.reason}"))
         click.echo(f"No verdict. What was measured is kept; to go on:  bandproof resume {outcome.folder}")
     else:
         click.echo(f"Board: {str(result['verdict']).upper()}   {_counts(outcome)}")
@@ -95,12 +96,18 @@ def _counts(outcome: "Outcome") -> str:
 
 def exit_code(outcome: "Outcome") -> int:
     """Return the exit code of an outcome: by verdict, or 3 and 5 for a run that was cut short."""
-    from bandproof.bench.errors import Stopped
     from bandproof.bench.verbs.console import BENCH_FAULT, INTERRUPTED, VERDICT_CODES
 
-    if outcome.problem is not None:
-        return INTERRUPTED if isinstance(outcome.problem, Stopped) else BENCH_FAULT
+    if outcome.run.ended == "cut_short":
+        return INTERRUPTED if outcome.run.stopped else BENCH_FAULT
     return VERDICT_CODES[outcome.result["verdict"]]
+
+
+def worst_code(codes: Sequence[int]) -> int:
+    """Return the exit code of several outcomes: bench fault, interrupted, fails, undecided, passes."""
+    from bandproof.bench.verbs.console import BENCH_FAULT, BOARD_FAILS, DONE, INTERRUPTED, UNDECIDED
+
+    return next(code for code in (BENCH_FAULT, INTERRUPTED, BOARD_FAILS, UNDECIDED, DONE) if code in codes)
 
 
 @click.command("sweep")

@@ -73,5 +73,8 @@ def group() -> None:
     \b
     First try, nothing connected:   bandproof rehearse
     Your own board:                 bandproof begin my-board
-    Exit codes: 0 pass or done, 1 board fails, 2 bad input or usage, 3 bench fault, 4 undecided, 5 interrupted
+
+    \b
+    Exit codes: 0 pass or done, 1 board fails, 2 bad input or usage,
+    3 bench fault, 4 undecided, 5 interrupted (3 and 5 can be resumed)
     """

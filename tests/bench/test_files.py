@@ -11,6 +11,7 @@ from bandproof.bench.board_file import parse_board, parse_defect, read_board
 from bandproof.bench.errors import FileMistakes
 from bandproof.bench.rehearsal import DEMO_BENCH, DEMO_BOARD, demo_board, demo_text, rehearsal_bench
 from bandproof.bench.verbs.console import BAD_INPUT, run
+from bandproof.drivers.dialect import source
 
 BOARD, BENCH = demo_text(DEMO_BOARD), demo_text(DEMO_BENCH)
 
@@ -181,6 +182,7 @@ def test_the_demo_board_is_wired_by_its_bench():
 def test_a_dialect_path_is_taken_from_the_bench_files_folder(tmp_path):
     path = tmp_path / "a.bench.toml"
     path.write_text(changed(BENCH, ('dialect = "scpi99-generator"', 'dialect = "mine.dialect.toml"')))
+    (tmp_path / "mine.dialect.toml").write_text(source("scpi99-generator"))
     assert read_bench(path).instruments["generator"].dialect == str(tmp_path / "mine.dialect.toml")
     assert read_bench(path).instruments["scope"].dialect == "scpi99-digitizer"
 

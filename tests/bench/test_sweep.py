@@ -19,7 +19,6 @@ from bandproof.bench.sweep import Sweep
 from bandproof.bench.types import Instrument, Wire
 from bandproof.bench.verbs.rehearse import world_of
 from bandproof.drivers.clock import VirtualClock, create_clock_file
-from bandproof.drivers.dialect import source
 from bandproof.drivers.errors import InstrumentProblem
 from bandproof.simulated_instruments.bench import start
 from bandproof.simulated_instruments.faults import Fault
@@ -50,7 +49,7 @@ def told(path):
         if state := re.fullmatch(r"OUTPut:STATe (ON|OFF)", text):
             on = state[1] == "ON"
             confirmed = False
-        if level := re.fullmatch(r"VOLTage:AMPLitude ([\d.e+-]+)", text):
+        if level := re.fullmatch(r"SOURce:VOLTage:AMPLitude ([\d.e+-]+)", text):
             amplitude = float(level[1])
         if text == "*RST":
             on, confirmed = False, True
@@ -62,20 +61,7 @@ def outputs(messages):
 
 
 def levels(messages):
-    return [float(m.text.split()[-1]) for m in messages if m.text.startswith("VOLTage:AMPLitude ")]
-
-
-@pytest.fixture(scope="module")
-def terse(tmp_path_factory):
-    """Return a change of a bench: the shipped dialect with short headers, as the log keeps 40 bytes of a message."""
-    path = tmp_path_factory.mktemp("dialect") / "terse.toml"
-    path.write_text(source("scpi99-generator").replace("SOURce:VOLTage:LEVel:IMMediate:", "VOLTage:"))
-
-    def change(bench):
-        generator = replace(bench.instruments["generator"], dialect=str(path))
-        return replace(bench, instruments={**bench.instruments, "generator": generator})
-
-    return change
+    return [float(m.text.split()[-1]) for m in messages if m.text.startswith("SOURce:VOLTage:AMPLitude ")]
 
 
 @pytest.fixture(scope="module")
@@ -85,9 +71,9 @@ def two_bands():
 
 
 @pytest.fixture(scope="module")
-def healthy(swept, two_bands, terse, tmp_path_factory):
+def healthy(swept, two_bands, tmp_path_factory):
     path = tmp_path_factory.mktemp("healthy") / "exchange.log"
-    board = swept(1, board=two_bands, rewire=lambda bench: replace(terse(bench), ceiling=CEILING), log=path)
+    board = swept(1, board=two_bands, rewire=lambda bench: replace(bench, ceiling=CEILING), log=path)
     return board, told(path)
 
 
@@ -142,7 +128,7 @@ def test_no_level_is_above_the_ceiling_and_the_sweep_uses_it(healthy):
     assert {float(text.split()[-1]) for text in offsets} <= {0.0}
 
 
-def test_a_step_above_the_ceiling_is_refused_before_it_is_set(swept, one_band, terse, tmp_path):
+def test_a_step_above_the_ceiling_is_refused_before_it_is_set(swept, one_band, tmp_path):
     class Greedy:
         """A plan that asks for more than the bench allows."""
 
@@ -158,7 +144,7 @@ def test_a_step_above_the_ceiling_is_refused_before_it_is_set(swept, one_band, t
 
     path = tmp_path / "exchange.log"
     greedy = Greedy(rehearsal_bench(one_band))
-    found = swept(1, board=one_band, log=path, rewire=terse, planner=greedy, raises=BenchFault)
+    found = swept(1, board=one_band, log=path, planner=greedy, raises=BenchFault)
     assert re.search(r"2\.5 V, above the bench's ceiling 2 V", str(found.problem))
     assert not levels(told(path))
     assert outputs(told(path))[-1] == "OUTPut:STATe OFF"

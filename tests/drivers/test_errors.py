@@ -18,6 +18,7 @@ ONE_OF_EACH = [
     errors.ReplyError(A, "FREQ?", "a decimal number", 2.0, 200, b"\xff" * 200, 3),
     errors.InstrumentError(A, "FREQ 1E9", -222, "Data out of range", 3),
     errors.SettingRefused(A, "FREQ 1E9", "1e+09", "1e+07", "0.999999 to 1.000001 times that", 3),
+    errors.BeyondLimits(A, "FREQ", "FREQ must be from 1 to 5000 by the dialect, got 6300.0", 3),
 ]
 
 

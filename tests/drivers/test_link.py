@@ -129,7 +129,7 @@ def test_an_endless_reply_ends_with_little_memory(talk):
     fails_in_time(lambda: session.ask("A?", as_text), ReplyError, address, "'A?'", "at most 65536 bytes")
     _, peak = tracemalloc.get_traced_memory()
     tracemalloc.stop()
-    assert peak < 50e6  # DESIGN: bounded whatever is sent; measured 1 to 3 MB
+    assert peak < 50e6  # bounded whatever is sent; measured 1 to 3 MB
 
 
 def test_an_endless_block_is_no_longer_than_expected(talk):

@@ -1,0 +1,111 @@
+"""What speaks against a stage's fit: lack of fit, distortion, overload, a delay no op-amp and no bench explains."""
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from math import log10, nan, pi
+
+import numpy as np
+from scipy.special import chdtrc
+
+from bandproof.analysis.fit import BandFit, fit_bands
+from bandproof.analysis.types import ComplexArray, FloatArray
+from bandproof.bench.types import Bench, Board, Point, Quantity, Stage
+
+__all__ = ["Misfit", "StageFit", "arrays", "look_for_misfit"]
+
+_SIGNIFICANT = 1e-4  # noise alone makes a chi-square this unlikely once in ten thousand stages
+_MATERIAL = 1.0 / 3.0  # of U: a shift below it is not worth a doubt
+_CERTAIN = 3.0  # standard uncertainties of the delay
+
+
+@dataclass(frozen=True, slots=True)
+class StageFit:
+    """A stage's fit and the points it was made of; without a fit the reason in words."""
+
+    points: tuple[Point, ...]
+    fit: BandFit | None
+    reason: str
+
+
+@dataclass(frozen=True, slots=True)
+class Misfit:
+    """What was found against a fit.
+
+    ``shifts`` says how far a model with leakage moves each figure (empty where the misfit is not significant);
+    ``distorted`` is the worst distortion of a used point that is above -40 dB, as a ratio, else 0.
+    """
+
+    reduced_chi_square: float
+    significant: bool
+    shifts: Mapping[Quantity, float]
+    distorted: float
+    alarms: tuple[str, ...]
+
+    def doubt(self, expanded: Mapping[Quantity, float]) -> str:
+        """Return why the figures cannot be trusted, or nothing; ``expanded`` are their U."""
+        if self.distorted:
+            return (
+                f"the signal is distorted ({20.0 * log10(self.distorted):.0f} dB): the stage clips below the planned "
+                "level, or its supply is low"
+            )
+        moved = [name for name, shift in self.shifts.items() if not abs(shift) <= _MATERIAL * expanded.get(name, 0.0)]
+        if moved:
+            return (
+                f"the points do not follow a second-order band (chi-square {self.reduced_chi_square:.3g} times what "
+                f"noise gives); a leakage would move {' and '.join(moved)} by more than a third of U"
+            )
+        return ""
+
+
+def arrays(points: Sequence[Point]) -> tuple[FloatArray, ComplexArray, FloatArray]:
+    """Return frequency (N,), response (N,) and covariance (N, 2, 2) of points."""
+    covariance = np.array([[[a, b], [b, c]] for a, b, c in (point.covariance for point in points)])
+    return np.array([p.frequency for p in points]), np.array([p.response for p in points]), covariance
+
+
+def look_for_misfit(board: Board, bench: Bench, stage: Stage, points: Sequence[Point], found: StageFit) -> Misfit:
+    """Return what speaks against a stage's fit."""
+    distorted = max((p.distortion for p in found.points if "distorted" in p.flags), default=0.0)
+    alarms = _overloads(points)
+    if found.fit is None or not found.fit.dof[0]:
+        return Misfit(nan, False, {}, distorted, tuple(alarms))
+    chi_square, dof = float(found.fit.chi_square[0]), float(found.fit.dof[0])
+    significant = float(chdtrc(dof, chi_square * dof)) < _SIGNIFICANT
+    alarms += _delay(board, bench, found.fit)
+    shifts = _with_leakage(found) if significant else {}
+    return Misfit(chi_square, significant, shifts, distorted, tuple(alarms))
+
+
+def _with_leakage(found: StageFit) -> dict[Quantity, float]:
+    """Return how far the admissible larger model moves each figure; everything, when it cannot be fitted."""
+    frequency, response, covariance = arrays(found.points)
+    small = found.fit
+    if small is None or 2 * len(frequency) < 7:
+        return {"centre": np.inf, "q": np.inf, "gain": np.inf}
+    large = fit_bands(frequency[None], response[None], covariance[None], leakage=True, start=small.theta)
+    return {
+        "centre": float(large.f0[0] - small.f0[0]),
+        "q": float(large.q[0] - small.q[0]),
+        "gain": float(abs(large.gain[0]) - abs(small.gain[0])),
+    }
+
+
+def _overloads(points: Sequence[Point]) -> list[str]:
+    lost = [point for point in points if "overload" in point.flags and point.purpose != "low-level"]
+    if not lost:
+        return []
+    reach = max(point.ranges[1] for point in lost)
+    return [f"{len(lost)} records were overloaded (range of the output tap up to {reach:.3g} V) and left out"]
+
+
+def _delay(board: Board, bench: Bench, fit: BandFit) -> list[str]:
+    """Return an alarm about the bench when the fitted delay is beyond what op-amp and channel skew explain."""
+    delay, u = float(fit.delay[0]), float(fit.u_delay[0])
+    allowed = 1.0 / (2.0 * pi * board.op_amp.gbw) + 2.0 * bench.channel_skew + _CERTAIN * u
+    if abs(delay) <= allowed:
+        return []
+    text = (
+        f"the fit needs a delay of {delay * 1e9:.0f} ns, op-amp and channels explain {allowed * 1e9:.0f} ns: "
+        "check the channels' skew, probes and cables; Q may be wrong"
+    )
+    return [text]
