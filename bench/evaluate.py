@@ -27,9 +27,7 @@ def usable(points: Sequence[Point]) -> tuple[Point, ...]:
     return tuple(
         point
         for point in points
-        if point.purpose in ("curve", "closing")
-        and "overload" not in point.flags
-        and all(level >= LEAST_LSB * lsb for level, lsb in zip(point.levels, point.lsb, strict=True))
+        if point.purpose in ("curve", "closing") and "overload" not in point.flags and _is_large(point)
     )
 
 
@@ -45,8 +43,22 @@ def fit_points(points: Sequence[Point]) -> StageFit:
 
 
 def _lost(points: Sequence[Point]) -> str:
-    overloaded = sum("overload" in point.flags for point in points)
-    return f", {overloaded} were overloaded" if overloaded else ""
+    """Return in words what became of the points that cannot be used."""
+    curve = [point for point in points if point.purpose in ("curve", "closing")]
+    overloaded = [point for point in curve if "overload" in point.flags]
+    small = [point for point in curve if point not in overloaded and not _is_large(point)]
+    told = [f"{len(overloaded)} were overloaded"] if overloaded else []
+    if small:
+        levels = [max(point.levels[channel] for point in small) for channel in (0, 1)]
+        told.append(
+            f"{len(small)} were too small for their range (at most {levels[0]:.3g} V in, {levels[1]:.3g} V out): is "
+            "the board powered, does it clip, is a probe off?"
+        )
+    return "".join(f", {text}" for text in told)
+
+
+def _is_large(point: Point) -> bool:
+    return all(level >= LEAST_LSB * lsb for level, lsb in zip(point.levels, point.lsb, strict=True))
 
 
 def evaluate(run: Run) -> tuple[StageResult, ...]:

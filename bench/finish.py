@@ -38,6 +38,9 @@ def finish(journal: Journal, folder: Path, problem: Exception | None, words: str
     OSError
         The folder cannot be written; nothing is left under a final name that is not whole.
     """
+    if not folder.exists():  # somebody deleted it while it was measured: all of it is still in memory
+        journal.alarm("the run's folder was deleted while it ran and was made again; the journal is lost")
+        folder.mkdir(parents=True)
     run = run_of(journal, problem, words)
     path = folder / RUN if problem is None else _free(folder)
     if path.exists():

@@ -9,16 +9,17 @@ from bandproof.bench.errors import BenchFault
 from bandproof.bench.quantities import engineering
 from bandproof.bench.types import Bench, Board, Point, Stage
 
-__all__ = ["check_low_level", "check_quiet", "level_problem", "strange_response"]
+__all__ = ["check_low_level", "check_quiet", "frequency_problem", "level_problem", "strange_response"]
 
 _LEVEL_OFF = 1.5  # a level off by more than this factor is no loading effect (50 Ω into 600 Ω takes 8 %); arbitrary
 _LEVEL_MOVED = 0.15  # of the level: flatness and loading move it less along a band; arbitrary
 _SEEN = 5.0  # a signal below this many residual rms is no signal; arbitrary
+_NOISY = 2.0  # steps of the converter; its own noise and rounding are about 0.6; arbitrary
 _STRANGE = 2.0  # a response off by more than this factor is told; arbitrary
 
 
-def check_quiet(bench: Bench, stage: Stage, point: Point) -> None:
-    """Refuse a tap whose direct voltage fills its range: the signal would not fit.
+def check_quiet(bench: Bench, stage: Stage, point: Point) -> list[str]:
+    """Refuse a tap whose direct voltage fills its range: the signal would not fit; return what is strange.
 
     Raises
     ------
@@ -31,6 +32,12 @@ def check_quiet(bench: Bench, stage: Stage, point: Point) -> None:
                 f"{tap} (channel {bench.wires[tap].channel}) stands at {engineering(offset, 'V')} DC without signal, "
                 f"more than half of the {engineering(reach, 'V')} range: is the board powered, is it the right point?"
             )
+    return [
+        f"{stage.name}: {tap} has {engineering(rms, 'V')} rms of hum or noise without signal: look for a ground loop, "
+        "a cable without shield, a supply"
+        for tap, rms, lsb in zip((stage.tap_in, stage.tap_out), point.residuals, point.lsb, strict=True)
+        if rms > _NOISY * lsb
+    ]
 
 
 def check_low_level(board: Board, bench: Bench, stage: Stage, point: Point) -> list[str]:
@@ -51,6 +58,16 @@ def check_low_level(board: Board, bench: Bench, stage: Stage, point: Point) -> l
             )
     _check_input(bench, stage, point)
     return strange_response(board, stage, point)
+
+
+def frequency_problem(point: Point) -> str:
+    """Return what is wrong with the frequency of a record, or nothing."""
+    if "off-frequency" not in point.flags:
+        return ""
+    return (
+        f"the signal is not at the {engineering(point.frequency, 'Hz', 6)} that the generator reads back: does the "
+        "generator's dialect have the right unit, is its reference locked, is it modulated?"
+    )
 
 
 def level_problem(stage: Stage, low_level: Point | None, point: Point) -> str:
@@ -101,5 +118,6 @@ def strange_response(board: Board, stage: Stage, point: Point) -> list[str]:
     if 1.0 / _STRANGE <= ratio <= _STRANGE:
         return []
     where = engineering(point.frequency, "Hz")
-    cause = "a wrong part, a wrong tap or a wrong probe factor"
+    decade = any(abs(log10(ratio / factor)) < log10(1.25) for factor in (0.1, 10.0))
+    cause = "a probe factor set wrong by ten, or a wrong part" if decade else "a wrong part, or a wrong tap"
     return [f"{stage.name}: the low-level point at {where} is × {ratio:.3g} of the predicted gain: {cause}"]

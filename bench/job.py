@@ -119,7 +119,10 @@ class Job:
             _close(journal)
             raise _no_room(self.folder, failure) from failure
         with closing(journal):
-            return finish(journal, self.folder, problem, words)
+            try:
+                return finish(journal, self.folder, problem, words)
+            except OSError as failure:
+                raise _no_room(self.folder, failure) from failure
 
     def _lock(self) -> AbstractContextManager[None]:
         """Return the lock of this bench; a rehearsal's instruments are its own."""

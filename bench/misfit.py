@@ -2,7 +2,7 @@
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
-from math import log10, nan, pi
+from math import log10, nan, pi, sqrt
 
 import numpy as np
 from scipy.special import chdtrc
@@ -15,6 +15,8 @@ __all__ = ["Misfit", "StageFit", "arrays", "look_for_misfit"]
 
 _SIGNIFICANT = 1e-4  # noise alone makes a chi-square this unlikely once in ten thousand stages
 _MATERIAL = 1.0 / 3.0  # of U: a shift below it is not worth a doubt
+_NOISE = 5.0  # standard uncertainties a closing point may differ by
+_DRIFTED = 0.01  # and this part of it; arbitrary, far above what a bench drifts in a minute
 _CERTAIN = 3.0  # standard uncertainties of the delay
 
 
@@ -32,17 +34,21 @@ class Misfit:
     """What was found against a fit.
 
     ``shifts`` says how far a model with leakage moves each figure (empty where the misfit is not significant);
-    ``distorted`` is the worst distortion of a used point that is above -40 dB, as a ratio, else 0.
+    ``distorted`` is the worst distortion of a used point above -40 dB, as a ratio, else 0; ``changed`` says that
+    the first point, measured again at the end, was not what it had been.
     """
 
     reduced_chi_square: float
     significant: bool
     shifts: Mapping[Quantity, float]
     distorted: float
+    changed: str
     alarms: tuple[str, ...]
 
     def doubt(self, expanded: Mapping[Quantity, float]) -> str:
         """Return why the figures cannot be trusted, or nothing; ``expanded`` are their U."""
+        if self.changed:
+            return self.changed
         if self.distorted:
             return (
                 f"the signal is distorted ({20.0 * log10(self.distorted):.0f} dB): the stage clips below the planned "
@@ -68,12 +74,29 @@ def look_for_misfit(board: Board, bench: Bench, stage: Stage, points: Sequence[P
     distorted = max((p.distortion for p in found.points if "distorted" in p.flags), default=0.0)
     alarms = _overloads(points)
     if found.fit is None or not found.fit.dof[0]:
-        return Misfit(nan, False, {}, distorted, tuple(alarms))
+        return Misfit(nan, False, {}, distorted, "", tuple(alarms))
     chi_square, dof = float(found.fit.chi_square[0]), float(found.fit.dof[0])
     significant = float(chdtrc(dof, chi_square * dof)) < _SIGNIFICANT
     alarms += _delay(board, bench, found.fit)
     shifts = _with_leakage(found) if significant else {}
-    return Misfit(chi_square, significant, shifts, distorted, tuple(alarms))
+    return Misfit(chi_square, significant, shifts, distorted, _changed(points), tuple(alarms))
+
+
+def _changed(points: Sequence[Point]) -> str:
+    """Return in words that a closing point is not its batch's first point again, or nothing."""
+    first = None
+    for point in points:
+        if point.purpose == "curve" and first is None:
+            first = point
+        elif point.purpose == "closing" and first is not None:
+            noise = sqrt(sum(p.covariance[0] + p.covariance[2] for p in (first, point)))
+            if not abs(point.response - first.response) <= _NOISE * noise + _DRIFTED * abs(first.response):
+                return (
+                    f"the first point ({first.frequency:.6g} Hz) read {abs(first.response):.4g} V/V and at the end "
+                    f"{abs(point.response):.4g}: something changed during the sweep (supply, probe, range, heat)"
+                )
+            first = None
+    return ""
 
 
 def _with_leakage(found: StageFit) -> dict[Quantity, float]:

@@ -23,6 +23,7 @@ SWING_SHARE, SLEW_SHARE = 0.5, 0.25  # no op-amp output beyond these shares of w
 _QUIET_SAMPLES = 2048
 _MOVED = log(1.15)  # a centre further than this from where it was looked for is looked at again; arbitrary
 _MOST_BATCHES = 3
+_FAINT = 0.17  # of the range, the loudest point's level: the skirts then fall below 20 of 128 steps
 _OVERHEAD = 0.03  # s a record costs beyond dwell and duration, for the time left; arbitrary
 
 
@@ -84,14 +85,20 @@ class Planner:
         looked_at = float(np.exp(np.mean(np.log([p.frequency for p in last if p.purpose == "curve"]))))
         fitted = fit_points(had).fit
         overloaded = sum("overload" in point.flags for point in last) > 2
+        # Far below the range although the first look did not say so: once more on a range that fits.
+        loudest = max(point.levels[1] / point.ranges[1] for point in last)
+        faint = not overloaded and loudest < _FAINT
         found = self._predictions[stage.name]
         if fitted is not None:
             found = Prediction(float(fitted.f0[0]), float(fitted.q[0]), float(abs(fitted.gain[0])))
             scale = 1.0
         moved = fitted is not None and abs(log(found.centre / looked_at)) > _MOVED
-        if not (moved or overloaded) or not 0.1 < found.centre / stage.limits["centre"].designed < 10.0:
+        if not (moved or overloaded or faint) or not 0.1 < found.centre / stage.limits["centre"].designed < 10.0:
             return ()
-        return self._curve(stage, found, scale, 2.5**batches if overloaded else 1.0, first, last[-1].frequency, 1.0)
+        widen = 2.5**batches if overloaded else 1.0
+        if faint and fitted is None:
+            scale *= loudest
+        return self._curve(stage, found, scale, widen, first, last[-1].frequency, 1.0)
 
     def _first_look(self, stage: Stage, prediction: Prediction, first: int) -> tuple[Step, ...]:
         level, low = self._levels[stage.name], LOW_LEVEL * self._levels[stage.name]

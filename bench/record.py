@@ -4,7 +4,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from bandproof.analysis.sine import channel_ratio, distortion, fit_sines, halves
+from bandproof.analysis.sine import SineFit, channel_ratio, distortion, fit_clock_and_sines, fit_sines, halves
 from bandproof.analysis.types import FloatArray
 from bandproof.bench.types import Point, Step
 
@@ -12,6 +12,8 @@ __all__ = ["Taken", "hum_frequencies", "point_of"]
 
 HUM_BELOW = 1e3  # Hz; above, mains harmonics 2-5 are too far away to matter
 _HUM_HARMONICS = 5
+_LEFT_OVER, _LEFT_STEPS = 0.05, 3.0  # of the level, and steps of the converter; arbitrary, ten times what noise leaves
+_CLOCK_OFF = 1e-3  # relative; no crystal is that wrong
 _DISTORTED = 10.0 ** (-40.0 / 20.0)
 
 
@@ -71,7 +73,9 @@ def _signal(step: Step, taken: Taken, hum: FloatArray) -> Point:
     moved = float((np.abs(settling.difference) / settling.threshold).max())
     harmonics = float(distortion(taken.volts, taken.sample_interval, taken.frequency)[1])
     flags = [name for name, seen in (("overload", any(taken.overload)), ("unsettled", not settling.is_settled)) if seen]
-    if harmonics > _DISTORTED and step.purpose != "low-level":
+    if _is_off_frequency(taken, fit):
+        flags.append("off-frequency")
+    elif harmonics > _DISTORTED and step.purpose != "low-level":
         flags.append("distorted")
     return _point(
         step,
@@ -85,6 +89,19 @@ def _signal(step: Step, taken: Taken, hum: FloatArray) -> Point:
         moved,
         tuple(flags),
     )
+
+
+def _is_off_frequency(taken: Taken, fit: SineFit) -> bool:
+    """Whether what a sine at the stated frequency leaves over goes away with a sine at another one."""
+    channel = int(np.argmax(np.abs(fit.phasor[:, 0]) / taken.lsb))
+    left, level = fit.residual_rms[channel], abs(fit.phasor[channel, 0])
+    if left < max(_LEFT_OVER * level, _LEFT_STEPS * taken.lsb[channel]):
+        return False
+    try:
+        free = fit_clock_and_sines(taken.volts[[channel]], taken.sample_interval, [taken.frequency])
+    except ValueError:
+        return True  # no frequency near the stated one explains the record
+    return bool(abs(free.clock - 1.0) > _CLOCK_OFF and free.residual_rms[0] < 0.5 * left)
 
 
 def _pair(values: FloatArray) -> tuple[float, float]:

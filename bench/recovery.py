@@ -3,18 +3,32 @@
 Never a device clear, and never the old connection: a late answer on it would be taken for the next one.
 """
 
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 
 from bandproof.bench.errors import BenchFault
 from bandproof.bench.instruments import Devices
 from bandproof.bench.journal import Journal
 from bandproof.bench.types import Step
-from bandproof.drivers.errors import InstrumentProblem, LinkClosed, SettingRefused
+from bandproof.drivers.errors import (
+    InstrumentError,
+    InstrumentProblem,
+    LinkBroken,
+    NoAnswer,
+    ReplyError,
+)
 
 __all__ = ["MOST_IN_A_RUN", "TRIES", "Recovery", "plainly"]
 
 TRIES = 3  # recoveries of one step before it is given up; arbitrary
 MOST_IN_A_RUN = 30  # recoveries of one run: a bench that fails this often measures nothing worth having; arbitrary
+
+
+_WORDS: Mapping[type[InstrumentProblem], str] = {
+    NoAnswer: "gave no answer in time",
+    LinkBroken: "lost its connection",
+    ReplyError: "answered what was not understood",
+    InstrumentError: "reported an error",
+}
 
 
 class Recovery:
@@ -36,7 +50,7 @@ class Recovery:
         """
         role = self._devices.role_of(problem.address)
         what = plainly(problem, self._devices)
-        if isinstance(problem, LinkClosed | SettingRefused):  # our mistake; a value the instrument will refuse again
+        if type(problem) not in _WORDS:  # our mistake, or what the instrument will refuse again
             raise problem
         self._tries += 1
         self._journal.told(self._elapsed(), "failure", step=step.index, instrument=role, words=what)
@@ -46,7 +60,7 @@ class Recovery:
             raise BenchFault(f"more than {MOST_IN_A_RUN} failures in one run, the last: {problem}") from problem
         self._reopen(step)
         self._journal.told(self._elapsed(), "recovered", step=step.index, instrument=role, attempt=self._tries)
-        self._journal.alarm(f"{step.stage}: recovered from a failure of the {role}: {type(problem).__name__}")
+        self._journal.alarm(f"{step.stage}: the {role} {_WORDS[type(problem)]}; it was reopened and measured again")
 
     def _reopen(self, step: Step) -> None:
         """Reopen every instrument whose link is dirty and replay its settings; a failure of that is another try."""
@@ -56,7 +70,7 @@ class Recovery:
                     instrument.reopen()
                     instrument.restore()
                 except InstrumentProblem as problem:
-                    if isinstance(problem, LinkClosed | SettingRefused) or self._tries >= TRIES:
+                    if type(problem) not in _WORDS or self._tries >= TRIES:
                         raise
                     self._tries += 1
                     self._journal.told(

@@ -12,7 +12,7 @@ from math import inf
 
 from bandproof.analysis.types import FloatArray
 from bandproof.bench.errors import BenchFault
-from bandproof.bench.first_look import check_low_level, check_quiet, level_problem, strange_response
+from bandproof.bench.first_look import check_low_level, check_quiet, frequency_problem, level_problem, strange_response
 from bandproof.bench.instruments import Devices
 from bandproof.bench.journal import Journal
 from bandproof.bench.operator import Operator
@@ -184,11 +184,11 @@ class Sweep:
         for attempt in range(first, first + self.repeats + 1):
             taken = self._taken(step, stage, attempt)
             point = point_of(step, taken, self.bench.mains)
-            wrong_level = level_problem(stage, self._low_level(step), point)
-            if "unsettled" not in point.flags and not wrong_level:
+            wrong = frequency_problem(point) or level_problem(stage, self._low_level(step), point)
+            if "unsettled" not in point.flags and not wrong:
                 return point, taken.volts
-        if wrong_level:
-            raise BenchFault(wrong_level)
+        if wrong:
+            raise BenchFault(wrong)
         self.journal.alarm(f"{step.stage}: the record at {step.frequency:.6g} Hz had not settled")
         return point, taken.volts
 
@@ -247,7 +247,10 @@ class Sweep:
     def _look(self, step: Step, stage: Stage, point: Point) -> None:
         """Check the first records of a stage: they prove wiring, probes, level and supply before the sweep."""
         if step.purpose == "no-signal":
-            check_quiet(self.bench, stage, point)
+            alarms = check_quiet(self.bench, stage, point)
         elif step.purpose == "low-level":
-            for alarm in check_low_level(self.board, self.bench, stage, point):
-                self.journal.alarm(alarm)
+            alarms = check_low_level(self.board, self.bench, stage, point)
+        else:
+            alarms = []
+        for alarm in alarms:
+            self.journal.alarm(alarm)
