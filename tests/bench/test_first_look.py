@@ -90,4 +90,4 @@ def test_a_probe_factor_wrong_on_the_output_only_is_told_and_measured(swept, one
     found = swept(1, board=one_band, rewire=probes(1.0, 10.0))
     (alarm,) = found.journal.alarms
     assert alarm.startswith("low: the low-level point at 160 Hz is × ")
-    assert "wrong probe factor" in alarm
+    assert "a probe factor set wrong by ten" in alarm
