@@ -5,10 +5,10 @@ from __future__ import annotations
 import math
 from functools import partial
 
-from bandproof.drivers.dialect import GeneratorDialect
 from bandproof.drivers.instrument import Instrument
 from bandproof.drivers.scpi import ErrorEntry
 from bandproof.drivers.session import Session
+from bandproof.drivers.slots import GeneratorDialect
 
 __all__ = ["Generator"]
 

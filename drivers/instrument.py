@@ -7,10 +7,10 @@ import re
 from collections.abc import Callable
 from typing import Any, TypeVar
 
-from bandproof.drivers.dialect import Choice, Identity, Number, Toggle
 from bandproof.drivers.errors import BeyondLimits, InstrumentProblem, SettingRefused
 from bandproof.drivers.scpi import ErrorEntry, parse_number, split_fields
 from bandproof.drivers.session import Session, as_text
+from bandproof.drivers.slots import Choice, Identity, Number, Toggle
 
 __all__ = ["Instrument"]
 

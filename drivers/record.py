@@ -4,9 +4,9 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING, Protocol
 
-from bandproof.drivers.dialect import ScopeDialect, Transfer
 from bandproof.drivers.scpi import parse_number, parse_samples, sample_size, split_fields
 from bandproof.drivers.session import Session, as_text
+from bandproof.drivers.slots import ScopeDialect, Transfer
 
 if TYPE_CHECKING:
     import numpy as np

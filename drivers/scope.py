@@ -6,10 +6,10 @@ from dataclasses import dataclass
 from functools import partial
 from typing import TYPE_CHECKING, Literal
 
-from bandproof.drivers.dialect import Number, ScopeDialect
 from bandproof.drivers.instrument import Instrument
 from bandproof.drivers.record import read_channel
 from bandproof.drivers.session import Session, as_text
+from bandproof.drivers.slots import Number, ScopeDialect
 
 if TYPE_CHECKING:
     import numpy as np

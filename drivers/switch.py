@@ -4,9 +4,9 @@ from __future__ import annotations
 
 from functools import partial
 
-from bandproof.drivers.dialect import SwitchDialect
 from bandproof.drivers.instrument import Instrument
 from bandproof.drivers.session import Session
+from bandproof.drivers.slots import SwitchDialect
 
 __all__ = ["Switch"]
 
