@@ -9,19 +9,38 @@ import json
 import os
 import zlib
 from collections.abc import Iterator, Sequence
+from contextlib import suppress
 from dataclasses import asdict
 from pathlib import Path
 from typing import Any, BinaryIO
 
 from bandproof.analysis.types import FloatArray
 from bandproof.bench.errors import BadInput
-from bandproof.bench.plain import point_from, point_plain, step_from, to_json
+from bandproof.bench.plain import fits, point_from, point_plain, step_from, to_json
+from bandproof.bench.system import sync_folder, try_lock
 from bandproof.bench.types import Point, Step
 
 __all__ = ["JOURNAL", "RAW", "Journal"]
 
 JOURNAL, RAW = "journal.txt", "raw.bin"
-_LONGEST_LINE = 64_000_000  # bytes; arbitrary, far above a board file's text
+_LONGEST = 256_000_000  # bytes of a journal; arbitrary, some 200,000 records
+_HEAD: dict[str, Any] = {
+    "run_id": str,
+    "serial": str,
+    "attempt": int,
+    "version": str,
+    "started": str,
+    "clock_start": float,
+    "operator": str,
+    "note": str,
+    "identities": dict[str, str],
+    "board": str,
+    "bench": str,
+    "bench_path": str,
+    "dialects": dict[str, str],
+    "keep_raw": bool,
+}
+_REHEARSAL: dict[str, Any] = {"seed": int, "defects": list[str], "faults": list[str]}
 
 
 class Journal:
@@ -58,7 +77,9 @@ class Journal:
         """
         journal = cls(folder)
         journal._file = (folder / JOURNAL).open("xb")
+        journal._lock()
         journal._enter({"kind": "head", **head}, sync=True)
+        sync_folder(folder)
         return journal
 
     @classmethod
@@ -68,10 +89,19 @@ class Journal:
         Raises
         ------
         BadInput
-            There is no journal, or not even its first line is whole.
+            There is no journal, not even its first line is whole, or another process is writing it.
+        OSError
+            It cannot be written.
         """
-        journal = cls.peeked(folder)
+        cls.peeked(folder)  # before anything is locked or cut: is it a journal at all?
+        journal = cls(folder)
         journal._file = (folder / JOURNAL).open("r+b")
+        try:
+            journal._lock()
+            journal._read(journal._file.read())
+        except BadInput:
+            journal.close()
+            raise
         journal._file.truncate(journal._whole)
         journal._file.seek(journal._whole)
         return journal
@@ -80,18 +110,22 @@ class Journal:
     def peeked(cls, folder: Path) -> "Journal":
         """Return a journal as far as it is whole, to be read only (BadInput as for ``opened``)."""
         journal = cls(folder)
+        path = folder / JOURNAL
         try:
-            journal._read((folder / JOURNAL).read_bytes())
+            if path.stat().st_size > _LONGEST:
+                raise BadInput(f"{path} is longer than {_LONGEST // 1_000_000} MB: no run writes that")
+            journal._read(path.read_bytes())
         except OSError as problem:
-            raise BadInput(f"{folder / JOURNAL} cannot be read: {problem.strerror or problem}") from problem
+            raise BadInput(f"{path} cannot be read: {problem.strerror or problem}") from problem
         if not journal.head:
-            raise BadInput(f"{folder / JOURNAL} has no whole first line: nothing was measured, nothing can be resumed")
+            raise BadInput(f"{path} has no whole first line: nothing was measured, nothing can be resumed")
         return journal
 
     def close(self) -> None:
-        """Close the file."""
+        """Close the file; what a full disk did not take stays untaken, and was told when it happened."""
         if self._file is not None:
-            self._file.close()
+            with suppress(OSError):
+                self._file.close()
             self._file = None
 
     # --- entries ---
@@ -124,19 +158,19 @@ class Journal:
         self._enter({"kind": "end", "ended": ended, "run": run_file, "digest": digest}, sync=True)
 
     def volts(self, index: int) -> FloatArray | None:
-        """Return the record (2, N) V kept for a point, or None."""
+        """Return the record (2, N) V kept for a point, or None: also when its file was deleted meanwhile."""
         import numpy as np
 
         place = self.raw[index]
-        if place is None or self.folder is None:
+        if place is None or self.folder is None or self._raw_size() < sum(place):
             return None
         with (self.folder / RAW).open("rb") as file:
             file.seek(place[0])
             return np.frombuffer(file.read(place[1]), dtype="<f4").reshape(2, -1).astype(np.float64)
 
     def _keep_raw(self, volts: FloatArray) -> tuple[int, int] | None:
-        if self.folder is None:
-            return None
+        if self.folder is None or not self.folder.exists():
+            return None  # deleted by somebody: the points are in memory still
         data = volts.astype("<f4").tobytes()
         place = max((offset + length for offset, length in filter(None, self.raw)), default=0)
         path = self.folder / RAW
@@ -147,6 +181,23 @@ class Journal:
             file.flush()
             os.fsync(file.fileno())
         return place, len(data)
+
+    def _raw_size(self) -> int:
+        path = self.folder / RAW if self.folder is not None else None
+        return path.stat().st_size if path is not None and path.is_file() else 0
+
+    def _lock(self) -> None:
+        """Keep a second process from going on with a run that this one writes; on a file system that has locks.
+
+        Raises
+        ------
+        BadInput
+            Another process writes it.
+        """
+        assert self._file is not None
+        with suppress(OSError):
+            if not try_lock(self._file.fileno()):
+                raise BadInput(f"{self.folder}: this run is going on in another process; wait for it, or stop it there")
 
     def _enter(self, entry: dict[str, Any], *, sync: bool = False) -> None:
         self._apply(json.loads(to_json(entry)))
@@ -159,35 +210,67 @@ class Journal:
 
     def _read(self, content: bytes) -> None:
         """Apply every whole line and count their bytes."""
+        raw_size = self._raw_size()
         for entry, length in _lines(content):
             try:
+                if (entry["kind"] == "head") != (self._whole == 0):
+                    break  # the head comes first, and once
+                if entry["kind"] == "point" and entry["raw"] and sum(entry["raw"]) > raw_size:
+                    break  # its record is not there
                 self._apply(entry)
             except (KeyError, TypeError, ValueError):
                 break  # a line of another make: nothing behind it can be trusted
             self._whole += length
 
     def _apply(self, entry: dict[str, Any]) -> None:
+        """Take an entry in whole or not at all (KeyError, TypeError, ValueError)."""
         kind = entry.pop("kind")
         if kind == "head":
-            self.head = entry
+            self.head = _head(entry)
         elif kind == "steps":
             self.steps += [step_from(step) for step in entry["steps"]]
         elif kind == "point":
-            self.points.append(point_from(entry["point"]))
-            self.began.append(entry["began"])
-            self.finished.append(entry["finished"])
-            self.raw.append(tuple(entry["raw"]) if entry["raw"] else None)
+            self._apply_point(entry)
         elif kind == "alarm":
-            self.alarms.append(entry["text"])
+            self.alarms.append(_whole(entry, text=str)["text"])
         elif kind == "story":
-            self.history.append(entry)
+            self.history.append(_whole(entry, time=float, event=str))
         elif kind == "resumed":
             self.end = None
             self.history.append({"time": self.finished[-1] if self.finished else 0.0, "event": "resumed", **entry})
         elif kind == "end":
-            self.end = entry
+            self.end = _whole(entry, ended=str, run=str, digest=str)
         else:
             raise ValueError(f"unknown entry {kind!r}")
+
+    def _apply_point(self, entry: dict[str, Any]) -> None:
+        point = point_from(entry["point"])
+        _whole(entry, began=float, finished=float)
+        raw = tuple(entry["raw"]) if entry["raw"] else None
+        if raw is not None and not (fits(raw, tuple[int, int]) and min(raw) >= 0):
+            raise ValueError(f"no place of a record: {raw!r}")
+        waiting = self.steps[len(self.points) :]
+        if not waiting or (point.step, point.stage) != (waiting[0].index, waiting[0].stage):
+            raise ValueError(f"point {point.step} of {point.stage} is not what was planned next")
+        self.points.append(point)
+        self.began.append(entry["began"])
+        self.finished.append(entry["finished"])
+        self.raw.append(raw)
+
+
+def _whole(entry: dict[str, Any], **kinds: Any) -> dict[str, Any]:
+    """Return an entry that has these values of these kinds."""
+    for name, kind in kinds.items():
+        if not fits(entry[name], kind):
+            raise ValueError(f"{name} is {entry[name]!r:.40}")
+    return entry
+
+
+def _head(entry: dict[str, Any]) -> dict[str, Any]:
+    rehearsal = entry["rehearsal"]
+    if rehearsal is not None:
+        _whole(rehearsal, **_REHEARSAL)
+    return _whole(entry, **_HEAD)
 
 
 def _line(entry: dict[str, Any]) -> bytes:
@@ -198,7 +281,7 @@ def _line(entry: dict[str, Any]) -> bytes:
 def _lines(content: bytes) -> Iterator[tuple[dict[str, Any], int]]:
     """Yield entries and their lengths until the first line that is not whole."""
     place = 0
-    while (end := content.find(b"\n", place, place + _LONGEST_LINE)) >= 0:
+    while (end := content.find(b"\n", place)) >= 0:
         line = content[place:end]
         text = line[9:]
         if line[:9] != b"%08x " % zlib.crc32(text):

@@ -1,12 +1,14 @@
 """Values as plain JSON and back: the same text for the same value, the same value from its text."""
 
 import json
+from collections.abc import Mapping
 from dataclasses import asdict, fields
-from typing import Any
+from functools import cache
+from typing import Any, Literal, get_args, get_origin, get_type_hints
 
 from bandproof.bench.types import Point, Step, Tone
 
-__all__ = ["point_from", "point_plain", "step_from", "to_json"]
+__all__ = ["fits", "point_from", "point_plain", "step_from", "to_json"]
 
 
 def to_json(value: object) -> str:
@@ -14,10 +16,41 @@ def to_json(value: object) -> str:
     return json.dumps(value, sort_keys=True, ensure_ascii=False, separators=(",", ":"), allow_nan=True)
 
 
+def fits(value: object, kind: Any) -> bool:
+    """Whether a value is of a kind as annotations write it; an int will do for a float, none beyond 64 bits."""
+    origin, inner = get_origin(kind), get_args(kind)
+    if origin is Literal:
+        return isinstance(value, str) and value in inner
+    if origin is tuple:
+        kinds = inner[:1] * len(value) if isinstance(value, tuple) and inner[-1] is ... else inner
+        return isinstance(value, tuple) and len(value) == len(kinds) and all(map(fits, value, kinds))
+    if origin is list:
+        return isinstance(value, list) and all(fits(item, inner[0]) for item in value)
+    if origin is dict:
+        return isinstance(value, dict) and all(fits(v, inner[1]) for v in value.values())  # JSON's names are texts
+    if type(value) is int:
+        return kind in (int, float) and abs(value) < 2**63
+    return type(value) is kind
+
+
+@cache
+def _kinds(made: type) -> Mapping[str, Any]:
+    return get_type_hints(made)
+
+
+def _made(made: Any, values: dict[str, Any]) -> Any:
+    """Return a dataclass of values that are of its kinds (KeyError, TypeError, ValueError)."""
+    for name, kind in _kinds(made).items():
+        if not fits(values[name], kind):
+            raise ValueError(f"{name} of a {made.__name__} is {values[name]!r:.40}")
+    return made(**values)
+
+
 def step_from(plain: dict[str, Any]) -> Step:
-    """Return a Step from its JSON form."""
-    tones = tuple(Tone(**tone) for tone in plain["tones"])
-    return Step(**{**plain, "tones": tones, "ranges": (plain["ranges"][0], plain["ranges"][1])})
+    """Return a Step from its JSON form (KeyError, TypeError, ValueError: it is none)."""
+    tones = tuple(_made(Tone, tone) for tone in plain["tones"])
+    step: Step = _made(Step, {**plain, "tones": tones, "ranges": tuple(plain["ranges"])})
+    return step
 
 
 def point_plain(point: Point) -> dict[str, Any]:
@@ -26,7 +59,17 @@ def point_plain(point: Point) -> dict[str, Any]:
 
 
 def point_from(plain: dict[str, Any]) -> Point:
-    """Return a Point from what `point_plain` gave, before or after JSON."""
+    """Return a Point from what `point_plain` gave, before or after JSON.
+
+    Raises
+    ------
+    KeyError, TypeError, ValueError
+        It is no point.
+    """
     values = {field.name: plain[field.name] for field in fields(Point)}
     tuples = {name: tuple(value) for name, value in values.items() if isinstance(value, list | tuple)}
-    return Point(**{**values, **tuples, "response": complex(*values["response"])})
+    response = tuple(values["response"])
+    if not fits(response, tuple[float, float]):
+        raise ValueError(f"response of a Point is {response!r:.40}")
+    point: Point = _made(Point, {**values, **tuples, "response": complex(*response)})
+    return point
