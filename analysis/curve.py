@@ -67,7 +67,8 @@ def curve_figures(curve: Curve, low: float, high: float, *, count: int = 1) -> C
 
     def level(x: FloatArray) -> FloatArray:
         """Ln |H| at (S, N) logarithms of frequency."""
-        result: FloatArray = np.log(np.abs(curve(np.exp(x))))
+        with np.errstate(divide="ignore"):  # a curve that vanishes somewhere has no peak there: ln 0 = -inf
+            result: FloatArray = np.log(np.abs(curve(np.exp(x))))
         return result
 
     x = np.broadcast_to(np.linspace(np.log(low), np.log(high), _GRID), (count, _GRID))

@@ -13,6 +13,8 @@
 
 __all__ = ["BadInput", "BenchFault", "BenchProblem", "FileMistakes", "OperatorNeeded", "RunFileDamaged", "Stopped"]
 
+_LONGEST_FINDING = 1000  # characters; arbitrary, three times the longest list of words accepted
+
 
 class BenchProblem(Exception):
     """Base of this room's errors."""
@@ -32,7 +34,13 @@ class FileMistakes(BadInput):
     def __str__(self) -> str:
         count = len(self.findings)
         head = f"{self.path}: {count} mistake{'s' if count != 1 else ''} to mend, nothing was started"
-        return "\n".join([head, *(f"  {number}. {text}" for number, text in enumerate(self.findings, 1))])
+        return "\n".join([head, *(f"  {number}. {_shown(text)}" for number, text in enumerate(self.findings, 1))])
+
+
+def _shown(finding: str) -> str:
+    """Return a finding cut short, and nothing in it that a terminal obeys: keys of a file may hold anything."""
+    text = finding if len(finding) <= _LONGEST_FINDING else finding[:_LONGEST_FINDING] + "..."
+    return "".join(c if c.isprintable() else ascii(c)[1:-1] for c in text)
 
 
 class RunFileDamaged(BadInput):

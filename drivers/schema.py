@@ -5,6 +5,7 @@ from __future__ import annotations
 import difflib
 import re
 import string
+import sys
 from dataclasses import MISSING, Field, dataclass, fields, is_dataclass
 from typing import Any, Literal, TypeVar, get_args, get_origin, get_type_hints
 
@@ -12,6 +13,7 @@ __all__ = ["DialectMistakes", "Finding", "read_table"]
 
 T = TypeVar("T")
 _BAD = object()
+_SHOWN = 200  # characters of a file that a message repeats; arbitrary
 
 
 @dataclass(frozen=True, slots=True)
@@ -24,8 +26,9 @@ class Finding:
     choices: tuple[str, ...] = ()
 
     def __str__(self) -> str:
-        near = difflib.get_close_matches(self.found.strip("'\""), self.choices, n=1)
-        return f"{self.path}: found {self.found}, accepted: {self.accepted}" + (
+        found = _shown(self.found)
+        near = difflib.get_close_matches(found.strip("'\""), self.choices, n=1)
+        return f"{_shown(self.path)}: found {found}, accepted: {self.accepted}" + (
             f" (nearest: {near[0]})" if near else ""
         )
 
@@ -74,11 +77,11 @@ def _value(hint: Any, slot: Field[Any], found: Any, path: str, findings: list[Fi
     if is_dataclass(hint) and isinstance(hint, type):
         if isinstance(found, dict):
             return read_table(hint, found, path, findings)
-        findings.append(Finding(path, repr(found), "a table"))
+        findings.append(Finding(path, _printed(found), "a table"))
         return None
     value, accepted, choices = _plain(hint, found)
     if value is _BAD:
-        findings.append(Finding(path, repr(found), accepted, choices))
+        findings.append(Finding(path, _printed(found), accepted, choices))
         return None
     texts = [value] if isinstance(value, str) else list(value) if isinstance(value, tuple) else []
     for text in texts:
@@ -122,7 +125,7 @@ def _sequence(kinds: tuple[Any, ...], found: Any) -> Any:
 
 def _single(hint: Any, found: Any) -> Any:
     if hint is float and isinstance(found, (int, float)) and not isinstance(found, bool) and found == found:
-        return float(found)
+        return float(found) if abs(found) <= sys.float_info.max or isinstance(found, float) else _BAD
     if hint is int and isinstance(found, int) and not isinstance(found, bool):
         return found
     return found if hint in (str, bool) and isinstance(found, hint) else _BAD
@@ -167,3 +170,16 @@ def _compiles(pattern: str) -> bool:
 
 def _join(path: str, name: str) -> str:
     return f"{path}.{name}" if path else name
+
+
+def _shown(text: str) -> str:
+    """Return a text as a message may repeat it: cut short, and nothing in it that a terminal obeys."""
+    short = text if len(text) <= _SHOWN else text[:_SHOWN] + "..."
+    return "".join(c if c.isprintable() else ascii(c)[1:-1] for c in short)
+
+
+def _printed(found: object) -> str:
+    try:
+        return repr(found)
+    except ValueError:  # a whole number of more digits than Python prints
+        return "a number of thousands of digits"
