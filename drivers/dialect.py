@@ -91,11 +91,30 @@ def parse(text: str, name: str) -> Dialect:
 
 def _contradictions(dialect: Dialect) -> list[Finding]:
     """Return what no slot shows alone."""
-    if not isinstance(dialect, ScopeDialect):
-        return []
+    rules = _scope_rules(dialect) if isinstance(dialect, ScopeDialect) else _other_rules(dialect)
+    return [Finding(path, "empty or contrary", accepted) for path, (is_wrong, accepted) in rules.items() if is_wrong]
+
+
+def _other_rules(dialect: GeneratorDialect | SwitchDialect | SupplyDialect) -> dict[str, tuple[bool, str]]:
+    """Return where slots stand that nothing goes without, whether they are empty, what belongs there."""
+    needed: dict[str, str]
+    if isinstance(dialect, SwitchDialect):
+        needed = {"close": dialect.close, "open_all": dialect.open_all}
+    else:
+        numbers = ("frequency", "amplitude") if isinstance(dialect, GeneratorDialect) else ("voltage", "current_limit")
+        needed = {f"{name}.set": getattr(dialect, name).set for name in numbers}
+        needed |= {"output.on": dialect.output.on, "output.off": dialect.output.off}
+    rules = {path: (text == "", f"a command, every {dialect.kind} needs one") for path, text in needed.items()}
+    if isinstance(dialect, SupplyDialect):
+        rules["current.query"] = (dialect.current.query == "", "a query of the measured current")
+        rules["channels"] = (not dialect.channels, "the names of its outputs")
+    return rules
+
+
+def _scope_rules(dialect: ScopeDialect) -> dict[str, tuple[bool, str]]:
     transfer, overload = dialect.transfer, dialect.overload
     whole = transfer.encoding not in ("ascii", "real32", "real64")
-    rules = {
+    return {
         "transfer.read": (transfer.read == "", "a query, every scope needs one"),
         "transfer.scale": (transfer.scaling == "query" and not transfer.scale, 'a query, scaling is "query"'),
         "transfer.preamble": (transfer.scaling == "preamble" and not transfer.preamble, "a query"),
@@ -107,5 +126,5 @@ def _contradictions(dialect: Dialect) -> list[Finding]:
         "overload.query": (overload.by == "query" and not overload.query, "a query"),
         "acquisition.start": (dialect.acquisition.start == "", "a command, every scope needs one"),
         "interval.query": (dialect.interval.query == "", "a query, the interval really used is needed"),
+        "range.set": (dialect.range.set == "", "a command, every scope needs one"),
     }  # fmt: skip
-    return [Finding(path, "empty or contrary", accepted) for path, (is_wrong, accepted) in rules.items() if is_wrong]

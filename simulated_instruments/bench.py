@@ -20,7 +20,7 @@ from bandproof.simulated_instruments.faults import UNFINISHED, Fault, FaultPlan
 from bandproof.simulated_instruments.generator import Generator
 from bandproof.simulated_instruments.imperfections import Imperfections
 from bandproof.simulated_instruments.scope import Scope
-from bandproof.simulated_instruments.switch_supply import Switch
+from bandproof.simulated_instruments.switch_supply import Supply, Switch
 from bandproof.simulated_instruments.timebase import Timebase, open_timebase
 from bandproof.simulated_instruments.transport import Server, serve
 from bandproof.simulated_instruments.wiring import Wiring
@@ -66,6 +66,10 @@ class World:
     faults : tuple of Fault
     clock : str or None
         Path of the time file; None: real time.
+    supply : float or None
+        A that one op-amp draws from each output of the bench's supply; None: the board has a supply of its own.
+    language : str
+        What the instruments speak: "" for SCPI-99, or one of `languages.NAMES`.
     """
 
     network: Network
@@ -77,12 +81,16 @@ class World:
     timing: Timing = field(default_factory=Timing)
     faults: tuple[Fault, ...] = ()
     clock: str | None = None
+    supply: float | None = None
+    language: str = ""
 
     def __post_init__(self) -> None:
         if self.seed < 0 or self.run < 0:
             raise ValueError(f"seed and run must not be negative, found {self.seed!r} and {self.run!r}")
         if set(self.scope) != {1, 2}:
             raise ValueError(f"scope must name what channels 1 and 2 see, found {dict(self.scope)!r}")
+        if self.supply is not None and not self.supply >= 0:
+            raise ValueError(f"supply is a current in A, found {self.supply!r}")
 
     def as_plain(self) -> dict[str, Any]:
         """Return a dictionary for JSON."""
@@ -96,6 +104,8 @@ class World:
             "timing": asdict(self.timing),
             "faults": [fault.as_plain() for fault in self.faults],
             "clock": None if self.clock is None else str(self.clock),
+            "supply": self.supply,
+            "language": self.language,
         }
 
     @classmethod
@@ -111,6 +121,8 @@ class World:
             timing=Timing(**plain["timing"]),
             faults=tuple(Fault.from_plain(fault) for fault in plain["faults"]),
             clock=plain["clock"],
+            supply=plain.get("supply"),
+            language=plain.get("language", ""),
         )
 
 
@@ -124,6 +136,7 @@ def instruments(world: World, timebase: Timebase, plan: FaultPlan) -> dict[str, 
         seed=world.seed,
         run=world.run,
         conditions=plan.conditions,
+        powered=world.supply is None,
     )
 
     def never_completes(at: float) -> bool:
@@ -145,7 +158,16 @@ def instruments(world: World, timebase: Timebase, plan: FaultPlan) -> dict[str, 
     )
     plan.follow(generator.disturbed)
     plan.follow(wiring.disturbed)
-    return {"generator": generator, "scope": scope, "switch": Switch(wiring, timing=world.timing)}
+    found: dict[str, Device] = {"generator": generator, "scope": scope, "switch": Switch(wiring, timing=world.timing)}
+    if world.supply is not None:
+        found["supply"] = Supply(
+            wiring,
+            opamps=len(world.network.opamps),
+            quiescent=world.supply,
+            timing=world.timing,
+            conditions=plan.conditions,
+        )
+    return found
 
 
 async def run(world: World, announce: Callable[[dict[str, int]], None], end: Awaitable[float]) -> None:
@@ -202,7 +224,7 @@ def serve_until_closed(source: IO[str], target: IO[str], *, linger: float = LING
 class Bench:
     """A running simulated bench; a context manager that stops it.
 
-    `ports` are TCP ports on 127.0.0.1 of generator, scope and switch.
+    `ports` are TCP ports on 127.0.0.1 of generator, scope, switch and, where there is one, supply.
     """
 
     ports: dict[str, int]

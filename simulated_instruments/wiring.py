@@ -34,6 +34,8 @@ class Wiring:
         For the scatter of reseated contacts.
     conditions : mapping
         Faults that hold (see `FaultPlan`). Unpowered, op-amp outputs are at 0 V and the other nodes stay as they were.
+    powered : bool
+        Whether the board has its supply at the beginning; see `power`.
 
     Raises
     ------
@@ -51,7 +53,9 @@ class Wiring:
         seed: int,
         run: int,
         conditions: Mapping[str, float] = faults.NO_CONDITIONS,
+        powered: bool = True,
     ) -> None:
+        self._powered = powered
         self.routes, self.closed = dict(routes), ""
         self._imperfections, self._seed, self._conditions = imperfections, (seed, run), conditions
         self._outputs = {u.out for u in network.opamps}
@@ -70,6 +74,12 @@ class Wiring:
         """Close a route, the other ones open; the empty string opens all."""
         self.closed = route
         self.disturbed(at)
+
+    def power(self, at: float, powered: bool) -> None:
+        """Give the board its supply, or take it away."""
+        if powered != self._powered:
+            self._powered = powered
+            self.disturbed(at)
 
     def disturbed(self, at: float) -> None:
         """Look at the board through what the channels are connected to from `at` on."""
@@ -97,7 +107,7 @@ class Wiring:
     def _front_end(self, channel: int) -> FrontEnd:
         tap, coupling, limit = self._tap(channel), self._couplings[channel], math.inf
         node = self.routes.get(self.closed) if tap == SWITCH else tap
-        if node in self._outputs and faults.UNPOWERED in self._conditions:
+        if node in self._outputs and (faults.UNPOWERED in self._conditions or not self._powered):
             node = None
         elif node in self._outputs and faults.CLIPPED in self._conditions:
             limit = SAGGED

@@ -6,12 +6,22 @@ import contextlib
 import socket
 import threading
 from collections.abc import Callable, Iterator
+from dataclasses import replace
+from pathlib import Path
+from typing import Any
 
 import pytest
 
-from bandproof.drivers.clock import RealClock
+from bandproof.drivers.clock import RealClock, VirtualClock, create_clock_file
+from bandproof.drivers.dialect import parse, source
+from bandproof.drivers.generator import Generator
 from bandproof.drivers.link import Link
 from bandproof.drivers.log import ExchangeLog
+from bandproof.drivers.scope import Scope
+from bandproof.drivers.session import Session
+from bandproof.drivers.supply import Supply
+from bandproof.drivers.switch import Switch
+from bandproof.simulated_instruments.bench import World, start
 
 LIMIT = 0.3  # s, the tests' patience
 Behaviour = Callable[[socket.socket, threading.Event], None]
@@ -159,3 +169,63 @@ def registers() -> type[Registers]:
 @pytest.fixture(scope="session")
 def memory_port() -> type[MemoryPort]:
     return MemoryPort
+
+
+KINDS = {"generator": Generator, "scope": Scope, "switch": Switch, "supply": Supply}
+SCPI99 = {
+    "generator": "scpi99-generator",
+    "scope": "scpi99-digitizer",
+    "switch": "scpi99-switch",
+    "supply": "scpi99-supply",
+}
+
+
+class Stand:
+    """Drivers of every instrument of a simulated bench in virtual time, and what each was told (40 bytes a message)."""
+
+    def __init__(self, world: World, texts: dict[str, str], folder: Path) -> None:
+        create_clock_file(folder / "clock")
+        self.drivers: dict[str, Any] = {}
+        dialects = {role: parse(text, role) for role, text in texts.items()}
+        self.clock = VirtualClock(folder / "clock", patience=2.0)
+        self._open: list[ExchangeLog] = []
+        self._logs = {role: folder / f"{role}.log" for role in KINDS}
+        self.bench = start(replace(world, clock=str(folder / "clock")))
+        for role, port in self.bench.ports.items():
+            dialect = dialects[role]
+            self._open.append(log := ExchangeLog(self._logs[role]))
+            link = Link(f"TCPIP::127.0.0.1::{port}::SOCKET", self.clock, log)
+            self.drivers[role] = KINDS[role](Session(link, dialect.habits), dialect)  # type: ignore[arg-type]
+
+    def __getattr__(self, role: str) -> Any:
+        return self.drivers[role]
+
+    def sent(self, role: str) -> list[str]:
+        """Return the messages an instrument was sent, in order."""
+        lines = [line.split(" ", 4) for line in self._logs[role].read_text().splitlines()]
+        return [fields[4].removesuffix("\\n").removesuffix("\\r") for fields in lines if fields[2] == ">"]
+
+    def end(self) -> None:
+        for driver in self.drivers.values():
+            driver.disconnect()
+        for log in self._open:
+            log.close()
+        self.clock.close()
+        self.bench.stop()
+
+
+@pytest.fixture
+def stand(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Callable[..., Stand]]:
+    """Return a maker of stands from a world and changes of its dialect texts by role."""
+    stands: list[Stand] = []
+
+    def make(world: World, changes: dict[str, Callable[[str], str]] | None = None, **texts: str) -> Stand:
+        all_texts = {role: texts.get(role) or source(name) for role, name in SCPI99.items()}
+        for role, change in (changes or {}).items():
+            all_texts[role] = change(all_texts[role])
+        stands.append(Stand(world, all_texts, tmp_path_factory.mktemp("stand")))
+        return stands[-1]
+
+    yield make
+    for one in stands:
+        one.end()

@@ -55,7 +55,7 @@ def mistakes(text):
     return caught.value
 
 
-@pytest.mark.parametrize("name", ["scpi99-generator", "scpi99-digitizer", "scpi99-switch"])
+@pytest.mark.parametrize("name", ["scpi99-generator", "scpi99-digitizer", "scpi99-switch", "scpi99-supply"])
 def test_a_shipped_dialect_loads_by_its_name_and_as_a_copy(name, tmp_path):
     copy = tmp_path / "copy.toml"
     copy.write_text(dialect.source(name))
