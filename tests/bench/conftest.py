@@ -90,6 +90,12 @@ def one_band_text() -> str:
 
 
 @pytest.fixture(scope="session")
+def two_band_text() -> str:
+    """The text of a board file with the demo's two lowest stages."""
+    return band_text(2)
+
+
+@pytest.fixture(scope="session")
 def outcome(tmp_path_factory: pytest.TempPathFactory) -> Outcome:
     """What a whole job on a board of two bands left; its files are in `outcome.folder`."""
     board = parse_board(band_text(2), "two bands")
