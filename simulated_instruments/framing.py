@@ -48,6 +48,13 @@ class Framer:
                 self._drop(end + 1)
                 yield message.removesuffix(b"\r")
 
+    def end(self) -> bytes:
+        """Return what lies here without its terminator and begin anew: the wire says that a message has ended."""
+        message = b"" if self._discarding else bytes(self._buffer)
+        self._drop(len(self._buffer))
+        self._discarding = False
+        return message
+
     def _discard(self) -> bool:
         end = self._buffer.find(b"\n", self._position)
         self._drop(len(self._buffer) if end < 0 else end + 1)
