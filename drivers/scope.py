@@ -4,8 +4,10 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 from functools import partial
+from math import inf
 from typing import TYPE_CHECKING, Literal
 
+from bandproof.drivers.errors import SettingRefused
 from bandproof.drivers.instrument import Instrument
 from bandproof.drivers.record import read_channel
 from bandproof.drivers.session import Session, as_text
@@ -18,6 +20,9 @@ if TYPE_CHECKING:
 __all__ = ["ChannelSetting", "Coupling", "Record", "RecordSetting", "Scope"]
 
 Coupling = Literal["DC", "AC"]
+
+_MOST_POINTS = 10_000_000  # of a record, 80 MB a channel; arbitrary
+_FAR = 10.0  # times the duration asked; arbitrary, far beyond any scope's rounding
 
 
 @dataclass(frozen=True, slots=True)
@@ -220,7 +225,19 @@ class Scope(Instrument):
         interval = self._read_number(self._dialect.interval)
         if self._dialect.points.query:  # the duration may have changed them
             used = round(self._read_number(self._dialect.points))
-        return RecordSetting(interval, used, used * interval)
+        setting = RecordSetting(interval, used, used * interval)
+        self._refuse_strange(setting, duration, points)
+        return setting
+
+    def _refuse_strange(self, found: RecordSetting, duration: float, points: int) -> None:
+        """Refuse a record no scope takes when asked for this one: a reply garbled into another number says so."""
+        low, high = self._dialect.points.readback if self._dialect.points.set else (0.0, inf)
+        fits = low * points <= found.points <= min(high * points, _MOST_POINTS) and found.points >= 2
+        if fits and found.sample_interval > 0 and duration / _FAR <= found.duration <= duration * _FAR:
+            return
+        asked, read = (f"{n} points in {t:.9g} s" for n, t in ((points, duration), (found.points, found.duration)))
+        accepted = f"the dialect's limits for points, at most {_MOST_POINTS}, a duration within {_FAR:g} times"
+        raise SettingRefused(self.address, "record", asked, read, accepted, self.session.setting_line)
 
     def _set_if_possible(self, slot: str, number: Number, value: float) -> float:
         return self._set_number(slot, number, value) if number.set else self._read_number(number)
@@ -234,7 +251,7 @@ class Scope(Instrument):
         slot = self._dialect.acquisition
         expected = duration + slot.latency
         if slot.completes == "awaited":
-            self.session.command(slot.start, confirm=slot.complete, expected=expected)
+            self.session.command(slot.start, confirm=slot.complete, confirmed=slot.is_complete, expected=expected)
         else:
             self.session.command(slot.start)
             self._poll(expected)

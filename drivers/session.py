@@ -65,7 +65,9 @@ class Session:
         """Where the instrument is, as PyVISA spells it."""
         return self.link.address
 
-    def command(self, text: str, *, confirm: str | None = None, expected: float = 0.0) -> None:
+    def command(
+        self, text: str, *, confirm: str | None = None, confirmed: str | None = None, expected: float = 0.0
+    ) -> None:
         """Send a setting and await the answer that it is done (a message of its own).
 
         Parameters
@@ -74,6 +76,8 @@ class Session:
             The setting.
         confirm : str or None
             Another query than the habitual one.
+        confirmed : str or None
+            Another answer than the habitual one.
         expected : float
             Seconds the setting should take.
 
@@ -91,7 +95,8 @@ class Session:
             self.setting_line = exchange.line
             if query:
                 self._send(exchange, query)
-                self._parsed(exchange, exchange.read_line(), self._confirmation)
+                answer = self.habits.confirmed if confirmed is None else confirmed
+                self._parsed(exchange, exchange.read_line(), lambda line: _check_confirmation(line, answer))
         if not query:
             self.check_errors()
 
@@ -212,10 +217,6 @@ class Session:
         except ValueError as problem:
             raise exchange.not_understood(str(problem), line) from problem
 
-    def _confirmation(self, line: bytes) -> None:
-        if as_text(line).lstrip("+") != self.habits.confirmed:
-            raise ValueError(f"{self.habits.confirmed!r} as confirmation")
-
     def _block_header(self, exchange: Transaction) -> tuple[int | None, bytes]:
         """Return the length a block states (None: an indefinite one) and its header as it came."""
         mark = bytes(exchange.read_exactly(2))
@@ -243,3 +244,8 @@ def as_text(line: bytes) -> str:
     if not text.isascii() or not text.isprintable():
         raise ValueError("printable text")
     return text
+
+
+def _check_confirmation(line: bytes, answer: str) -> None:
+    if as_text(line).lstrip("+") != answer:
+        raise ValueError(f"{answer!r} as confirmation")

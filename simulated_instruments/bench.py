@@ -19,6 +19,7 @@ from bandproof.simulated_instruments.device import Device, Timing
 from bandproof.simulated_instruments.faults import UNFINISHED, Fault, FaultPlan
 from bandproof.simulated_instruments.generator import Generator
 from bandproof.simulated_instruments.imperfections import Imperfections
+from bandproof.simulated_instruments.languages import NAMES, teach
 from bandproof.simulated_instruments.scope import Scope
 from bandproof.simulated_instruments.switch_supply import Supply, Switch
 from bandproof.simulated_instruments.timebase import Timebase, open_timebase
@@ -89,6 +90,8 @@ class World:
             raise ValueError(f"seed and run must not be negative, found {self.seed!r} and {self.run!r}")
         if set(self.scope) != {1, 2}:
             raise ValueError(f"scope must name what channels 1 and 2 see, found {dict(self.scope)!r}")
+        if self.language and self.language not in NAMES:
+            raise ValueError(f"language must be one of {', '.join(NAMES)} or empty, found {self.language!r}")
         if self.supply is not None and not self.supply >= 0:
             raise ValueError(f"supply is a current in A, found {self.supply!r}")
 
@@ -167,6 +170,8 @@ def instruments(world: World, timebase: Timebase, plan: FaultPlan) -> dict[str, 
             timing=world.timing,
             conditions=plan.conditions,
         )
+    for name, device in found.items():
+        teach(world.language, name, device)
     return found
 
 

@@ -78,6 +78,8 @@ class Device:
         self._settings = {setting.name: setting for setting in settings}
         self._values: dict[tuple[str, tuple[int, ...]], Any] = {}
         declared = [command for setting in settings for command in self._access(setting)]
+        self.interpret: Callable[[bytes, list[bytes]], None] = self.run_units  # another language may take their place
+        self.finish: Callable[[list[bytes]], bytes] = lambda replies: b";".join(replies) + b"\n"
         self._tree = CommandTree([*self._common(), *self._system(), *self._registers(), *declared, *commands])
 
     def value(self, name: str, *suffixes: int) -> Any:
@@ -110,14 +112,14 @@ class Device:
         self.at = max(self.at, received) + self.timing.message
         replies: list[bytes] = []
         try:
-            self._run(message, replies)
+            self.interpret(message, replies)
         except ScpiError as error:
             self.status.report(error)
         ready_at = self.at
         if not math.isfinite(ready_at):  # waits for what never completes; another message breaks the wait
             self.at = received + self.timing.message
             return Answer(None, math.inf)
-        return Answer(b";".join(replies) + b"\n" if replies else None, ready_at)
+        return Answer(self.finish(replies) if replies else None, ready_at)
 
     def refuse(self, number: int, detail: str = "") -> None:
         """Put an error found outside a message's text into the queue."""
@@ -127,7 +129,8 @@ class Device:
         """Hold what follows until pending operations are finished."""
         self.at = max(self.at, self.status.pending_until)
 
-    def _run(self, message: bytes, replies: list[bytes]) -> None:
+    def run_units(self, message: bytes, replies: list[bytes]) -> None:
+        """Execute the units of a message in SCPI-99 and add their replies, or raise ScpiError for a command error."""
         path, indefinite = self._tree.root, False
         for unit in units(message):
             command, suffixes, path = self._tree.find(unit, path)

@@ -89,6 +89,19 @@ class Scope(Device):
         steps = max(1, round(self.value("time") / self.value("points") / SAMPLE_STEP))
         return float(steps / round(1 / SAMPLE_STEP))
 
+    def record(self, channel: int) -> FloatArray | None:
+        """Return the last complete record of a channel (from 0) in V at the input, None while it is not complete.
+
+        Raises
+        ------
+        ScpiError
+            Nothing was armed.
+        """
+        if self._armed is None:
+            raise ScpiError(-230)
+        self.wait()
+        return self._record(channel) if self.at < float("inf") else None
+
     def changed(self, name: str, suffixes: tuple[int, ...]) -> None:
         """Switch the coupling of a channel."""
         if name == "coupling":
@@ -151,12 +164,10 @@ class Scope(Device):
         self._format = kind
 
     def _trace(self, suffixes: tuple[int, ...], name: str) -> bytes | None:
-        if self._armed is None:
-            raise ScpiError(-230)
-        self.wait()
-        if self.at == float("inf"):
+        volts = self.record(int(name[2:]) - 1)
+        if volts is None:
             return None
-        reply = self._encode(self._record(int(name[2:]) - 1), int(name[2:]) - 1)
+        reply = self._encode(volts, int(name[2:]) - 1)
         self.at += len(reply) / self.timing.transfer
         return reply
 

@@ -44,6 +44,11 @@ class Switch(Device):
             ],
         )
 
+    @property
+    def closed(self) -> str:
+        """The closed route, empty if none is."""
+        return self._wiring.closed
+
     def reset(self) -> None:
         """Open all routes."""
         super().reset()
@@ -105,7 +110,7 @@ class Supply(Device):
                 Setting("[SOURce<1:2>]:CURRent" + level, "limit", Decimal(0.0, 1.0, 0.1, "A")),
                 Setting("OUTPut<1:2>[:STATe]", "output", Boolean()),
             ],
-            commands=[Command("MEASure<1:2>[:SCALar]:CURRent[:DC]?", self._measure)],
+            commands=[Command("MEASure<1:2>[:SCALar]:CURRent[:DC]?", lambda rail: show_number(self.current(*rail)))],
         )
 
     def changed(self, name: str, suffixes: tuple[int, ...]) -> None:
@@ -124,8 +129,8 @@ class Supply(Device):
         """Whether an output gives its voltage, not held down by its current limit."""
         return self._gives(rail) and self.value("limit", rail) >= self._drawn
 
-    def _measure(self, suffixes: tuple[int, ...]) -> bytes:
-        rail = suffixes[0]
+    def current(self, rail: int) -> float:
+        """Return what an output (1, 2) gives now, in A."""
         if not self._gives(rail) or faults.UNPOWERED in self._conditions:
-            return show_number(0.0)
-        return show_number(min(self._drawn, self.value("limit", rail)))
+            return 0.0
+        return min(self._drawn, float(self.value("limit", rail)))

@@ -36,7 +36,8 @@ class Swept:
 def swept() -> Callable[..., Swept]:
     """Return a maker of sweeps: seed, defects {(stage, part): value}, options of Sweep.
 
-    `change` alters the world, `rewire` what the controller believes of its bench; `log` is the exchange log's path.
+    `change` alters the world, `rewire` what the controller believes of its bench; `log` is the exchange log's path;
+    with `prepare` the instruments are reset first, as in a job.
     """
 
     def make(
@@ -49,6 +50,7 @@ def swept() -> Callable[..., Swept]:
         operator: Operator | None = None,
         log: Path | None = None,
         raises: type[Exception] | tuple[type[Exception], ...] = (),
+        prepare: bool = False,
         **options: Any,
     ) -> Swept:
         board = board or demo_board()
@@ -62,7 +64,10 @@ def swept() -> Callable[..., Swept]:
             reachable = rewire(reachable)
             try:
                 with opened(reachable, clock, log) as devices:
-                    Sweep(board, reachable, devices, clock, operator or Absent(), journal, **options).run()
+                    sweep = Sweep(board, reachable, devices, clock, operator or Absent(), journal, **options)
+                    if prepare:
+                        sweep.prepare()
+                    sweep.run()
             except raises as found:
                 problem = found
         return Swept(board, drawn, world, journal, problem)
