@@ -9,8 +9,9 @@ from __future__ import annotations
 
 import select
 import socket
+from contextlib import nullcontext
 from functools import cache
-from typing import TYPE_CHECKING, Any, cast
+from typing import TYPE_CHECKING, Any, Protocol, cast
 
 if TYPE_CHECKING:
     from pyvisa import ResourceManager
@@ -19,9 +20,20 @@ if TYPE_CHECKING:
 __all__ = ["VisaPort", "is_timeout", "listed", "prepare", "translated"]
 
 PEEK = 1 << 18  # bytes taken in one raw read; bounds memory (a 2 MB block takes 8 to 30 reads)
+PYVISA_PY = "@py"
 PIECE = 4096  # bytes PyVISA-py sends at a time; a larger piece would be cut, and a cut one is an error there
 
 _managers: dict[str, ResourceManager] = {}
+
+
+class Wire(Protocol):
+    """What reads in PyVISA's place where its own reads have no end: `HislipClient` or `SerialLine`."""
+
+    def read(self, count: int, limit: float, *, line: bool) -> bytes:
+        """Return 1 to `count` bytes within `limit` seconds, or raise TimeoutError."""
+
+    def has_stray(self) -> bool:
+        """Whether bytes are waiting that nobody asked for."""
 
 
 class VisaPort:
@@ -43,13 +55,22 @@ class VisaPort:
     """
 
     def __init__(self, address: str, library: str, limit: float) -> None:
-        resource = _manager(library).open_resource(address, open_timeout=_milliseconds(limit))
+        from bandproof.drivers.hislip import lent
+
+        manager = _manager(library)
+        with lent(limit) if library.endswith(PYVISA_PY) else nullcontext():
+            resource = manager.open_resource(address, open_timeout=_milliseconds(limit))
         self._resource = cast("MessageBasedResource", resource)
         self._ends_at_newline: bool | None = None
         self._peek = bytearray(PEEK)
         self._socket = _socket_of(self._resource)
         if self._socket is not None:
             self._refuse_failed_connection(self._socket)
+        try:
+            self._wire = _wire_of(self._resource, limit)
+        except BaseException:
+            self.close()
+            raise
 
     def write(self, data: bytes | memoryview, limit: float) -> int:
         """Send the beginning of `data` within `limit` seconds; return how many bytes went."""
@@ -68,12 +89,16 @@ class VisaPort:
         """
         if self._socket is not None:
             return self._visa_read(min(count, self._available(self._socket, limit)))
+        if self._wire is not None:
+            return self._wire.read(count, limit, line=line)
         self._resource.timeout = _milliseconds(limit)
         self._end_at_newline(line)
         return self._visa_read(count)
 
     def has_stray(self) -> bool:
         """Whether bytes are waiting that nobody asked for; False where that cannot be seen."""
+        if self._wire is not None:
+            return self._wire.has_stray()
         return self._socket is not None and bool(select.select([self._socket], [], [], 0)[0])
 
     def close(self) -> None:
@@ -148,6 +173,20 @@ def _socket_of(resource: Any) -> socket.socket | None:
     return connection
 
 
+def _wire_of(resource: Any, limit: float) -> Wire | None:
+    """Return what reads in PyVISA-py's place, or None where its own reads or its raw socket do."""
+    from bandproof.drivers.hislip import HislipClient
+    from bandproof.drivers.serial_line import SerialLine
+
+    session: Any = getattr(resource.visalib, "sessions", {}).get(resource.session)
+    interface: Any = getattr(session, "interface", None)
+    if isinstance(interface, HislipClient):
+        return interface
+    if type(session).__name__ == "SerialSession" and hasattr(interface, "in_waiting"):
+        return SerialLine(interface, limit)
+    return None
+
+
 def _milliseconds(limit: float) -> int:
     return max(1, round(limit * 1000))
 
@@ -164,7 +203,12 @@ def translated() -> tuple[type[BaseException], ...]:
     from pyvisa_py.protocols.vxi11 import Vxi11Error
     from pyvisa_py.protocols.xdrlib import Error as XdrError
 
-    return (OSError, Error, RuntimeError, EOFError, ValueError, RPCError, Vxi11Error, XdrError)
+    found = (OSError, Error, RuntimeError, EOFError, ValueError, RPCError, Vxi11Error, XdrError)
+    try:
+        from termios import error as terminal_error  # PySerial lets some through; there is none on Windows
+    except ImportError:
+        return found
+    return (*found, terminal_error)
 
 
 def is_timeout(problem: BaseException) -> bool:
