@@ -87,9 +87,11 @@ def _routes(network: Network, asked: list[str]) -> dict[str, str]:
 
 
 async def _serve(world: World) -> None:
-    def announce(ports: dict[str, int]) -> None:
+    def announce(ports: dict[str, int], hislip_ports: dict[str, int]) -> None:
         for name, port in ports.items():
             sys.stdout.write(f"{name:<10} TCPIP::127.0.0.1::{port}::SOCKET\n")
+        for name, port in hislip_ports.items():
+            sys.stdout.write(f"{name:<10} TCPIP::127.0.0.1::hislip0,{port}::INSTR\n")
         for channel, node in world.scope.items():
             sys.stdout.write(f"scope channel {channel} sees {node}\n")
         for route, node in world.routes.items():

@@ -18,6 +18,7 @@ from bandproof.analysis.network import Network, from_plain, to_plain
 from bandproof.simulated_instruments.device import Device, Timing
 from bandproof.simulated_instruments.faults import UNFINISHED, Fault, FaultPlan
 from bandproof.simulated_instruments.generator import Generator
+from bandproof.simulated_instruments.hislip import serve_hislip
 from bandproof.simulated_instruments.imperfections import Imperfections
 from bandproof.simulated_instruments.languages import NAMES, teach
 from bandproof.simulated_instruments.scope import Scope
@@ -34,6 +35,7 @@ _ONE_THREAD = {"OPENBLAS_NUM_THREADS": "1", "OMP_NUM_THREADS": "1", "MKL_NUM_THR
 LINGER = 2.0  # s by the wall that outputs may stay on without an owner, arbitrary: a guard takes well under 1 s
 _POLL = 0.02  # s between looks at them
 _STOP = "stop"  # the line that ends a server process at once
+Ports = dict[str, int]  # by instrument
 POSIX_PROCESS: Mapping[str, Any] = MappingProxyType({"start_new_session": True})
 
 
@@ -175,26 +177,27 @@ def instruments(world: World, timebase: Timebase, plan: FaultPlan) -> dict[str, 
     return found
 
 
-async def run(world: World, announce: Callable[[dict[str, int]], None], end: Awaitable[float]) -> None:
-    """Serve a world until `end` is done; `announce` is handed the ports by instrument.
+async def run(world: World, announce: Callable[[Ports, Ports], None], end: Awaitable[float]) -> None:
+    """Serve a world until `end` is done; `announce` is handed the ports of raw sockets and of HiSLIP.
 
     The result of `end` is how long, in s by the wall, somebody may still need to switch the generator off.
     """
     timebase = open_timebase(None if world.clock is None else Path(world.clock))
     plan = FaultPlan(world.faults, timebase)
     devices = instruments(world, timebase, plan)
-    servers = {name: await serve(name, device, timebase, plan) for name, device in devices.items()}
-    announce({name: server.port for name, server in servers.items()})
-    await _quiet(devices["generator"], servers["generator"], await end)
-    for server in servers.values():
+    raw = {name: await serve(name, device, timebase, plan) for name, device in devices.items()}
+    hislip = {name: await serve_hislip(name, device, timebase, plan) for name, device in devices.items()}
+    announce(*({name: server.port for name, server in servers.items()} for servers in (raw, hislip)))
+    await _quiet(devices["generator"], (raw["generator"], hislip["generator"]), await end)
+    for server in (*raw.values(), *hislip.values()):
         await server.close()
 
 
-async def _quiet(generator: Device, server: Server, limit: float) -> None:
+async def _quiet(generator: Device, servers: tuple[Server, ...], limit: float) -> None:
     """Wait until the output is off and nobody is connected who may wait for the answer, at most `limit` s."""
     loop = asyncio.get_running_loop()
     last = loop.time() + limit
-    while loop.time() < last and (generator.value("output") or server.clients):
+    while loop.time() < last and (generator.value("output") or any(server.clients for server in servers)):
         await asyncio.sleep(_POLL)
 
 
@@ -206,8 +209,8 @@ def serve_until_closed(source: IO[str], target: IO[str], *, linger: float = LING
     """
     world = World.from_plain(json.loads(source.readline()))
 
-    def announce(ports: dict[str, int]) -> None:
-        target.write(json.dumps(ports) + "\n")
+    def announce(ports: Ports, hislip_ports: Ports) -> None:
+        target.write(json.dumps(ports | {"hislip": hislip_ports}) + "\n")
         target.flush()
 
     async def main() -> None:
@@ -230,10 +233,12 @@ class Bench:
     """A running simulated bench; a context manager that stops it.
 
     `ports` are TCP ports on 127.0.0.1 of generator, scope, switch and, where there is one, supply.
+    At `hislip_ports` the same instruments speak HiSLIP.
     """
 
-    ports: dict[str, int]
+    ports: Ports
     process: subprocess.Popen[str]
+    hislip_ports: Ports = field(default_factory=dict)
 
     def stop(self, patience: float = 5.0) -> None:
         """End the server process, kill it if it does not end within `patience` s. May be called twice."""
@@ -295,7 +300,9 @@ def start(world: World, *, process_options: Mapping[str, Any] = POSIX_PROCESS) -
         )
         line = _introduce(process, world)
         if line:
-            return Bench(json.loads(line), process)
+            ports = json.loads(line)
+            hislip_ports = ports.pop("hislip")
+            return Bench(ports, process, hislip_ports)
         Bench({}, process).stop()
         errors.seek(0)
         raise BenchNotStarted(process.returncode, errors.read())
