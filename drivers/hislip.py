@@ -180,22 +180,31 @@ class HislipClient:
 
 @contextmanager
 def lent(limit: float) -> Iterator[None]:
-    """Have PyVISA-py open HiSLIP with this client, within `limit` s, while inside."""
+    """Have PyVISA-py open HiSLIP with this client, within `limit` s, while inside.
+
+    What the client raises comes out as it is: PyVISA-py would call it all a device that is not present.
+    """
     from pyvisa_py.protocols import hislip
 
+    found: list[Exception] = []
+
     def bounded(
-        ip_addr: str,
-        open_timeout: object = None,
-        timeout: object = None,
-        port: int = PORT,
-        sub_address: str = "hislip0",
+        ip_addr: str, *, port: int = PORT, sub_address: str = "hislip0", **_timeouts: float | None
     ) -> HislipClient:
-        return HislipClient(ip_addr, port, sub_address, limit)
+        try:
+            return HislipClient(ip_addr, port, sub_address, limit)
+        except Exception as problem:
+            found.append(problem)
+            raise
 
     stock = hislip.Instrument
     hislip.Instrument = bounded
     try:
         yield
+    except Exception:
+        if found:
+            raise found[0] from None
+        raise
     finally:
         hislip.Instrument = stock
 
