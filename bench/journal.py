@@ -228,7 +228,7 @@ class Journal:
         if kind == "head":
             self.head = _head(entry)
         elif kind == "steps":
-            self.steps += [step_from(step) for step in entry["steps"]]
+            self._apply_steps([step_from(step) for step in entry["steps"]])
         elif kind == "point":
             self._apply_point(entry)
         elif kind == "alarm":
@@ -242,6 +242,11 @@ class Journal:
             self.end = _whole(entry, ended=str, run=str, digest=str)
         else:
             raise ValueError(f"unknown entry {kind!r}")
+
+    def _apply_steps(self, steps: list[Step]) -> None:
+        if [step.index for step in steps] != list(range(len(self.steps), len(self.steps) + len(steps))):
+            raise ValueError("a batch of steps that does not follow the one before: a line was lost or doubled")
+        self.steps += steps
 
     def _apply_point(self, entry: dict[str, Any]) -> None:
         point = point_from(entry["point"])
