@@ -13,7 +13,7 @@ from bandproof.bench.errors import BadInput
 from bandproof.bench.plan import Planner
 from bandproof.bench.rehearsal import DEMO_BENCH, DEMO_BOARD, demo_board, demo_text, rehearsal_bench
 from bandproof.drivers.clock import RealClock
-from bandproof.drivers.dialect import Dialect, GeneratorDialect, ScopeDialect, load, shipped, source
+from bandproof.drivers.dialect import Dialect, GeneratorDialect, ScopeDialect, SwitchDialect, load, shipped, source
 from bandproof.drivers.errors import InstrumentProblem
 from bandproof.drivers.generator import Generator
 from bandproof.drivers.link import Link
@@ -103,7 +103,7 @@ def _used(dialect: Dialect) -> None:
         scope.set_channel(2, range=1.0)
         scope.set_record(0.02, 2048)
         scope.acquire()
-    else:
+    elif isinstance(dialect, SwitchDialect):
         switch = Switch(session, dialect)
         switch.identify()
         switch.close("101")
