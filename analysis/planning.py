@@ -15,7 +15,15 @@ from numpy.typing import ArrayLike
 from bandproof.analysis.network import Network, response, state_space
 from bandproof.analysis.types import ComplexArray, FloatArray
 
-__all__ = ["RecordPlan", "band_frequencies", "dwell_after_step", "mains_clearance", "plan_record", "shift_from_mains"]
+__all__ = [
+    "RecordPlan",
+    "band_frequencies",
+    "dwell_after_step",
+    "folds_near",
+    "mains_clearance",
+    "plan_record",
+    "shift_from_mains",
+]
 
 _DETUNINGS = (-2.5, -1.4, -0.9, -0.63, -0.4, 0.0, 0.4, 0.63, 0.9, 1.4, 2.5)
 _MAINS_ORDERS = np.arange(1, 6)  # mains and the harmonics 2 to 5 that a sine fit takes along
@@ -104,6 +112,22 @@ def plan_record(
             f"move it away from the harmonics of {mains:g} Hz or allow longer records"
         )
     return RecordPlan(duration, max(points, int(np.ceil(20 * frequency * duration - 1e-9))))
+
+
+def folds_near(frequency: float, sample_interval: float, points: int, *, highest: int = 9) -> bool:
+    """Whether a harmonic up to the 9th, folded at half the sampling rate, falls within 1/T of the tone.
+
+    Scopes have no anti-alias filter: a folded harmonic would be taken for the tone.
+
+    Examples
+    --------
+    >>> folds_near(1000.0, 1 / 8000.0, 800), folds_near(1000.0, 1 / 20500.0, 2050)
+    (True, False)
+    """
+    rate = 1.0 / sample_interval
+    order = np.arange(2, highest + 1)
+    folded = np.abs((order * frequency + 0.5 * rate) % rate - 0.5 * rate)
+    return bool((np.abs(folded - frequency) < rate / points).any())
 
 
 def dwell_after_step(

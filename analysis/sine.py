@@ -215,14 +215,29 @@ def halves(
 
 
 def distortion(
-    volts: ArrayLike, sample_interval: float, frequency: float, *, orders: tuple[int, ...] = (2, 3, 4, 5)
+    volts: ArrayLike,
+    sample_interval: float,
+    frequency: float,
+    *,
+    nuisance: ArrayLike = (),
+    drift: bool = False,
+    orders: tuple[int, ...] = (2, 3, 4, 5),
 ) -> FloatArray:
     """Return, per channel, the rms of the fitted harmonics over the fundamental, (C,).
 
-    Harmonics at or above half the sampling rate are left out: they could not be told from others.
+    Harmonics at or above half the sampling rate are left out, and those that the record cannot tell from a nuisance
+    tone: they could be something else.
     """
-    kept = [order for order in orders if order * frequency < 0.5 / sample_interval]
-    fit = fit_sines(volts, sample_interval, [frequency * order for order in (1, *kept)])
+    others = np.atleast_1d(np.asarray(nuisance, dtype=np.float64))
+    resolution = 1.0 / (sample_interval * np.shape(np.atleast_2d(volts))[1])
+    kept = [
+        order
+        for order in orders
+        if order * frequency < 0.5 / sample_interval
+        and not (np.abs(others - order * frequency) < 0.999 * resolution).any()
+    ]
+    tones = [frequency * order for order in (1, *kept)]
+    fit = fit_sines(volts, sample_interval, tones, nuisance=others, drift=drift)
     size = np.abs(fit.phasor)
     ratio: FloatArray = np.sqrt((size[:, 1:] ** 2).sum(axis=1)) / size[:, 0]
     return ratio

@@ -94,6 +94,7 @@ def _bench(top: Table, text: str, folder: Path) -> Bench:
     frequency = generator.quantity("frequency_accuracy", "relative")
     channel_gain = scope.quantity("channel_gain_accuracy", "relative")
     channel_skew = scope.quantity("channel_skew", "time", _USUAL_SKEW)
+    linearity = scope.quantity("linearity", "steps", 0.0, positive=False)
     instruments = {
         "generator": _instrument("generator", generator, folder),
         "scope": _instrument("scope", scope, folder),
@@ -109,6 +110,7 @@ def _bench(top: Table, text: str, folder: Path) -> Bench:
         probe_factors=_probes(top.table("probes")),
         channel_gain=channel_gain,
         channel_skew=channel_skew,
+        linearity=linearity,
         generator_frequency=frequency,
         visa_library=visa_library,
         clock=str(folder / clock) if clock else None,

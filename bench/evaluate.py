@@ -19,15 +19,18 @@ __all__ = ["StageFit", "evaluate", "fit_points", "usable", "views"]
 
 LEAST_LSB = 20.0  # peak; below, quantization is not white and costs 2.5 to 5 times the fit's own variance
 MODEL = "band+delay"
+_SPOILED = {"overload", "undersampled", "folded"}
 _FEWEST = 3  # points: five unknowns, two data a point, and one to judge the fit by
 
 
 def usable(points: Sequence[Point]) -> tuple[Point, ...]:
-    """Return the points that may enter a fit: curve points without overload, both channels at least 20 LSB peak."""
+    """Return the points of one stage that may enter a fit: of its curve, at its last level, sound and large enough."""
+    curve = [point for point in points if point.purpose in ("curve", "closing")]
+    level = min((point.amplitude for point in curve), default=0.0)  # the last one, where distortion asked for less
     return tuple(
         point
-        for point in points
-        if point.purpose in ("curve", "closing") and "overload" not in point.flags and _is_large(point)
+        for point in curve
+        if not _SPOILED & set(point.flags) and _is_large(point) and point.amplitude <= 1.01 * level
     )
 
 
@@ -169,7 +172,8 @@ def views(run: Run, stages: Sequence[StageResult]) -> list[StageView]:
     """Return what the picture draws: every stage that has a fit, over three decades around the designed centres."""
     fitted = [stage for stage in stages if stage.theta]
     centres = [stage.figures["centre"].designed for stage in fitted]
-    measured = [point.frequency for point in usable(run.points)]
+    by_stage = [[point for point in run.points if point.stage == stage.name] for stage in fitted]
+    measured = [point.frequency for points in by_stage for point in usable(points)]
     if not fitted:
         return []
     grid = np.geomspace(min(*centres, *measured) / 1.5, max(*centres, *measured) * 1.5, 400)

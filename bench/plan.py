@@ -12,6 +12,7 @@ from bandproof.analysis.types import FloatArray
 from bandproof.bench.circuit import Prediction, predict, predicted_response, stage_network, taps
 from bandproof.bench.errors import BadInput
 from bandproof.bench.evaluate import fit_points
+from bandproof.bench.record import HUM_BELOW, hum_frequencies
 from bandproof.bench.types import Bench, Board, Point, Purpose, Stage, Step, Tone
 
 __all__ = ["Planner", "greatest_level"]
@@ -23,6 +24,7 @@ SWING_SHARE, SLEW_SHARE = 0.5, 0.25  # no op-amp output beyond these shares of w
 _QUIET_SAMPLES = 2048
 _MOVED = log(1.15)  # a centre further than this from where it was looked for is looked at again; arbitrary
 _MOST_BATCHES = 3
+_BACK_OFF = 0.5  # 6 dB, when a record is distorted
 _FAINT = 0.17  # of the range, the loudest point's level: the skirts then fall below 20 of 128 steps
 _OVERHEAD = 0.03  # s a record costs beyond dwell and duration, for the time left; arbitrary
 
@@ -88,17 +90,22 @@ class Planner:
         # Far below the range although the first look did not say so: once more on a range that fits.
         loudest = max(point.levels[1] / point.ranges[1] for point in last)
         faint = not overloaded and loudest < _FAINT
+        distorted = any("distorted" in point.flags for point in last)
         found = self._predictions[stage.name]
         if fitted is not None:
             found = Prediction(float(fitted.f0[0]), float(fitted.q[0]), float(abs(fitted.gain[0])))
             scale = 1.0
         moved = fitted is not None and abs(log(found.centre / looked_at)) > _MOVED
-        if not (moved or overloaded or faint) or not 0.1 < found.centre / stage.limits["centre"].designed < 10.0:
+        if (
+            not (moved or overloaded or faint or distorted)
+            or not 0.1 < found.centre / stage.limits["centre"].designed < 10.0
+        ):
             return ()
         widen = 2.5**batches if overloaded else 1.0
         if faint and fitted is None:
             scale *= loudest
-        return self._curve(stage, found, scale, widen, first, last[-1].frequency, 1.0)
+        part = min(1.0, last[-1].amplitude / self._levels[stage.name]) * (_BACK_OFF if distorted else 1.0)
+        return self._curve(stage, found, scale, widen, first, last[-1].frequency, 1.0 / part, part)
 
     def _first_look(self, stage: Stage, prediction: Prediction, first: int) -> tuple[Step, ...]:
         level, low = self._levels[stage.name], LOW_LEVEL * self._levels[stage.name]
@@ -122,12 +129,14 @@ class Planner:
         first: int,
         before: float,
         before_level: float,
+        part: float = 1.0,
     ) -> tuple[Step, ...]:
         """Return the points round a band and the closing point, which repeats the first.
 
-        Until then the generator is at the frequency and the part of the level given as ``before``.
+        Until then the generator is at the frequency and the part of the level given as ``before``; ``part`` of the
+        stage's level is used.
         """
-        level, swing = self._levels[stage.name], self._board.op_amp.swing
+        level, swing = part * self._levels[stage.name], self._board.op_amp.swing
         # No op-amp gives more than its swing, whatever a fit or a first look says.
         ranges = (HEADROOM * level * widen, HEADROOM * min(swing, level * at.gain * scale * widen))
         frequencies = self._clear_of_mains(band_frequencies([at.centre], [at.q])[0])
@@ -172,6 +181,8 @@ class Planner:
                 duration=duration,
                 previous=before,
                 previous_level=part,
+                nuisance=hum_frequencies(frequency, duration, self._bench.mains),
+                drift=frequency < HUM_BELOW,
             )
         return self._dwells[key]
 

@@ -12,7 +12,17 @@ from typing import Literal
 __all__ = ["Kind", "QuantityError", "engineering", "read_quantity", "read_tolerance", "shown", "with_uncertainty"]
 
 Kind = Literal[
-    "frequency", "resistance", "capacitance", "voltage", "time", "slew", "gain", "relative", "tolerance", "number"
+    "frequency",
+    "resistance",
+    "capacitance",
+    "voltage",
+    "time",
+    "slew",
+    "gain",
+    "relative",
+    "tolerance",
+    "steps",
+    "number",
 ]
 
 _MEGA = {"": 1.0, "k": 1e3, "M": 1e6, "G": 1e9}
@@ -36,6 +46,7 @@ _UNITS: dict[Kind, dict[str, float]] = {
     "gain": {"dB": math.nan, "V/V": 1.0},
     "relative": _RELATIVE,
     "tolerance": {"dB": math.nan, **_RELATIVE},
+    "steps": {"LSB": 1.0},
     "number": {"": 1.0},
 }
 _EXAMPLES: dict[Kind, str] = {
@@ -48,6 +59,7 @@ _EXAMPLES: dict[Kind, str] = {
     "gain": '"10 dB" or "3.16 V/V"',
     "relative": '"5 %" or "20 ppm"',
     "tolerance": '"6 %" or "1 dB"',
+    "steps": '"0.5 LSB"',
     "number": "1.5",
 }
 _CODE: dict[Kind, dict[str, float]] = {
@@ -57,6 +69,9 @@ _CODE: dict[Kind, dict[str, float]] = {
 _NUMBER = re.compile(r"([+-]?[0-9]+(?:\.[0-9]+)?(?:[eE][+-]?[0-9]+)?)\s*(\S*)")  # \d would read every script's digits
 _CODED = re.compile(r"(?=.*[0-9])([0-9]*)([A-Za-zµμ])([0-9]*)")
 _SHOWN = 60  # characters of what was found that a message repeats; arbitrary
+
+
+_LEAST, _MOST = 1e-30, 1e30  # SI; arbitrary, a slip of the pen beyond any bench, and squares stay finite
 
 
 class QuantityError(ValueError):
@@ -127,7 +142,7 @@ def _scaled(number: float, unit: str, written: str, kind: Kind) -> float:
 def _times(number: float, factor: float, written: str, kind: Kind) -> float:
     # Dividing by an exact power of ten keeps 4.7 nF the nearest number to 4.7e-9; multiplying by 1e-9 does not.
     value = number / round(1.0 / factor) if factor < 1.0 else number * factor
-    if not math.isfinite(value):
+    if value != 0.0 and not _LEAST <= abs(value) <= _MOST:
         raise _out_of_range(written, kind)
     return value
 

@@ -4,13 +4,15 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from bandproof.analysis.planning import folds_near
 from bandproof.analysis.sine import SineFit, channel_ratio, distortion, fit_clock_and_sines, fit_sines, halves
 from bandproof.analysis.types import FloatArray
 from bandproof.bench.types import Point, Step
 
 __all__ = ["Taken", "hum_frequencies", "point_of"]
 
-HUM_BELOW = 1e3  # Hz; above, mains harmonics 2-5 are too far away to matter
+HUM_BELOW = 1e3  # Hz; above, mains harmonics 2-5 and the slopes of coupling corners are too far away to matter
+_SLOWEST_SAMPLING = 20.0  # samples a period, at least
 _HUM_HARMONICS = 5
 _LEFT_OVER, _LEFT_STEPS = 0.05, 3.0  # of the level, and steps of the converter; arbitrary, ten times what noise leaves
 _CLOCK_OFF = 1e-3  # relative; no crystal is that wrong
@@ -49,15 +51,14 @@ def hum_frequencies(frequency: float, duration: float, mains: float) -> FloatArr
     return harmonics[apart] if duration * mains >= 1.0 else np.zeros(0)
 
 
-def point_of(step: Step, taken: Taken, mains: float) -> Point:
+def point_of(step: Step, taken: Taken, mains: float, linearity: float = 0.0) -> Point:
     """Return the point a record gives.
 
-    A record without signal gives levels and response 0; offsets and residuals are its content.
+    A record without signal gives levels and response 0; offsets and residuals are its content. ``linearity`` is the
+    half-width of the converter's departure from a straight line in steps: no point is surer than that, whatever its
+    noise says.
     """
-    duration = taken.sample_interval * taken.volts.shape[1]
-    return (
-        _signal(step, taken, hum_frequencies(taken.frequency, duration, mains)) if step.tones else _quiet(step, taken)
-    )
+    return _signal(step, taken, mains, linearity) if step.tones else _quiet(step, taken)
 
 
 def _quiet(step: Step, taken: Taken) -> Point:
@@ -65,14 +66,22 @@ def _quiet(step: Step, taken: Taken) -> Point:
     return _point(step, taken, 0j, (0.0, 0.0, 0.0), (0.0, 0.0), _pair(means), _pair(residuals), 0.0, 0.0, ())
 
 
-def _signal(step: Step, taken: Taken, hum: FloatArray) -> Point:
-    fit = fit_sines(taken.volts, taken.sample_interval, [taken.frequency], nuisance=hum)
+def _signal(step: Step, taken: Taken, mains: float, linearity: float) -> Point:
+    samples, tone = taken.volts.shape[1], taken.frequency
+    hum, drift = hum_frequencies(tone, taken.sample_interval * samples, mains), tone < HUM_BELOW
+    fit = fit_sines(taken.volts, taken.sample_interval, [tone], nuisance=hum, drift=drift)
     ratio = channel_ratio(fit)
-    covariance = ratio.covariance[0]
-    settling = halves(taken.volts, taken.sample_interval, [taken.frequency], nuisance=hum).of_ratio()
+    covariance = ratio.covariance[0] + _floor(ratio.value[0], fit, taken, linearity)
+    settling = halves(taken.volts, taken.sample_interval, [tone], nuisance=hum, drift=drift).of_ratio()
     moved = float((np.abs(settling.difference) / settling.threshold).max())
-    harmonics = float(distortion(taken.volts, taken.sample_interval, taken.frequency)[1])
-    flags = [name for name, seen in (("overload", any(taken.overload)), ("unsettled", not settling.is_settled)) if seen]
+    harmonics = float(distortion(taken.volts, taken.sample_interval, tone, nuisance=hum, drift=drift)[1])
+    seen = {
+        "overload": any(taken.overload),
+        "unsettled": not settling.is_settled,
+        "undersampled": tone * taken.sample_interval * _SLOWEST_SAMPLING > 1.001,
+        "folded": folds_near(tone, taken.sample_interval, samples),
+    }
+    flags = [name for name, is_seen in seen.items() if is_seen]
     if _is_off_frequency(taken, fit):
         flags.append("off-frequency")
     elif harmonics > _DISTORTED and step.purpose != "low-level":
@@ -89,6 +98,16 @@ def _signal(step: Step, taken: Taken, hum: FloatArray) -> Point:
         moved,
         tuple(flags),
     )
+
+
+def _floor(ratio: complex, fit: SineFit, taken: Taken, linearity: float) -> FloatArray:
+    """Return the covariance (2, 2) that the converters' linearity puts under a point's.
+
+    A departure within ± linearity steps, uniform, may stand in either phasor, in any direction.
+    """
+    relative = linearity * np.array(taken.lsb) / np.abs(fit.phasor[:, 0])
+    floor: FloatArray = abs(ratio) ** 2 * float((relative**2).sum()) / 3.0 * np.eye(2)
+    return floor
 
 
 def _is_off_frequency(taken: Taken, fit: SineFit) -> bool:

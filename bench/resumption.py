@@ -34,14 +34,24 @@ def unfinished(folder: Path) -> Path:
             raise BadInput(f"{folder}: this run is complete, there is nothing to resume")
         return folder
     journals = [path.parent for path in sorted(folder.rglob(JOURNAL))] if folder.is_dir() else []
-    found = [place for place in journals if not _is_complete(place)]
+    begun = [place for place in journals if _has_begun(place)]
+    found = [place for place in begun if not _is_complete(place)]
     if not found:
-        why = "every run in it is complete" if journals else "no run was begun in it"
+        why = "every run in it is complete" if begun else "no run was begun in it"
         raise BadInput(f"{folder}: {f'nothing to resume, {why}' if folder.exists() else 'there is no such folder'}")
     if len(found) > 1:
         listed = "\n".join(f"  {place}" for place in found)
         raise BadInput(f"{folder}: several runs are unfinished, name one:\n{listed}")
     return found[0]
+
+
+def _has_begun(folder: Path) -> bool:
+    """Whether a journal's first line is whole; without it nothing was measured."""
+    try:
+        Journal.peeked(folder)
+    except BadInput:
+        return False
+    return True
 
 
 def _is_complete(folder: Path) -> bool:

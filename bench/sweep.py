@@ -183,7 +183,7 @@ class Sweep:
         """Take a step's record, again while it has not settled, at most `repeats` times more."""
         for attempt in range(first, first + self.repeats + 1):
             taken = self._taken(step, stage, attempt)
-            point = point_of(step, taken, self.bench.mains)
+            point = point_of(step, taken, self.bench.mains, self.bench.linearity)
             wrong = frequency_problem(point) or level_problem(stage, self._low_level(step), point)
             if "unsettled" not in point.flags and not wrong:
                 return point, taken.volts

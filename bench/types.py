@@ -133,7 +133,7 @@ class Bench:
     """A bench: instruments, wiring, ceilings and what is declared about its accuracy.
 
     ``channel_gain`` and ``generator_frequency`` are half-widths of rectangular distributions (relative),
-    ``channel_skew`` that of each channel's delay in s.
+    ``channel_skew`` that of each channel's delay in s, ``linearity`` that of the converter in its steps.
     """
 
     title: str
@@ -144,6 +144,7 @@ class Bench:
     probe_factors: Mapping[int, float]
     channel_gain: float
     channel_skew: float
+    linearity: float
     generator_frequency: float
     visa_library: str
     clock: str | None
