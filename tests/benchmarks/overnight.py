@@ -1,4 +1,4 @@
-"""An hour of bench time, board after board, while instruments fail at one step in 50: what it measures is still true."""
+"""An hour of bench time, board after board, while instruments fail at one step in 50: its figures are still true."""
 
 from __future__ import annotations
 
@@ -68,9 +68,7 @@ class Night:
         print(f"complete {self.complete} = {share:.1%} (bound {COMPLETE:.0%}), cut short {len(self.cut_short)}")
         for reason in self.cut_short:
             print(f"  {reason}")
-        print(
-            f"worst |error|/u of {self.figures} figures {self.worst:.2f} (bound {FURTHEST:g}), beyond {len(self.beyond)}"
-        )
+        print(f"worst |error|/u of {self.figures} figures {self.worst:.2f} (bound {FURTHEST:g})")
         for text in (*self.beyond, *self.dishonest):
             print(f"  WRONG {text}")
 
