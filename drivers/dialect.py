@@ -17,12 +17,14 @@ __all__ = [
     "ScopeDialect",
     "SupplyDialect",
     "SwitchDialect",
+    "blanks",
     "load",
     "parse",
     "shipped",
     "source",
 ]
 
+_BLANK = "blank-"
 _KINDS: dict[str, type[Any]] = {
     "generator": GeneratorDialect,
     "scope": ScopeDialect,
@@ -32,20 +34,29 @@ _KINDS: dict[str, type[Any]] = {
 
 
 def shipped() -> tuple[str, ...]:
-    """Return the names of the dialects that come with the program."""
+    """Return the names of the dialects that come with the program and can be used as they are."""
+    return tuple(name for name in _files() if not name.startswith(_BLANK))
+
+
+def blanks() -> tuple[str, ...]:
+    """Return the names of the blank dialects that come with the program, to be filled in."""
+    return tuple(name for name in _files() if name.startswith(_BLANK))
+
+
+def _files() -> list[str]:
     folder = resources.files("bandproof.drivers.dialects")
-    return tuple(sorted(entry.name.removesuffix(".toml") for entry in folder.iterdir() if entry.name.endswith(".toml")))
+    return sorted(entry.name.removesuffix(".toml") for entry in folder.iterdir() if entry.name.endswith(".toml"))
 
 
 def source(name_or_path: str | Path) -> str:
-    """Return the text of a dialect: a shipped one by its name, else a file.
+    """Return the text of a dialect: a shipped or blank one by its name, else a file.
 
     Raises
     ------
     DialectMistakes
         There is no such dialect; names the nearest.
     """
-    if str(name_or_path) in shipped():
+    if str(name_or_path) in _files():
         return (resources.files("bandproof.drivers.dialects") / f"{name_or_path}.toml").read_text(encoding="utf-8")
     try:
         return Path(name_or_path).read_text(encoding="utf-8")

@@ -20,10 +20,10 @@ def command(folder: Path) -> int:
       bandproof rehearse my-board/talkback.board.toml
     """
     from bandproof.bench.rehearsal import DEMO_BENCH, DEMO_BOARD, demo_text
-    from bandproof.drivers.dialect import shipped, source
+    from bandproof.drivers.dialect import blanks, shipped, source
 
     texts = {name: demo_text(name) for name in (DEMO_BOARD, DEMO_BENCH)}
-    texts |= {f"{name}.toml": source(name) for name in shipped()}
+    texts |= {f"{name}.toml": source(name) for name in (*shipped(), *blanks())}
     there = [name for name in texts if (folder / name).exists()]
     if there:
         raise BadInput(f"{folder} already has {', '.join(there)}: nothing was written; name another folder")

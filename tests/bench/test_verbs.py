@@ -119,6 +119,7 @@ def test_begin_writes_files_that_rehearse_as_they_are(console, tmp_path):
     assert code == 0
     written = sorted(folder.iterdir())
     assert {path.name for path in written} >= {"talkback.board.toml", "simulated.bench.toml", "scpi99-generator.toml"}
+    assert {path.name for path in written} >= {f"blank-{kind}.toml" for kind in ("generator", "scope", "switch", "supply")}
     assert all(str(path) in out for path in written)
     assert all(any(line.startswith("#") for line in path.read_text().splitlines()) for path in written)
     code, out, _ = console("rehearse", folder / "talkback.board.toml", "--folder", tmp_path / "r")
@@ -404,7 +405,9 @@ def test_a_fault_of_the_scope_that_passes_costs_a_repeat_and_no_verdict(console,
     bench = served(Fault(name, 4))
     code, out, _ = bench.sweep(console)
     assert code == PASS
-    assert re.search(r"^note: low: the scope .* reopened and measured again$", " ".join(out.split("\n  ")), re.MULTILINE)
+    assert re.search(
+        r"^note: low: the scope .* reopened and measured again$", " ".join(out.split("\n  ")), re.MULTILINE
+    )
     assert bench.ask_generator(b"OUTP?") == b"0\n"
 
 
