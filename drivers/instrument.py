@@ -5,9 +5,10 @@ from __future__ import annotations
 import math
 import re
 from collections.abc import Callable
+from contextlib import suppress
 from typing import Any, TypeVar
 
-from bandproof.drivers.errors import BeyondLimits, InstrumentProblem, SettingRefused
+from bandproof.drivers.errors import BeyondLimits, InstrumentError, InstrumentProblem, SettingRefused
 from bandproof.drivers.scpi import ErrorEntry, parse_number, split_fields
 from bandproof.drivers.session import Session, as_text
 from bandproof.drivers.slots import Choice, Identity, Number, Toggle
@@ -64,6 +65,8 @@ class Instrument:
         if not query:
             return None
         try:
+            with suppress(InstrumentError):  # what was in its queue before we came tells nothing of its kind
+                self.check_errors()
             self.session.ask(query, as_text)
             self.check_errors()
         except InstrumentProblem as problem:
