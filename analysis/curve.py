@@ -85,10 +85,11 @@ def curve_figures(curve: Curve, low: float, high: float, *, count: int = 1) -> C
     top = level(peak[:, None])[:, 0]
 
     def over_half(at: FloatArray) -> FloatArray:
-        height: FloatArray = level(at[:, None])[:, 0] - top + 0.5 * np.log(2.0)
+        height: FloatArray = level(at) - top[:, None] + 0.5 * np.log(2.0)
         return height
 
-    f_low, f_high = np.exp(_root(over_half, *left)), np.exp(_root(over_half, *right))
+    edges = [np.stack(pair, axis=1) for pair in zip(left, right, strict=True)]
+    f_low, f_high = np.exp(_root(over_half, *edges)).T
     f0 = np.exp(peak)
     return CurveFigures(f0=f0, q=f0 / (f_high - f_low), gain=np.exp(top), f_low=f_low, f_high=f_high)
 

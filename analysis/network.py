@@ -6,7 +6,7 @@ state space and the modes in `dynamics`; both are offered here too.
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 
 import numpy as np
 from numpy.typing import ArrayLike
@@ -100,14 +100,13 @@ def _part_values(network: Network, values: Mapping[str, FloatArray]) -> tuple[Fl
     columns = {name: np.atleast_1d(np.asarray(value, dtype=float)) for name, value in values.items()}
     count = len(np.broadcast_arrays(np.zeros(1), *columns.values())[0])
 
-    def table(names: Iterable[str]) -> FloatArray:
-        return np.array([np.broadcast_to(columns.get(n, known[n]), count) for n in names]).reshape(-1, count).T
+    def table(parts: Sequence[Resistor | Capacitor | OpAmp]) -> FloatArray:
+        column = np.empty((count, len(parts)))
+        for i, part in enumerate(parts):
+            column[:, i] = columns.get(part.name, known[part.name])
+        return column
 
-    return (
-        1 / table(part.name for part in network.resistors),
-        table(part.name for part in network.capacitors),
-        1 / table(part.name for part in network.opamps),
-    )
+    return 1 / table(network.resistors), table(network.capacitors), 1 / table(network.opamps)
 
 
 def _nodal_matrix(

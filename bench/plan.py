@@ -45,6 +45,7 @@ class Planner:
         self._predictions = {stage.name: _predicted(board, stage) for stage in board.stages}
         self._levels = {s.name: greatest_level(board, bench, s, self._predictions[s.name]) for s in board.stages}
         self._costs: dict[str, list[float]] = {}
+        self._finished: dict[str, int] = {}  # points after which a stage needed no more, so that it is not fitted again
         self._dwells: dict[tuple[str, float, float | None, float], float] = {}
         for stage in board.stages:  # now, so that what cannot be planned is told before anything is driven
             self._seconds(stage)
@@ -53,8 +54,11 @@ class Planner:
         """Return the next batch of steps; empty when every stage has what it needs."""
         for stage in self._board.stages:
             had = [point for point in points if point.stage == stage.name]
+            if self._finished.get(stage.name) == len(had):
+                continue
             if steps := self._stage_steps(stage, had, first=len(points)):
                 return steps
+            self._finished[stage.name] = len(had)
         return ()
 
     def seconds_left(self, points: Sequence[Point]) -> float:
