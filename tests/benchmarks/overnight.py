@@ -12,6 +12,7 @@ from pathlib import Path
 
 from bandproof.bench.board_file import parse_board
 from bandproof.bench.circuit import predict
+from bandproof.bench.errors import BenchProblem
 from bandproof.bench.finish import Outcome
 from bandproof.bench.job import Job
 from bandproof.bench.operator import Absent
@@ -20,6 +21,7 @@ from bandproof.bench.stop import Stop
 from bandproof.bench.types import QUANTITIES, Bench, Board, StageResult
 from bandproof.bench.verbs.rehearse import Rehearsal, simulated
 from bandproof.drivers.clock import VirtualClock
+from bandproof.drivers.errors import InstrumentProblem
 from bandproof.simulated_instruments.bench import World
 from bandproof.simulated_instruments.faults import CONDITIONS, NAMES, PLACES, Fault
 
@@ -84,11 +86,22 @@ def measured(*, hours: float, most_boards: int, seed: int, folder: Path) -> Nigh
         place = folder / f"TB-{number:04d}" / "1"
         place.mkdir(parents=True)
         with simulated(world, bench) as (reachable, _), closing(_clock(reachable)) as clock:
-            outcome = _job(board, reachable, place, clock, number).carry_out()
+            outcome = _carried_out(_job(board, reachable, place, clock, number))
             night.bench_seconds += clock.now()
+        if isinstance(outcome, Exception):  # before the first record a failure is told at once, for the one who began
+            night.boards += 1
+            night.cut_short.append(f"TB-{number:04d}: not begun: {outcome}")
+            continue
         night.drawn += sum(fault.step < len(outcome.run.points) for fault in faults)
         _account(night, board, outcome, world, Rehearsal(1000 * seed + number).drawn(board))
     return night
+
+
+def _carried_out(job: Job) -> Outcome | InstrumentProblem | BenchProblem:
+    try:
+        return job.carry_out()
+    except (InstrumentProblem, BenchProblem) as problem:
+        return problem
 
 
 def _clock(bench: Bench) -> VirtualClock:
