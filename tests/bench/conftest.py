@@ -95,9 +95,19 @@ def one_band_text() -> str:
 
 
 @pytest.fixture(scope="session")
-def two_band_text() -> str:
-    """The text of a board file with the demo's two lowest stages."""
-    return band_text(2)
+def two_band_path(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """A board file with the demo's two lowest stages."""
+    path = tmp_path_factory.mktemp("board") / "two.board.toml"
+    path.write_text(band_text(2))
+    return path
+
+
+@pytest.fixture(scope="session")
+def three_band_path(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """A board file with the demo's three lowest stages."""
+    path = tmp_path_factory.mktemp("board") / "three.board.toml"
+    path.write_text(band_text(3))
+    return path
 
 
 @pytest.fixture(scope="session")

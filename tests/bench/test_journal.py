@@ -498,7 +498,8 @@ def test_a_write_that_fails_leaves_a_journal_that_opens_with_what_was_whole(tmp_
         "folder = Path(sys.argv[1]); journal = Journal.opened(folder)\n"
         "size = (folder / 'journal.txt').stat().st_size\n"
         "resource.setrlimit(resource.RLIMIT_FSIZE, (size + 20, size + 20))\n"
-        "try:\n    journal.planned([replace(journal.steps[0], index=2)])\nexcept OSError as problem:\n    print('told', problem.errno)\n"
+        "try:\n    journal.planned([replace(journal.steps[0], index=2)])\n"
+        "except OSError as problem:\n    print('told', problem.errno)\n"
         "journal.close(); print('closed')"
     )
     states = written(tmp_path)

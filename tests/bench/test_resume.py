@@ -36,17 +36,10 @@ def console(capsys):
 
 
 @pytest.fixture(scope="module")
-def board_path(tmp_path_factory, two_band_text):
-    path = tmp_path_factory.mktemp("board") / "two.board.toml"
-    path.write_text(two_band_text)
-    return path
-
-
-@pytest.fixture(scope="module")
-def unbroken(board_path, tmp_path_factory):
+def unbroken(two_band_path, tmp_path_factory):
     """The attempt's folder of a run that nothing stopped, its records kept."""
     folder = tmp_path_factory.mktemp("unbroken")
-    assert run(["rehearse", str(board_path), "--seed", str(SEED), "--raw", "--folder", str(folder)]) == PASS
+    assert run(["rehearse", str(two_band_path), "--seed", str(SEED), "--raw", "--folder", str(folder)]) == PASS
     return folder / f"rehearsal-{SEED}" / "1"
 
 
@@ -141,8 +134,10 @@ def test_a_resumed_run_file_equals_an_unbroken_one_in_all_but_its_history(consol
 
 
 @pytest.mark.parametrize("step", [0, 15])
-def test_a_run_whose_disk_was_full_goes_on_and_ends_as_an_unbroken_one(console, board_path, unbroken, tmp_path, step):
-    begin = ("rehearse", board_path, "--seed", SEED, "--raw", "--folder", tmp_path)
+def test_a_run_whose_disk_was_full_goes_on_and_ends_as_an_unbroken_one(
+    console, two_band_path, unbroken, tmp_path, step
+):
+    begin = ("rehearse", two_band_path, "--seed", SEED, "--raw", "--folder", tmp_path)
     code, told = console(*begin, "--fault", f"disk-full@{step}")
     place = tmp_path / f"rehearsal-{SEED}" / "1"
     assert code == BENCH_FAULT
@@ -278,6 +273,8 @@ def test_several_unfinished_runs_are_listed_and_none_is_touched(console, unbroke
 def test_the_only_unfinished_run_below_a_folder_is_found_among_complete_ones(console, unbroken, tmp_path):
     shutil.copytree(unbroken, tmp_path / "C" / "1")
     place = cut_after(unbroken, tmp_path / "A" / "1", 22)
+    (tmp_path / "B" / "1").mkdir(parents=True)
+    (tmp_path / "B" / "1" / JOURNAL).write_bytes(b"")  # killed before anything was measured
     code, told = console("resume", tmp_path)
     assert code == PASS
     assert f"resuming {place}" in told
@@ -301,8 +298,8 @@ def test_nothing_to_resume_is_exit_2_with_the_reason(console, unbroken, tmp_path
 # --- cut short ---
 
 
-def test_a_run_cut_short_is_completed_once_the_bench_is_mended(console, board_path, unbroken, tmp_path):
-    begin = ("rehearse", board_path, "--seed", SEED, "--raw", "--folder", tmp_path)
+def test_a_run_cut_short_is_completed_once_the_bench_is_mended(console, two_band_path, unbroken, tmp_path):
+    begin = ("rehearse", two_band_path, "--seed", SEED, "--raw", "--folder", tmp_path)
     assert console(*begin, "--fault", "open-output@8")[0] == BENCH_FAULT
     place = tmp_path / f"rehearsal-{SEED}" / "1"
     code, told = console("resume", place)

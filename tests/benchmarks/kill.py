@@ -217,6 +217,7 @@ class Tally:
     """What a number of kills came to."""
 
     kills: int = 0
+    were_on: int = 0
     points: int = 0
     lost: int = 0
     unreadable: int = 0
@@ -246,6 +247,7 @@ class Aftermath:
     def of_kill(self, controller: Controller, folder: Path) -> None:
         """Look at what a killed controller left; `folder` is its attempt's."""
         before = {self.bench.server.process.pid, os.getpid()}
+        self.tally.were_on += self.bench.is_on()
         off = self.bench.seconds_until_off()
         self.tally.kills += 1
         self.tally.off.append(off)
@@ -352,6 +354,7 @@ def main(count: int = COUNT) -> bool:
         f"{tally.kills} kills of {count} runs: " + ", ".join(f"{n} {when}" for when, n in sorted(tally.during.items()))
     )
     print(f"{tally.points} points finished before a kill, {tally.lost} lost (bound 0)")
+    print(f"output still seen on after {tally.were_on} kills")
     print(f"unreadable files {tally.unreadable}, failed resumes {tally.failed_resumes} (bound 0)")
     print(f"generator left on {tally.left_on}, processes left {tally.processes_left} (bound 0)")
     print(
