@@ -75,9 +75,9 @@ class Night:
             print(f"  WRONG {text}")
 
 
-def measured(*, hours: float, most_boards: int, seed: int, folder: Path) -> Night:
+def measured(*, hours: float, most_boards: int, seed: int, folder: Path, bands: int = 2) -> Night:
     """Measure boards until the bench time or the number of boards is reached."""
-    board, night = _board(), Night()
+    board, night = _board(bands), Night()
     bench = rehearsal_bench(board)
     while night.bench_seconds < hours * HOUR and night.boards < most_boards:
         number = night.boards
@@ -109,11 +109,10 @@ def _clock(bench: Bench) -> VirtualClock:
     return VirtualClock(bench.clock, patience=PATIENCE)
 
 
-def _board() -> Board:
+def _board(bands: int) -> Board:
     """Return a slow board, so that some 250 fill an hour: the demo's two lowest bands, 16 times the capacitance."""
-    text = "\n[stages.".join(demo_text(DEMO_BOARD).split("\n[stages.")[:3]) + "\n"
+    text = "\n[stages.".join(demo_text(DEMO_BOARD).split("\n[stages.")[: bands + 1]) + "\n"
     for demo, slow in (("160 Hz", "10 Hz"), ("400 Hz", "25 Hz"), ("33 nF", "528 nF"), ("15 nF", "240 nF")):
-        assert f'"{demo}"' in text
         text = text.replace(f'"{demo}"', f'"{slow}"')
     return parse_board(text, "the night's board")
 
