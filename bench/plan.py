@@ -26,6 +26,7 @@ _MOVED = log(1.15)  # a centre further than this from where it was looked for is
 _MOST_BATCHES = 3
 _BACK_OFF = 0.5  # 6 dB, when a record is distorted
 _FAINT = 0.17  # of the range, the loudest point's level: the skirts then fall below 20 of 128 steps
+_FAINTEST = 0.01  # what is fainter is leakage of a dead stage: no range is asked for it; arbitrary
 _OVERHEAD = 0.03  # s a record costs beyond dwell and duration, for the time left; arbitrary
 
 
@@ -107,7 +108,7 @@ class Planner:
             return ()
         widen = 2.5**batches if overloaded else 1.0
         if faint and fitted is None:
-            scale *= loudest
+            scale *= max(loudest, _FAINTEST)
         part = min(1.0, last[-1].amplitude / self._levels[stage.name]) * (_BACK_OFF if distorted else 1.0)
         return self._curve(stage, found, scale, widen, first, last[-1].frequency, 1.0 / part, part)
 
