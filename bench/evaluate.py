@@ -15,7 +15,7 @@ from bandproof.bench.misfit import StageFit, arrays, look_for_misfit
 from bandproof.bench.picture import StageView
 from bandproof.bench.types import QUANTITIES, UNITS, Bench, Board, Comparison, Point, Quantity, Run, Stage, StageResult
 
-__all__ = ["StageFit", "evaluate", "fit_points", "usable", "views"]
+__all__ = ["StageFit", "evaluate", "evaluate_stage", "fit_points", "usable", "views"]
 
 LEAST_LSB = 20.0  # peak; below, quantization is not white and costs 2.5 to 5 times the fit's own variance
 MODEL = "band+delay"
@@ -68,13 +68,14 @@ def evaluate(run: Run) -> tuple[StageResult, ...]:
     """Return what is concluded about every stage that has points; one without a fit is undecided, and why."""
     measured = {point.stage for point in run.points}
     return tuple(
-        _stage_result(run.board, run.bench, stage, [p for p in run.points if p.stage == stage.name])
+        evaluate_stage(run.board, run.bench, stage, [p for p in run.points if p.stage == stage.name])
         for stage in run.board.stages
         if stage.name in measured
     )
 
 
-def _stage_result(board: Board, bench: Bench, stage: Stage, points: Sequence[Point]) -> StageResult:
+def evaluate_stage(board: Board, bench: Bench, stage: Stage, points: Sequence[Point]) -> StageResult:
+    """Return what is concluded about one stage from its points."""
     found = fit_points(points)
     prediction = predict(board, stage)
     misfit = look_for_misfit(board, bench, stage, points, found)
