@@ -160,8 +160,9 @@ class Controller:
         os.write(self._give, b"g")
 
     def await_halt(self) -> None:
-        """Wait until the controller has halted (AssertionError: it ended)."""
-        while not self._heard.endswith(b"h"):
+        """Wait until the controller has halted, once more each time (AssertionError: it ended)."""
+        byte = b""
+        while byte != b"h":
             ready, _, _ = select.select([self._told], [], [], PATIENCE)
             byte = os.read(self._told, 1) if ready else b""
             assert byte, "the controller ended, or hangs, before the state was reached"
