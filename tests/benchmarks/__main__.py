@@ -1,6 +1,7 @@
 """``python -m tests.benchmarks NAME``: long measurements and ratios, each printing figure, bound and machine."""
 
 import importlib
+import os
 import pkgutil
 import platform
 import sys
@@ -20,6 +21,7 @@ def main(arguments: list[str]) -> int:
     if unknown or not wanted:
         print(f"usage: python -m tests.benchmarks all | NAME...   names: {', '.join(names())}")
         return 2
+    os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")  # as the command line does, before numpy is loaded
     print(f"machine: {platform.machine()}, Python {platform.python_version()}, {platform.system()}")
     good = True
     for name in wanted:
