@@ -36,7 +36,7 @@ class Generator(Instrument):
 
     def __init__(self, session: Session, dialect: GeneratorDialect, *, ceiling: float = math.inf) -> None:
         super().__init__(session, dialect.identity)
-        self._dialect, self._ceiling = dialect, ceiling
+        self.dialect, self._ceiling = dialect, ceiling
         self._amplitude = self._offset = 0.0
         self._driven = False
 
@@ -53,38 +53,44 @@ class Generator(Instrument):
             link.reopen()
         self._remember("output", "", partial(self.output, False), last=True)
         self._forget("output")
-        self._command_and_see(self._dialect.output.off, self._dialect.output.query, self._dialect.output.is_off)
+        self._command_and_see(self.dialect.output.off, self.dialect.output.query, self.dialect.output.is_off)
 
     def set_load(self, load: float) -> float:
         """Tell the load in ohms that amplitudes refer to (inf: the open circuit); return it.
 
-        Amplitude and offset count as unset afterwards: an instrument rescales them.
+        Amplitude and offset count as unset after a change: an instrument rescales them.
 
         Raises
         ------
         ValueError
             The instrument cannot be told, and assumes another load.
         """
-        slot = self._dialect.load
+        slot = self.dialect.load
         if not slot.set:
             if load != slot.fixed:
                 rule = f"load must be {slot.fixed:g} ohm, the dialect has no command for it, got {load!r}"
                 raise self._beyond("load", rule)
             return load
         self._remember("load", "", partial(self.set_load, load))
+        before = self._made.get("load")
+        try:
+            return self._tell_load(load)
+        finally:
+            if self._made.get("load") is not before:
+                self._forget("amplitude", "offset")
+
+    def _tell_load(self, load: float) -> float:
+        slot = self.dialect.load
         if math.isinf(load) and slot.high:
             text = slot.set.format(value=slot.high)
             self._once("load", text, partial(self._command_unread, text))
-            found = load
-        else:
-            found = self._set_number("load", slot, load)
-        self._forget("amplitude", "offset")
-        return found
+            return load
+        return self._set_number("load", slot, load)
 
     def set_sine(self) -> None:
         """Make the output a steady sine."""
         self._remember("sine", "", self.set_sine)
-        shape = self._dialect.shape
+        shape = self.dialect.shape
         for text in shape.sine[:-1]:
             self._once(text, text, partial(self.session.command, text))
         for text in shape.sine[-1:]:
@@ -93,15 +99,15 @@ class Generator(Instrument):
     def set_frequency(self, frequency: float) -> float:
         """Set the frequency in Hz; return the one read back."""
         self._remember("frequency", "", partial(self.set_frequency, frequency))
-        return self._set_number("frequency", self._dialect.frequency, frequency)
+        return self._set_number("frequency", self.dialect.frequency, frequency)
 
     def set_amplitude(self, amplitude: float) -> float:
         """Set the amplitude in V, peak, at the load assumed; return the one read back."""
         self._check_ceiling(amplitude, self._offset)
         self._remember("amplitude", "", partial(self.set_amplitude, amplitude))
-        factor = _PER_PEAK[self._dialect.amplitude.meaning]
+        factor = _PER_PEAK[self.dialect.amplitude.meaning]
         self._amplitude = max(self._amplitude, abs(amplitude))  # until the new one is confirmed
-        found = self._set_number("amplitude", self._dialect.amplitude, amplitude * factor) / factor
+        found = self._set_number("amplitude", self.dialect.amplitude, amplitude * factor) / factor
         self._amplitude = abs(amplitude)
         return found
 
@@ -110,7 +116,7 @@ class Generator(Instrument):
         self._check_ceiling(self._amplitude, offset)
         self._remember("offset", "", partial(self.set_offset, offset))
         self._offset = max(self._offset, abs(offset))
-        found = self._set_number("offset", self._dialect.offset, offset)
+        found = self._set_number("offset", self.dialect.offset, offset)
         self._offset = abs(offset)
         return found
 
@@ -118,7 +124,7 @@ class Generator(Instrument):
         """Turn the output on or off and see it confirmed; `restore` does this last."""
         self._driven = self._driven or on
         self._remember("output", "", partial(self.output, on), last=True)
-        self._set_toggle("output", self._dialect.output, on)
+        self._set_toggle("output", self.dialect.output, on)
 
     def reset(self) -> None:
         """Bring the instrument to its start settings; see `Instrument.reset`."""
@@ -137,7 +143,7 @@ class Generator(Instrument):
         super().restore()
 
     def _telling_query(self) -> str:
-        return self._dialect.output.query
+        return self.dialect.output.query
 
     def _command_unread(self, text: str) -> tuple[ErrorEntry, ...]:
         self.session.command(text)

@@ -13,7 +13,7 @@ from bandproof.drivers.scpi import ErrorEntry, parse_number, split_fields
 from bandproof.drivers.session import Session, as_text
 from bandproof.drivers.slots import Choice, Identity, Number, Toggle
 
-__all__ = ["Instrument"]
+__all__ = ["Instrument", "is_accepted", "spelt", "understood"]
 
 T = TypeVar("T")
 
@@ -153,7 +153,7 @@ class Instrument:
         low, high = number.limits
         if not low <= value <= high:
             raise self._beyond(slot, f"{slot} must be from {low:g} to {high:g} by the dialect, got {value!r}")
-        text = number.set.format(value=_spelt(number, value), channel=channel)
+        text = number.set.format(value=spelt(number, value), channel=channel)
         return self._once(slot + channel, text, lambda: self._set_and_read(number, value, text, channel))
 
     def _set_and_read(self, number: Number, value: float, text: str, channel: str) -> float:
@@ -161,9 +161,9 @@ class Instrument:
         if not number.query:
             self.check_errors()
             return value
-        found = self._read_number(number, channel)
+        found = self.read_number(number, channel)
         self.check_errors()
-        if not _is_accepted(number, value, found):
+        if not is_accepted(number, value, found):
             low, high = number.readback
             accepted = f"{low:.9g} to {high:.9g} times that, or within {number.absolute:g}"
             raise SettingRefused(
@@ -171,9 +171,9 @@ class Instrument:
             )
         return found
 
-    def _read_number(self, number: Number, channel: str = "") -> float:
+    def read_number(self, number: Number, channel: str = "") -> float:
         """Ask for a number and return it in SI."""
-        return self.session.ask(number.query.format(channel=channel), lambda line: _understood(number, line))
+        return self.session.ask(number.query.format(channel=channel), lambda line: understood(number, line))
 
     def _set_choice(self, slot: str, choice: Choice, word: str, channel: str = "") -> None:
         if word not in choice.words:
@@ -207,13 +207,13 @@ class Instrument:
         return text
 
 
-def _spelt(number: Number, value: float) -> str:
+def spelt(number: Number, value: float) -> str:
     """Return a value in SI as the instrument wants it written."""
     theirs = (1 / value if number.reciprocal else value) / number.unit
     return format(round(theirs) if number.format == "d" else theirs, number.format)
 
 
-def _understood(number: Number, line: bytes) -> float:
+def understood(number: Number, line: bytes) -> float:
     """Return the value in SI of an instrument's answer."""
     fields = split_fields(line)
     if number.place >= len(fields):
@@ -224,6 +224,7 @@ def _understood(number: Number, line: bytes) -> float:
     return 1 / theirs if number.reciprocal else theirs
 
 
-def _is_accepted(number: Number, asked: float, found: float) -> bool:
+def is_accepted(number: Number, asked: float, found: float) -> bool:
+    """Return whether a value read back is within what the dialect accepts for the value asked, both SI."""
     low, high = sorted(asked * limit for limit in number.readback)
     return low <= found <= high or abs(found - asked) <= number.absolute

@@ -85,7 +85,7 @@ class Scope(Instrument):
 
     def __init__(self, session: Session, dialect: ScopeDialect) -> None:
         super().__init__(session, dialect.identity)
-        self._dialect = dialect
+        self.dialect = dialect
         self._channels: dict[int, ChannelSetting] = {}
         self._record: RecordSetting | None = None
 
@@ -120,12 +120,12 @@ class Scope(Instrument):
         options = {"range": range, "offset": offset, "coupling": coupling}
         more = {"bandwidth_limit": bandwidth_limit, "probe_factor": probe_factor}
         self._remember("channel", channel, partial(self.set_channel, channel, **options, **more))  # type: ignore[arg-type]
-        name = self._name(channel)
+        name = self.name_of(channel)
         self._channels.pop(channel, None)
         found_probe = self._set_probe(name, probe_factor)
         self._set_coupling(name, coupling)
         limited = self._set_bandwidth(name, bandwidth_limit)
-        software = 1.0 if self._dialect.probe_factor.set else probe_factor
+        software = 1.0 if self.dialect.probe_factor.set else probe_factor
         found_range = self._set_range(name, range / software) * software
         found_offset = self._set_offset(name, offset / software) * software
         setting = ChannelSetting(found_range, found_offset, coupling, limited, found_probe)
@@ -151,10 +151,10 @@ class Scope(Instrument):
         import numpy as np
 
         record, channels = self._settings()
-        self._once("prepare", "", self._prepare)
-        self._start_and_wait(record.duration)
+        self._once("prepare", "", self.prepare)
+        self.start_and_wait(record.duration)
         traces = [
-            read_channel(self.session, self._dialect, self._name(number), record.points, setting)
+            read_channel(self.session, self.dialect, self.name_of(number), record.points, setting)
             for number, setting in channels
         ]
         self.check_errors()
@@ -176,11 +176,11 @@ class Scope(Instrument):
         super().reopen()
 
     def _recovery(self) -> tuple[str, ...]:
-        abort = self._dialect.acquisition.abort
+        abort = self.dialect.acquisition.abort
         return ((abort,) if abort else ()) + super()._recovery()
 
     def _telling_query(self) -> str:
-        return self._dialect.interval.query.format(channel=self._dialect.channels[0])
+        return self.dialect.interval.query.format(channel=self.dialect.channels[0])
 
     def _settings(self) -> tuple[RecordSetting, list[tuple[int, ChannelSetting]]]:
         if self._record is None or set(self._channels) != {1, 2}:
@@ -188,50 +188,50 @@ class Scope(Instrument):
         return self._record, sorted(self._channels.items())
 
     def _set_probe(self, name: str, factor: float) -> float:
-        if not self._dialect.probe_factor.set:
+        if not self.dialect.probe_factor.set:
             return factor
-        return self._set_number("probe_factor", self._dialect.probe_factor, factor, name)
+        return self._set_number("probe_factor", self.dialect.probe_factor, factor, name)
 
     def _set_coupling(self, name: str, coupling: Coupling) -> None:
-        if self._dialect.coupling.set:
-            self._set_choice("coupling", self._dialect.coupling, coupling, name)
-        elif coupling not in (self._dialect.coupling.words or {"DC": ""}):
+        if self.dialect.coupling.set:
+            self._set_choice("coupling", self.dialect.coupling, coupling, name)
+        elif coupling not in (self.dialect.coupling.words or {"DC": ""}):
             raise self._beyond("coupling", f"coupling must be what it has without a command, got {coupling!r}")
 
     def _set_bandwidth(self, name: str, limited: bool) -> bool:
-        if not self._dialect.bandwidth_limit.on:
+        if not self.dialect.bandwidth_limit.on:
             return False
-        self._set_toggle("bandwidth_limit", self._dialect.bandwidth_limit, limited, name)
+        self._set_toggle("bandwidth_limit", self.dialect.bandwidth_limit, limited, name)
         return limited
 
     def _set_range(self, name: str, peak: float) -> float:
         before = self._made.get("range" + name)
-        found = self._set_number("range", self._dialect.range, peak, name)
+        found = self._set_number("range", self.dialect.range, peak, name)
         if self._made.get("range" + name) is not before:
             self._forget("offset" + name)  # a new range may have moved or rounded it
         return found
 
     def _set_offset(self, name: str, offset: float) -> float:
-        if self._dialect.offset.set:
-            return self._set_number("offset", self._dialect.offset, offset, name)
+        if self.dialect.offset.set:
+            return self._set_number("offset", self.dialect.offset, offset, name)
         if offset:
             raise self._beyond("offset", f"offset must be 0, the dialect has no command for it, got {offset!r}")
         return 0.0
 
     def _set_and_read_record(self, duration: float, points: int) -> RecordSetting:
         self._forget("points", "duration")
-        used = round(self._set_if_possible("points", self._dialect.points, points))
-        self._set_if_possible("duration", self._dialect.duration, duration)
-        interval = self._read_number(self._dialect.interval)
-        if self._dialect.points.query:  # the duration may have changed them
-            used = round(self._read_number(self._dialect.points))
+        used = round(self._set_if_possible("points", self.dialect.points, points))
+        self._set_if_possible("duration", self.dialect.duration, duration)
+        interval = self.read_number(self.dialect.interval)
+        if self.dialect.points.query:  # the duration may have changed them
+            used = round(self.read_number(self.dialect.points))
         setting = RecordSetting(interval, used, used * interval)
         self._refuse_strange(setting, duration, points)
         return setting
 
     def _refuse_strange(self, found: RecordSetting, duration: float, points: int) -> None:
         """Refuse a record no scope takes when asked for this one: a reply garbled into another number says so."""
-        low, high = self._dialect.points.readback if self._dialect.points.set else (0.0, inf)
+        low, high = self.dialect.points.readback if self.dialect.points.set else (0.0, inf)
         fits = low * points <= found.points <= min(high * points, _MOST_POINTS) and found.points >= 2
         if fits and found.sample_interval > 0 and duration / _FAR <= found.duration <= duration * _FAR:
             return
@@ -240,15 +240,17 @@ class Scope(Instrument):
         raise SettingRefused(self.address, "record", asked, read, accepted, self.session.setting_line)
 
     def _set_if_possible(self, slot: str, number: Number, value: float) -> float:
-        return self._set_number(slot, number, value) if number.set else self._read_number(number)
+        return self._set_number(slot, number, value) if number.set else self.read_number(number)
 
-    def _prepare(self) -> None:
-        for text in self._dialect.acquisition.prepare:
+    def prepare(self) -> None:
+        """Send what comes once before records are taken."""
+        for text in self.dialect.acquisition.prepare:
             self.session.command(text)
         self.check_errors()
 
-    def _start_and_wait(self, duration: float) -> None:
-        slot = self._dialect.acquisition
+    def start_and_wait(self, duration: float) -> None:
+        """Start one acquisition of so many s and return when it is complete."""
+        slot = self.dialect.acquisition
         expected = duration + slot.latency
         if slot.completes == "awaited":
             self.session.command(slot.start, confirm=slot.complete, confirmed=slot.is_complete, expected=expected)
@@ -257,7 +259,7 @@ class Scope(Instrument):
             self._poll(expected)
 
     def _poll(self, expected: float) -> None:
-        slot, clock = self._dialect.acquisition, self.session.link.clock
+        slot, clock = self.dialect.acquisition, self.session.link.clock
         limit = 2.0 + 3 * expected  # bench seconds: as generous as the real clock's patience
         end = clock.now() + limit
         while self.session.ask(slot.complete, as_text) != slot.is_complete:
@@ -265,7 +267,8 @@ class Scope(Instrument):
                 self.session.give_up(slot.complete, limit)
             clock.wait(slot.poll)
 
-    def _name(self, channel: int) -> str:
-        if not 1 <= channel <= min(2, len(self._dialect.channels)):
+    def name_of(self, channel: int) -> str:
+        """Return the instrument's name of a channel (1, 2)."""
+        if not 1 <= channel <= min(2, len(self.dialect.channels)):
             raise ValueError(f"channel must be 1 or 2, got {channel!r}")
-        return self._dialect.channels[channel - 1]
+        return self.dialect.channels[channel - 1]

@@ -58,6 +58,7 @@ class Session:
     def __init__(self, link: Link, habits: Habits | None = None) -> None:
         self.link, self.habits = link, habits or Habits()
         self._last_setting = ""
+        self.sent = 0  # messages so far
         self.setting_line = 0  # of the exchange log, where the last setting stands
 
     @property
@@ -209,6 +210,7 @@ class Session:
         return entries
 
     def _send(self, exchange: Transaction, text: str) -> None:
+        self.sent += 1
         exchange.send((text + self.habits.terminator).encode("latin-1"))
 
     def _parsed(self, exchange: Transaction, line: bytes, parse: Callable[[bytes], T]) -> T:

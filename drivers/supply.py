@@ -30,12 +30,12 @@ class Supply(Instrument):
 
     def __init__(self, session: Session, dialect: SupplyDialect) -> None:
         super().__init__(session, dialect.identity)
-        self._dialect = dialect
+        self.dialect = dialect
 
     @property
     def channels(self) -> tuple[int, ...]:
         """The outputs, from 1."""
-        return tuple(range(1, len(self._dialect.channels) + 1))
+        return tuple(range(1, len(self.dialect.channels) + 1))
 
     def be_safe(self) -> None:
         """Turn every output off and see it confirmed; a dirty or closed link is reopened."""
@@ -44,42 +44,43 @@ class Supply(Instrument):
             self._made.clear()
             link.reopen()
         self._remember("output", "", partial(self.output, False), last=True)
-        for name in self._switches():
+        for name in self.switches():
             self._forget("output" + name)
-            toggle = self._dialect.output
+            toggle = self.dialect.output
             query = toggle.query.format(channel=name)
             self._command_and_see(toggle.off.format(channel=name), query, toggle.is_off)
 
     def set_voltage(self, channel: int, voltage: float) -> float:
         """Set the voltage of a channel (from 1) in V; return the one read back."""
-        name = self._name(channel)
+        name = self.name_of(channel)
         self._remember("voltage", channel, partial(self.set_voltage, channel, voltage))
-        return self._set_number("voltage", self._dialect.voltage, voltage, name)
+        return self._set_number("voltage", self.dialect.voltage, voltage, name)
 
     def set_current_limit(self, channel: int, current: float) -> float:
         """Set the greatest current a channel (from 1) gives, in A; return the one read back."""
-        name = self._name(channel)
+        name = self.name_of(channel)
         self._remember("current_limit", channel, partial(self.set_current_limit, channel, current))
-        return self._set_number("current_limit", self._dialect.current_limit, current, name)
+        return self._set_number("current_limit", self.dialect.current_limit, current, name)
 
     def read_current(self, channel: int) -> float:
         """Return the current that a channel (from 1) gives now, in A."""
-        return self._read_number(self._dialect.current, self._name(channel))
+        return self.read_number(self.dialect.current, self.name_of(channel))
 
     def output(self, on: bool) -> None:
         """Turn all outputs on or off and see it confirmed; `restore` does this last."""
         self._remember("output", "", partial(self.output, on), last=True)
-        for name in self._switches():
-            self._set_toggle("output", self._dialect.output, on, name)
+        for name in self.switches():
+            self._set_toggle("output", self.dialect.output, on, name)
 
     def _telling_query(self) -> str:
-        return self._dialect.current.query.format(channel=self._dialect.channels[0])
+        return self.dialect.current.query.format(channel=self.dialect.channels[0])
 
-    def _switches(self) -> tuple[str, ...]:
+    def switches(self) -> tuple[str, ...]:
         """Return the channels to switch: each, or one where one command switches all."""
-        return self._dialect.channels if "{channel}" in self._dialect.output.on else self._dialect.channels[:1]
+        return self.dialect.channels if "{channel}" in self.dialect.output.on else self.dialect.channels[:1]
 
-    def _name(self, channel: int) -> str:
+    def name_of(self, channel: int) -> str:
+        """Return the instrument's name of a channel (from 1)."""
         if channel not in self.channels:
             raise ValueError(f"channel must be from 1 to {len(self.channels)}, got {channel!r}")
-        return self._dialect.channels[channel - 1]
+        return self.dialect.channels[channel - 1]

@@ -29,7 +29,7 @@ class Switch(Instrument):
 
     def __init__(self, session: Session, dialect: SwitchDialect) -> None:
         super().__init__(session, dialect.identity)
-        self._dialect = dialect
+        self.dialect = dialect
 
     def be_safe(self) -> None:
         """Open every route."""
@@ -40,17 +40,17 @@ class Switch(Instrument):
         """Close one route and see it confirmed; every other route is open afterwards."""
         self._journal.clear()
         self._remember("route", "", partial(self.close, route))
-        if not self._dialect.exclusive and self._made.get("route", ("", None))[0] != route:
-            self.session.command(self._dialect.open_all)
+        if not self.dialect.exclusive and self._made.get("route", ("", None))[0] != route:
+            self.session.command(self.dialect.open_all)
         self._once("route", route, partial(self._close_and_compare, route))
 
     def open_all(self) -> None:
         """Open every route."""
         self._journal.clear()
         self._remember("route", "", self.open_all)
-        self._once("route", "", partial(self._command_and_compare, self._dialect.open_all, "", ""))
+        self._once("route", "", partial(self._command_and_compare, self.dialect.open_all, "", ""))
 
     def _close_and_compare(self, route: str) -> None:
-        dialect = self._dialect
+        dialect = self.dialect
         query = dialect.query.format(route=route)
         self._command_and_compare(dialect.close.format(route=route), query, dialect.is_closed)
