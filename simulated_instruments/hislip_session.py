@@ -74,16 +74,19 @@ class Session:
         self._framer = Framer()
         self._id = FIRST_ID  # of the message being answered
         self._sent = False  # a reply has gone of which the client has not said that it came
-        self._is_clearing = False
+        self._is_clearing = self._is_over = False
         self._piece = PAYLOAD_LIMIT - _HEADER_SIZE
 
     def end(self) -> None:
-        """Forget the client."""
+        """Forget the client; what its other channel still says is not heard, or a lock would be nobody's."""
+        self._is_over = True
         self.conversation.end()
         self._locks.leave(self)
 
     def on_sync(self, message: Message) -> None:
         """Handle a message of the synchronous channel."""
+        if self._is_over:
+            return
         if self.asynchronous is None:
             self.sync.fatal(Fatal.CHANNEL_MISSING, "the asynchronous channel comes first")
         elif message.type == Type.DEVICE_CLEAR_COMPLETE:
@@ -98,6 +101,8 @@ class Session:
 
     def on_async(self, message: Message) -> None:
         """Handle a message of the asynchronous channel."""
+        if self._is_over:
+            return
         answers: dict[int, Callable[[Message], bytes | None]] = {
             Type.ASYNC_MAX_MSG_SIZE: self._negotiate_size,
             Type.ASYNC_LOCK: self._lock,

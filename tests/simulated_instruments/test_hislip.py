@@ -12,7 +12,9 @@ import pytest
 from bandproof.analysis.network import Capacitor, Network, Resistor
 from bandproof.simulated_instruments.bench import World, start
 from bandproof.simulated_instruments.faults import Fault
+from bandproof.simulated_instruments.hislip_locks import Locks
 from bandproof.simulated_instruments.hislip_messages import PAYLOAD_LIMIT, Malformed, Message, Parser, TooLarge
+from bandproof.simulated_instruments.hislip_session import Session
 
 HEADER = struct.Struct("!2sBBIQ")  # reference: two independent readers of the protocol
 PATIENCE = 5.0  # s, a reply on loopback takes well under 1 ms
@@ -291,6 +293,15 @@ def test_a_lock_is_waited_for_and_free_when_its_holder_is_gone(client):
     holder.sync.close()
     assert other.asynchronous.receive() == (LOCKED, 1, 0, b"")
     assert other.ask("*OPC?") == "1"
+
+
+def test_a_client_that_was_ended_gets_no_lock_any_more():
+    """Its second connection may still speak in the same turn; a lock granted then would be nobody's for ever."""
+    locks = Locks(lambda: None)
+    session = Session(1, "scope", None, None, None, locks, sync=None)
+    session.end()
+    session.on_async(Message(LOCK, 1))
+    assert locks.holders == 0
 
 
 def test_a_lock_request_ends_at_its_time_limit(client):
