@@ -6,7 +6,7 @@ from typing import Any
 
 from bandproof.bench.bench_file import parse_bench
 from bandproof.bench.board_file import parse_board
-from bandproof.bench.errors import Stopped
+from bandproof.bench.errors import BadInput, Stopped
 from bandproof.bench.evaluate import evaluate, views
 from bandproof.bench.journal import Journal
 from bandproof.bench.result import result_object
@@ -78,8 +78,12 @@ def run_of(journal: Journal, problem: Exception | None, words: str) -> Run:
 def board_and_bench(journal: Journal) -> tuple[Board, Bench]:
     """Return board and bench from the texts a run began with, whatever has become of the files."""
     head = journal.head
+    board = parse_board(head["board"], "the run's board file")
+    strangers = {step.stage for step in journal.steps} - {stage.name for stage in board.stages}
+    if strangers:
+        raise BadInput(f"the journal plans stages its board does not have: {', '.join(sorted(strangers))}")
     bench = parse_bench(head["bench"], head["bench_path"] or "the run's bench file")
-    return parse_board(head["board"], "the run's board file"), replace(bench, dialect_texts=head["dialects"])
+    return board, replace(bench, dialect_texts=head["dialects"])
 
 
 def _free(folder: Path) -> Path:

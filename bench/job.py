@@ -87,7 +87,6 @@ class Job:
         InstrumentProblem, BenchFault, Stopped
             As for ``carry_out``.
         """
-        journal.resumed(self.clock.utc().isoformat(timespec="seconds"))
         return self._carried_out(journal)
 
     def _carried_out(self, journal: Journal | None) -> Outcome:
@@ -105,6 +104,7 @@ class Job:
                     self._sweep(devices, bench, journal).run()
                 else:
                     check_identities(journal, identities)
+                    journal.resumed(self.clock.utc().isoformat(timespec="seconds"))
                     if not journal.points:
                         self.clock.catch_up(journal.head["clock_start"])
                     sweep = self._sweep(devices, bench, journal)

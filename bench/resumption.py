@@ -18,7 +18,7 @@ _DRIFT = 0.01  # and this part of it, for what drifted while nobody measured; ar
 
 
 class ResumeRefused(BenchFault):
-    """The run cannot go on as the same run; nothing in its folder was changed."""
+    """The run cannot go on as the same run; nothing that was measured is changed."""
 
 
 def unfinished(folder: Path) -> Path:
