@@ -119,7 +119,9 @@ def test_begin_writes_files_that_rehearse_as_they_are(console, tmp_path):
     assert code == 0
     written = sorted(folder.iterdir())
     assert {path.name for path in written} >= {"talkback.board.toml", "simulated.bench.toml", "scpi99-generator.toml"}
-    assert {path.name for path in written} >= {f"blank-{kind}.toml" for kind in ("generator", "scope", "switch", "supply")}
+    assert {path.name for path in written} >= {
+        f"blank-{kind}.toml" for kind in ("generator", "scope", "switch", "supply")
+    }
     assert all(str(path) in out for path in written)
     assert all(any(line.startswith("#") for line in path.read_text().splitlines()) for path in written)
     code, out, _ = console("rehearse", folder / "talkback.board.toml", "--folder", tmp_path / "r")
