@@ -28,6 +28,7 @@ __all__ = [
     "SettingRefused",
 ]
 
+WORDS = 255  # characters of an instrument's own words: the longest error text of SCPI-99 (from memory)
 EXCERPT = 40  # bytes of a reply or command shown to people: half a line of a terminal (arbitrary)
 
 
@@ -115,7 +116,7 @@ class InstrumentError(InstrumentProblem):
 
     def __str__(self) -> str:
         return (
-            f"{self.address} reported error {self.number} {self.words!r} after {_short(self.command)}: "
+            f"{self.address} reported error {self.number} {_short(self.words, WORDS)} after {_short(self.command)}: "
             f"check the value asked and the dialect{self._where()}"
         )
 
@@ -129,8 +130,9 @@ class SettingRefused(InstrumentProblem):
         self.accepted, self.line = accepted, line
 
     def __str__(self) -> str:
+        found = self.found if len(self.found) <= WORDS else self.found[:WORDS] + "..."
         return (
-            f"{self.address} was given {self.asked} by {_short(self.command)} and reads back {self.found} "
+            f"{self.address} was given {self.asked} by {_short(self.command)} and reads back {found} "
             f"(accepted: {self.accepted}): ask for a value the instrument can set, or correct the dialect"
             f"{self._where()}"
         )
@@ -149,5 +151,5 @@ class BeyondLimits(InstrumentProblem, ValueError):
         )
 
 
-def _short(command: str) -> str:
-    return repr(command if len(command) <= EXCERPT else command[:EXCERPT] + "...")
+def _short(text: str, most: int = EXCERPT) -> str:
+    return repr(text if len(text) <= most else text[:most] + "...")
