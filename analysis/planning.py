@@ -180,28 +180,29 @@ def dwell_after_step(
     allowed = eps * np.abs(response(network, [frequency], nodes)[:, 0])
     starts = np.stack([level * part for state, level in steady for part in (state, state.conj())], axis=1)
 
-    def excess(transition: FloatArray) -> float:
-        """Largest of the nodes' errors over what is allowed, for the worst phases."""
-        left = 0.5 * np.abs(weights @ transition @ starts).sum(axis=1)
-        return float((left / allowed).max())
+    def excess(transitions: FloatArray) -> FloatArray:
+        """Largest of the nodes' errors over what is allowed, for the worst phases, after each (R, n, n) transition."""
+        left = 0.5 * np.abs(weights @ transitions @ starts).sum(axis=-1)
+        result: FloatArray = (left / allowed).max(axis=-1)
+        return result
 
     return _shortest(system.a, excess, frequency)
 
 
-def _shortest(a: FloatArray, excess: Callable[[FloatArray], float], frequency: float) -> float:
+def _shortest(a: FloatArray, excess: Callable[[FloatArray], FloatArray], frequency: float) -> float:
     """Return the least dwell of a ladder from which on every longer one is good, too."""
     from scipy.linalg import expm
 
     first = 1e-2 / frequency
-    dwells, worst = [0.0], [excess(np.eye(len(a)))]
-    rungs = [expm(a * first * 2 ** (i / _LADDER)) for i in range(_LADDER)]
+    dwells, worst = [0.0], excess(np.eye(len(a))[None]).tolist()
+    rungs = np.stack([expm(a * first * 2 ** (i / _LADDER)) for i in range(_LADDER)])
     for octave in range(40):
         dwells += [first * 2 ** (octave + i / _LADDER) for i in range(_LADDER)]
-        worst += [excess(rung) for rung in rungs]
+        worst += excess(rungs).tolist()
         if max(worst[-3 * _LADDER :]) <= 1.0 and len(worst) > 3 * _LADDER:
             late = max(i for i, value in enumerate([np.inf, *worst]) if value > 1.0)
             return float(dwells[late])
-        rungs = [rung @ rung for rung in rungs]
+        rungs = rungs @ rungs
     raise ValueError("the network does not settle: a mode is unstable or has no loss")
 
 
