@@ -5,6 +5,7 @@ from __future__ import annotations
 import random
 import shutil
 from dataclasses import dataclass
+from functools import partial
 from pathlib import Path
 
 from bandproof.bench.board_file import parse_board
@@ -91,9 +92,11 @@ def damaged_run_files(original: Original, count: int, seed: int, folder: Path) -
 
 def damaged_journals(original: Original, count: int, seed: int, folder: Path) -> tuple[Tally, list[Path]]:
     """Read so many damaged journals; return the account and their folders."""
-    tally, paths, content = Tally("journals", LONGEST), [], original.journal
+    tally, paths, whole_content = Tally("journals", LONGEST), [], original.journal
+    lines = whole_content.splitlines(keepends=True)
+    unfinished = b"".join(lines[: 2 * len(lines) // 3])
 
-    def case(path: Path) -> str:
+    def case(path: Path, content: bytes) -> str:
         damaged = (path / JOURNAL).read_bytes()
         whole = _whole_lines(content, damaged)
         found = Journal.peeked(path)
@@ -104,11 +107,11 @@ def damaged_journals(original: Original, count: int, seed: int, folder: Path) ->
         return "unchanged" if damaged == content else "the whole lines before the damage"
 
     for number in range(count):
-        draw = random.Random(f"journal {seed} {number}")
+        draw, content = random.Random(f"journal {seed} {number}"), whole_content if number % 2 else unfinished
         path = folder / f"{number:04d}"
         path.mkdir()
         (path / JOURNAL).write_bytes(mutated(content, draw))
-        tally.case(path.name, lambda path=path: case(path), (BadInput,))
+        tally.case(path.name, partial(case, path, content), (BadInput,))
         paths.append(path)
     return tally, paths
 

@@ -43,7 +43,7 @@ def runs(count: int = FULL, seed: int = SEED) -> bool:
         with traced():
             run_files, paths = damaged_run_files(original, count // 2, seed, folder / "runs")
             journals, folders = damaged_journals(original, count // 2, seed, folder / "journals")
-            commands = [on_damaged_runs(paths[::SAMPLE]), on_damaged_journals(folders[::DEAR_SAMPLE])]
+            commands = [on_damaged_runs(paths[::SAMPLE]), on_damaged_journals(folders[:: 2 * SAMPLE])]
         good = [tally.is_good(MEMORY) for tally in (run_files, journals, *commands)]
         return all(good)
 
