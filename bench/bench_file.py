@@ -13,7 +13,7 @@ from bandproof.drivers.schema import DialectMistakes
 
 __all__ = ["check_wiring", "find_bench", "parse_bench", "read_bench"]
 
-Role = Literal["generator", "scope", "switch"]
+Role = Literal["generator", "scope", "switch", "supply"]
 BY_HAND = "by hand"
 _ADDRESS = re.compile(r"(TCPIP|USB|GPIB|ASRL|PXI|VXI)[^:\s]*(::[^:\s]+)+", re.IGNORECASE)  # interfaces of VPP-4.3
 _EXAMPLE = '"TCPIP::192.0.2.10::5025::SOCKET"'
@@ -101,7 +101,13 @@ def _bench(top: Table, text: str, folder: Path) -> Bench:
     }
     if "switch" in top:
         instruments["switch"] = _instrument("switch", top.table("switch"), folder)
+    rails = (1, 2)
+    if "supply" in top:
+        supply = top.table("supply")
+        rails = (supply.whole("positive", 1, 9, 1), supply.whole("negative", 1, 9, 2))
+        instruments["supply"] = _instrument("supply", supply, folder)
     return Bench(
+        rails=rails,
         title=title,
         mains=mains,
         ceiling=ceiling,

@@ -5,7 +5,7 @@ from typing import Literal, cast
 
 from bandproof.bench.quantities import Kind, QuantityError, read_quantity
 from bandproof.bench.reading import Mistakes, Table, nearest, parse_toml, read_text
-from bandproof.bench.types import Board, Limit, OpAmpData, Part, Quantity, Stage, TestPoint
+from bandproof.bench.types import Board, Limit, OpAmpData, Part, Power, Quantity, Stage, TestPoint
 
 __all__ = ["STAGE_PARTS", "parse_board", "parse_defect", "read_board"]
 
@@ -44,6 +44,7 @@ def parse_board(text: str, path: str) -> Board:
         frequencies=cast(Literal["nominal", "exact"], top.choice("frequencies", ["nominal", "exact"], "nominal")),
         input_maximum=_input_maximum(top.table("limits")),
         op_amp=_op_amp(top.table("op_amp")),
+        power=_power(top.table("supply")) if "supply" in top else None,
         points=_points(top.table("points")),
         stages=_stages(top),
         text=text,
@@ -68,6 +69,20 @@ def _op_amp(table: Table) -> OpAmpData:
     )
     table.close()
     return data
+
+
+def _power(table: Table) -> Power:
+    power = Power(
+        positive=table.quantity("positive", "voltage"),
+        negative=table.quantity("negative", "voltage"),
+        current_limit=table.quantity("current_limit", "current"),
+        least_current=table.quantity("least_current", "current"),
+        most_current=table.quantity("most_current", "current"),
+    )
+    if not power.least_current < power.most_current <= power.current_limit:
+        table.mistake("most_current", "must be above least_current and not above current_limit")
+    table.close()
+    return power
 
 
 def _points(table: Table) -> dict[str, TestPoint]:

@@ -9,7 +9,16 @@ from bandproof.bench.bench_file import parse_bench
 from bandproof.bench.errors import BenchFault
 from bandproof.bench.types import Bench
 from bandproof.drivers.clock import Clock
-from bandproof.drivers.dialect import Dialect, GeneratorDialect, ScopeDialect, SwitchDialect, load, parse, source
+from bandproof.drivers.dialect import (
+    Dialect,
+    GeneratorDialect,
+    ScopeDialect,
+    SupplyDialect,
+    SwitchDialect,
+    load,
+    parse,
+    source,
+)
 from bandproof.drivers.errors import InstrumentProblem
 from bandproof.drivers.generator import Generator
 from bandproof.drivers.lifeline import Lifeline
@@ -17,6 +26,7 @@ from bandproof.drivers.link import Link
 from bandproof.drivers.log import ExchangeLog
 from bandproof.drivers.scope import Scope
 from bandproof.drivers.session import Session
+from bandproof.drivers.supply import Supply
 from bandproof.drivers.switch import Switch
 
 __all__ = ["Devices", "load_dialects", "opened", "with_dialect_texts"]
@@ -33,20 +43,22 @@ class Devices:
     generator: Generator
     scope: Scope
     switch: Switch | None
+    supply: Supply | None = None
     declared: dict[str, str] = field(default_factory=dict)
     await_lifeline: Callable[[], None] = lambda: None
 
-    def all(self) -> tuple[Generator | Scope | Switch, ...]:
+    def by_role(self) -> dict[str, Generator | Scope | Switch | Supply]:
+        """Return the instruments that are there by what they do, the generator first."""
+        found = {"generator": self.generator, "scope": self.scope, "switch": self.switch, "supply": self.supply}
+        return {role: instrument for role, instrument in found.items() if instrument is not None}
+
+    def all(self) -> tuple[Generator | Scope | Switch | Supply, ...]:
         """Return the instruments that are there, the generator first."""
-        found = (self.generator, self.scope, self.switch)
-        return tuple(instrument for instrument in found if instrument is not None)
+        return tuple(self.by_role().values())
 
     def role_of(self, address: str) -> str:
         """Return what the instrument at an address does on this bench."""
-        for role, instrument in (("generator", self.generator), ("scope", self.scope), ("switch", self.switch)):
-            if instrument is not None and instrument.address == address:
-                return role
-        return "instrument"
+        return next((role for role, one in self.by_role().items() if one.address == address), "instrument")
 
     def identities(self) -> dict[str, str]:
         """Return what each instrument says it is, by role.
@@ -58,13 +70,12 @@ class Devices:
         InstrumentProblem
             What the drivers met.
         """
-        return {self.role_of(instrument.address): self._identified(instrument) for instrument in self.all()}
+        return {role: self._identified(role, instrument) for role, instrument in self.by_role().items()}
 
-    def _identified(self, instrument: Generator | Scope | Switch) -> str:
+    def _identified(self, role: str, instrument: Generator | Scope | Switch | Supply) -> str:
         """Return what an instrument says it is, after a question only its kind can answer (BenchFault)."""
         words = instrument.identify()
         if (problem := instrument.is_understood()) is not None:
-            role = self.role_of(instrument.address)
             raise BenchFault(
                 f"the instrument at {instrument.address} does not answer as the {role} its dialect describes; it says "
                 f"{words or 'nothing'!r}. Is it another instrument, or is the dialect wrong? ({problem})"
@@ -103,13 +114,29 @@ def opened(bench: Bench, clock: Clock, log_path: Path | None, lifeline: Lifeline
         except BaseException as problem:
             _leave_safe(devices.generator, problem)
             _tell(lifeline)
+            _power_down(devices, problem)
             raise
         else:
             _leave_safe(devices.generator, None)
             _tell(lifeline)
+            _power_down(devices, None)
         finally:
             for session in sessions.values():
                 session.link.close()
+
+
+def _power_down(devices: Devices, after: BaseException | None) -> None:
+    """Switch the board's supply off, after the generator; a supply never reached is left alone."""
+    supply = devices.supply
+    if supply is None or not (supply.session.link.is_open or supply.session.link.is_dirty):
+        return
+    try:
+        supply.be_safe()
+    except InstrumentProblem as problem:
+        if after is None:
+            raise BenchFault(
+                f"the supply at {supply.address} could not be switched off: do it by hand ({problem})"
+            ) from problem
 
 
 def _tell(lifeline: Lifeline | None) -> None:
@@ -149,13 +176,14 @@ def load_dialects(bench: Bench) -> dict[str, Dialect]:
 
 
 def _devices(bench: Bench, sessions: dict[str, Session], dialects: dict[str, Dialect]) -> Devices:
-    generator, scope, switch = (dialects.get(role) for role in ("generator", "scope", "switch"))
+    generator, scope, switch, supply = map(dialects.get, ("generator", "scope", "switch", "supply"))
     assert isinstance(generator, GeneratorDialect)  # load_dialects saw to it
     assert isinstance(scope, ScopeDialect)
     return Devices(
         Generator(sessions["generator"], generator, ceiling=bench.ceiling),
         Scope(sessions["scope"], scope),
         Switch(sessions["switch"], switch) if isinstance(switch, SwitchDialect) else None,
+        Supply(sessions["supply"], supply) if isinstance(supply, SupplyDialect) else None,
         {role: instrument.address for role, instrument in parse_bench(bench.text, bench.title).instruments.items()},
     )
 

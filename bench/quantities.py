@@ -22,6 +22,7 @@ Kind = Literal[
     "relative",
     "tolerance",
     "steps",
+    "current",
     "number",
 ]
 
@@ -46,6 +47,7 @@ _UNITS: dict[Kind, dict[str, float]] = {
     "gain": {"dB": math.nan, "V/V": 1.0},
     "relative": _RELATIVE,
     "tolerance": {"dB": math.nan, **_RELATIVE},
+    "current": _spellings(("A",), _MILLI),
     "steps": {"LSB": 1.0},
     "number": {"": 1.0},
 }
@@ -59,6 +61,7 @@ _EXAMPLES: dict[Kind, str] = {
     "gain": '"10 dB" or "3.16 V/V"',
     "relative": '"5 %" or "20 ppm"',
     "tolerance": '"6 %" or "1 dB"',
+    "current": '"20 mA"',
     "steps": '"0.5 LSB"',
     "number": "1.5",
 }

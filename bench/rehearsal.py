@@ -12,6 +12,13 @@ __all__ = ["demo_board", "demo_text", "rehearsal_bench"]
 DEMO_BOARD = "talkback.board.toml"
 DEMO_BENCH = "simulated.bench.toml"
 _FIRST_ROUTE = 101
+_SUPPLY = """[supply]                         # switched off, on, and off again at the end; its currents are looked at
+address = "TCPIP::127.0.0.1::5028::SOCKET"
+dialect = "scpi99-supply"
+positive = 1                     # the supply's channel of each rail
+negative = 2
+
+"""
 
 
 def demo_text(name: str) -> str:
@@ -43,4 +50,6 @@ def rehearsal_bench(board: Board) -> Bench:
     comment = '                         # test point → scope channel; a switch route, or "by hand"\n'
     wires = [f"{inputs[0]} = {{ channel = 1 }}\n"]
     wires += [f'{tap} = {{ channel = 2, route = "{_FIRST_ROUTE + i}" }}\n' for i, tap in enumerate(outputs)]
+    if board.power is not None:
+        head += _SUPPLY
     return parse_bench(head + mark + comment + "".join(wires), DEMO_BENCH)

@@ -17,6 +17,7 @@ from bandproof.bench.instruments import Devices
 from bandproof.bench.journal import Journal
 from bandproof.bench.operator import Operator
 from bandproof.bench.plan import Planner
+from bandproof.bench.power import power_up
 from bandproof.bench.record import Taken, point_of
 from bandproof.bench.recovery import Recovery
 from bandproof.bench.stop import Stop
@@ -93,6 +94,8 @@ class Sweep:
         generator.set_load(inf)
         generator.set_sine()
         generator.set_offset(0.0)
+        if self.devices.supply is not None and self.board.power is not None:
+            power_up(self.board.power, self.bench, self.devices.supply, self.clock)
 
     def repeat(self, step: Step) -> Point:
         """Measure a step once more without keeping it."""

@@ -16,6 +16,7 @@ __all__ = [
     "OpAmpData",
     "Part",
     "Point",
+    "Power",
     "Purpose",
     "Stage",
     "StageResult",
@@ -66,6 +67,20 @@ class OpAmpData:
 
 
 @dataclass(frozen=True, slots=True)
+class Power:
+    """What a board wants of a supply: rail voltages and current limit per rail, and the window its current must be in.
+
+    All positive: V, A.
+    """
+
+    positive: float
+    negative: float
+    current_limit: float
+    least_current: float
+    most_current: float
+
+
+@dataclass(frozen=True, slots=True)
 class TestPoint:
     """A place a probe can reach: its node in the circuit, its source resistance in Ω."""
 
@@ -101,6 +116,7 @@ class Board:
     stages: tuple[Stage, ...]
     text: str
     frequencies: Literal["nominal", "exact"] = "nominal"
+    power: Power | None = None
 
     def stage(self, name: str) -> Stage:
         """Return a stage by name (KeyError when there is none)."""
@@ -114,7 +130,7 @@ class Board:
 class Instrument:
     """Where an instrument is and which dialect it understands."""
 
-    role: Literal["generator", "scope", "switch"]
+    role: Literal["generator", "scope", "switch", "supply"]
     address: str
     dialect: str
 
@@ -133,7 +149,8 @@ class Bench:
     """A bench: instruments, wiring, ceilings and what is declared about its accuracy.
 
     ``channel_gain`` and ``generator_frequency`` are half-widths of rectangular distributions (relative),
-    ``channel_skew`` that of each channel's delay in s, ``linearity`` that of the converter in its steps.
+    ``channel_skew`` that of each channel's delay in s, ``linearity`` that of the converter in its steps;
+    ``rails`` are the supply's channels of the positive and the negative rail.
     """
 
     title: str
@@ -149,6 +166,7 @@ class Bench:
     visa_library: str
     clock: str | None
     text: str
+    rails: tuple[int, int] = (1, 2)
     dialect_texts: Mapping[str, str] = field(default_factory=dict)
 
 

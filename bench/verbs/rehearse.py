@@ -169,8 +169,16 @@ def world_of(board: Board, bench: Bench, drawn: Drawn, seed: int, run: int, **si
         routes=routes,
         seed=seed,
         run=run,
+        supply=_quiescent(board),
         imperfections=Imperfections.draw(seed, Sizes(**wanted)),
     )
+
+
+def _quiescent(board: Board) -> float | None:
+    """Return what each op-amp draws: the middle of the board's window; None for a board with a supply of its own."""
+    if board.power is None:
+        return None
+    return 0.5 * (board.power.least_current + board.power.most_current) / len(board.stages)
 
 
 def _at(bench: Bench, ports: dict[str, int], clock: str | None) -> Bench:
