@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import random
 import shutil
-from dataclasses import dataclass
+from dataclasses import asdict, dataclass
 from functools import partial
 from pathlib import Path
 
@@ -64,7 +64,7 @@ def rehearsed(folder: Path, seed: int) -> Original:
             operator=Absent(),
             stop=Stop(),
             progress=lambda *_: None,  # type: ignore[arg-type]
-            rehearsal={"seed": seed, "defects": [], "faults": []},
+            rehearsal=asdict(Rehearsal(seed)),
         ).carry_out()
     return Original(folder, read_run(folder / RUN))
 
@@ -100,7 +100,7 @@ def damaged_journals(original: Original, count: int, seed: int, folder: Path) ->
         damaged = (path / JOURNAL).read_bytes()
         whole = _whole_lines(content, damaged)
         found = Journal.peeked(path)
-        if damaged[: whole + 1] != content[: whole + 1] and _is_whole(damaged[whole:], content):
+        if _is_moved(damaged[whole:], content[whole:], content):
             return _rearranged(found, original.run)
         expected = _account(content[:whole], path.with_name("whole"))
         assert _state(found) == expected, f"not what the {whole} whole bytes before the damage hold"
@@ -123,10 +123,10 @@ def _whole_lines(content: bytes, damaged: bytes) -> int:
     return content.rfind(b"\n", 0, same) + 1
 
 
-def _is_whole(rest: bytes, content: bytes) -> bool:
-    """Whether what follows begins with a line of the journal, only not the one that stood there."""
+def _is_moved(rest: bytes, intact: bytes, content: bytes) -> bool:
+    """Whether what follows begins with a whole line of the journal, only not the one that stood there."""
     line, newline, _ = rest.partition(b"\n")
-    return bool(newline) and line in content.split(b"\n")
+    return bool(newline) and line != intact.partition(b"\n")[0] and line in content.split(b"\n")
 
 
 def _rearranged(found: Journal, run: Run) -> str:

@@ -7,7 +7,7 @@ import tempfile
 import time
 from collections import Counter
 from contextlib import closing
-from dataclasses import dataclass, field, replace
+from dataclasses import asdict, dataclass, field, replace
 from pathlib import Path
 
 from bandproof.bench.board_file import parse_board
@@ -140,7 +140,7 @@ def _job(board: Board, bench: Bench, folder: Path, clock: VirtualClock, number: 
         operator=Absent(),
         stop=Stop(),
         progress=_Silent(),
-        rehearsal={"seed": number, "defects": [], "faults": []},
+        rehearsal=asdict(Rehearsal(number)),
     )
 
 
