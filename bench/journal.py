@@ -40,7 +40,13 @@ _HEAD: dict[str, Any] = {
     "dialects": dict[str, str],
     "keep_raw": bool,
 }
-_REHEARSAL: dict[str, Any] = {"seed": int, "defects": list[str], "faults": list[str]}
+_REHEARSAL: dict[str, Any] = {
+    "seed": int,
+    "defects": list[str],
+    "faults": list[str],
+    "imperfections": list[str],
+    "pace": str,
+}
 
 
 class Journal:

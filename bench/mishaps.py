@@ -9,7 +9,7 @@ from typing import Any
 
 from bandproof.bench.journal import Journal
 from bandproof.bench.types import Point
-from bandproof.drivers.clock import VirtualClock
+from bandproof.drivers.clock import RealClock, VirtualClock
 
 __all__ = ["MISHAPS", "struck"]
 
@@ -23,7 +23,7 @@ MISHAPS: Mapping[str, str] = {
 }
 
 
-def struck(mishaps: Mapping[str, int], clock: VirtualClock) -> Callable[[Path, dict[str, Any]], Journal]:
+def struck(mishaps: Mapping[str, int], clock: VirtualClock | RealClock) -> Callable[[Path, dict[str, Any]], Journal]:
     """Return a maker of journals that are struck by mishaps, each when the record of its step is kept."""
 
     class Struck(Journal):
@@ -35,7 +35,7 @@ def struck(mishaps: Mapping[str, int], clock: VirtualClock) -> Callable[[Path, d
     return Struck.begin
 
 
-def _strike(name: str, folder: Path | None, clock: VirtualClock) -> None:
+def _strike(name: str, folder: Path | None, clock: VirtualClock | RealClock) -> None:
     match name:
         case "disk-full":
             raise OSError(errno.ENOSPC, os.strerror(errno.ENOSPC))
@@ -43,8 +43,10 @@ def _strike(name: str, folder: Path | None, clock: VirtualClock) -> None:
             if folder is not None:
                 shutil.rmtree(folder)
         case "computer-asleep":
-            clock.wait(_HOUR)
+            if isinstance(clock, VirtualClock):
+                clock.wait(_HOUR)
         case "clock-set-back":
-            clock.shift_utc(-_HOUR)
+            if isinstance(clock, VirtualClock):  # nobody's real clock is touched
+                clock.shift_utc(-_HOUR)
         case _:
             raise ValueError(f"no mishap {name!r}")

@@ -17,7 +17,7 @@ from bandproof.bench.verbs.run import carried_out, job_of, of_head
 
 if TYPE_CHECKING:
     from bandproof.bench.journal import Journal
-    from bandproof.drivers.clock import VirtualClock
+    from bandproof.drivers.clock import RealClock, VirtualClock
     from bandproof.simulated_instruments.bench import World
     from bandproof.simulated_instruments.faults import Fault
 
@@ -40,6 +40,13 @@ Drawn = dict[str, dict[str, float]]
     metavar="NAME=SIZE",
     help="Another size of one of the bench's imperfections (truth.json has their names; SI, 0: none).",
 )
+@click.option(
+    "--pace",
+    type=click.Choice(["virtual", "real"]),
+    default="virtual",
+    show_default=True,
+    help="Virtual: bench time passes at once. Real: it is waited for.",
+)
 @click.option("--raw", is_flag=True, help="Keep every record in the run file.")
 @click.option("--folder", type=click.Path(path_type=Path), default=Path("rehearsals"), show_default=True)
 @click.option("--serve", is_flag=True, help="Only run the simulated bench, in real time, until Ctrl-C.")
@@ -50,6 +57,7 @@ def command(
     defects: tuple[str, ...],
     faults: tuple[str, ...],
     imperfections: tuple[str, ...],
+    pace: str,
     raw: bool,
     folder: Path,
     serve: bool,
@@ -72,7 +80,7 @@ def command(
     if seed < 0:
         raise BadInput(f"--seed {seed}: a seed is 0 or more")
     board = read_board(board_path) if board_path else demo_board()
-    rehearsal = Rehearsal(seed, defects, faults, imperfections)
+    rehearsal = Rehearsal(seed, defects, faults, imperfections, pace)
     rehearsal.check(board)
     bench = rehearsal_bench(board)
     if serve:
@@ -88,6 +96,7 @@ class Rehearsal:
     defects: tuple[str, ...] = ()
     faults: tuple[str, ...] = ()
     imperfections: tuple[str, ...] = ()
+    pace: str = "virtual"
 
     def check(self, board: Board) -> None:
         """Refuse a part, a fault or an imperfection that does not exist (BadInput)."""
@@ -191,11 +200,17 @@ def _at(bench: Bench, ports: dict[str, int], clock: str | None) -> Bench:
 
 
 @contextmanager
-def simulated(world: "World", bench: Bench, *, t: float = 0.0) -> "Iterator[tuple[Bench, VirtualClock]]":
-    """Run a world as a process of its own in virtual time from t; yield the bench at its ports and the clock."""
-    from bandproof.drivers.clock import VirtualClock, create_clock_file
+def simulated(
+    world: "World", bench: Bench, *, t: float = 0.0, pace: str = "virtual"
+) -> "Iterator[tuple[Bench, VirtualClock | RealClock]]":
+    """Run a world as a process of its own in virtual time from t or in real time; yield the bench and its clock."""
+    from bandproof.drivers.clock import RealClock, VirtualClock, create_clock_file
     from bandproof.simulated_instruments.bench import start
 
+    if pace == "real":
+        with start(world) as server:
+            yield _at(bench, server.ports, None), RealClock()
+        return
     with tempfile.TemporaryDirectory(prefix="bandproof-") as temporary:
         time_file = str(Path(temporary) / "bench.time")
         create_clock_file(time_file, t)
@@ -211,7 +226,7 @@ def _rehearse(rehearsal: Rehearsal, board: Board, bench: Bench, folder: Path, ra
     place, attempt = new_attempt(folder, serial)
     world = rehearsal.world(board, bench, attempt)
     _write_truth(place / "truth.json", board, rehearsal.drawn(board), world)
-    with simulated(world, bench) as (reachable, clock):
+    with simulated(world, bench, pace=rehearsal.pace) as (reachable, clock):
         job = job_of(
             board=board,
             bench=reachable,
@@ -234,10 +249,17 @@ def resume_rehearsal(journal: "Journal", folder: Path, *, as_json: bool) -> int:
 
     head = journal.head
     asked = head["rehearsal"]
-    rehearsal = Rehearsal(asked["seed"], *(tuple(asked[name]) for name in ("defects", "faults", "imperfections")))
+    rehearsal = Rehearsal(
+        asked["seed"],
+        defects=tuple(asked["defects"]),
+        faults=tuple(asked["faults"]),
+        imperfections=tuple(asked["imperfections"]),
+        pace=asked["pace"],
+    )
     board, bench = board_and_bench(journal)
     t = (journal.began[-1] if journal.began else head["clock_start"]) - EARLIER
-    with simulated(rehearsal.world(board, bench, head["attempt"]), bench, t=t) as (reachable, clock):
+    world = rehearsal.world(board, bench, head["attempt"])
+    with simulated(world, bench, t=t, pace=rehearsal.pace) as (reachable, clock):
         job = job_of(board=board, bench=reachable, folder=folder, clock=clock, **of_head(head))
         return carried_out(job, journal=journal, as_json=as_json)
 

@@ -494,3 +494,20 @@ def test_a_served_bench_is_swept_in_real_time_and_ends_with_ctrl_c(console, boar
         process.wait()
         process.stdout.close()
         process.stderr.close()
+
+
+@pytest.mark.parametrize("text", ["hmu=0.01", "hum", "hum=-1", "hum=much", "adc_bits=99"])
+def test_an_imperfection_that_is_none_is_exit_2_with_the_names(console, tmp_path, text):
+    code, _, err = console("rehearse", "--imperfection", text, "--folder", tmp_path)
+    assert code == 2
+    assert "names: output_resistance" in err
+
+
+def test_an_imperfection_asked_for_is_in_the_truth(console, tmp_path, one_band_text):
+    (tmp_path / "one.board.toml").write_text(one_band_text)
+    code, _, _ = console(
+        "rehearse", tmp_path / "one.board.toml", "--imperfection", "hum=0.02", "--pace", "real", "--folder", tmp_path
+    )
+    assert code == 0
+    (truth,) = tmp_path.rglob("truth.json")
+    assert max(json.loads(truth.read_text())["imperfections"]["hum"]) > 1e-3
