@@ -101,7 +101,7 @@ def on_damaged_replies(count: int, seed: int, folder: Path) -> Tally:
         with ExitStack() as stack:
             struck, text = draw.randrange(3), demo_text(DEMO_BENCH)
             for place, port in enumerate(_PORTS):
-                damage = Damage(draw, draw.randrange(4) if place == struck else -1)
+                damage = Damage(draw, draw.randrange(30) if place == struck else -1)
                 address = stack.enter_context(listening(damage))
                 text = text.replace(port, f"::{address.split('::')[2]}::")
             path = folder / f"{number}.bench.toml"

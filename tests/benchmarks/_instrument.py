@@ -39,7 +39,7 @@ class Registers:
     """
 
     def __init__(self) -> None:
-        self.values: dict[str, str] = {}
+        self.values = {"SENSe:SWEep:TIME": "0.02", "SENSe:SWEep:POINts": "2048"}
 
     def __call__(self, message: bytes) -> bytes:
         text = message.decode("latin-1")
@@ -57,11 +57,11 @@ class Registers:
         if text.startswith("ROUTe:CLOSe?"):
             return b"1"
         if text == "SENSe:SWEep:TINTerval?":
-            return repr(self._number("SENSe:SWEep:TIME", 0.02) / self._number("SENSe:SWEep:POINts", 2048.0)).encode()
+            return repr(self._number("SENSe:SWEep:TIME") / max(1.0, self._number("SENSe:SWEep:POINts"))).encode()
         if text.startswith("TRACe:DATA?"):
-            data = bytes(4 * int(self._number("SENSe:SWEep:POINts", 2048.0)))
+            data = bytes(4 * int(self._number("SENSe:SWEep:POINts")))
             return b"#%d%d%s" % (len(str(len(data))), len(data), data)
         return self.values.get(text.replace("?", "").strip(), "0").encode("latin-1")
 
-    def _number(self, head: str, usual: float) -> float:
-        return float(self.values.get(head, usual))
+    def _number(self, head: str) -> float:
+        return float(self.values[head])
