@@ -34,6 +34,8 @@ def test_every_listed_address_is_asked_for_its_identity_and_nothing_else(monkeyp
     assert heard == [b"*IDN?\n", b""]
 
 
-def test_a_bare_machine_lists_nothing_and_says_nothing(capsys):
-    assert list(find.find_instruments(RealClock(margin=0.2))) == []
+def test_looking_for_instruments_says_nothing_of_its_own(capsys):
+    """A machine may have serial ports of its own; whatever VISA lists has a word beside it."""
+    found = list(find.find_instruments(RealClock(margin=0.2)))
+    assert all(address and words for address, words in found)
     assert capsys.readouterr() == ("", "")
