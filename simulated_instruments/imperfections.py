@@ -23,7 +23,8 @@ class Sizes:
 
     Ratios except: output_resistance in ohm, skew in s, probe_corner and ac_corner in Hz, hum in V, drift in 1/s,
     adc_bits in bit (0: no converter, thus no rounding and no noise), noise and nonlinearity in LSB (noise rms),
-    frequency_resolution in Hz, amplitude_resolution in V.
+    frequency_resolution in Hz, amplitude_resolution in V. `decimation` keeps one sample of so many, told only by what
+    is read back; `rounded_entries` of 1 puts a harmless entry into the scope's error queue with each range.
     """
 
     output_resistance: float = 50.0
@@ -44,11 +45,15 @@ class Sizes:
     hum: float = 1e-3
     drift: float = 0.0002 / 60
     reseating: float = 0.0005
+    decimation: int = 1
+    rounded_entries: int = 0
 
     def __post_init__(self) -> None:
         for entry in fields(self):
             if not getattr(self, entry.name) >= 0:
                 raise ValueError(f"{entry.name} must not be negative, found {getattr(self, entry.name)!r}")
+        if self.decimation < 1 or self.decimation != int(self.decimation):
+            raise ValueError(f"decimation must be a whole number from 1, found {self.decimation!r}")
         if self.adc_bits > 16 or self.adc_bits != int(self.adc_bits):
             raise ValueError(f"adc_bits must be a whole number up to 16, found {self.adc_bits!r}")
 
@@ -80,6 +85,8 @@ class Imperfections:
     hum_frequency: float = MAINS
     drift: tuple[float, float] = (0.0, 0.0)
     reseating: float = 0.0
+    decimation: int = 1
+    rounded_entries: int = 0
 
     @classmethod
     def reference(cls, seed: int) -> "Imperfections":
@@ -118,6 +125,8 @@ class Imperfections:
             hum=pair(11, sizes.hum, 0.0),
             drift=pair(12, sizes.drift),
             reseating=sizes.reseating,
+            decimation=sizes.decimation,
+            rounded_entries=sizes.rounded_entries,
         )
 
     def as_plain(self) -> dict[str, Any]:

@@ -24,6 +24,7 @@ __all__ = ["Scope"]
 
 SAMPLE_STEP = 1e-9  # s
 MOST_POINTS = 100_000
+_ROUNDED = 101  # a positive number, the instrument's own (SCPI 1999.0, 21.8.1: device-specific); harmless
 DRIFT = 0.05 / 60  # 1/s, of channel 2 when it drifts
 _FORMATS = Choice(("REAL", "INTeger", "ASCii"), "REAL")
 _LENGTHS = {"REAL": 32, "INT": 16, "ASC": 0}  # bits a sample; 0: as many characters as it takes
@@ -80,7 +81,10 @@ class Scope(Device):
         self._records: dict[int, FloatArray] = {}
         self._format = "REAL"
         super().__init__(
-            "BANDPROOF,SIMULATED SCOPE,0,0", timing=timing, settings=_settings(), commands=self._own(timing)
+            "BANDPROOF,SIMULATED SCOPE,0,0",
+            timing=timing,
+            settings=_settings(imperfections.decimation),
+            commands=self._own(timing),
         )
 
     @property
@@ -103,7 +107,9 @@ class Scope(Device):
         return self._record(channel) if self.at < float("inf") else None
 
     def changed(self, name: str, suffixes: tuple[int, ...]) -> None:
-        """Switch the coupling of a channel."""
+        """Switch the coupling of a channel; say that a range was rounded, where that is a habit of the instrument."""
+        if name == "range" and self._imperfections.rounded_entries:
+            self.status.errors.push(_ROUNDED, "value rounded")
         if name == "coupling":
             self._wiring.couple(self.at, suffixes[0] - 1, self.value(name, *suffixes))
 
@@ -214,7 +220,7 @@ class Scope(Device):
         return definite_block(np.clip(codes, -32768, 32767).astype(order + "i2").tobytes())
 
 
-def _settings() -> list[Setting]:
+def _settings(decimation: int) -> list[Setting]:
     voltage = "[SENSe<1:2>]:VOLTage[:DC]:RANGe"
     return [
         Setting("INPut<1:2>:COUPling", "coupling", Choice(("DC", "AC", "GROund"), "DC")),
@@ -222,7 +228,7 @@ def _settings() -> list[Setting]:
         Setting(voltage + "[:UPPer]", "range", Decimal(RANGES[0], RANGES[-1], 10.0, "V"), _range),
         Setting(voltage + ":OFFSet", "offset", Decimal(-50.0, 50.0, 0.0, "V")),
         Setting("[SENSe]:SWEep:TIME", "time", Decimal(1e-6, 1000.0, 0.01, "S")),
-        Setting("[SENSe]:SWEep:POINts", "points", Integer(1, MOST_POINTS, 1000)),
+        Setting("[SENSe]:SWEep:POINts", "points", Integer(1, MOST_POINTS, 1000), lambda n: max(1, n // decimation)),
         Setting("TRIGger[:SEQuence]:SOURce", "trigger", Choice(("IMMediate",), "IMM")),
         Setting("FORMat:BORDer", "order", Choice(("NORMal", "SWAPped"), "NORM")),
     ]

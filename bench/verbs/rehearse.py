@@ -23,6 +23,7 @@ if TYPE_CHECKING:
 
 __all__ = ["Rehearsal", "command", "resume_rehearsal", "simulated", "world_of"]
 
+_WHOLE = ("adc_bits", "decimation", "rounded_entries")  # imperfections that are counted
 _DEFAULT_STEP = 5  # where a fault strikes when no step is named: inside the first curve; arbitrary
 
 Drawn = dict[str, dict[str, float]]
@@ -132,7 +133,7 @@ class Rehearsal:
         for text in self.imperfections:
             name, _, value = text.partition("=")
             try:
-                found[name] = int(value) if name == "adc_bits" else float(value)
+                found[name] = int(value) if name in _WHOLE else float(value)
                 Sizes(**{name: found[name]})  # type: ignore[arg-type]
             except (ValueError, TypeError) as problem:
                 raise BadInput(
