@@ -2,8 +2,6 @@
 
 from dataclasses import replace
 
-import pytest
-
 from bandproof.bench.circuit import predict
 from bandproof.bench.evaluate import fit_points
 from bandproof.drivers.dialect import source
