@@ -11,7 +11,7 @@ from bandproof.bench.types import Bench, Board, Point, Stage
 
 __all__ = ["check_low_level", "check_quiet", "frequency_problem", "level_problem", "strange_response"]
 
-_LEVEL_OFF = 1.5  # a level off by more than this factor is no loading effect (50 Ω into 600 Ω takes 8 %); arbitrary
+_LEVEL_OFF = 1.2  # no loading effect is larger (50 Ω into 600 Ω takes 8 %), and peak for rms is; arbitrary
 _LEVEL_MOVED = 0.15  # of the level: flatness and loading move it less along a band; arbitrary
 _SEEN = 5.0  # a signal below this many residual rms is no signal; arbitrary
 _NOISY = 2.0  # steps of the converter; its own noise and rounding are about 0.6; arbitrary
@@ -104,9 +104,11 @@ def _cause(ratio: float) -> str:
         (10.0, "probe factor 10 in the bench file, but the probe is × 1?"),
         (0.1, "probe factor 1 in the bench file, but the probe is × 10?"),
         (2.0, "the generator assumes a 50 Ω load: set it to high impedance"),
+        (2.0**0.5, "the instrument counts rms, its dialect says peak: see `meaning` of its amplitude"),
+        (0.5**0.5, "the instrument counts peak, its dialect says rms: see `meaning` of its amplitude"),
         (0.5, "a 50 Ω load hangs on the generator, or the instrument counts peak to peak: check its dialect"),
     ):
-        if abs(log10(ratio / factor)) < log10(1.25):
+        if abs(log10(ratio / factor)) < log10(1.15):
             return cause
     return "check the generator's dialect (peak, peak to peak or rms), its load assumption and the probe"
 

@@ -182,9 +182,24 @@ def tells_an_overload(scope: Scope) -> None:
     """An input outside the range is told as overloaded: here a range that is shifted away from 0 V."""
     if not scope.dialect.offset.set:
         raise NotTried("its range cannot be shifted, and without a signal nothing else overloads it")
-    _prepared(scope, peak=0.1, offset=0.5)
-    record = scope.acquire()
-    demand(bool(record.overload.all()), f"{record.volts.min():g} to {record.volts.max():g} V and no overload told")
+    for offset in (0.5, -0.5):  # both ends of the converter
+        _prepared(scope, peak=0.1, offset=offset)
+        record = scope.acquire()
+        seen = f"{record.volts.min():g} to {record.volts.max():g} V on a range of 0.1 V round {offset:g} V"
+        demand(bool(record.overload.all()), f"{seen}, and no overload told: look at [overload]")
+
+
+def shifts_its_range_without_shifting_the_input(scope: Scope) -> None:
+    """A quiet input reads the same on a range that is shifted: the offset has the right sign and unit."""
+    if not scope.dialect.offset.set:
+        raise NotTried("its range cannot be shifted")
+    _prepared(scope, peak=2.0)
+    still = scope.acquire().volts.mean(axis=1)
+    _prepared(scope, peak=2.0, offset=1.0)
+    moved = scope.acquire().volts.mean(axis=1) - still
+    demand(
+        bool((abs(moved) < 0.2).all()), f"it reads {moved[0]:+.3g} V more on a range shifted by 1 V: look at [offset]"
+    )
 
 
 def repeats_no_channel_setting(scope: Scope) -> None:
@@ -311,6 +326,7 @@ CLAUSES: dict[type[Instrument], tuple[Callable[..., None], ...]] = {
         takes_the_duration_asked,
         sees_no_overload_inside_its_range,
         tells_an_overload,
+        shifts_its_range_without_shifting_the_input,
         repeats_no_channel_setting,
         records_as_before_after_reopening,
     ),

@@ -119,8 +119,10 @@ def _from_preamble(transfer: Transfer, line: bytes) -> tuple[float, float, float
 def _ends(dialect: ScopeDialect, setting: _Setting, software: float, scale: float) -> tuple[float, float, float]:
     """Return the lowest and highest sample the converter can give, as transferred, and one code in V at the tip."""
     if dialect.transfer.scaling != "volts":
-        return dialect.overload.low, dialect.overload.high, abs(scale) * software
-    lsb = setting.range / 2 ** (dialect.overload.bits - 1)
+        low, high, bits = dialect.overload.low, dialect.overload.high, dialect.overload.bits
+        codes = (high - low) / (2**bits - 1) if bits and high > low else 1.0  # of the transfer in a converter's step
+        return low, high, max(codes, 1.0) * abs(scale) * software
+    lsb = setting.range / 2 ** ((dialect.overload.bits or 8) - 1)
     low, high = setting.offset - setting.range, setting.offset + setting.range - lsb
     return (low + lsb / 4) / software, (high - lsb / 4) / software, lsb  # a quarter: samples may be rounded
 

@@ -221,7 +221,8 @@ class Overload:
     by : {"end codes", "query"}
         Samples at the end of the converter, or the instrument says so.
     bits : int
-        Of the converter, for samples in volts and for the width of one code.
+        Of the converter. Samples in volts: 0 counts as 8. Integer samples: fewer than the codes have, as of an 8-bit
+        converter in the upper half of 16 bits; 0: each code is a step of the converter.
     low, high : float
         End codes of integer samples; equal: none are known.
     query : str
@@ -231,7 +232,7 @@ class Overload:
     """
 
     by: Literal["end codes", "query"] = "end codes"
-    bits: int = 8
+    bits: int = 0
     low: float = 0.0
     high: float = 0.0
     query: str = _template("channel")

@@ -49,6 +49,8 @@ def same(anything):
 FAULTS = {
     "probe factor 10 for a 1:1 probe": (same, probes(10.0, 10.0), r"^input \(channel 1\) .*× \d.*\): probe factor 10"),
     "probe factor 1 for a 10:1 probe": (with_gain(0.1), same, r"^input \(channel 1\) .*probe factor 1 .*probe is × 10"),
+    "rms taken for peak": (with_gain(2**0.5), same, r"^input \(channel 1\) .*counts rms, its dialect says peak"),
+    "peak taken for rms": (with_gain(0.5**0.5), same, r"^input \(channel 1\) .*counts peak, its dialect says rms"),
     "50 ohm load": (load_50_ohm, same, r"^input \(channel 1\) .*0\.\d+\): a 50 Ω load hangs on the generator"),
     "load of 50 ohm assumed": (with_gain(2.0), same, r"^input \(channel 1\) .*assumes a 50 Ω load: set it to high"),
     "level that nothing explains": (with_gain(5.0), same, r"^input \(channel 1\) .*check the generator's dialect"),
@@ -71,7 +73,7 @@ def test_a_bench_fault_is_found_before_the_board_is_driven(swept, one_band, chan
 # What no bench fault is: 8 % is what 50 Ω into 600 Ω take (a voltage divider).
 HEALTHY = {
     "8 % less": with_gain(0.92),
-    "30 % more": with_gain(1.3),
+    "15 % more": with_gain(1.15),
     "offset of 50 mV": stuck_at(0.05),
     "3 % of the bench's own": same,
 }
