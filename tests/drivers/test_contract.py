@@ -239,6 +239,7 @@ BREAKERS = {
     ("scope", "records_as_before_after_reopening"): one_sample_short,
     ("scope", "sees_no_overload_inside_its_range"): always_at_the_end,
     ("scope", "tells_an_overload"): never_at_the_end,
+    ("scope", "shifts_its_range_without_shifting_the_input"): never_at_the_end,
     ("switch", "closes_one_route_and_opens_the_others"): stays_closed,
     ("switch", "opens_every_route"): never_opens,
     ("supply", "reads_back_voltages_and_limits"): one_voltage_for_all,
