@@ -17,7 +17,7 @@ from bandproof.drivers.session import Session, as_text
 HEADER = struct.Struct("!2sBBIQ")  # IVI-6.1; see tests/outside/hislip_golden.csv
 INITIALIZE, INITIALIZED, FATAL, ERROR, DATA, END, INTERRUPTED = 0, 1, 2, 3, 6, 7, 13
 SIZE, SIZE_TOLD, ASYNC, ASYNC_DONE = 15, 16, 17, 18
-LIMIT = 1.0  # s, the fixture's patience: room for a busy machine to open a connection
+LIMIT = 0.8  # s, the fixture's patience
 FIRST = 0xFFFFFF00
 
 
