@@ -58,6 +58,11 @@ class Sweep:
         self._stage = ""
         self._last_seen: tuple[float, datetime] | None = None
         self._start = self.clock.now() if self.start is None else self.start
+        self._origin = self._start
+
+    def stamp(self) -> float:
+        """Return the clock as the run counts it: without the time nobody measured before a resume, in whole ns."""
+        return round(self._origin + self.elapsed(), 9)
 
     def elapsed(self) -> float:
         """Return the bench time of the run in s."""
@@ -117,11 +122,11 @@ class Sweep:
 
     def _carry_out(self, step: Step) -> None:
         self._watch_clock(step)
-        began = self.clock.now()
+        began = self.stamp()
         point, volts = self._recovered(step)
         point, volts = self._second_look(step, point, volts)
         self._last_seen = self.clock.now(), self.clock.utc()
-        self.journal.measured(point, began=began, finished=self.clock.now(), volts=volts if self.keep_raw else None)
+        self.journal.measured(point, began=began, finished=self.stamp(), volts=volts if self.keep_raw else None)
         self._look(step, self.board.stage(step.stage), point)
 
     def _second_look(self, step: Step, point: Point, volts: FloatArray) -> tuple[Point, FloatArray]:
