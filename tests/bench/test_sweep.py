@@ -263,3 +263,15 @@ def test_an_operator_who_stops_leaves_the_generator_off(hand_wired, two_bands, t
         Sweep(two_bands, bench, devices, clock, hands, journal).run()
     assert {point.stage for point in journal.points} == {"low"}
     assert outputs(told(log))[-1] == "OUTPut:STATe OFF"
+
+
+def test_bench_time_goes_on_after_a_resume_as_if_nobody_had_been_away():
+    """A real computer's monotonic clock begins anew with each start; what the run counts does not."""
+
+    class Restarted:
+        def now(self):
+            return 7.0
+
+    sweep = Sweep(None, None, None, Restarted(), None, None, start=5000.0)
+    sweep.continue_at(2.5)
+    assert sweep.stamp() == 5002.5
