@@ -2,14 +2,16 @@
 
 import os
 import re
+from dataclasses import fields
 from pathlib import Path
-from typing import Literal
+from typing import Literal, cast, get_args
 
 from bandproof.bench.errors import FileMistakes
 from bandproof.bench.reading import Mistakes, Table, nearest, parse_toml, read_text
 from bandproof.bench.types import Bench, Board, Instrument, Wire
 from bandproof.drivers.dialect import load
 from bandproof.drivers.schema import DialectMistakes
+from bandproof.drivers.serial_line import Flow, Parity, Serial
 
 __all__ = ["check_wiring", "find_bench", "parse_bench", "read_bench"]
 
@@ -17,6 +19,7 @@ Role = Literal["generator", "scope", "switch", "supply"]
 BY_HAND = "by hand"
 _ADDRESS = re.compile(r"(TCPIP|USB|GPIB|ASRL|PXI|VXI)[^:\s]*(::[^:\s]+)+", re.IGNORECASE)  # interfaces of VPP-4.3
 _EXAMPLE = '"TCPIP::192.0.2.10::5025::SOCKET"'
+_BAUD = 50, 4_000_000  # what operating systems name (POSIX from 50)
 _USUAL_SKEW = 100e-9  # s, each channel; arbitrary, far above what two inputs of one scope differ by
 
 
@@ -130,8 +133,27 @@ def _instrument(role: Role, table: Table, folder: Path) -> Instrument:
         table.mistake("address", f"found {address!r}; expected an address as VISA spells it, such as {_EXAMPLE}")
     if dialect.endswith(".toml"):
         dialect = str(folder / dialect)
+    serial = _serial(table, address)
     table.close()
-    return Instrument(role, address, dialect)
+    return Instrument(role, address, dialect, serial)
+
+
+def _serial(table: Table, address: str) -> Serial | None:
+    """Return how a serial line is set, None for another address, where every such key is a mistake."""
+    usual = Serial()
+    serial = Serial(
+        baud=table.whole("baud", *_BAUD, usual.baud),
+        data_bits=table.whole("data_bits", 7, 8, usual.data_bits),
+        parity=cast(Parity, table.choice("parity", get_args(Parity), usual.parity)),
+        stop_bits=table.whole("stop_bits", 1, 2, usual.stop_bits),
+        flow=cast(Flow, table.choice("flow", get_args(Flow), usual.flow)),
+    )
+    if address[:4].upper() == "ASRL":
+        return serial
+    for key in (field.name for field in fields(Serial)):
+        if address and key in table:
+            table.mistake(key, f"is for a serial line (ASRL...), and {address!r} is none")
+    return None
 
 
 def _probes(table: Table) -> dict[int, float]:

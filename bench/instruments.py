@@ -100,12 +100,7 @@ def opened(bench: Bench, clock: Clock, log_path: Path | None, lifeline: Lifeline
     """
     dialects = load_dialects(bench)
     with closing(ExchangeLog(log_path)) as log:
-        sessions = {
-            role: Session(
-                Link(bench.instruments[role].address, clock, log, visa_library=bench.visa_library), dialect.habits
-            )
-            for role, dialect in dialects.items()
-        }
+        sessions = {role: Session(_link(bench, role, clock, log), dialect.habits) for role, dialect in dialects.items()}
         devices = _devices(bench, sessions, dialects)
         if lifeline is not None:
             devices.await_lifeline = lifeline.await_ready
@@ -123,6 +118,11 @@ def opened(bench: Bench, clock: Clock, log_path: Path | None, lifeline: Lifeline
         finally:
             for session in sessions.values():
                 session.link.close()
+
+
+def _link(bench: Bench, role: str, clock: Clock, log: ExchangeLog) -> Link:
+    instrument = bench.instruments[role]
+    return Link(instrument.address, clock, log, visa_library=bench.visa_library, serial=instrument.serial)
 
 
 def _power_down(devices: Devices, after: BaseException | None) -> None:

@@ -133,12 +133,14 @@ class Job:
 
     def _lifeline(self, bench: Bench) -> Lifeline:
         """Return the process that switches the generator off should this one be killed."""
+        generator = bench.instruments["generator"]
         return Lifeline.start(
-            bench.instruments["generator"].address,
+            generator.address,
             dialect_text=bench.dialect_texts["generator"],
             visa_library=bench.visa_library,
             clock_path=bench.clock,
             popen_options=detached(),
+            serial=generator.serial,
         )
 
     def _sweep(self, devices: Devices, bench: Bench, journal: Journal) -> Sweep:

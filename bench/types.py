@@ -7,6 +7,8 @@ from collections.abc import Mapping
 from dataclasses import dataclass, field
 from typing import Any, Literal
 
+from bandproof.drivers.serial_line import Serial
+
 __all__ = [
     "Bench",
     "Board",
@@ -128,11 +130,12 @@ class Board:
 
 @dataclass(frozen=True, slots=True)
 class Instrument:
-    """Where an instrument is and which dialect it understands."""
+    """Where an instrument is, which dialect it understands, and how its line is set where it is a serial one."""
 
     role: Literal["generator", "scope", "switch", "supply"]
     address: str
     dialect: str
+    serial: Serial | None = None
 
 
 @dataclass(frozen=True, slots=True)

@@ -19,10 +19,11 @@ import subprocess
 import sys
 import threading
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import asdict, dataclass
 from typing import TYPE_CHECKING, Any
 
 from bandproof.drivers.errors import InstrumentProblem
+from bandproof.drivers.serial_line import Serial
 
 if TYPE_CHECKING:
     from bandproof.drivers.generator import Generator
@@ -72,6 +73,7 @@ class Lifeline:
         visa_library: str,
         clock_path: str | None,
         popen_options: Mapping[str, Any],
+        serial: Serial | None = None,
         limit: float = LIMIT,
     ) -> Lifeline:
         """Start the process and return at once; it gets ready while the controller does.
@@ -88,6 +90,8 @@ class Lifeline:
             The clock file of a rehearsal.
         popen_options : mapping
             Keep it out of reach of the terminal's Ctrl-C.
+        serial : Serial or None
+            How the generator's line is set, where it is a serial one.
         limit : float
             Seconds it tries to reach the instrument.
 
@@ -96,7 +100,14 @@ class Lifeline:
         OSError
             The process could not be started.
         """
-        order = {"address": address, "dialect": dialect_text, "visa_library": visa_library, "clock": clock_path}
+        order = {
+            "address": address,
+            "dialect": dialect_text,
+            "visa_library": visa_library,
+            "clock": clock_path,
+            "serial": asdict(serial) if serial is not None else None,
+            "limit": limit,
+        }
         process = subprocess.Popen(
             [sys.executable, "-P", "-m", "bandproof.drivers.lifeline"],  # -P: nothing from the user's folder
             stdin=subprocess.PIPE,
@@ -108,7 +119,7 @@ class Lifeline:
         )
         assert process.stdin is not None
         with contextlib.suppress(OSError):  # it died already: await_ready tells
-            process.stdin.write(json.dumps(order | {"limit": limit}) + "\n")
+            process.stdin.write(json.dumps(order) + "\n")
             process.stdin.flush()
         return cls(address, process, limit)
 
@@ -239,9 +250,9 @@ def _prepared(order: Mapping[str, Any]) -> Generator:
     visa.prepare(order["visa_library"])
     patience, path = min(PATIENCE, order["limit"]), order["clock"]
     clock = RealClock(margin=patience, factor=0.0) if path is None else VirtualClock(path, patience=patience)
-    return Generator(
-        Session(Link(order["address"], clock, visa_library=order["visa_library"]), dialect.habits), dialect
-    )
+    serial = Serial(**order["serial"]) if order["serial"] is not None else None
+    link = Link(order["address"], clock, visa_library=order["visa_library"], serial=serial)
+    return Generator(Session(link, dialect.habits), dialect)
 
 
 def _switch_off(generator: Generator, limit: float) -> bool:

@@ -9,11 +9,13 @@ from __future__ import annotations
 import time
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
+from functools import partial
 from typing import Protocol, TypeVar
 
 from bandproof.drivers.clock import Clock
 from bandproof.drivers.errors import EXCERPT, LinkBroken, LinkClosed, NoAnswer, ReplyError
 from bandproof.drivers.log import ExchangeLog
+from bandproof.drivers.serial_line import Serial
 
 __all__ = ["Link", "Opener", "Port", "Transaction"]
 
@@ -55,6 +57,8 @@ class Link:
         Gets every message.
     visa_library : str
         As PyVISA names it; the default is PyVISA-py.
+    serial : Serial or None
+        How a serial line is set each time it is opened; None: as the library opens it.
     opener : callable or None
         Makes the port from address, library and limit; None: PyVISA.
     """
@@ -66,10 +70,12 @@ class Link:
         log: ExchangeLog | None = None,
         *,
         visa_library: str = "@py",
+        serial: Serial | None = None,
         opener: Opener | None = None,
     ) -> None:
         self.address, self.clock, self.is_dirty = address, clock, False
-        self._log, self._library, self._opener = log or ExchangeLog(None), visa_library, opener or _visa_port
+        self._log, self._library = log or ExchangeLog(None), visa_library
+        self._opener = opener or partial(_visa_port, serial=serial)
         self._port: Port | None = None
         self._was_closed = False
 
@@ -258,10 +264,10 @@ def _foreign() -> tuple[type[BaseException], ...]:
     return translated()
 
 
-def _visa_port(address: str, library: str, limit: float) -> Port:
+def _visa_port(address: str, library: str, limit: float, serial: Serial | None) -> Port:
     from bandproof.drivers.visa import VisaPort
 
-    return VisaPort(address, library, limit)
+    return VisaPort(address, library, limit, serial)
 
 
 def _reason(problem: BaseException) -> str:

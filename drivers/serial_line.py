@@ -6,13 +6,28 @@ connection: what an instrument was still saying when the port was closed arrives
 
 from __future__ import annotations
 
-from typing import Protocol
+from dataclasses import dataclass
+from typing import Literal, Protocol
 
 from bandproof.drivers.clock import RealClock
 
-__all__ = ["SerialLine"]
+__all__ = ["Flow", "Parity", "Serial", "SerialLine"]
+
+Parity = Literal["none", "even", "odd"]
+Flow = Literal["none", "xon/xoff", "rts/cts"]
 
 QUIET = 0.05  # s without a byte after which an instrument has nothing more to say; arbitrary, six characters at 1200 Bd
+
+
+@dataclass(frozen=True, slots=True)
+class Serial:
+    """How a serial line is set; the defaults are those VISA gives a port (VPP-4.3): 9600 Bd, 8N1."""
+
+    baud: int = 9600
+    data_bits: int = 8
+    parity: Parity = "none"
+    stop_bits: int = 1
+    flow: Flow = "none"
 
 
 class SerialPort(Protocol):

@@ -18,6 +18,8 @@ if TYPE_CHECKING:
     from pyvisa import ResourceManager
     from pyvisa.resources import MessageBasedResource
 
+    from bandproof.drivers.serial_line import Serial
+
 __all__ = ["VisaPort", "is_timeout", "listed", "prepare", "translated"]
 
 PEEK = 1 << 18  # bytes taken in one raw read; bounds memory (a 2 MB block takes 8 to 30 reads)
@@ -48,6 +50,8 @@ class VisaPort:
         VISA library as PyVISA names it; ``"@py"`` is PyVISA-py.
     limit : float
         Seconds that opening may take.
+    serial : Serial or None
+        How a serial line is set; None leaves it as the library opens it.
 
     Raises
     ------
@@ -55,7 +59,7 @@ class VisaPort:
         The instrument refused. Any other error of PyVISA or of its library may also come out; see `translated`.
     """
 
-    def __init__(self, address: str, library: str, limit: float) -> None:
+    def __init__(self, address: str, library: str, limit: float, serial: Serial | None = None) -> None:
         from bandproof.drivers.hislip import lent
 
         manager = _manager(library)
@@ -68,6 +72,8 @@ class VisaPort:
         if self._socket is not None:
             self._refuse_failed_connection(self._socket)
         try:
+            if serial is not None:
+                _set_line(self._resource, serial)
             self._wire = _wire_of(self._resource, limit)
         except BaseException:
             self.close()
@@ -186,6 +192,17 @@ def _wire_of(resource: Any, limit: float) -> Wire | None:
     if type(session).__name__ == "SerialSession" and hasattr(interface, "in_waiting"):
         return SerialLine(interface, limit)
     return None
+
+
+def _set_line(resource: MessageBasedResource, serial: Serial) -> None:
+    """Set a serial line by the attributes of VPP-4.3, which every VISA library has."""
+    from pyvisa.constants import ControlFlow, Parity, ResourceAttribute, StopBits
+
+    resource.set_visa_attribute(ResourceAttribute.asrl_baud_rate, serial.baud)
+    resource.set_visa_attribute(ResourceAttribute.asrl_data_bits, serial.data_bits)
+    resource.set_visa_attribute(ResourceAttribute.asrl_parity, Parity[serial.parity])
+    resource.set_visa_attribute(ResourceAttribute.asrl_stop_bits, {1: StopBits.one, 2: StopBits.two}[serial.stop_bits])
+    resource.set_visa_attribute(ResourceAttribute.asrl_flow_control, ControlFlow[serial.flow.replace("/", "_")])
 
 
 def _milliseconds(limit: float) -> int:

@@ -12,6 +12,7 @@ from bandproof.bench.errors import FileMistakes
 from bandproof.bench.rehearsal import DEMO_BENCH, DEMO_BOARD, demo_board, demo_text, rehearsal_bench
 from bandproof.bench.verbs.console import BAD_INPUT, run
 from bandproof.drivers.dialect import source
+from bandproof.drivers.serial_line import Serial
 
 BOARD, BENCH = demo_text(DEMO_BOARD), demo_text(DEMO_BENCH)
 
@@ -121,6 +122,10 @@ ONE_IN_A_BENCH = {
     "no address": (('address = "TCPIP::127.0.0.1::5025::SOCKET"\n', ""), r"generator\.address: missing"),
     "no wiring": (("[wiring] ", "[wireing] "), r"wiring: missing(.|\n)*wireing: unknown key.*nearest: wiring"),
     "no probes": (("[probes]\n", ""), r"probes: missing"),
+    "baud of a socket": (
+        ("[scope]\n", "[scope]\nbaud = 19200\n"),
+        r"scope\.baud: is for a serial line \(ASRL\.\.\.\), and 'TCPIP::127\.0\.0\.1::5026::SOCKET' is none",
+    ),
     "probe of no factor": (("channel_1 = 1 ", "channel_1 = 0 "), r"probes\.channel_1: 0 is not above zero"),
 }
 
@@ -129,6 +134,37 @@ ONE_IN_A_BENCH = {
 def test_a_mistake_in_a_bench_file_is_named_with_its_place(change, finding):
     with pytest.raises(FileMistakes, match=finding):
         parse_bench(changed(BENCH, change), "a.bench.toml")
+
+
+SERIAL_LINE = ("TCPIP::127.0.0.1::5025::SOCKET", "ASRL/dev/ttyUSB0::INSTR")
+
+
+def test_every_mistake_of_a_serial_line_is_named_with_its_place():
+    wrong = 'baud = "19200"\ndata_bits = 9\nparity = "mark"\nstop_bits = 1.5\nflow = "xon/off"\nbauds = 9600\n'
+    with pytest.raises(FileMistakes) as caught:
+        parse_bench(changed(BENCH, SERIAL_LINE, ("[generator]\n", "[generator]\n" + wrong)), "a.bench.toml")
+    for number, pattern in enumerate(
+        (
+            r"generator\.baud: found '19200'; expected a whole number from 50 to 4000000",
+            r"generator\.data_bits: found 9; expected a whole number from 7 to 8",
+            r"generator\.parity: found 'mark'; expected none \| even \| odd",
+            r"generator\.stop_bits: found 1\.5; expected a whole number from 1 to 2",
+            r"generator\.flow: found 'xon/off'; expected none \| xon/xoff \| rts/cts \(nearest: xon/xoff\)",
+            r"generator\.bauds: unknown key.*\(nearest: baud\)",
+        ),
+        1,
+    ):
+        assert re.search(rf"^  {number}\. {pattern}", str(caught.value), re.MULTILINE), pattern
+
+
+def test_a_serial_line_is_set_as_the_file_says_and_as_visa_leaves_it_where_it_says_nothing():
+    """The defaults are VISA's own (VPP-4.3: 9600 Bd, 8 data bits, no parity, 1 stop bit, no flow control)."""
+    plain = parse_bench(changed(BENCH, SERIAL_LINE), "a.bench.toml").instruments
+    assert plain["generator"].serial == Serial(9600, 8, "none", 1, "none")
+    assert plain["scope"].serial is None
+    every = 'baud = 115200\ndata_bits = 7\nparity = "odd"\nstop_bits = 2\nflow = "rts/cts"\n'
+    bench = parse_bench(changed(BENCH, SERIAL_LINE, ("[generator]\n", "[generator]\n" + every)), "a.bench.toml")
+    assert bench.instruments["generator"].serial == Serial(115200, 7, "odd", 2, "rts/cts")
 
 
 NO_FILES = {

@@ -7,6 +7,7 @@ import signal
 import socket
 import subprocess
 import sys
+import termios
 import time
 from dataclasses import replace
 from importlib.metadata import version
@@ -22,8 +23,11 @@ from bandproof.bench.verbs.rehearse import world_of
 from bandproof.bench.verbs.table import VERBS
 from bandproof.drivers.clock import VirtualClock, create_clock_file
 from bandproof.drivers.dialect import source
+from bandproof.drivers.lifeline import Lifeline
+from bandproof.drivers.serial_line import Serial
 from bandproof.simulated_instruments.bench import start
 from bandproof.simulated_instruments.faults import Fault
+from tests.benchmarks._serial_bridge import serial_address
 
 PASS, BOARD_FAILS, BAD_INPUT, BENCH_FAULT, UNDECIDED, INTERRUPTED = range(6)  # as documented in --help
 
@@ -290,6 +294,28 @@ def served(board_path, tmp_path):
 def impatient(monkeypatch):
     """Wait for a simulated instrument only half a second by the wall: it computes, it does not wait."""
     monkeypatch.setattr(VirtualClock, "patience", lambda self, expected: 0.5)
+
+
+def test_a_serial_line_is_set_as_the_bench_file_says_in_a_whole_sweep_and_for_its_lifeline(
+    console, served, monkeypatch
+):
+    bench, seen, lifelines, true = served(), set(), [], Lifeline.start
+
+    def start_lifeline(address, **options):
+        lifelines.append((address, options["serial"]))
+        return true(address, **options)
+
+    monkeypatch.setattr(Lifeline, "start", start_lifeline)
+    with serial_address(bench.ports["generator"], seen=seen) as address:
+        socket_address = f'"TCPIP::127.0.0.1::{bench.ports["generator"]}::SOCKET"'
+        text = bench.bench.read_text()
+        assert socket_address in text
+        bench.bench.write_text(text.replace(socket_address, f'"{address}"\nbaud = 19200\nstop_bits = 2'))
+        code, out, _ = bench.sweep(console)
+    assert code == PASS, out
+    assert {line[5] for line in seen} == {termios.B19200}  # the speed, of POSIX's termios
+    assert {line[2] & termios.CSTOPB for line in seen} == {termios.CSTOPB}
+    assert lifelines == [(address, Serial(baud=19200, stop_bits=2))]
 
 
 def test_a_sweep_of_a_served_bench_passes_and_leaves_it_off(console, served):
