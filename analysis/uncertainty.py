@@ -1,6 +1,7 @@
 """Uncertainty budgets.
 
-Source: JCGM 100:2008, 5.1 (independent inputs) and annex G.4 (effective degrees of freedom, Welch-Satterthwaite).
+Source: JCGM 100:2008, 5.1 (independent inputs) and annex G.4 (effective degrees of freedom, Welch-Satterthwaite); the
+interval by propagation of distributions (JCGM 101:2008), here by folding them on a grid instead of by drawing.
 """
 
 from __future__ import annotations
@@ -10,9 +11,16 @@ from dataclasses import dataclass
 from math import inf, isfinite, sqrt
 from typing import Literal, TypeAlias
 
-__all__ = ["Combined", "Distribution", "Row", "combine", "coverage_factor"]
+import numpy as np
+
+from bandproof.analysis.types import FloatArray
+
+__all__ = ["COVERAGE", "Combined", "Distribution", "Row", "combine", "coverage_factor", "half_width", "share"]
 
 Distribution: TypeAlias = Literal["normal", "uniform", "triangular", "arcsine", "t"]
+COVERAGE = 0.9545  # of every U: that of two standard uncertainties of a normal distribution
+_WIDEST = 12.0  # standard uncertainties the grid reaches to; no folded tail of a budget is heavier
+_CELLS = 4096
 
 
 @dataclass(frozen=True, slots=True)
@@ -63,7 +71,11 @@ class Row:
 
 @dataclass(frozen=True, slots=True)
 class Combined:
-    """A combined budget: rows, standard uncertainty, its type A part, effective dof, coverage factor k, U = k u."""
+    """A combined budget.
+
+    Rows; standard uncertainty and its type A part; effective degrees of freedom; U, the half-width of the interval that
+    holds the value with `COVERAGE`; coverage factor U / u.
+    """
 
     rows: tuple[Row, ...]
     u: float
@@ -73,7 +85,7 @@ class Combined:
     expanded: float
 
 
-def combine(rows: Sequence[Row], *, coverage: float = 0.9545) -> Combined:
+def combine(rows: Sequence[Row], *, coverage: float = COVERAGE) -> Combined:
     """Return the combined budget of independent rows; no row is left out.
 
     Examples
@@ -90,10 +102,16 @@ def combine(rows: Sequence[Row], *, coverage: float = 0.9545) -> Combined:
     spread = sum((row.contribution / u) ** 4 / row.dof for row in rows) if u else 0.0
     dof = 1 / spread if spread else inf
     k = coverage_factor(dof, coverage=coverage)
-    return Combined(tuple(rows), u, u_type_a, dof, k, k * u)
+    expanded = half_width(rows, coverage=coverage) if u else 0.0
+    return Combined(tuple(rows), u, u_type_a, dof, expanded / u if u else k, expanded)
 
 
-def coverage_factor(dof: float, *, coverage: float = 0.9545) -> float:
+def share(row: Row, budget: Combined) -> float:
+    """Return a row's part of the budget's variance, 0 to 1."""
+    return (row.contribution / budget.u) ** 2 if budget.u else 0.0
+
+
+def coverage_factor(dof: float, *, coverage: float = COVERAGE) -> float:
     """Return the two-sided coverage factor from Student's t, dof truncated to a whole number (JCGM 100, G.4.1).
 
     Examples
@@ -105,3 +123,71 @@ def coverage_factor(dof: float, *, coverage: float = 0.9545) -> float:
 
     upper = 0.5 * (1 + coverage)
     return float(ndtri(upper)) if dof > 1e9 else float(stdtrit(max(1, int(dof)), upper))
+
+
+def half_width(rows: Sequence[Row], *, coverage: float = COVERAGE) -> float:
+    """Return the half-width of the interval round 0 that holds the sum of independent rows with a probability.
+
+    A row of finite degrees of freedom counts as a scaled t distribution (JCGM 101, 6.4.9). Where the rows are normal,
+    they are taken together and nothing is folded: the half-width is then k u.
+
+    Examples
+    --------
+    >>> flat = Row("a", "B", "uniform", 1.0, 1.0, inf, "half-width 3**0.5")
+    >>> round(half_width([flat], coverage=0.95) / 3**0.5, 3)
+    0.95
+    """
+    normal = [row for row in rows if row.distribution == "normal" and not isfinite(row.dof)]
+    others = [row for row in rows if row not in normal and row.contribution]
+    together = sqrt(sum(row.contribution**2 for row in normal))
+    if not others:
+        return coverage_factor(inf, coverage=coverage) * together
+    if len(others) == 1 and not together and others[0].distribution in ("normal", "t"):
+        return coverage_factor(others[0].dof, coverage=coverage) * others[0].contribution
+    u = sqrt(together**2 + sum(row.contribution**2 for row in others))
+    edge = np.linspace(-_WIDEST * u, _WIDEST * u, _CELLS + 1)
+    parts = [np.diff(_distribution(row.distribution, row.dof, edge / row.contribution)) for row in others]
+    if together:
+        parts.append(np.diff(_distribution("normal", inf, edge / together)))
+    folded = parts[0]
+    for part in parts[1:]:
+        folded = _folded(folded, part)
+    return _quantile(folded, edge[1] - edge[0], coverage)
+
+
+def _distribution(name: Distribution, dof: float, x: FloatArray) -> FloatArray:
+    """Return the distribution function at x standard deviations (for a t: of its scale)."""
+    from scipy.special import ndtr, stdtr
+
+    result: FloatArray
+    match name:
+        case "normal" | "t" if isfinite(dof):
+            result = stdtr(dof, x)
+        case "normal" | "t":
+            result = ndtr(x)
+        case "uniform":
+            result = np.clip(0.5 + 0.5 * x / sqrt(3.0), 0.0, 1.0)
+        case "triangular":
+            at = np.clip(x / sqrt(6.0), -1.0, 1.0)
+            result = 0.5 + at - 0.5 * at * np.abs(at)
+        case "arcsine":
+            result = 0.5 + np.arcsin(np.clip(x / sqrt(2.0), -1.0, 1.0)) / np.pi
+    return result
+
+
+def _folded(first: FloatArray, second: FloatArray) -> FloatArray:
+    """Return the cell probabilities of the sum of two independent variables on the same grid."""
+    size = 2 * _CELLS
+    whole = np.fft.irfft(np.fft.rfft(first, size) * np.fft.rfft(second, size), size)
+    # Cell i stands for its middle: two middles sum to an edge, so neighbouring results share half each.
+    start = _CELLS // 2 - 1
+    folded: FloatArray = 0.5 * (whole[start : start + _CELLS] + whole[start + 1 : start + 1 + _CELLS])
+    return folded
+
+
+def _quantile(cells: FloatArray, width: float, coverage: float) -> float:
+    """Return how far from the middle the cells hold the wanted probability."""
+    half = _CELLS // 2
+    both = cells[half:] + cells[:half][::-1]
+    held = np.concatenate([[0.0], np.cumsum(both) / both.sum()])
+    return float(np.interp(coverage, held, width * np.arange(half + 1)))
