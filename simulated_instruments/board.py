@@ -5,17 +5,22 @@ carried from event to event. An event is a change of the generator, of the route
 generator's EMF is `offset + amplitude sin(2 pi frequency (t - event))`: its phase begins at each event of its own.
 
 Clipping is memoryless: a tap that is an op-amp output is limited to +-swing, and what lies behind that op-amp
-still sees the unlimited voltage; slew rate is not modelled.
+still sees the unlimited voltage. So is slewing: such a tap shows its steady state as `slewing` has it, what decays is
+added unlimited.
+
+A probe loads the node it is on. Moved, it meets its new node at that node's voltage: no voltage jumps.
 """
 
 from bisect import bisect_right
 from collections.abc import Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
+from math import inf, isfinite
 
 import numpy as np
 
-from bandproof.analysis.network import GROUND, Network, state_space
+from bandproof.analysis.network import GROUND, Capacitor, Network, Resistor, state_space
 from bandproof.simulated_instruments.dynamics import ComplexArray, Dynamics, FloatArray, sum_of_exponentials
+from bandproof.simulated_instruments.slewing import excess
 
 __all__ = ["Board", "Drive", "FrontEnd", "Section"]
 
@@ -47,13 +52,17 @@ class Section:
 class FrontEnd:
     """What a channel looks at and through: a node (None: an open input), sections in order, grounded or not.
 
-    `limit`, in V, is the greatest magnitude the node reaches, if its op-amp's swing is not smaller still.
+    `limit`, in V, is the greatest magnitude the node reaches, if its op-amp's swing is not smaller still; `slew`, in
+    V/s, likewise. `resistance`, in ohm, and `capacitance`, in F, lie between the node and ground.
     """
 
     node: str | None
     sections: tuple[Section, ...] = ()
     grounded: bool = False
-    limit: float = float("inf")
+    limit: float = inf
+    slew: float = inf
+    resistance: float = inf
+    capacitance: float = 0.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -150,8 +159,8 @@ class Board:
         if front_end.grounded:
             return np.zeros(count)
         rows = np.array([2 * channel, 2 * channel + 1])  # through the front end; at the node
-        swing = min(front_end.limit, self._swing(front_end.node))
-        rows = rows if np.isfinite(swing) else rows[:1]
+        swing, slew = self._limits(front_end)
+        rows = rows if isfinite(swing) or isfinite(slew) else rows[:1]
         inputs = self._inputs(event.drive)
         constant = system.c[rows] @ event.constant + system.d[rows] @ inputs
         phasor = system.c[rows] @ event.phasor + system.d[rows, 0] * event.drive.amplitude
@@ -161,9 +170,12 @@ class Board:
         volts = sum_of_exponentials(sine, step, count)
         volts += constant[:, None]
         volts += system.outputs(event.free, rows, _elapsed(event.at, first) + ahead, interval, count)
-        if len(rows) == 1:
-            return np.asarray(volts[0])
-        return np.asarray(volts[0] - (volts[1] - np.clip(volts[1], -swing, swing)))
+        if isfinite(slew):
+            phase = np.asarray(start + event.drive.frequency * interval * np.arange(count), dtype=np.float64)
+            volts -= excess(phasor[1:], np.array([1]), event.drive.frequency, slew, phase)
+        if isfinite(swing):
+            volts[0] -= volts[1] - np.clip(volts[1], -swing, swing)
+        return np.asarray(volts[0])
 
     def _change(self, at: float, drive_at: float, drive: Drive, front_ends: tuple[FrontEnd, ...]) -> None:
         last = self._events[-1]
@@ -174,6 +186,11 @@ class Board:
             + (last.phasor * np.exp(1j * angle)).imag
             + last.dynamics.later(last.free, _elapsed(last.at, at))
         )
+        before, after = _loaded(self.network, last.front_ends), _loaded(self.network, front_ends)
+        if after != before:
+            inputs = self._inputs(last.drive)
+            inputs[0] += last.drive.amplitude * np.sin(angle)
+            state = _met(before, after, state, inputs)
         dynamics = self._dynamics(front_ends)
         constant, phasor = self._steady(dynamics, drive)
         angle = 2 * np.pi * (drive.frequency * _elapsed(drive_at, at) % 1.0)
@@ -190,18 +207,52 @@ class Board:
             return constant, np.zeros(len(constant), dtype=complex)
         return constant, system.phasor(drive.frequency) * drive.amplitude
 
-    def _swing(self, node: str | None) -> float:
-        return min((u.swing for u in self.network.opamps if u.out == node), default=float("inf"))
+    def _limits(self, front_end: FrontEnd) -> tuple[float, float]:
+        """Return swing in V and slew rate in V/s of the op-amp a channel looks at, without end where there is none."""
+        found = [u for u in self.network.opamps if u.out == front_end.node]
+        slew = min(front_end.slew, *(u.slew for u in found)) if found else inf
+        return min([front_end.limit, *(u.swing for u in found)]), slew
 
     def _dynamics(self, front_ends: tuple[FrontEnd, ...]) -> Dynamics:
         if front_ends not in self._known:
-            self._known[front_ends] = _assemble(self.network, front_ends)
+            self._known[front_ends] = _assemble(_loaded(self.network, front_ends), front_ends)
         return self._known[front_ends]
 
 
 def _elapsed(earlier: float, later: float) -> float:
     """Return the s between two instants in whole ns, so that the rounding of late instants leaves no trace."""
     return round(later - earlier, 9)
+
+
+def _loaded(network: Network, front_ends: tuple[FrontEnd, ...]) -> Network:
+    """Return the network with what the channels' probes put between their nodes and ground."""
+    resistors, capacitors = list(network.resistors), list(network.capacitors)
+    for channel, front_end in enumerate(front_ends, 1):
+        if front_end.node in (None, GROUND):
+            continue
+        if isfinite(front_end.resistance):
+            resistors.append(Resistor(f"(probe {channel}) R", str(front_end.node), GROUND, front_end.resistance))
+        if front_end.capacitance:
+            capacitors.append(Capacitor(f"(probe {channel}) C", str(front_end.node), GROUND, front_end.capacitance))
+    if len(resistors) + len(capacitors) == len(network.resistors) + len(network.capacitors):
+        return network
+    return replace(network, resistors=tuple(resistors), capacitors=tuple(capacitors))
+
+
+def _met(before: Network, after: Network, state: FloatArray, inputs: FloatArray) -> FloatArray:
+    """Return the state behind a change of loads at which no node's voltage jumps but where nothing holds it.
+
+    The states of a network are linear in the voltages across its capacitors and at its op-amp outputs; those of the
+    front ends, behind them, stay.
+    """
+    nodes = before.nodes
+    old, new = state_space(before, nodes), state_space(after, nodes)
+    unit = dict(zip(nodes, np.eye(len(nodes)), strict=True)) | {GROUND: np.zeros(len(nodes))}
+    holding = [unit[part.a] - unit[part.b] for part in after.capacitors] + [unit[u.out] for u in after.opamps]
+    held = np.array(holding).reshape(-1, len(nodes))
+    volts = old.c @ state[: len(old.a)] + old.d @ inputs
+    fresh = np.linalg.lstsq(held @ new.c, held @ (volts - new.d @ inputs), rcond=None)[0]
+    return np.concatenate([fresh, state[len(old.a) :]])
 
 
 def _assemble(network: Network, front_ends: tuple[FrontEnd, ...]) -> Dynamics:

@@ -25,6 +25,10 @@ class Sizes:
     adc_bits in bit (0: no converter, thus no rounding and no noise), noise and nonlinearity in LSB (noise rms),
     frequency_resolution in Hz, amplitude_resolution in V. `decimation` keeps one sample of so many, told only by what
     is read back; `rounded_entries` of 1 puts a harmless entry into the scope's error queue with each range.
+
+    `probe_resistance` in ohm (0: none) and `probe_capacitance` in F load what each channel is connected to. `slew` in
+    V/s limits op-amp outputs (0: only as the network says). `bandwidth_limit` in Hz is the corner of the channels'
+    filters while they are on (0: they have no effect), `bandwidth_mismatch` how far each is off it, relative.
     """
 
     output_resistance: float = 50.0
@@ -47,11 +51,18 @@ class Sizes:
     reseating: float = 0.0005
     decimation: int = 1
     rounded_entries: int = 0
+    probe_resistance: float = 0.0
+    probe_capacitance: float = 0.0
+    slew: float = 0.0
+    bandwidth_limit: float = 0.0
+    bandwidth_mismatch: float = 0.0
 
     def __post_init__(self) -> None:
         for entry in fields(self):
             if not getattr(self, entry.name) >= 0:
                 raise ValueError(f"{entry.name} must not be negative, found {getattr(self, entry.name)!r}")
+        if self.bandwidth_mismatch >= 1:
+            raise ValueError(f"bandwidth_mismatch must be less than 1, found {self.bandwidth_mismatch!r}")
         if self.decimation < 1 or self.decimation != int(self.decimation):
             raise ValueError(f"decimation must be a whole number from 1, found {self.decimation!r}")
         if self.adc_bits > 16 or self.adc_bits != int(self.adc_bits):
@@ -87,6 +98,10 @@ class Imperfections:
     reseating: float = 0.0
     decimation: int = 1
     rounded_entries: int = 0
+    probe_resistance: float = 0.0
+    probe_capacitance: float = 0.0
+    slew: float = 0.0
+    bandwidth_limit: tuple[float, float] = (0.0, 0.0)
 
     @classmethod
     def reference(cls, seed: int) -> "Imperfections":
@@ -105,6 +120,7 @@ class Imperfections:
             drawn = np.random.default_rng([seed, 1000 + stream]).uniform(-1.0, 1.0, len(RANGES))
             return tuple((sizes.range_gain * drawn).tolist())
 
+        mismatch = pair(13, sizes.bandwidth_mismatch)
         return cls(
             output_resistance=sizes.output_resistance,
             flatness=pair(0, sizes.flatness)[0],
@@ -127,6 +143,10 @@ class Imperfections:
             reseating=sizes.reseating,
             decimation=sizes.decimation,
             rounded_entries=sizes.rounded_entries,
+            probe_resistance=sizes.probe_resistance,
+            probe_capacitance=sizes.probe_capacitance,
+            slew=sizes.slew,
+            bandwidth_limit=(sizes.bandwidth_limit * (1 + mismatch[0]), sizes.bandwidth_limit * (1 + mismatch[1])),
         )
 
     def as_plain(self) -> dict[str, Any]:

@@ -2,8 +2,8 @@
 
 Ranges are peak volts at the BNC, full scale from -range to +range around the offset; they round up to 1-2-5 steps, the
 sample interval rounds to whole ns. Codes clip at their ends. INTeger,16 are codes in the upper bits: volts = code *
-range / 32768 + offset. A trigger other than immediate is not modelled and refused. INPut:FILTer is kept but has no
-effect: the input's bandwidth is far above what the network is simulated for.
+range / 32768 + offset. A trigger other than immediate is not modelled and refused. INPut:FILTer switches a low-pass of
+first order, if the bench has one (`Imperfections.bandwidth_limit`); without it the input's bandwidth has no end.
 """
 
 from collections.abc import Callable, Mapping
@@ -107,11 +107,13 @@ class Scope(Device):
         return self._record(channel) if self.at < float("inf") else None
 
     def changed(self, name: str, suffixes: tuple[int, ...]) -> None:
-        """Switch the coupling of a channel; say that a range was rounded, where that is a habit of the instrument."""
+        """Switch a channel's coupling or filter; say that a range was rounded, where that is the instrument's habit."""
         if name == "range" and self._imperfections.rounded_entries:
             self.status.errors.push(_ROUNDED, "value rounded")
         if name == "coupling":
             self._wiring.couple(self.at, suffixes[0] - 1, self.value(name, *suffixes))
+        if name == "filter":
+            self._wiring.filter(self.at, suffixes[0] - 1, self.value(name, *suffixes))
 
     def reset(self) -> None:
         """Take the defaults; a record is lost."""
@@ -120,6 +122,7 @@ class Scope(Device):
         self._records.clear()
         for channel in range(2):
             self._wiring.couple(self.at, channel, "DC")
+            self._wiring.filter(self.at, channel, False)
 
     def _own(self, timing: Timing) -> list[Command]:
         return [

@@ -60,7 +60,7 @@ class Wiring:
         self._imperfections, self._seed, self._conditions = imperfections, (seed, run), conditions
         self._outputs = {u.out for u in network.opamps}
         self._taps = [scope[1], scope[2]]
-        self._couplings = ["DC", "DC"]
+        self._couplings, self._filters = ["DC", "DC"], [False, False]
         _check_nodes(network, [tap for tap in self._taps if tap != SWITCH] + list(routes.values()))
         driven = network.driven_through(network.source_resistance + imperfections.output_resistance)
         self.board = Board(driven, [self._front_end(channel) for channel in range(2)])
@@ -68,6 +68,11 @@ class Wiring:
     def couple(self, at: float, channel: int, coupling: str) -> None:
         """Set a channel's (from 0) coupling: DC, AC or GRO."""
         self._couplings[channel] = coupling
+        self.board.set_front_end(at, channel, self._front_end(channel))
+
+    def filter(self, at: float, channel: int, on: bool) -> None:
+        """Switch a channel's (from 0) bandwidth limit."""
+        self._filters[channel] = on
         self.board.set_front_end(at, channel, self._front_end(channel))
 
     def close(self, at: float, route: str) -> None:
@@ -105,22 +110,33 @@ class Wiring:
         return float(1 + self._imperfections.reseating * draw)
 
     def _front_end(self, channel: int) -> FrontEnd:
-        tap, coupling, limit = self._tap(channel), self._couplings[channel], math.inf
+        tap, coupling, limit, world = self._tap(channel), self._couplings[channel], math.inf, self._imperfections
         node = self.routes.get(self.closed) if tap == SWITCH else tap
         if node in self._outputs and (faults.UNPOWERED in self._conditions or not self._powered):
             node = None
         elif node in self._outputs and faults.CLIPPED in self._conditions:
             limit = SAGGED
-        return FrontEnd(node, tuple(self._sections(channel, coupling)), grounded=coupling == "GRO", limit=limit)
+        return FrontEnd(
+            node,
+            tuple(self._sections(channel, coupling)),
+            grounded=coupling == "GRO",
+            limit=limit,
+            slew=world.slew or math.inf,
+            resistance=world.probe_resistance or math.inf,
+            capacitance=world.probe_capacitance,
+        )
 
     def _sections(self, channel: int, coupling: str) -> list[Section]:
-        """Return the probe and the coupling capacitor; the latter charges whether it is used or not."""
+        """Return probe, coupling capacitor and filter; the latter two charge whether they are used or not."""
         error, corner = self._imperfections.probe_compensation[channel], self._imperfections.ac_corner[channel]
+        bandwidth, is_limited = self._imperfections.bandwidth_limit[channel], self._filters[channel]
         found = []
         if error and self._imperfections.probe_corner:
             found.append(Section(2 * math.pi * self._imperfections.probe_corner, 1 + error, -error))
         if corner:
             found.append(Section(2 * math.pi * corner, 1.0, -1.0 if coupling == "AC" else 0.0))
+        if bandwidth:
+            found.append(Section(2 * math.pi * bandwidth, 0.0 if is_limited else 1.0, 1.0 if is_limited else 0.0))
         return found
 
 

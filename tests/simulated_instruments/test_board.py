@@ -13,6 +13,7 @@ from scipy.integrate import solve_ivp
 from bandproof.analysis.network import Capacitor, Network, OpAmp, Resistor, response, state_space
 from bandproof.simulated_instruments.board import Board, Drive, FrontEnd, Section
 from bandproof.simulated_instruments.dynamics import REMAINDER, Dynamics
+from bandproof.simulated_instruments.slewing import excess
 
 
 def integrated(network, node, events, times):
@@ -153,6 +154,67 @@ def test_open_input_and_grounded_input_read_nothing(band):
     board.set_drive(1.0, Drive(480.0, 1.0))
     assert not board.volts(0, 1.0, 1e-5, 50).any()
     assert not board.volts(1, 1.0, 1e-5, 50).any()
+
+
+def test_a_probe_that_moves_meets_its_node_at_the_nodes_voltage_and_loads_it():
+    """Two RC sections; the equations of both node voltages written down by hand, integrated over the move."""
+    r, c, probe_r, probe_c, moved = 10e3, 10e-9, 50e3, 10e-9, 2.0 + 2.31e-4
+    network = Network(
+        (Resistor("R1", "in", "a", r), Resistor("R2", "a", "b", r)),
+        (Capacitor("C1", "a", "0", c), Capacitor("C2", "b", "0", c)),
+    )
+    on_a, on_b = (FrontEnd(node, resistance=probe_r, capacitance=probe_c) for node in "ab")
+    board = Board(network, [on_a, FrontEnd("b")])
+    board.set_drive(2.0, Drive(3e3, 1.0, 0.5))
+    board.set_front_end(moved, 0, on_b)
+
+    def slopes(t, v):
+        emf = 0.5 + np.sin(2 * np.pi * 3e3 * (t - 2.0))
+        load = np.array([1.0, 0.0] if t < moved else [0.0, 1.0])
+        currents = np.array([(emf - v[0]) / r - (v[0] - v[1]) / r, (v[0] - v[1]) / r]) - load * v / probe_r
+        return currents / (c + load * probe_c)
+
+    options = {"method": "DOP853", "rtol": 1e-11, "atol": 1e-13, "max_step": 1e-6}
+    times = 2.0 + 2e-6 * np.arange(500)
+    early, late = times[times < moved], times[times >= moved]
+    first = solve_ivp(slopes, (2.0, moved - 1e-12), [0.0, 0.0], t_eval=early, **options)
+    end = solve_ivp(slopes, (2.0, moved - 1e-12), [0.0, 0.0], **options).y[:, -1]
+    second = solve_ivp(slopes, (moved, times[-1] + 1e-9), end, t_eval=late, **options)
+    expected = np.hstack([first.y, second.y])
+    seen = [board.volts(channel, 2.0, 2e-6, 500) for channel in (0, 1)]
+    assert seen[1] == pytest.approx(expected[1], abs=1e-8)
+    assert seen[0] == pytest.approx(np.where(times < moved, expected[0], expected[1]), abs=1e-8)
+
+
+def test_slewing_is_what_a_rate_limiter_leaves_of_a_wave_in_the_end():
+    """Witness: the limiter itself in small steps over many periods, its input a sine and a third harmonic."""
+    steepest, count = 2 * np.pi * (1.0 + 3 * 0.4), 20_000
+    for slew, periods in ((0.6, 50), (1.5, 40), (4.0, 10), (8.0, 4), (9.0, 4)):
+        phase = np.arange(count) / count
+        wave = 1.0 * np.sin(2 * np.pi * phase) + 0.4 * np.cos(6 * np.pi * phase)
+        volts, limited = 0.0, []
+        for _ in range(periods):
+            limited = []
+            for target in wave.tolist():
+                volts += max(-slew / count, min(slew / count, target - volts))
+                limited.append(volts)
+        found = wave - excess(np.array([1.0, 0.4j]), np.array([1, 3]), 1.0, slew, phase)
+        bend = (steepest + slew) / 4 / 2048  # a bend between two of its 2048 points; the witness is a step late
+        assert found == pytest.approx(np.array(limited), abs=bend + steepest / count), slew
+
+
+@pytest.mark.parametrize("slew", [0.2, 1.0, 3.0])
+def test_the_triangle_left_of_a_sine_has_the_fundamental_of_one(slew):
+    """A triangle of peak slew / (4 f) has a fundamental of 8 / pi^2 of that, and turns where the sine comes down to it.
+
+    A pure triangle is left below 1 / sqrt(1 + pi^2 / 4) of the sine's slope: there it falls faster than the limit.
+    """
+    phase = np.arange(20_000) / 20_000
+    found = np.sin(2 * np.pi * phase) - excess(np.array([1.0 + 0j]), np.array([1]), 1.0, slew, phase)
+    fundamental = 2 * np.mean(found * np.exp(-2j * np.pi * phase))
+    expected = 8 / np.pi**2 * slew / 4 * np.exp(-1j * (np.pi - np.arcsin(slew / 4)))
+    chord = (2 * np.pi / 2048) ** 2 / 8  # of the peak, by which straight lines between 2048 points miss a sine
+    assert fundamental == pytest.approx(expected, rel=chord / (slew / (2 * np.pi)))  # as a turn: the slower the longer
 
 
 def test_growing_system_is_refused():

@@ -3,10 +3,11 @@
 import numpy as np
 import pytest
 
-from bandproof.analysis.network import Network, Resistor
+from bandproof.analysis.network import Network, OpAmp, Resistor
+from bandproof.analysis.sine import distortion
 from bandproof.simulated_instruments.bench import World, instruments
 from bandproof.simulated_instruments.faults import FaultPlan
-from bandproof.simulated_instruments.imperfections import RANGES, Imperfections
+from bandproof.simulated_instruments.imperfections import RANGES, Imperfections, Sizes
 from bandproof.simulated_instruments.timebase import VirtualTimebase
 
 RATE, POINTS = 1e6, 10_000
@@ -17,12 +18,14 @@ LOAD = Network((Resistor("R1", "in", "0", 50.0),), ())
 def measure(tmp_path):
     """Return the phasors (2,) of a record at a frequency, relative to the generator's sine as set, and the record."""
 
-    def make(frequency=10e3, *, coupling="DC", seconds=1.0, route="", volts=1.0, **imperfections):
+    def make(
+        frequency=10e3, *, network=LOAD, node="in", coupling="DC", filtered=0, seconds=1.0, volts=1.0, **imperfections
+    ):
         timebase = VirtualTimebase(tmp_path / "time")
         world = World(
-            network=LOAD,
+            network=network,
             scope={1: "in", 2: "switch"},
-            routes={"101": "in"},
+            routes={"101": node},
             seed=3,
             imperfections=Imperfections(**imperfections),
         )
@@ -39,6 +42,7 @@ def measure(tmp_path):
         event = t + 0.2e-3 + 5e-3
         send("generator", "OUTP ON")
         send("scope", f"INP1:COUP {coupling};:INP2:COUP {coupling};:SENS1:VOLT:RANG 2;:SENS2:VOLT:RANG 5")
+        send("scope", f"INP1:FILT {filtered};:INP2:FILT {filtered}")
         send("scope", f"SENS:SWE:POIN {POINTS};TIME {POINTS / RATE}")
         t += seconds
         first = t + 0.2e-3 + 10e-3
@@ -138,3 +142,79 @@ def test_nonlinearity_bends_by_its_size_at_half_scale(measure):
     assert difference.max() == pytest.approx(10.0, abs=1.0)  # both rounded to whole codes
     assert difference.min() == pytest.approx(-10.0, abs=1.0)
     assert not (bent - straight)[1].any()
+
+
+DIVIDER = Network((Resistor("R1", "in", "mid", 10e3), Resistor("R2", "mid", "0", 15e3)), ())
+FOLLOWER = Network(
+    (*DIVIDER.resistors, Resistor("R3", "out", "0", 1e3)), (), (OpAmp("U1", "mid", "out", "out", gbw=1e9, slew=1e4),)
+)
+
+
+@pytest.mark.parametrize(("resistance", "capacitance"), [(1e6, 0.0), (0.0, 100e-12), (1e6, 100e-12)])
+def test_a_probe_loads_the_node_it_is_on(measure, resistance, capacitance):
+    phasors, _, _ = measure(
+        20e3, network=DIVIDER, node="mid", probe_resistance=resistance, probe_capacitance=capacitance
+    )
+    load = (1 / resistance if resistance else 0.0) + 2j * np.pi * 20e3 * capacitance
+    by_hand = (1 / 10e3) / (1 / 10e3 + 1 / 15e3 + load)  # the current law at the node
+    assert abs(by_hand - 0.6) > 1e-3
+    assert phasors == pytest.approx([1.0, by_hand], rel=FLOAT32)
+
+
+def test_both_channels_load_the_board_even_on_one_node(measure):
+    phasors, _, _ = measure(
+        network=Network((Resistor("R1", "in", "0", 1e6),), ()), output_resistance=1e4, probe_resistance=1e6
+    )
+    assert phasors == pytest.approx([1 / (1 + 3 * 0.01)] * 2, rel=FLOAT32)  # three times 1 Mohm behind 10 kohm
+
+
+def test_a_probe_moves_no_op_amp_output(measure):
+    phasors, _, _ = measure(100.0, network=FOLLOWER, node="out", probe_resistance=1e3, probe_capacitance=1e-9)
+    assert phasors[1] == pytest.approx(0.6, rel=FLOAT32)
+
+
+def test_an_op_amp_far_beyond_its_slew_rate_gives_a_triangle(measure):
+    """Peak slew / (4 f); its harmonics fall with the square of their odd orders, the first is 8 / pi^2 of the peak."""
+    phasors, records, _ = measure(10e3, network=FOLLOWER, node="out")  # slope of the sine: 3.8e4 V/s, 3.8 times slew
+    assert phasors[0] == pytest.approx(1.0, rel=FLOAT32)
+    peak = 1e4 / (4 * 10e3)
+    assert records[1].max() == pytest.approx(peak, rel=0.021)  # 100 samples a period: up to a 50th of the peak beside
+    assert abs(phasors[1]) == pytest.approx(8 / np.pi**2 * peak, rel=1e-3)  # sampled: aliases of 1 / 99^2 and so on
+    found = distortion(records, 1 / RATE, 10e3)
+    assert found[0] < 1e-6
+    assert found[1] == pytest.approx(np.hypot(1 / 9, 1 / 25), rel=5e-3)
+
+
+def test_an_op_amp_within_its_slew_rate_follows(measure):
+    phasors, records, _ = measure(2.6e3, network=FOLLOWER, node="out")  # 2 pi 2.6 kHz 0.6 V = 9.8e3 V/s
+    assert abs(phasors[1]) == pytest.approx(0.6, rel=FLOAT32)
+    assert distortion(records, 1 / RATE, 2.6e3)[1] < 1e-6
+
+
+def test_a_slew_rate_can_be_given_to_every_op_amp(measure):
+    _, records, _ = measure(10e3, network=FOLLOWER, node="out", slew=2e3)
+    assert records[1].max() == pytest.approx(2e3 / (4 * 10e3), rel=0.021)
+
+
+def test_bandwidth_limits_are_low_passes_while_they_are_on(measure):
+    corners = (80e3, 120e3)
+    limited, _, _ = measure(50e3, filtered=1, bandwidth_limit=corners)
+    assert limited == pytest.approx([1 / (1 + 50j / 80), 1 / (1 + 50j / 120)], rel=FLOAT32)  # common practice
+    free, _, _ = measure(50e3, filtered=0, bandwidth_limit=corners)
+    assert free == pytest.approx([1.0, 1.0], rel=FLOAT32)
+
+
+def test_the_channels_corners_are_drawn_around_the_one_declared():
+    drawn = [Imperfections.draw(seed, Sizes(bandwidth_limit=20e6, bandwidth_mismatch=0.1)) for seed in range(50)]
+    ratios = np.array([bench.bandwidth_limit for bench in drawn]) / 20e6
+    assert np.abs(ratios - 1).max() <= 0.1
+    assert np.abs(ratios - 1).max(axis=0).min() > 0.09  # of 50 uniform draws, but once in 200
+    assert len(np.unique(ratios)) == 100
+    with pytest.raises(ValueError, match="bandwidth_mismatch"):
+        Sizes(bandwidth_mismatch=1.0)
+
+
+def test_the_reference_bench_has_neither_probe_load_nor_slew_nor_bandwidth_limit():
+    plain = Imperfections.reference(1).as_plain()
+    names = ("probe_resistance", "probe_capacitance", "slew", "bandwidth_limit")
+    assert [plain[name] for name in names] == [0.0, 0.0, 0.0, (0.0, 0.0)]
