@@ -6,8 +6,15 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from bandproof.analysis.least_squares import Status, least_squares
-from bandproof.analysis.models import VARIABLES, band_jacobian, band_start
+from bandproof.analysis.least_squares import LeastSquares, Status, least_squares
+from bandproof.analysis.models import (
+    VARIABLES,
+    band_jacobian,
+    band_response,
+    band_start,
+    refer_delay,
+    refer_delay_jacobian,
+)
 from bandproof.analysis.types import BoolArray, ComplexArray, FloatArray, IndexArray
 
 __all__ = ["BandFit", "fit_bands"]
@@ -111,38 +118,44 @@ def fit_bands(
         raise ValueError(f"sweep {int(dof.argmin())} has fewer data than the {len(free)} variables of the model")
     f = np.where(mask, frequency, np.exp(np.log(frequency).mean()))
     h = np.where(mask, response, 0.0)
-    white = _whitening(covariance, mask)
+    diagonal, below = _whitening(covariance, mask)
     theta = band_start(f, h, mask) if start is None else np.array(start, dtype=np.float64)
+    centre = np.exp(theta[:, 0])
+    theta = refer_delay(theta, centre)
 
-    def weighted(variables: FloatArray, which: IndexArray) -> tuple[FloatArray, FloatArray]:
+    space = np.empty((len(f), len(free) + 1, 2 * f.shape[1]))  # taken once: new memory costs more than the arithmetic
+
+    def weighted(variables: FloatArray, which: IndexArray) -> FloatArray:
         whole = theta[which]
         whole[:, free] = variables
-        model, jacobian = band_jacobian(whole, f[which])
-        difference = (model - h[which])[..., None]
-        whole_white = _whiten(white[which], np.concatenate([jacobian[..., free], difference], axis=-1))
-        return whole_white[..., -1], whole_white[..., :-1]
+        model, derivatives = band_jacobian(whole, f[which], centre[which])
+        rows = space[: len(which)]
+        columns = [*(derivatives[i] for i in free), model - h[which]]
+        _whiten(diagonal[which], below[which], columns, rows)
+        return rows.swapaxes(1, 2)
 
     found = least_squares(weighted, theta[:, free], step_limit=step_limit, offset=_OFFSET)
     theta[:, free] = found.theta
-    return _summary(theta, free, found.covariance, found.squares, dof, found.status, response, frequency)
+    back = refer_delay_jacobian(theta, -centre)[:, free][:, :, free]
+    theta = refer_delay(theta, -centre)
+    residual = response - band_response(theta, frequency)
+    return _summary(theta, free, back @ found.covariance @ back.swapaxes(1, 2), found, dof, residual)
 
 
 def _summary(
     theta: FloatArray,
     free: list[int],
     covariance: FloatArray,
-    squares: FloatArray,
+    found: LeastSquares,
     dof: FloatArray,
-    status: tuple[Status, ...],
-    response: ComplexArray,
-    frequency: FloatArray,
+    residual: ComplexArray,
 ) -> BandFit:
     f0, q = np.exp(theta[:, 0]), np.exp(theta[:, 1])
     gain = theta[:, 2] + 1j * theta[:, 3]
     along = np.stack([gain.real, gain.imag], axis=-1) / np.abs(gain)[:, None]
     u = np.sqrt(np.einsum("spp->sp", covariance))
     with np.errstate(invalid="ignore", divide="ignore"):
-        chi_square = np.where(dof > 0, squares / dof, np.nan)
+        chi_square = np.where(dof > 0, found.squares / dof, np.nan)
     return BandFit(
         theta=theta,
         free=tuple(VARIABLES[i] for i in free),
@@ -158,8 +171,8 @@ def _summary(
         u_delay=u[:, free.index(4)] if 4 in free else np.zeros_like(f0),
         chi_square=chi_square,
         dof=dof,
-        residual=response - band_jacobian(theta, frequency)[0],
-        status=status,
+        residual=residual,
+        status=found.status,
     )
 
 
@@ -174,27 +187,25 @@ def _check(frequency: FloatArray, response: ComplexArray, covariance: FloatArray
         raise ValueError(f"frequency must be positive, found {frequency.min()!r}")
 
 
-def _whitening(covariance: FloatArray, mask: BoolArray) -> FloatArray:
-    """Return (S, N, 3): the entries 00, 10, 11 of the inverse Cholesky factor, 0 for unused points."""
+def _whitening(covariance: FloatArray, mask: BoolArray) -> tuple[FloatArray, FloatArray]:
+    """Return the inverse Cholesky factors: their diagonals in turn (S, 2N), and the entries 10 (S, N); 0 if unused."""
     a, b, c = covariance[..., 0, 0], covariance[..., 1, 0], covariance[..., 1, 1]
     with np.errstate(invalid="ignore", divide="ignore"):
         first = 1 / np.sqrt(a)
         second = 1 / np.sqrt(c - b * b / a)
-        factors: FloatArray = np.stack([first, -b / a * second, second], axis=-1)
-    bad = ~np.isfinite(factors).all(axis=-1) & mask
+        diagonal, below = np.stack([first, second], axis=-1), -b / a * second
+    bad = ~(np.isfinite(diagonal).all(axis=-1) & np.isfinite(below)) & mask
     if bad.any():
         sweep, point = (int(i) for i in np.argwhere(bad)[0])
         raise ValueError(f"the covariance of sweep {sweep}, point {point} is not positive definite")
-    factors[~mask] = 0.0
-    return factors
+    diagonal[~mask], below[~mask] = 0.0, 0.0
+    return diagonal.reshape(len(mask), -1), below
 
 
-def _whiten(white: FloatArray, values: ComplexArray) -> FloatArray:
-    """Return complex (S, N, P) values as whitened real (S, 2N, P)."""
-    points = values.shape[1]
-    result = np.empty((len(values), 2 * points, values.shape[2]))
-    np.multiply(white[..., 0, None], values.real, out=result[:, :points])
-    np.multiply(white[..., 2, None], values.imag, out=result[:, points:])
-    if white[..., 1].any():
-        result[:, points:] += white[..., 1, None] * values.real
-    return result
+def _whiten(diagonal: FloatArray, below: FloatArray, columns: list[ComplexArray], out: FloatArray) -> None:
+    """Write P complex columns, (S, N) each, as whitened real and imaginary parts in turn to (S, P, 2N)."""
+    correlated = below.any()
+    for rows, column in zip(out.swapaxes(0, 1), columns, strict=True):
+        np.multiply(diagonal, column.view(np.float64), out=rows)
+        if correlated:
+            rows[:, 1::2] += below * column.real

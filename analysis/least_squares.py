@@ -1,7 +1,7 @@
 """Nonlinear least squares, many problems at once.
 
 Levenberg-Marquardt after J. J. Moré (The Levenberg-Marquardt algorithm, 1978): columns scaled by the largest norm seen,
-each step from the QR decomposition of the augmented matrix, so that badly scaled problems keep their digits.
+each step from the triangle of the augmented matrix, so that badly scaled problems keep their digits.
 """
 
 from __future__ import annotations
@@ -12,17 +12,22 @@ from typing import Literal, TypeAlias
 
 import numpy as np
 
+from bandproof.analysis.triangles import solve_triangle, triangle
 from bandproof.analysis.types import BoolArray, FloatArray, IndexArray
 
 __all__ = ["LeastSquares", "Residual", "Status", "least_squares"]
 
 Status: TypeAlias = Literal["converged", "no progress", "step limit", "not finite"]
 
-Residual: TypeAlias = Callable[[FloatArray, IndexArray], tuple[FloatArray, FloatArray]]
-"""Takes theta (A, P) and the numbers (A,) of the problems meant; returns residuals (A, N) and Jacobian (A, N, P)."""
+Residual: TypeAlias = Callable[[FloatArray, IndexArray], FloatArray]
+"""Takes theta (A, P) and the numbers (A,) of the problems meant; returns (A, N, P + 1): Jacobian, residuals last.
+
+The next call may overwrite what was returned.
+"""
 
 # Converged, too, when the undamped step is this small beside the parameters: a residual at the rounding limit needs it.
 _STEP = 1e-12
+_DAMPING = 1e-3  # of the columns' norms, at the start
 _NEAR = 1e-5  # arbitrary; its square lies well above the rounding of a sum of squares
 
 
@@ -66,60 +71,72 @@ def least_squares(
     >>> x, y = np.array([1.0, 2.0, 3.0]), np.array([[2.0, 4.0, 8.0]])
     >>> def growth(theta, which):
     ...     model = np.exp(theta * x)
-    ...     return model - y[which], (model * x)[..., None]
+    ...     return np.stack([model * x, model - y[which]], axis=-1)
     >>> least_squares(growth, np.array([[0.1]])).theta.round(6)
     array([[0.693147]])
     """
     run = _Run(function, np.array(start, dtype=np.float64), offset)
     for _ in range(step_limit):
-        if not len(run.active):
+        if not run.moving.any():
             break
         run.step()
     return run.result()
 
 
 class _Run:
-    """State of the problems; `active` numbers those still moving, every other array keeps all S rows."""
+    """State of the S problems; each array keeps all rows, `moving` tells those not yet retired."""
 
     def __init__(self, function: Residual, theta: FloatArray, offset: float) -> None:
         self.function, self.theta, self.offset = function, theta, offset
         count, parameters = theta.shape
-        self.active = np.arange(count)
-        with np.errstate(all="ignore"):
-            residual, jacobian = function(theta, self.active)
-        self.squares = np.einsum("sn,sn->s", residual, residual)
-        self.triangle, self.projected = np.zeros((count, parameters, parameters)), np.zeros((count, parameters))
+        self.triangle, self.squares = np.zeros((count, parameters, parameters + 1)), np.zeros(count)
         self.scale = np.zeros((count, parameters))
-        self.damping, self.growth = np.full(count, 1e-3), np.full(count, 2.0)
+        self.damping, self.growth = np.full(count, _DAMPING), np.full(count, 2.0)
         self.steps, self.words = np.zeros(count), np.full(count, "step limit", dtype=object)
-        self._decompose(self.active, residual, jacobian)
+        self.moving = np.ones(count, dtype=np.bool_)
+        everything = np.arange(count)
+        whole, squares, sound = self._evaluate(theta, everything)
+        self._retire(everything[~sound], "not finite")
+        self._keep(everything[sound], whole[sound], squares[sound])
 
     def step(self) -> None:
         """Try one damped step of every active problem and keep it where the squares fall."""
-        at = self.active
+        at = np.flatnonzero(self.moving)
         step = self._damped(at, self.damping[at])
         trial = self.theta[at] + step
-        with np.errstate(all="ignore"):
-            residual, jacobian = self.function(trial, at)
-            squares = np.einsum("sn,sn->s", residual, residual)
-        moved = np.einsum("spq,sq->sp", self.triangle[at], step)
+        whole, squares, sound = self._evaluate(trial, at)
+        before = self.triangle[at]
+        moved = np.einsum("spq,sq->sp", before[..., :-1], step)
         damped = self.damping[at] * np.einsum("sp,sp->s", self.scale[at] * step, self.scale[at] * step)
         predicted = np.einsum("sp,sp->s", moved, moved) + 2 * damped
-        sound = np.isfinite(squares) & np.isfinite(jacobian).all(axis=(1, 2))
         with np.errstate(all="ignore"):
             quality = np.where(sound, (self.squares[at] - squares) / predicted, -1.0)
         # This near, the squares' own rounding hides the gain: an undamped step is taken unless it does harm.
-        near = np.linalg.norm(self.projected[at], axis=1) <= _NEAR * np.sqrt(self.squares[at])
+        near = _norm(before[..., -1]) <= _NEAR * np.sqrt(self.squares[at])
         harmless = near & sound & (squares <= (1 + _NEAR**2) * self.squares[at])
         better = harmless | (quality > 1e-4)
         quality = np.where(harmless, 1.0, quality)
         self.steps[at] += 1
         self.damping[at] *= np.where(harmless, 1e-3, 1.0)
         self._adapt(at, quality, better)
-        kept = at[better]
-        self.theta[kept], self.squares[kept] = trial[better], squares[better]
-        self._decompose(kept, residual[better], jacobian[better])
-        self._stop(at[~better])
+        self.theta[at[better]] = trial[better]
+        self._keep(at[better], whole[better], squares[better])
+        self._stop(at, ~better)
+
+    def _evaluate(self, theta: FloatArray, at: IndexArray) -> tuple[FloatArray, FloatArray, BoolArray]:
+        """Return the triangles of (J, r), the squares and whether all of it is finite.
+
+        Such a triangle holds that of J and, in its last column, r projected on J: Q is never formed.
+        """
+        with np.errstate(all="ignore"):
+            rows = self.function(theta, at)
+            squares = np.einsum("sn,sn->s", rows[..., -1], rows[..., -1])
+        whole = triangle(rows)
+        return whole, squares, np.isfinite(squares) & np.isfinite(whole).all(axis=(1, 2))
+
+    def _keep(self, at: IndexArray, whole: FloatArray, squares: FloatArray) -> None:
+        self.triangle[at], self.squares[at] = whole, squares
+        self.scale[at] = np.maximum(self.scale[at], _norm(whole[..., :-1].swapaxes(1, 2)))
 
     def _adapt(self, at: IndexArray, quality: FloatArray, better: BoolArray) -> None:
         """Lower the damping as far as the step was good, else raise it ever faster (H. B. Nielsen, 1999)."""
@@ -127,63 +144,49 @@ class _Run:
         self.damping[at] *= np.where(better, np.minimum(factor, 2.0), self.growth[at])
         self.growth[at] = np.where(better, 2.0, 2 * self.growth[at])
 
-    def _decompose(self, at: IndexArray, residual: FloatArray, jacobian: FloatArray) -> None:
-        sound = np.isfinite(residual).all(axis=1) & np.isfinite(jacobian).all(axis=(1, 2))
-        self.words[at[~sound]] = "not finite"
-        self.active = np.setdiff1d(self.active, at[~sound], assume_unique=True)
-        at, residual, jacobian = at[sound], residual[sound], jacobian[sound]
-        if not len(at):
-            return
-        # The triangle of (J, r) holds the triangle of J and, in its last column, r projected: Q is never formed.
-        triangle = _triangle(np.concatenate([jacobian, residual[..., None]], axis=2))
-        self.triangle[at], self.projected[at] = triangle[..., :-1], triangle[..., -1]
-        self.scale[at] = np.maximum(self.scale[at], np.linalg.norm(jacobian, axis=1))
-
     def _damped(self, at: IndexArray, damping: FloatArray) -> FloatArray:
-        """Return the steps (A, P) of some problems, columns scaled, by QR of the triangle over the damping."""
+        """Return the steps (A, P) of some problems, columns scaled, from the triangle over the damping."""
         scale = np.where(self.scale[at] > 0, self.scale[at], 1.0)
-        parameters = scale.shape[1]
-        augmented = np.zeros((len(at), 2 * parameters, parameters + 1))
-        augmented[:, :parameters, :-1] = self.triangle[at] / scale[:, None, :]
-        augmented[:, :parameters, -1] = -self.projected[at]
-        augmented[:, parameters:, :-1] = np.sqrt(damping)[:, None, None] * np.eye(parameters)
-        triangle = _triangle(augmented)
-        step: FloatArray = np.linalg.solve(triangle[..., :-1], triangle[..., -1:])[..., 0] / scale
+        scaled = self.triangle[at]
+        scaled[..., :-1] /= scale[:, None, :]
+        step: FloatArray = -solve_triangle(triangle(scaled, damping))[..., 0] / scale
         return step
 
-    def _stop(self, refused: IndexArray) -> None:
+    def _stop(self, at: IndexArray, refused: BoolArray) -> None:
         """Retire the problems that have arrived, and those whose damped steps have become too short to matter."""
-        at = self.active
-        reach = np.linalg.norm(self.projected[at], axis=1)
-        arrived = reach <= self.offset * np.sqrt(self.squares[at])
-        self.words[at[arrived]] = "converged"
-        refused = np.intersect1d(at[~arrived], refused)
-        if not len(refused):
-            self.active = at[~arrived]
+        arrived = _norm(self.triangle[at, :, -1]) <= self.offset * np.sqrt(self.squares[at])
+        self._retire(at[arrived], "converged")
+        self._refine(at[arrived])
+        at = at[refused & ~arrived]
+        if not len(at):
             return
-        full = self._damped(refused, np.full(len(refused), 1e-30))
-        size = np.linalg.norm(self.scale[refused] * self.theta[refused], axis=1)
-        short = np.linalg.norm(self.scale[refused] * full, axis=1) <= _STEP * size
-        stuck = ~short & (self.damping[refused] > 1e18)
-        self.words[refused[short]], self.words[refused[stuck]] = "converged", "no progress"
-        self.active = np.setdiff1d(at[~arrived], refused[short | stuck], assume_unique=True)
+        full = self._damped(at, np.full(len(at), 1e-30))
+        short = _norm(self.scale[at] * full) <= _STEP * _norm(self.scale[at] * self.theta[at])
+        stuck = ~short & (self.damping[at] > 1e18)
+        self._retire(at[short], "converged")
+        self._retire(at[stuck], "no progress")
+
+    def _retire(self, at: IndexArray, word: Status) -> None:
+        self.moving[at], self.words[at] = False, word
+
+    def _refine(self, arrived: IndexArray) -> None:
+        """Take the last step, shorter than `offset` uncertainties, unseen: it costs nothing and gains digits."""
+        step = -solve_triangle(self.triangle[arrived])[..., 0]
+        self.theta[arrived] += np.where(np.isfinite(step), step, 0.0)
 
     def result(self) -> LeastSquares:
         """Return what was reached."""
         scale = np.where(self.scale > 0, self.scale, 1.0)
-        scaled = self.triangle / scale[:, None, :]
-        try:
-            inverse = np.linalg.inv(scaled) / scale[..., None]
-        except np.linalg.LinAlgError:  # somewhere a parameter has no effect
-            inverse = np.linalg.pinv(scaled, rcond=1e-15) / scale[..., None]
-        covariance: FloatArray = inverse @ np.swapaxes(inverse, 1, 2)
+        scaled = self.triangle[..., :-1] / scale[:, None, :]
+        unit = np.broadcast_to(np.eye(scale.shape[1]), scaled.shape)
+        inverse = solve_triangle(np.concatenate([scaled, unit], axis=2))
+        singular = ~np.isfinite(inverse).all(axis=(1, 2))  # a parameter has no effect
+        inverse[singular] = np.linalg.pinv(scaled[singular], rcond=1e-15)
+        inverse /= scale[..., None]
+        covariance: FloatArray = inverse @ inverse.swapaxes(1, 2)
         return LeastSquares(self.theta, self.squares, covariance, self.steps, tuple(self.words))
 
 
-def _triangle(matrix: FloatArray) -> FloatArray:
-    """Return the square upper part of R for (A, N, P + 1) matrices, (A, P, P + 1), filled with zeros where N < P."""
-    parameters = matrix.shape[2] - 1
-    r = np.asarray(np.linalg.qr(matrix, mode="r"), dtype=np.float64)[:, :parameters]
-    missing = parameters - r.shape[1]
-    whole: FloatArray = np.pad(r, ((0, 0), (0, missing), (0, 0))) if missing else r
-    return whole
+def _norm(vectors: FloatArray) -> FloatArray:
+    norm: FloatArray = np.sqrt(np.einsum("...p,...p->...", vectors, vectors))
+    return norm

@@ -11,9 +11,10 @@ import numpy as np
 
 from bandproof.analysis.types import BoolArray, ComplexArray, FloatArray
 
-__all__ = ["VARIABLES", "band_jacobian", "band_response", "band_start"]
+__all__ = ["VARIABLES", "band_jacobian", "band_response", "band_start", "refer_delay", "refer_delay_jacobian"]
 
 VARIABLES = ("ln_f0", "ln_q", "re_gain", "im_gain", "delay", "re_leakage", "im_leakage")
+_TURNED = (2, 5)  # where the complex variables begin that the delay turns
 
 
 def band_response(theta: FloatArray, frequency: FloatArray) -> ComplexArray:
@@ -37,28 +38,66 @@ def band_response(theta: FloatArray, frequency: FloatArray) -> ComplexArray:
     array([[-2.+0.j]])
     """
     gain, leakage = _complex(theta, 2), _complex(theta, 5)
-    _, _, denominator = _detuning(theta, frequency)
-    ratio: ComplexArray = (gain / denominator + leakage) * _turn(theta, frequency)
+    _, _, resonance = _resonance(theta, frequency)
+    ratio: ComplexArray = (gain * resonance + leakage) * _turn(theta, frequency)
     return ratio
 
 
-def band_jacobian(theta: FloatArray, frequency: FloatArray) -> tuple[ComplexArray, ComplexArray]:
-    """Return the ratio (S, N) and its derivatives by the seven variables (S, N, 7)."""
-    gain, leakage, turn = _complex(theta, 2), _complex(theta, 5), _turn(theta, frequency)
-    q, x, denominator = _detuning(theta, frequency)
-    shape = turn / denominator
-    bend = -1j * q * gain * shape / denominator
+def band_jacobian(
+    theta: FloatArray, frequency: FloatArray, reference: FloatArray | None = None
+) -> tuple[ComplexArray, tuple[ComplexArray, ...]]:
+    """Return the ratio (S, N) and its derivatives by the seven variables, each (S, N).
+
+    With reference frequencies (S,) the delay turns nothing there: gain and leakage are those of `refer_delay`.
+    """
+    away = frequency if reference is None else frequency - reference[:, None]
+    gain, leakage, turn = _complex(theta, 2), _complex(theta, 5), _turn(theta, away)
+    q, x, resonance = _resonance(theta, frequency)
+    inverse = 1 / x
+    shape = resonance * turn
+    bend = (-1j * q * gain) * (resonance * shape)
     value = gain * shape + leakage * turn
-    columns = [
-        -bend * (x + 1 / x),  # the detuning x - 1/x falls by x + 1/x per unit of ln f0
-        bend * (x - 1 / x),
+    return value, (
+        bend * -(x + inverse),  # the detuning x - 1/x falls by x + 1/x per unit of ln f0
+        bend * (x - inverse),
         shape,
         1j * shape,
-        -2j * np.pi * frequency * value,
+        value * (-2j * np.pi * away),
         turn,
         1j * turn,
-    ]
-    return value, np.stack(columns, axis=-1)
+    )
+
+
+def refer_delay(theta: FloatArray, reference: FloatArray) -> FloatArray:
+    """Return variables (S, 7) for a delay that turns nothing at the reference frequencies (S,); back with -reference.
+
+    Gain and leakage are turned by what the delay did there. In a narrow band far from 0 Hz the delay and the gain's
+    phase are then no longer nearly the same thing.
+
+    Examples
+    --------
+    >>> theta = np.array([[np.log(1e3), 0.0, -2.0, 0.0, 0.25e-3, 0.0, 0.0]])
+    >>> refer_delay(theta, np.array([1e3]))[0, 2:4].round(9) + 0.0
+    array([0., 2.])
+    """
+    referred, turn = theta.copy(), _turn(theta, reference[:, None])
+    for first in _TURNED:
+        value = (_complex(theta, first) * turn)[:, 0]
+        referred[:, first], referred[:, first + 1] = value.real, value.imag
+    return referred
+
+
+def refer_delay_jacobian(theta: FloatArray, reference: FloatArray) -> FloatArray:
+    """Return the derivatives (S, 7, 7) of `refer_delay`'s variables (rows) by those given."""
+    angle = 2 * np.pi * reference
+    turn, referred = _turn(theta, reference[:, None])[:, 0], refer_delay(theta, reference)
+    jacobian = np.tile(np.eye(len(VARIABLES)), (len(theta), 1, 1))
+    for first in _TURNED:
+        re, im = first, first + 1
+        jacobian[:, re, re], jacobian[:, re, im] = turn.real, -turn.imag
+        jacobian[:, im, re], jacobian[:, im, im] = turn.imag, turn.real
+        jacobian[:, re, 4], jacobian[:, im, 4] = angle * referred[:, im], -angle * referred[:, re]
+    return jacobian
 
 
 def band_start(frequency: FloatArray, response: ComplexArray, used: BoolArray | None = None) -> FloatArray:
@@ -107,13 +146,20 @@ def _complex(theta: FloatArray, first: int) -> ComplexArray:
 
 
 def _turn(theta: FloatArray, frequency: FloatArray) -> ComplexArray:
-    value: ComplexArray = np.exp(-2j * np.pi * frequency * theta[:, 4, None])
-    return value
+    angle = frequency * (2 * np.pi * theta[:, 4, None])
+    return _of_parts(np.cos(angle), -np.sin(angle))
 
 
-def _detuning(theta: FloatArray, frequency: FloatArray) -> tuple[FloatArray, FloatArray, ComplexArray]:
-    """Return Q (S, 1), x = f/f0 (S, N) and 1 + jQ(x - 1/x)."""
+def _resonance(theta: FloatArray, frequency: FloatArray) -> tuple[FloatArray, FloatArray, ComplexArray]:
+    """Return Q (S, 1), x = f/f0 (S, N) and 1 / (1 + jQ(x - 1/x))."""
     q: FloatArray = np.exp(theta[:, 1, None])
     x: FloatArray = frequency * np.exp(-theta[:, 0, None])
-    denominator = np.asarray(1 + 1j * q * (x - 1 / x), dtype=np.complex128)
-    return q, x, denominator
+    detuning = q * (x - 1 / x)
+    power = 1 / (1 + detuning * detuning)
+    return q, x, _of_parts(power, -detuning * power)
+
+
+def _of_parts(real: FloatArray, imag: FloatArray) -> ComplexArray:
+    value = np.empty(real.shape, dtype=np.complex128)  # several times faster than real + 1j * imag
+    value.real, value.imag = real, imag
+    return value

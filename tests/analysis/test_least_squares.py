@@ -129,7 +129,8 @@ def _residual(case: Certified):
 
     def function(theta, which):
         residual = np.array([model(case.x, b) for b in theta]) - case.y
-        return residual, np.stack([_derivatives(model, case.x, b) for b in theta])
+        jacobian = np.stack([_derivatives(model, case.x, b) for b in theta])
+        return np.concatenate([jacobian, residual[..., None]], axis=-1)
 
     return function
 
@@ -180,7 +181,7 @@ def test_a_model_that_is_not_finite_is_told_and_spares_the_others():
 
     def growth(theta, which):
         model = np.exp(theta * x)
-        return model - y, (model * x)[..., None]
+        return np.stack([model * x, model - y], axis=-1)
 
     found = least_squares(growth, np.array([[np.nan], [0.1]]))
     assert found.status == ("not finite", "converged")
