@@ -12,7 +12,7 @@ if TYPE_CHECKING:
     import numpy as np
     from numpy.typing import NDArray
 
-__all__ = ["read_channel"]
+__all__ = ["read_channel", "read_scaling"]
 
 TEXT_SAMPLE = 40  # bytes of one number as text, at most (arbitrary; 24 hold any float64)
 
@@ -63,7 +63,7 @@ def read_channel(
     transfer = dialect.transfer
     for text in transfer.before:
         session.command(text.format(channel=channel))
-    scale, offset, origin = _scaling(session, transfer, channel)
+    scale, offset, origin = read_scaling(session, transfer, channel)
     samples = _samples(session, transfer, channel, points)
     software = 1.0 if dialect.probe_factor.set else setting.probe_factor
     low, high, lsb = _ends(dialect, setting, software, scale)
@@ -94,7 +94,7 @@ def _samples(session: Session, transfer: Transfer, channel: str, points: int) ->
     return parse(session.ask_block(text, points * size, expected=expected, terminated=transfer.terminated))
 
 
-def _scaling(session: Session, transfer: Transfer, channel: str) -> tuple[float, float, float]:
+def read_scaling(session: Session, transfer: Transfer, channel: str) -> tuple[float, float, float]:
     """Return scale, offset and origin of a record, all at the instrument's input."""
     if transfer.scaling == "volts":
         return 1.0, 0.0, 0.0

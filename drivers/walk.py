@@ -6,23 +6,26 @@ record of a scope. What could drive a board is sent only where the caller says t
 
 from __future__ import annotations
 
-import math
 from collections.abc import Callable
 from contextlib import suppress
 from dataclasses import dataclass
+from functools import partial
 from typing import Literal
 
 from bandproof.drivers.errors import InstrumentError, InstrumentProblem, LinkBroken, NoAnswer, ReplyError
 from bandproof.drivers.instrument import Instrument, is_accepted, spelt, understood
 from bandproof.drivers.session import as_text
 from bandproof.drivers.slots import Choice, Identity, Number, Toggle
+from bandproof.drivers.trials import limits_of, trials
 
-__all__ = ["NO_BOARD", "Line", "Verdict", "Walk", "nearby"]
+__all__ = ["NO_BOARD", "Line", "Verdict", "Walk"]
 
 Verdict = Literal["accepted", "refused", "missing", "skipped"]
 NO_BOARD = "nobody said that no board is connected"
 _SILENT = 3  # slots without an answer, from the first on, after which nobody is there; arbitrary
 _SHOWN = 100  # characters of an answer that are kept; arbitrary
+_TOLD = 400  # characters of what went wrong that are kept; arbitrary
+Hint = Callable[[InstrumentProblem], str]
 
 
 @dataclass(frozen=True, slots=True)
@@ -56,13 +59,20 @@ class Walk:
 
     def __init__(self, instrument: Instrument) -> None:
         self.instrument, self.lines = instrument, list[Line]()
+        self._later: list[Callable[[], object]] = []
 
     def note(self, slot: str, verdict: Verdict, sent: str = "", came: object = "", *, needed: bool = True) -> None:
         """Add a line."""
-        self.lines.append(Line(slot, verdict, sent, str(came)[:_SHOWN], needed))
+        shown = _TOLD if verdict == "refused" else _SHOWN
+        self.lines.append(Line(slot, verdict, sent, str(came)[:shown], needed))
 
-    def attempt(self, slot: str, sent: str, act: Callable[[], object], *, needed: bool = True) -> bool:
-        """Do something and note what came of it: accepted with what it returns, or refused with what went wrong."""
+    def attempt(
+        self, slot: str, sent: str, act: Callable[[], object], *, needed: bool = True, hint: Hint | None = None
+    ) -> bool:
+        """Do something and note what came of it: accepted with what it returns, or refused with what went wrong.
+
+        `hint` may add to a problem of the instrument what is likely wrong in the dialect.
+        """
         if not sent:
             self.note(slot, "missing", needed=needed)
             return False
@@ -71,7 +81,8 @@ class Walk:
             self.instrument.check_errors()
         except (InstrumentProblem, ValueError) as problem:
             self._give_up_if_hopeless(problem)
-            self.note(slot, "refused", sent, self._reason(problem), needed=needed)
+            more = hint(problem) if hint and isinstance(problem, InstrumentProblem) else ""
+            self.note(slot, "refused", sent, self._reason(problem) + (f": {more}" if more else ""), needed=needed)
             return False
         self.note(slot, "accepted", sent, "" if came is None else came, needed=needed)
         return True
@@ -103,30 +114,60 @@ class Walk:
         self.ask("habits.errors", habits.errors)
         self.ask("habits.confirm", habits.confirm)
 
-    def number(self, slot: str, number: Number, channel: str = "", *, other: Callable[[float], float]) -> None:
-        """Try a number: ask it, set it to another value, set it back; `other` gives the value to try, SI."""
+    def number(
+        self, slot: str, number: Number, channel: str = "", *, values: tuple[float, float], stays: bool = False
+    ) -> None:
+        """Try a number: ask it, set it to two values, set it back.
+
+        Parameters
+        ----------
+        slot, number, channel
+            Which.
+        values : (float, float)
+            SI; moved into the limits of the dialect.
+        stays : bool
+            It stays at the last of them until `restore`.
+        """
         where = f" {channel}" if channel else ""
         query = number.query.format(channel=channel)
         asked = self.ask(f"{slot}.query{where}", query)
         if not number.set:
             self.note(f"{slot}.set{where}", "missing")
         elif not asked:
-            self.note(f"{slot}.set{where}", "skipped", number.set, "what it was cannot be asked, so not set back")
+            why = f"what it was cannot be asked, so not set back{limits_of(number)}"
+            self.note(f"{slot}.set{where}", "skipped", number.set, why)
         else:
-            self._change(f"{slot}.set{where}", number, channel, other)
+            self._change(f"{slot}.set{where}", number, channel, trials(number, values), stays)
 
-    def _change(self, slot: str, number: Number, channel: str, other: Callable[[float], float]) -> None:
+    def restore(self) -> None:
+        """Set back what was to stay until now, in the order it was set."""
+        later, self._later = self._later, []
+        for back in later:
+            back()
+
+    def _change(self, slot: str, number: Number, channel: str, values: tuple[float, ...], stays: bool) -> None:
+        query = number.query.format(channel=channel)
+        answer = self.instrument.session.ask(query, as_text)
         try:
-            _, before = self._read(number, channel)
-        except (InstrumentProblem, ValueError) as problem:
-            self.note(slot, "refused", number.query.format(channel=channel), f"its answer is no value: {problem}")
+            before = understood(number, answer.encode("ascii"))
+        except ValueError as problem:
+            self.note(slot, "refused", query, f"answers {answer}, expected {problem}: is `place` right?")
             return
-        low, high = number.limits
-        value = min(max(other(before), low), high)
-        text = self._text(number, value, channel)
-        self.attempt(slot, text, lambda: self._set(number, value, channel))
-        back = self._text(number, before, channel)
-        self.attempt(f"{slot} back", back, lambda: self._set(number, before, channel))
+        texts = [self._text(number, values[0], channel), *(spelt(number, value) for value in values[1:])]
+        self.attempt(slot, ", then ".join(texts), lambda: self._follow(number, values, channel))
+        text = self._text(number, before, channel)
+        back = partial(self.attempt, f"{slot} back", text, partial(self._set, number, before, channel))
+        if stays:
+            self._later.append(back)
+        else:
+            back()
+
+    def _follow(self, number: Number, values: tuple[float, ...], channel: str) -> str:
+        """Set a number to one value after the other; return the answers, which must differ."""
+        answers = [self._set(number, value, channel) for value in values]
+        if len(answers) > len(set(answers)):
+            raise ValueError(f"answers {answers[0]} to both: it does not follow, or `query` or `place` is wrong")
+        return ", ".join(answers) + limits_of(number)
 
     def _read(self, number: Number, channel: str) -> tuple[str, float]:
         """Return the answer to a number's query, and its value in SI."""
@@ -138,7 +179,9 @@ class Walk:
         self.instrument.session.command(self._text(number, value, channel))
         answer, found = self._read(number, channel)
         if not is_accepted(number, value, found):
-            raise ValueError(f"answers {answer}, which `readback` does not accept")
+            ratio = f", {found / value:.4g} times what was set" if value else ""
+            told = f"told {spelt(number, value)} it answers {answer}{ratio}"
+            raise ValueError(f"{told}, which `readback` does not accept: do set and query count the same?")
         return answer
 
     def _text(self, number: Number, value: float, channel: str) -> str:
@@ -193,7 +236,7 @@ class Walk:
         if isinstance(problem, InstrumentError):
             words = f"error {problem.number} {problem.words}"
         elif isinstance(problem, NoAnswer):
-            words = "no answer"
+            words = f"{problem.received} bytes came, then nothing" if problem.received else "no answer"
         elif isinstance(problem, ReplyError):
             words = f"answers {problem.excerpt.decode('ascii', 'backslashreplace')}, not {problem.expected}"
         later = ""
@@ -212,8 +255,3 @@ class Walk:
         except InstrumentError as error:
             return f"error {error.number} {error.words}"
         return ""
-
-
-def nearby(value: float) -> float:
-    """Return another value near a number, 1 for none."""
-    return value * 1.25 if value and math.isfinite(value) else 1.0

@@ -1,19 +1,17 @@
-"""Which slots of a generator, scope, switch and supply are walked, in which order."""
+"""Which slots of a generator, switch and supply are walked, in which order; `scope_walk` has the scope."""
 
 from __future__ import annotations
 
-import math
 from collections.abc import Sequence
 
-from bandproof.drivers.errors import InstrumentProblem
 from bandproof.drivers.generator import Generator
 from bandproof.drivers.instrument import Instrument
-from bandproof.drivers.record import read_channel
-from bandproof.drivers.scope import ChannelSetting, Scope
+from bandproof.drivers.scope import Scope
+from bandproof.drivers.scope_walk import walk_scope
 from bandproof.drivers.session import as_text
 from bandproof.drivers.supply import Supply
 from bandproof.drivers.switch import Switch
-from bandproof.drivers.walk import NO_BOARD, Line, Walk, nearby
+from bandproof.drivers.walk import NO_BOARD, Line, Walk
 
 __all__ = ["walk"]
 
@@ -39,7 +37,7 @@ def walk(instrument: Instrument, *, no_board: bool = False, routes: Sequence[str
     if isinstance(instrument, Generator):
         _generator(steps, instrument, no_board)
     elif isinstance(instrument, Scope):
-        _scope(steps, instrument)
+        walk_scope(steps, instrument)
     elif isinstance(instrument, Switch):
         _switch(steps, instrument, routes)
     elif isinstance(instrument, Supply):
@@ -60,10 +58,10 @@ def _generator(steps: Walk, instrument: Generator, no_board: bool) -> None:
         steps.tell("shape.sine", text)
     if not dialect.shape.sine:
         steps.note("shape.sine", "missing")
-    steps.number("frequency", dialect.frequency, other=nearby)
+    steps.number("frequency", dialect.frequency, values=(1000.0, 2500.0))
     _load(steps, instrument)
-    steps.number("amplitude", dialect.amplitude, other=lambda before: before / 2 if before else 0.1)
-    steps.number("offset", dialect.offset, other=lambda before: before / 2 if before else 0.1)
+    steps.number("amplitude", dialect.amplitude, values=(0.5, 0.2))
+    steps.number("offset", dialect.offset, values=(0.1, 0.05))
     if no_board:
         steps.answered("output.on", output.on, output.query, output.is_on)
         steps.answered("output.off", output.off, output.query, output.is_off)
@@ -84,71 +82,6 @@ def _load(steps: Walk, instrument: Generator) -> None:
         words.append(before)
     for word in words:
         steps.tell("load.set", load.set.format(value=word))
-
-
-def _scope(steps: Walk, instrument: Scope) -> None:
-    dialect = instrument.dialect
-    steps.identity(dialect.identity)
-    for name in dialect.channels[:2]:
-        steps.number("probe_factor", dialect.probe_factor, name, other=lambda before: 1.0 if before == 10.0 else 10.0)
-        steps.choice("coupling", dialect.coupling, name, needed=("DC",))
-        steps.toggle("bandwidth_limit", dialect.bandwidth_limit, name)
-        steps.number("range", dialect.range, name, other=lambda before: before / 2)
-        steps.number("offset", dialect.offset, name, other=lambda before: before / 2 if before else 0.1)
-    steps.number("points", dialect.points, other=lambda before: math.ceil(before / 2))
-    steps.number("duration", dialect.duration, other=lambda before: before / 2)
-    steps.ask("interval.query", dialect.interval.query)
-    _acquisition(steps, instrument)
-
-
-def _acquisition(steps: Walk, instrument: Scope) -> None:
-    slot = instrument.dialect.acquisition
-    steps.tell("acquisition.abort", slot.abort, needed=False)
-    for text in slot.prepare:
-        steps.tell("acquisition.prepare", text)
-    if not slot.prepare:
-        steps.note("acquisition.prepare", "missing")
-    try:
-        points = round(instrument.read_number(instrument.dialect.points))
-        duration = points * instrument.read_number(instrument.dialect.interval)
-        settings = [_setting(instrument, name) for name in instrument.dialect.channels[:2]]
-    except (InstrumentProblem, ValueError) as problem:
-        steps.note("transfer.read", "refused", instrument.dialect.transfer.read, problem)
-        return
-    sent = f"{slot.start}, {slot.complete}"
-    if steps.attempt("acquisition.start", sent, lambda: instrument.start_and_wait(duration)):
-        for name, setting in zip(instrument.dialect.channels[:2], settings, strict=True):
-            _transfer(steps, instrument, name, points, setting)
-
-
-def _setting(instrument: Scope, name: str) -> ChannelSetting:
-    """Return a channel's range, offset and probe factor as they are, in V at the probe's tip."""
-    dialect = instrument.dialect
-    return ChannelSetting(
-        range=instrument.read_number(dialect.range, name) if dialect.range.query else 1.0,
-        offset=instrument.read_number(dialect.offset, name) if dialect.offset.query else 0.0,
-        coupling="DC",
-        bandwidth_limit=False,
-        probe_factor=1.0,
-    )
-
-
-def _transfer(steps: Walk, instrument: Scope, name: str, points: int, setting: ChannelSetting) -> None:
-    transfer = instrument.dialect.transfer
-    for text in transfer.before:
-        steps.tell(f"transfer.before {name}", text.format(channel=name))
-    for slot in ("scale", "offset", "origin", "preamble"):
-        if text := getattr(transfer, slot):
-            steps.ask(f"transfer.{slot} {name}", text.format(channel=name))
-    if instrument.dialect.overload.query:
-        steps.ask(f"overload.query {name}", instrument.dialect.overload.query.format(channel=name))
-
-    def record() -> str:
-        volts, overload, _ = read_channel(instrument.session, instrument.dialect, name, points, setting)
-        words = f"{len(volts)} samples, {volts.min():.4g} to {volts.max():.4g} V"
-        return words + (", overload" if overload else "")
-
-    steps.attempt(f"transfer.read {name}", transfer.read.format(channel=name), record)
 
 
 def _switch(steps: Walk, instrument: Switch, routes: Sequence[str]) -> None:
@@ -182,8 +115,8 @@ def _supply(steps: Walk, instrument: Supply, no_board: bool) -> None:
         steps.answered(f"output.off {name}", off, query, output.is_off)
     steps.identity(dialect.identity)
     for name in dialect.channels:
-        steps.number("voltage", dialect.voltage, name, other=lambda before: before / 2 if before else 1.0)
-        steps.number("current_limit", dialect.current_limit, name, other=lambda before: before / 2 if before else 0.01)
+        steps.number("voltage", dialect.voltage, name, values=(5.0, 2.0))
+        steps.number("current_limit", dialect.current_limit, name, values=(0.05, 0.02))
         steps.ask(f"current.query {name}", dialect.current.query.format(channel=name))
     for name in instrument.switches():
         on, off = output.on.format(channel=name), output.off.format(channel=name)

@@ -105,7 +105,7 @@ WRONG = {  # role, text of the dialect, what stands there instead, the slot, wha
     "a command it does not know": ("generator", "OFFSet {value}", "OFST {value}", "offset.set", "then error -113"),
     "a word it does not know": ("scope", 'AC = "AC"', 'AC = "ALT"', "coupling AC 1", NO_SUCH_WORD),
     "another answer": ("generator", 'is_off = "0"', 'is_off = "OFF"', "output.off", "then answers 0, not OFF"),
-    "samples of another width": ("scope", '"real32"', '"real64"', "transfer.read 1", "a block of 8000 bytes"),
+    "samples of another width": ("scope", '"real32"', '"real64"', "transfer.read 1", "a block of 4000 bytes"),
     "a field that is not there": ("supply", 'CURRent:DC?"', 'CURRent:VC?"', "current.query 1", UNKNOWN),
 }
 
