@@ -3,7 +3,7 @@
 import json
 import sys
 from collections import Counter
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import asdict
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -20,6 +20,12 @@ __all__ = ["command"]
 
 _WORKS, _FAULT = 0, 3
 _WIDTH, _SLOT = 80, 36  # columns of a line, and where what was sent begins
+_BY_HAND = {  # what reads back as it was set although the dialect is wrong
+    "generator": "frequency, amplitude, offset: unit, peak for peak to peak",
+    "scope": "a known voltage at each input: its size, its sign, which input it is",
+    "switch": "which test point each route reaches",
+    "supply": "the voltage of each output: a unit, which output it is",
+}
 
 
 @click.command("bench")
@@ -79,12 +85,21 @@ def _walk(bench: "Bench", instruments: "Mapping[str, Instrument]", no_board: boo
     if as_json:
         rows = {role: [asdict(line) for line in lines] for role, lines in found.items()}
         return _as_json(bench, "slots", rows, works=not wrong)
+    _echo_by_hand(found)
     if wrong:
         click.echo(f"{len(wrong)} slot(s) that a sweep needs do not work:")
         click.echo("\n".join(f"  {entry}" for entry in wrong))
         return _FAULT
     click.echo("Every slot that a sweep needs works; the generator's output is off.")
     return _WORKS
+
+
+def _echo_by_hand(roles: Iterable[str]) -> None:
+    """Say what no walk can notice."""
+    click.echo("A wrong slot that reads back as right is not seen here. Compare by hand, once:")
+    for role in roles:
+        click.echo(f"  {role:<9} {_BY_HAND[role]}")
+    click.echo("")
 
 
 def _echo_walk(bench: "Bench", role: str, lines: "Sequence[Line]") -> None:
@@ -107,11 +122,13 @@ def _echo_head(bench: "Bench", role: str) -> None:
 
 def _fitted(sent: str, came: str) -> list[str]:
     """Return what was sent and what came back in as many lines as they need beside the slot's name."""
+    import textwrap
+
     room = _WIDTH - _SLOT
     both = f"{sent} {came}"
     if len(both) <= room:
         return [both]
-    return [text[start : start + room] for text in (sent, came) for start in range(0, len(text), room)]
+    return [sent[start : start + room] for start in range(0, len(sent), room)] + textwrap.wrap(came, room)
 
 
 def _contract(bench: "Bench", instruments: "Mapping[str, Instrument]", no_board: bool, as_json: bool) -> int:

@@ -66,7 +66,9 @@ def test_a_right_dialect_is_exit_0_and_reads_in_80_columns(call, bench_file, inv
     assert max(map(len, (line for line in lines if ".toml" not in line))) <= 80
     assert all(any(line.startswith(role) for line in lines) for role in ("generator", "scope", "switch"))
     if not options:
-        assert "nobody said that no board is connected" in out.replace("\n" + " " * 36, "")
+        by_hand = out.partition("Compare by hand, once:\n")[2].split("\n\n")[0]
+        assert [line.split()[0] for line in by_hand.splitlines()] == ["generator", "scope", "switch"]
+        assert "nobody said that no board is connected" in out.replace("\n" + " " * 36, " ")
 
 
 def test_a_slot_that_does_not_work_is_exit_3_and_named_at_the_end(call, bench_file):
@@ -76,6 +78,16 @@ def test_a_slot_that_does_not_work_is_exit_3_and_named_at_the_end(call, bench_fi
     assert "  generator: offset.set\n" in out
     assert "error -113" in out
     assert "transfer.read 2" in out  # the other instruments were walked all the same
+
+
+def test_a_slip_is_told_in_a_sentence_that_reads_in_80_columns(call, bench_file):
+    text = source("scpi99-digitizer").replace("[interval]", "[interval]\nreciprocal = true", 1)
+    code, out, _ = call(bench_file(texts={"scope": text}))
+    assert code == FAULT
+    assert "  scope: interval.query\n" in out
+    told = out.replace("\n" + " " * 36, " ")
+    assert "500 points would last 1.25e+07 s, but 0.02 s are set: likely [interval] reciprocal = false" in told
+    assert max(len(line) for line in out.splitlines() if ".toml" not in line) <= 80
 
 
 def test_a_word_that_no_sweep_uses_may_be_refused(call, bench_file):
