@@ -8,12 +8,14 @@ from __future__ import annotations
 
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
-from typing import Any, Literal
+from typing import Literal
 
+from bandproof.drivers.clause import Broken, NotTried, demand
 from bandproof.drivers.errors import InstrumentError, InstrumentProblem
 from bandproof.drivers.generator import Generator
 from bandproof.drivers.instrument import Instrument
 from bandproof.drivers.scope import Scope
+from bandproof.drivers.scope_contract import SCOPE_CLAUSES
 from bandproof.drivers.session import as_text
 from bandproof.drivers.supply import Supply
 from bandproof.drivers.switch import Switch
@@ -22,14 +24,6 @@ from bandproof.drivers.walk import NO_BOARD
 __all__ = ["CLAUSES", "Broken", "NotTried", "Outcome", "check"]
 
 UNKNOWN = "XYZZY:PLUGH 7"  # a command no instrument has
-
-
-class Broken(Exception):
-    """An instrument does not keep a clause."""
-
-
-class NotTried(Exception):
-    """A clause could not be tried; why."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -42,18 +36,14 @@ class Outcome:
     found: str = ""
 
 
-def demand(kept: bool, found: str) -> None:
-    """Raise Broken with what was found unless a demand is kept."""
-    if not kept:
-        raise Broken(found)
-
-
 # --- any instrument ---
 
 
 def identifies_itself_alike_twice(instrument: Instrument) -> None:
     """Asked twice what it is, it says the same."""
     first, second = instrument.identify(), instrument.identify()
+    if not first + second:
+        raise NotTried("by its dialect it cannot be asked")
     demand(first == second, f"{first!r}, then {second!r}")
 
 
@@ -143,88 +133,6 @@ def _numbers(generator: Generator) -> tuple[float, ...]:
     dialect = generator.dialect
     numbers = (dialect.frequency, dialect.amplitude, dialect.offset)
     return tuple(generator.read_number(number) for number in numbers if number.query)
-
-
-# --- scope ---
-
-RANGE, DURATION, POINTS = 1.0, 0.01, 1000
-
-
-def takes_the_record_it_says(scope: Scope) -> None:
-    """A record has the points and the interval that were read back."""
-    setting = _prepared(scope)
-    record = scope.acquire()
-    found = (record.volts.shape, record.sample_interval)
-    demand(found == ((2, setting.points), setting.sample_interval), f"{found} for {setting}")
-
-
-def takes_the_duration_asked(scope: Scope) -> None:
-    """A record asked for is as long as asked within the dialect's limits, and a longer one is longer."""
-    short = _prepared(scope).duration
-    longer = scope.set_record(4 * DURATION, POINTS).duration
-    demand(2.5 < longer / short < 6.0, f"{short:g} s asked {DURATION:g}, {longer:g} s asked {4 * DURATION:g}")
-
-
-def reads_back_a_range_no_smaller(scope: Scope) -> None:
-    """A range read back holds what was asked."""
-    for peak in (0.2, 1.0, 3.0):
-        found = scope.set_channel(1, range=peak).range
-        demand(found >= 0.999 * peak, f"{found:g} V for {peak:g} V")
-
-
-def sees_no_overload_inside_its_range(scope: Scope) -> None:
-    """An input inside the range is not told as overloaded."""
-    _prepared(scope, peak=5.0)
-    demand(not scope.acquire().overload.any(), "an overload is told on a range of 5 V")
-
-
-def tells_an_overload(scope: Scope) -> None:
-    """An input outside the range is told as overloaded: here a range that is shifted away from 0 V."""
-    if not scope.dialect.offset.set:
-        raise NotTried("its range cannot be shifted, and without a signal nothing else overloads it")
-    for offset in (0.5, -0.5):  # both ends of the converter
-        _prepared(scope, peak=0.1, offset=offset)
-        record = scope.acquire()
-        seen = f"{record.volts.min():g} to {record.volts.max():g} V on a range of 0.1 V round {offset:g} V"
-        demand(bool(record.overload.all()), f"{seen}, and no overload told: look at [overload]")
-
-
-def shifts_its_range_without_shifting_the_input(scope: Scope) -> None:
-    """A quiet input reads the same on a range that is shifted: the offset has the right sign and unit."""
-    if not scope.dialect.offset.set:
-        raise NotTried("its range cannot be shifted")
-    _prepared(scope, peak=2.0)
-    still = scope.acquire().volts.mean(axis=1)
-    _prepared(scope, peak=2.0, offset=1.0)
-    moved = scope.acquire().volts.mean(axis=1) - still
-    demand(
-        bool((abs(moved) < 0.2).all()), f"it reads {moved[0]:+.3g} V more on a range shifted by 1 V: look at [offset]"
-    )
-
-
-def repeats_no_channel_setting(scope: Scope) -> None:
-    """A channel and a record set again alike cost no message."""
-    _prepared(scope)
-    before = scope.session.sent
-    _prepared(scope)
-    demand(scope.session.sent == before, f"{scope.session.sent - before} messages were sent")
-
-
-def records_as_before_after_reopening(scope: Scope) -> None:
-    """Closed, opened and restored, it takes the same record."""
-    setting = _prepared(scope)
-    scope.acquire()
-    scope.reopen()
-    scope.restore()
-    record = scope.acquire()
-    found = (record.volts.shape, record.sample_interval)
-    demand(found == ((2, setting.points), setting.sample_interval), f"{found} for {setting}")
-
-
-def _prepared(scope: Scope, *, peak: float = RANGE, offset: float = 0.0) -> Any:
-    for channel in (1, 2):
-        scope.set_channel(channel, range=peak, offset=offset)
-    return scope.set_record(DURATION, POINTS)
 
 
 # --- switch ---
@@ -319,17 +227,7 @@ CLAUSES: dict[type[Instrument], tuple[Callable[..., None], ...]] = {
         switches_its_output,
         is_off_when_safe,
     ),
-    Scope: (
-        *_ANY,
-        reads_back_a_range_no_smaller,
-        takes_the_record_it_says,
-        takes_the_duration_asked,
-        sees_no_overload_inside_its_range,
-        tells_an_overload,
-        shifts_its_range_without_shifting_the_input,
-        repeats_no_channel_setting,
-        records_as_before_after_reopening,
-    ),
+    Scope: (*_ANY, *SCOPE_CLAUSES),
     Switch: (*_ANY, closes_one_route_and_opens_the_others, opens_every_route, closes_again_after_reopening),
     Supply: (
         gives_nothing_when_safe,

@@ -47,7 +47,9 @@ def test_every_simulated_instrument_keeps_its_contract_in_every_language(stand, 
     outcomes = check(bench.drivers[role], no_board=True, routes=ROUTES)
     assert [outcome for outcome in outcomes if outcome.verdict == "broken"] == []
     not_tried = {outcome.clause for outcome in outcomes if outcome.verdict == "not tried"}
-    assert not_tried == ({"reports_an_unknown_command"} if (language, role) == ("harbour", "switch") else set())
+    mute = {"identifies_itself_alike_twice"} if language == "harbour" else set()  # its dialects have no identity query
+    deaf = {"reports_an_unknown_command"} if (language, role) == ("harbour", "switch") else set()
+    assert not_tried == mute | deaf
 
 
 class Memory:
