@@ -44,7 +44,7 @@ def figure_response(
     [0.0, 0.0, 1.0]
     """
     value, derivative = band_jacobian(theta[None], frequency[None])
-    columns = derivative[0][:, [VARIABLES.index(name) for name in free]]
+    columns = np.stack([derivative[VARIABLES.index(name)][0] for name in free], axis=-1)
     jacobian = np.stack([columns.real, columns.imag], axis=1)  # (N, 2, P)
     weight = np.linalg.inv(covariance)
     information = np.einsum("nip,nij,njq->pq", jacobian, weight, jacobian)

@@ -116,9 +116,7 @@ def _best(frequency: FloatArray, white: FloatArray, data: FloatArray) -> tuple[f
     return _squares(frequency, float(found.x), white, data)
 
 
-def _squares(
-    frequency: FloatArray, log_corner: float, white: FloatArray, data: FloatArray
-) -> tuple[float, FloatArray]:
+def _squares(frequency: FloatArray, log_corner: float, white: FloatArray, data: FloatArray) -> tuple[float, FloatArray]:
     """Return the sum of squares left by the best path with one corner, and its unknowns."""
     theta = np.array([0.0, 0.0, 0.0, log_corner])
     design = _whitened(white, _columns(frequency, theta)[:3]).T

@@ -162,9 +162,9 @@ def _distribution(name: Distribution, dof: float, x: FloatArray) -> FloatArray:
     result: FloatArray
     match name:
         case "normal" | "t" if isfinite(dof):
-            result = stdtr(dof, x)
+            result = np.asarray(stdtr(dof, x), dtype=np.float64)
         case "normal" | "t":
-            result = ndtr(x)
+            result = np.asarray(ndtr(x), dtype=np.float64)
         case "uniform":
             result = np.clip(0.5 + 0.5 * x / sqrt(3.0), 0.0, 1.0)
         case "triangular":

@@ -2,13 +2,14 @@
 
 import os
 import re
-from dataclasses import fields
+from dataclasses import fields, replace
 from pathlib import Path
-from typing import Literal, cast, get_args
+from typing import Any, Literal, cast, get_args
 
 from bandproof.bench.errors import FileMistakes
+from bandproof.bench.quantities import Kind
 from bandproof.bench.reading import Mistakes, Table, nearest, parse_toml, read_text
-from bandproof.bench.types import Bench, Board, Instrument, Wire
+from bandproof.bench.types import Accuracy, Bench, Board, Instrument, Wire
 from bandproof.drivers.dialect import load
 from bandproof.drivers.schema import DialectMistakes
 from bandproof.drivers.serial_line import Flow, Parity, Serial
@@ -20,7 +21,20 @@ BY_HAND = "by hand"
 _ADDRESS = re.compile(r"(TCPIP|USB|GPIB|ASRL|PXI|VXI)[^:\s]*(::[^:\s]+)+", re.IGNORECASE)  # interfaces of VPP-4.3
 _EXAMPLE = '"TCPIP::192.0.2.10::5025::SOCKET"'
 _BAUD = 50, 4_000_000  # what operating systems name (POSIX from 50)
-_USUAL_SKEW = 100e-9  # s, each channel; arbitrary, far above what two inputs of one scope differ by
+# Loads of usual probes by factor, Ω and F (common practice): a 10:1 probe; a 1:1 probe or a metre of cable.
+_LOADS = {10.0: (10e6, 15e-12), 1.0: (1e6, 100e-12)}
+# What the file may say about errors: name of Accuracy, table, key, kind.
+_ACCURACY: tuple[tuple[str, str, str, Kind], ...] = (
+    ("channel_skew", "scope", "channel_skew", "time"),
+    ("linearity", "scope", "linearity", "steps"),
+    ("range_gain", "scope", "range_accuracy", "relative"),
+    ("drift", "scope", "drift", "drift"),
+    ("reseating", "probes", "reseating", "relative"),
+    ("probe_compensation", "probes", "compensation", "relative"),
+    ("probe_corner", "probes", "corner", "frequency"),
+    ("probe_resistance", "probes", "resistance", "resistance"),
+    ("probe_capacitance", "probes", "capacitance", "capacitance"),
+)
 
 
 def find_bench(named: str | None, folder: Path = Path(".")) -> tuple[Path, str]:
@@ -94,10 +108,8 @@ def _bench(top: Table, text: str, folder: Path) -> Bench:
     ceiling, visa_library = top.quantity("ceiling", "voltage"), top.text("visa_library", "@py")
     clock = top.text("simulated_clock", "")
     generator, scope = top.table("generator"), top.table("scope")
-    frequency = generator.quantity("frequency_accuracy", "relative")
-    channel_gain = scope.quantity("channel_gain_accuracy", "relative")
-    channel_skew = scope.quantity("channel_skew", "time", _USUAL_SKEW)
-    linearity = scope.quantity("linearity", "steps", 0.0, positive=False)
+    probes = top.table("probes")
+    accuracy = _accuracy(generator, scope, probes)
     instruments = {
         "generator": _instrument("generator", generator, folder),
         "scope": _instrument("scope", scope, folder),
@@ -116,15 +128,33 @@ def _bench(top: Table, text: str, folder: Path) -> Bench:
         ceiling=ceiling,
         instruments=instruments,
         wires=_wires(top.table("wiring"), "switch" in instruments),
-        probe_factors=_probes(top.table("probes")),
-        channel_gain=channel_gain,
-        channel_skew=channel_skew,
-        linearity=linearity,
-        generator_frequency=frequency,
+        probe_factors=_probes(probes),
+        accuracy=accuracy,
+        thru_valid=top.quantity("thru_valid", "time", 12.0 * 3600.0),
         visa_library=visa_library,
         clock=str(folder / clock) if clock else None,
         text=text,
     )
+
+
+def _accuracy(generator: Table, scope: Table, probes: Table) -> Accuracy:
+    """Return what the file says about errors; what it leaves out has the careful defaults of `Accuracy`."""
+    usual = Accuracy(
+        generator_frequency=generator.quantity("frequency_accuracy", "relative"),
+        channel_gain=scope.quantity("channel_gain_accuracy", "relative"),
+    )
+    factors = [probes.peek(f"channel_{channel}") for channel in (1, 2)]
+    loads = [_LOADS[factor] for factor in factors if isinstance(factor, int | float) and factor in _LOADS]
+    if loads:
+        resistance, capacitance = min(loads)
+        usual = replace(usual, probe_resistance=resistance, probe_capacitance=capacitance)
+    tables = {"scope": scope, "probes": probes}
+    stated: dict[str, Any] = {
+        name: tables[table].quantity(key, kind, getattr(usual, name), positive=False)
+        for name, table, key, kind in _ACCURACY
+    }
+    declared = {name for name, table, key, _ in _ACCURACY if key in tables[table]}
+    return replace(usual, **stated, declared=frozenset({"channel_gain", "generator_frequency", *declared}))
 
 
 def _instrument(role: Role, table: Table, folder: Path) -> Instrument:

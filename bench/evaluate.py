@@ -1,7 +1,8 @@
 """From points to conclusions: the fit of each stage, its figures with their uncertainty, compared with the design."""
 
-from collections.abc import Sequence
-from math import inf, isfinite, nan, sqrt
+from collections.abc import Mapping, Sequence
+from datetime import datetime
+from math import isfinite, nan
 
 import numpy as np
 
@@ -9,13 +10,16 @@ from bandproof.analysis.decision import decide, worst
 from bandproof.analysis.fit import BandFit, fit_bands
 from bandproof.analysis.models import band_response
 from bandproof.analysis.types import FloatArray
-from bandproof.analysis.uncertainty import Combined, Row, combine
+from bandproof.analysis.uncertainty import Combined
+from bandproof.bench.budget import budgets
 from bandproof.bench.circuit import Prediction, predict
 from bandproof.bench.misfit import StageFit, arrays, look_for_misfit
 from bandproof.bench.picture import StageView
+from bandproof.bench.sources import Measured
+from bandproof.bench.thru import Path, Ranges, corrected, paths
 from bandproof.bench.types import QUANTITIES, UNITS, Bench, Board, Comparison, Point, Quantity, Run, Stage, StageResult
 
-__all__ = ["StageFit", "evaluate", "evaluate_stage", "fit_points", "usable", "views"]
+__all__ = ["StageFit", "evaluate", "evaluate_stage", "fit_points", "known_paths", "usable", "views"]
 
 LEAST_LSB = 20.0  # peak; below, quantization is not white and costs 2.5 to 5 times the fit's own variance
 MODEL = "band+delay"
@@ -23,26 +27,34 @@ _SPOILED = {"overload", "undersampled", "folded"}
 _FEWEST = 3  # points: five unknowns, two data a point, and one to judge the fit by
 
 
-def usable(points: Sequence[Point]) -> tuple[Point, ...]:
-    """Return the points of one stage that may enter a fit: of its curve, at its last level, sound and large enough."""
+def usable(points: Sequence[Point], *, level: bool = True) -> tuple[Point, ...]:
+    """Return the points of one stage that may enter a fit: of its curve, at its last level, sound and large enough.
+
+    Without ``level`` those at any level, of any stages.
+    """
     curve = [point for point in points if point.purpose in ("curve", "closing")]
-    level = min((point.amplitude for point in curve), default=0.0)  # the last one, where distortion asked for less
+    last = (
+        min((point.amplitude for point in curve), default=0.0) if level else np.inf
+    )  # where distortion asked for less
     return tuple(
         point
         for point in curve
-        if not _SPOILED & set(point.flags) and _is_large(point) and point.amplitude <= 1.01 * level
+        if not _SPOILED & set(point.flags) and _is_large(point) and point.amplitude <= 1.01 * last
     )
 
 
-def fit_points(points: Sequence[Point]) -> StageFit:
-    """Fit the band model with delay to a stage's points; without a fit the reason is in words."""
+def fit_points(points: Sequence[Point], known: Mapping[Ranges, Path] | None = None) -> StageFit:
+    """Fit the band model with delay to a stage's points, a known path divided out; without a fit: why."""
     used = usable(points)
     if len({point.frequency for point in used}) < _FEWEST:
-        return StageFit(used, None, f"only {len(used)} usable points{_lost(points)}")
+        reason = f"only {len(used)} usable points{_lost(points)}"
+        return StageFit(used, None, reason, np.zeros(0, dtype=np.complex128), np.zeros((0, 2, 2)), ())
     frequency, response, covariance = arrays(used)
+    response, covariance, along = corrected(used, response, covariance, known or {})
     fit = fit_bands(frequency[None], response[None], covariance[None])
     sound = fit.status[0] in ("converged", "no progress") and all(map(isfinite, (fit.f0[0], fit.q[0], fit.u_f0[0])))
-    return StageFit(used, fit if sound else None, "" if sound else f"the fit ended with {fit.status[0]!r}")
+    reason = "" if sound else f"the fit ended with {fit.status[0]!r}"
+    return StageFit(used, fit if sound else None, reason, response, covariance, tuple(along))
 
 
 def _lost(points: Sequence[Point]) -> str:
@@ -66,22 +78,35 @@ def _is_large(point: Point) -> bool:
 
 def evaluate(run: Run) -> tuple[StageResult, ...]:
     """Return what is concluded about every stage that has points; one without a fit is undecided, and why."""
-    measured = {point.stage for point in run.points}
+    measured, known = {point.stage for point in run.points}, known_paths(run)
     return tuple(
-        evaluate_stage(run.board, run.bench, stage, [p for p in run.points if p.stage == stage.name])
+        evaluate_stage(run.board, run.bench, stage, [p for p in run.points if p.stage == stage.name], known)
         for stage in run.board.stages
         if stage.name in measured
     )
 
 
-def evaluate_stage(board: Board, bench: Bench, stage: Stage, points: Sequence[Point]) -> StageResult:
-    """Return what is concluded about one stage from its points."""
-    found = fit_points(points)
+def known_paths(run: Run) -> dict[Ranges, Path]:
+    """Return the path on each pair of ranges, from the thru the run measured, else from the stored one it used."""
+    own = paths(run.points)
+    if own or run.thru is None:
+        return own
+    age = datetime.fromisoformat(run.started) - datetime.fromisoformat(run.thru.started)
+    return paths(run.thru.points, before=age.total_seconds())
+
+
+def evaluate_stage(
+    board: Board, bench: Bench, stage: Stage, points: Sequence[Point], known: Mapping[Ranges, Path] | None = None
+) -> StageResult:
+    """Return what is concluded about one stage from its points and the path known."""
+    found = fit_points(points, known)
     prediction = predict(board, stage)
     misfit = look_for_misfit(board, bench, stage, points, found)
-    u = {quantity: _budget(found.fit, quantity, bench) for quantity in QUANTITIES}
-    doubt = found.reason or misfit.doubt({name: budget.expanded for name, budget in u.items() if budget is not None})
-    figures = {name: _compared(stage, name, prediction, found.fit, u[name], doubt) for name in QUANTITIES}
+    rows = _budgets(board, bench, stage, points, found, {})
+    doubt = found.reason or misfit.doubt({name: budget.expanded for name, budget in rows.items()})
+    if misfit.shifts and not doubt:
+        rows = _budgets(board, bench, stage, points, found, misfit.shifts)
+    figures = {name: _compared(stage, name, prediction, found.fit, rows.get(name), doubt) for name in QUANTITIES}
     fit = found.fit
     alarms = [doubt] if doubt else []
     alarms += [*misfit.alarms, *_outside_by_design(stage, prediction)]
@@ -97,6 +122,7 @@ def evaluate_stage(board: Board, bench: Bench, stage: Stage, points: Sequence[Po
         points=len(found.points),
         lack_of_fit=misfit.significant,
         status=fit.status[0] if fit else found.reason,
+        budgets=rows,
         alarms=tuple(f"{stage.name}: {alarm}" for alarm in alarms),
     )
 
@@ -111,11 +137,19 @@ def _outside_by_design(stage: Stage, prediction: Prediction) -> list[str]:
     ]
 
 
-def _budget(fit: BandFit | None, quantity: Quantity, bench: Bench) -> Combined | None:
-    if fit is None:
-        return None
-    value, repeatability = _measured(fit, quantity)
-    return combine(_rows(quantity, value, repeatability, bench))
+def _budgets(
+    board: Board,
+    bench: Bench,
+    stage: Stage,
+    points: Sequence[Point],
+    found: StageFit,
+    shifts: Mapping[Quantity, float],
+) -> dict[Quantity, Combined]:
+    """Return each figure's budget; none without a fit."""
+    if found.fit is None:
+        return {}
+    quiet = next((point for point in points if point.purpose == "no-signal"), None)
+    return budgets(Measured(board, bench, stage, found.points, found.covariance, found.paths, found.fit, quiet, shifts))
 
 
 def _compared(
@@ -156,34 +190,21 @@ def _measured(fit: BandFit | None, quantity: Quantity) -> tuple[float, float]:
             return float(abs(fit.gain[0])), float(fit.u_gain[0])
 
 
-def _rows(quantity: Quantity, value: float, repeatability: float, bench: Bench) -> list[Row]:
-    """Return the rows known so far: noise, channel gains (for gain), the generator's frequency (for f0)."""
-    rows = [Row("repeatability", "A", "normal", repeatability, 1.0, inf, "noise of the records through the fit")]
-    if quantity == "gain":
-        # Two channels, each uniform within the half-width; a ratio has the difference of both.
-        declared = bench.channel_gain * sqrt(2.0 / 3.0)
-        rows.append(Row("channel gain", "B", "triangular", declared, value, inf, "declared in the bench file, no thru"))
-    if quantity == "centre":
-        declared = bench.generator_frequency / sqrt(3.0)
-        rows.append(Row("generator frequency", "B", "uniform", declared, value, inf, "declared in the bench file"))
-    return rows
-
-
 def views(run: Run, stages: Sequence[StageResult]) -> list[StageView]:
     """Return what the picture draws: every stage that has a fit, over three decades around the designed centres."""
     fitted = [stage for stage in stages if stage.theta]
     centres = [stage.figures["centre"].designed for stage in fitted]
-    by_stage = [[point for point in run.points if point.stage == stage.name] for stage in fitted]
-    measured = [point.frequency for points in by_stage for point in usable(points)]
     if not fitted:
         return []
+    known = known_paths(run)
+    fits = [fit_points([point for point in run.points if point.stage == stage.name], known) for stage in fitted]
+    measured = [frequency for fit in fits for frequency in fit.frequency.tolist()]
     grid = np.geomspace(min(*centres, *measured) / 1.5, max(*centres, *measured) * 1.5, 400)
-    return [_view(run, stage, grid) for stage in fitted]
+    return [_view(stage, fit, grid) for stage, fit in zip(fitted, fits, strict=True)]
 
 
-def _view(run: Run, stage: StageResult, grid: FloatArray) -> StageView:
-    points = usable([point for point in run.points if point.stage == stage.name])
-    frequency, response, covariance = arrays(points)
+def _view(stage: StageResult, found: StageFit, grid: FloatArray) -> StageView:
+    frequency, response, covariance = found.frequency, found.response, found.covariance
     designed = [stage.figures[quantity].designed for quantity in QUANTITIES]
     target = np.array([[np.log(designed[0]), np.log(designed[1]), -designed[2], 0.0, 0.0, 0.0, 0.0]])
     along = response / np.abs(response)

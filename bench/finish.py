@@ -11,6 +11,7 @@ from bandproof.bench.evaluate import evaluate, views
 from bandproof.bench.journal import Journal
 from bandproof.bench.result import result_object
 from bandproof.bench.runfile import digest_of, read_result, read_run, write_run
+from bandproof.bench.thru import THRU
 from bandproof.bench.types import Bench, Board, Run, StageResult
 
 __all__ = ["CUT_SHORT", "PICTURE", "RUN", "Outcome", "board_and_bench", "finish", "run_of"]
@@ -79,7 +80,7 @@ def board_and_bench(journal: Journal) -> tuple[Board, Bench]:
     """Return board and bench from the texts a run began with, whatever has become of the files."""
     head = journal.head
     board = parse_board(head["board"], "the run's board file")
-    strangers = {step.stage for step in journal.steps} - {stage.name for stage in board.stages}
+    strangers = {step.stage for step in journal.steps} - {THRU, *(stage.name for stage in board.stages)}
     if strangers:
         raise BadInput(f"the journal plans stages its board does not have: {', '.join(sorted(strangers))}")
     bench = parse_bench(head["bench"], head["bench_path"] or "the run's bench file")

@@ -9,6 +9,7 @@ from scipy.special import chdtrc
 
 from bandproof.analysis.fit import BandFit, fit_bands
 from bandproof.analysis.types import ComplexArray, FloatArray
+from bandproof.bench.thru import Path
 from bandproof.bench.types import Bench, Board, Point, Quantity, Stage
 
 __all__ = ["Misfit", "StageFit", "arrays", "look_for_misfit"]
@@ -20,13 +21,24 @@ _DRIFTED = 0.01  # and this part of it; arbitrary, far above what a bench drifts
 _CERTAIN = 3.0  # standard uncertainties of the delay
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class StageFit:
-    """A stage's fit and the points it was made of; without a fit the reason in words."""
+    """A stage's fit and what it was made of; without a fit the reason in words.
+
+    ``response`` (N,) and ``covariance`` (N, 2, 2) are those of the points with their ``paths`` divided out.
+    """
 
     points: tuple[Point, ...]
     fit: BandFit | None
     reason: str
+    response: ComplexArray
+    covariance: FloatArray
+    paths: tuple[Path | None, ...]
+
+    @property
+    def frequency(self) -> FloatArray:
+        """Hz, (N,)."""
+        return np.array([point.frequency for point in self.points])
 
 
 @dataclass(frozen=True, slots=True)
@@ -77,7 +89,7 @@ def look_for_misfit(board: Board, bench: Bench, stage: Stage, points: Sequence[P
         return Misfit(nan, False, {}, distorted, "", tuple(alarms))
     chi_square, dof = float(found.fit.chi_square[0]), float(found.fit.dof[0])
     significant = float(chdtrc(dof, chi_square * dof)) < _SIGNIFICANT
-    alarms += [*_delay(board, bench, found.fit), *_nonlinear(points, found)]
+    alarms += [*_delay(board, bench, found), *_nonlinear(points, found)]
     shifts = _with_leakage(found) if significant else {}
     return Misfit(chi_square, significant, shifts, distorted, _changed(points), tuple(alarms))
 
@@ -101,11 +113,10 @@ def _changed(points: Sequence[Point]) -> str:
 
 def _with_leakage(found: StageFit) -> dict[Quantity, float]:
     """Return how far the admissible larger model moves each figure; everything, when it cannot be fitted."""
-    frequency, response, covariance = arrays(found.points)
-    small = found.fit
+    frequency, small = found.frequency, found.fit
     if small is None or 2 * len(frequency) < 7:
         return {"centre": np.inf, "q": np.inf, "gain": np.inf}
-    large = fit_bands(frequency[None], response[None], covariance[None], leakage=True, start=small.theta)
+    large = fit_bands(frequency[None], found.response[None], found.covariance[None], leakage=True, start=small.theta)
     return {
         "centre": float(large.f0[0] - small.f0[0]),
         "q": float(large.q[0] - small.q[0]),
@@ -137,10 +148,13 @@ def _nonlinear(points: Sequence[Point], found: StageFit) -> list[str]:
     return [f"nonlinear: its gain differs by {change:+.2f} % between {higher[0].amplitude:.3g} V and {used:.3g} V"]
 
 
-def _delay(board: Board, bench: Bench, fit: BandFit) -> list[str]:
+def _delay(board: Board, bench: Bench, found: StageFit) -> list[str]:
     """Return an alarm about the bench when the fitted delay is beyond what op-amp and channel skew explain."""
-    delay, u = float(fit.delay[0]), float(fit.u_delay[0])
-    allowed = 1.0 / (2.0 * pi * board.op_amp.gbw) + 2.0 * bench.channel_skew + _CERTAIN * u
+    if found.fit is None:
+        return []
+    delay, u = float(found.fit.delay[0]), float(found.fit.u_delay[0])
+    skew = 0.0 if all(found.paths) else 2.0 * bench.accuracy.channel_skew  # a thru holds it
+    allowed = 1.0 / (2.0 * pi * board.op_amp.gbw) + skew + _CERTAIN * u
     if abs(delay) <= allowed:
         return []
     text = (

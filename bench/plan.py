@@ -1,7 +1,7 @@
 """The plan: which records to take next, given what was measured so far. Pure and incremental; empty means done."""
 
 from collections import Counter
-from collections.abc import Sequence
+from collections.abc import Collection, Sequence
 from math import ceil, floor, log, log10
 
 import numpy as np
@@ -11,8 +11,9 @@ from bandproof.analysis.planning import band_frequencies, dwell_after_step, plan
 from bandproof.analysis.types import FloatArray
 from bandproof.bench.circuit import Prediction, predict, predicted_response, stage_network, taps
 from bandproof.bench.errors import BadInput
-from bandproof.bench.evaluate import fit_points
+from bandproof.bench.evaluate import fit_points, usable
 from bandproof.bench.record import HUM_BELOW, hum_frequencies
+from bandproof.bench.thru import THRU, Ranges, thru_stage
 from bandproof.bench.types import Bench, Board, Point, Purpose, Stage, Step, Tone
 
 __all__ = ["Planner", "greatest_level"]
@@ -27,11 +28,14 @@ _MOST_BATCHES = 3
 _BACK_OFF = 0.5  # 6 dB, when a record is distorted
 _FAINT = 0.17  # of the range, the loudest point's level: the skirts then fall below 20 of 128 steps
 _FAINTEST = 0.01  # what is fainter is leakage of a dead stage: no range is asked for it; arbitrary
+_BEYOND = 1.5  # times that a thru reaches beyond the points it is for
+_PATH_POINTS, _PATH_PER_DECADE = 6, 4  # of a thru: a smooth curve of five unknowns
+_PATH_SAMPLES = 8192  # of its records, so that its noise hardly counts beside that of the points
 _OVERHEAD = 0.03  # s a record costs beyond dwell and duration, for the time left; arbitrary
 
 
 class Planner:
-    """Plans the records of a board on a bench, stage by stage.
+    """Plans the records of a board on a bench, stage by stage, and the path's on every pair of ranges not ``known``.
 
     Raises
     ------
@@ -40,9 +44,9 @@ class Planner:
         a band is too low for the longest record.
     """
 
-    def __init__(self, board: Board, bench: Bench) -> None:
+    def __init__(self, board: Board, bench: Bench, known: Collection[Ranges] = ()) -> None:
         _refuse_series(board)
-        self._board, self._bench = board, bench
+        self._board, self._bench, self._known = board, bench, set(known)
         self._predictions = {stage.name: _predicted(board, stage) for stage in board.stages}
         self._levels = {s.name: greatest_level(board, bench, s, self._predictions[s.name]) for s in board.stages}
         self._costs: dict[str, list[float]] = {}
@@ -60,12 +64,27 @@ class Planner:
             if steps := self._stage_steps(stage, had, first=len(points)):
                 return steps
             self._finished[stage.name] = len(had)
-        return ()
+        return self._thru(points)
 
     def seconds_left(self, points: Sequence[Point]) -> float:
         """Return an estimate of the bench seconds still needed."""
         had = Counter(point.stage for point in points)
         return sum(sum(self._seconds(stage)[max(0, had[stage.name] - 2) :]) for stage in self._board.stages)
+
+    def _thru(self, points: Sequence[Point]) -> tuple[Step, ...]:
+        """Return the thru on the next pair of ranges that the curves used; nothing where hands would have to move."""
+        path = thru_stage(self._board, self._bench)
+        if path is None or self._bench.wires[THRU].by_hand:
+            return ()
+        done = self._known | {point.ranges for point in points if point.purpose == "thru"}
+        used = [point for point in usable(points, level=False) if point.ranges not in done]
+        if not used:
+            return ()
+        ranges = used[0].ranges
+        on_these = [point for point in used if point.ranges == ranges]
+        level = min(float(np.median([point.amplitude for point in on_these])), ranges[1] / HEADROOM)
+        span = [f(point.frequency for point in on_these) for f in (min, max)]
+        return thru_steps(path, self._bench, ranges, level, (span[0], span[1]), first=len(points))
 
     def _seconds(self, stage: Stage) -> list[float]:
         """Return what each record of a stage's curve costs, as first planned."""
@@ -190,6 +209,20 @@ class Planner:
                 drift=frequency < HUM_BELOW,
             )
         return self._dwells[key]
+
+
+def thru_steps(
+    path: Stage, bench: Bench, ranges: Ranges, level: float, span: tuple[float, float], *, first: int
+) -> tuple[Step, ...]:
+    """Return the records of the path on a pair of ranges in V, at a level in V, a little beyond a span in Hz."""
+    low, high = span[0] / _BEYOND, span[1] * _BEYOND
+    grid = np.geomspace(low, high, _PATH_POINTS + ceil(_PATH_PER_DECADE * log10(high / low)))
+    steps = []
+    for i, frequency in enumerate(shift_from_mains(grid, mains=bench.mains, longest=0.1 * LONGEST).tolist()):
+        record = plan_record(frequency, mains=bench.mains, longest=LONGEST, points=_PATH_SAMPLES)
+        tones = (Tone(frequency, level),)
+        steps.append(Step(first + i, path.name, "thru", tones, 0.0, record.duration, record.points, ranges))
+    return tuple(steps)
 
 
 def greatest_level(board: Board, bench: Bench, stage: Stage, prediction: Prediction) -> float:

@@ -23,6 +23,8 @@ Kind = Literal[
     "tolerance",
     "steps",
     "current",
+    "drift",
+    "temperature",
     "number",
 ]
 
@@ -42,13 +44,15 @@ _UNITS: dict[Kind, dict[str, float]] = {
     "resistance": _spellings(("Ω", "\u2126", "ohm"), _RESISTANCE),
     "capacitance": _spellings(("F",), _MILLI),
     "voltage": _spellings(("V",), {**_MILLI, "k": 1e3}),
-    "time": _spellings(("s",), _MILLI),
+    "time": {**_spellings(("s",), _MILLI), "min": 60.0, "h": 3600.0, "d": 86400.0},
     "slew": {"V/s": 1.0, "V/ms": 1e3, "V/us": 1e6, "V/µs": 1e6, "V/μs": 1e6},
     "gain": {"dB": math.nan, "V/V": 1.0},
     "relative": _RELATIVE,
     "tolerance": {"dB": math.nan, **_RELATIVE},
     "current": _spellings(("A",), _MILLI),
     "steps": {"LSB": 1.0},
+    "drift": {"%/min": 1e-2 / 60.0, "%/h": 1e-2 / 3600.0, "ppm/min": 1e-6 / 60.0, "ppm/h": 1e-6 / 3600.0},
+    "temperature": {"°C": 1.0},
     "number": {"": 1.0},
 }
 _EXAMPLES: dict[Kind, str] = {
@@ -63,6 +67,8 @@ _EXAMPLES: dict[Kind, str] = {
     "tolerance": '"6 %" or "1 dB"',
     "current": '"20 mA"',
     "steps": '"0.5 LSB"',
+    "drift": '"0.02 %/min"',
+    "temperature": '"23 °C"',
     "number": "1.5",
 }
 _CODE: dict[Kind, dict[str, float]] = {

@@ -16,6 +16,7 @@ _SLOWEST_SAMPLING = 20.0  # samples a period, at least
 _HUM_HARMONICS = 5
 _LEFT_OVER, _LEFT_STEPS = 0.05, 3.0  # of the level, and steps of the converter; arbitrary, ten times what noise leaves
 _CLOCK_OFF = 1e-3  # relative; no crystal is that wrong
+_FROM_CODE_TO_CODE = 0.2  # of a converter's departure from a straight line; arbitrary
 _DISTORTED = 10.0 ** (-40.0 / 20.0)
 
 
@@ -71,7 +72,7 @@ def _signal(step: Step, taken: Taken, mains: float, linearity: float) -> Point:
     hum, drift = hum_frequencies(tone, taken.sample_interval * samples, mains), tone < HUM_BELOW
     fit = fit_sines(taken.volts, taken.sample_interval, [tone], nuisance=hum, drift=drift)
     ratio = channel_ratio(fit)
-    covariance = ratio.covariance[0] + _floor(ratio.value[0], fit, taken, linearity)
+    covariance = _not_below(ratio.covariance[0], _floor(ratio.value[0], fit, taken, linearity))
     settling = halves(taken.volts, taken.sample_interval, [tone], nuisance=hum, drift=drift).of_ratio()
     moved = float((np.abs(settling.difference) / settling.threshold).max())
     harmonics = float(distortion(taken.volts, taken.sample_interval, tone, nuisance=hum, drift=drift)[1])
@@ -101,13 +102,21 @@ def _signal(step: Step, taken: Taken, mains: float, linearity: float) -> Point:
 
 
 def _floor(ratio: complex, fit: SineFit, taken: Taken, linearity: float) -> FloatArray:
-    """Return the covariance (2, 2) that the converters' linearity puts under a point's.
+    """Return the covariance (2, 2) below which no point's is taken, whatever its noise says.
 
-    A departure within ± linearity steps, uniform, may stand in either phasor, in any direction.
+    The part of a converter's departure that changes from code to code, uniform, is averaged over the two amplitudes of
+    codes that a sine passes. The smooth part is a row of the budget.
     """
-    relative = linearity * np.array(taken.lsb) / np.abs(fit.phasor[:, 0])
-    floor: FloatArray = abs(ratio) ** 2 * float((relative**2).sum()) / 3.0 * np.eye(2)
+    steps = np.abs(fit.phasor[:, 0]) / taken.lsb
+    relative = _FROM_CODE_TO_CODE * linearity / (np.sqrt(3.0 * 2.0 * steps) * steps)
+    floor: FloatArray = abs(ratio) ** 2 * float((relative**2).sum()) * np.eye(2)
     return floor
+
+
+def _not_below(covariance: FloatArray, floor: FloatArray) -> FloatArray:
+    """Return a covariance raised to a floor where its mean variance is below it."""
+    raised: FloatArray = covariance * max(1.0, float(np.trace(floor) / np.trace(covariance)))
+    return raised
 
 
 def _is_off_frequency(taken: Taken, fit: SineFit) -> bool:

@@ -5,6 +5,7 @@ from importlib import resources
 from bandproof.bench.bench_file import parse_bench
 from bandproof.bench.board_file import parse_board
 from bandproof.bench.errors import BadInput
+from bandproof.bench.thru import THRU
 from bandproof.bench.types import Bench, Board
 
 __all__ = ["demo_board", "demo_text", "rehearsal_bench"]
@@ -49,6 +50,7 @@ def rehearsal_bench(board: Board) -> Bench:
     head, mark, _ = demo_text(DEMO_BENCH).partition("[wiring]")
     comment = '                         # test point → scope channel; a switch route, or "by hand"\n'
     wires = [f"{inputs[0]} = {{ channel = 1 }}\n"]
+    wires += [f'{THRU} = {{ channel = 2, route = "{_FIRST_ROUTE - 1}" }}  # the node of {inputs[0]!r} on channel 2\n']
     wires += [f'{tap} = {{ channel = 2, route = "{_FIRST_ROUTE + i}" }}\n' for i, tap in enumerate(outputs)]
     if board.power is not None:
         head += _SUPPLY

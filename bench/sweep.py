@@ -21,6 +21,7 @@ from bandproof.bench.power import power_up
 from bandproof.bench.record import Taken, point_of
 from bandproof.bench.recovery import Recovery
 from bandproof.bench.stop import Stop
+from bandproof.bench.thru import THRU, thru_stage
 from bandproof.bench.types import Bench, Board, Point, Stage, Step
 from bandproof.drivers.clock import Clock
 from bandproof.drivers.errors import InstrumentProblem
@@ -127,11 +128,11 @@ class Sweep:
         point, volts = self._second_look(step, point, volts)
         self._last_seen = self.clock.now(), self.clock.utc()
         self.journal.measured(point, began=began, finished=self.stamp(), volts=volts if self.keep_raw else None)
-        self._look(step, self.board.stage(step.stage), point)
+        self._look(step, self._stage_of(step), point)
 
     def _second_look(self, step: Step, point: Point, volts: FloatArray) -> tuple[Point, FloatArray]:
         """Ask whoever put a probe by hand to look again when the first signal says it is on another point."""
-        stage = self.board.stage(step.stage)
+        stage = self._stage_of(step)
         by_hand = any(self.bench.wires[tap].by_hand for tap in (stage.tap_in, stage.tap_out))
         if step.purpose != "low-level" or not by_hand or not strange_response(self.board, stage, point):
             return point, volts
@@ -162,7 +163,7 @@ class Sweep:
         attempt = 0
         while True:
             try:
-                stage = self.board.stage(step.stage)
+                stage = self._stage_of(step)
                 if step.setup != self._stage:
                     self._stage = ""
                     self._wire(stage)
@@ -171,6 +172,11 @@ class Sweep:
             except InstrumentProblem as problem:
                 attempt += self.repeats + 1
                 recovery.after(problem, step)
+
+    def _stage_of(self, step: Step) -> Stage:
+        """Return the stage of a step; the path itself is one, too."""
+        path = thru_stage(self.board, self.bench) if step.stage == THRU else None
+        return path or self.board.stage(step.stage)
 
     def _wire(self, stage: Stage) -> None:
         """Connect a stage's taps with the generator off."""
@@ -181,9 +187,11 @@ class Sweep:
             if wire.route is not None and self.devices.switch is not None:
                 self.devices.switch.close(wire.route)
             elif wire.by_hand:
-                node = self.board.points[tap].node
+                point = stage.tap_in if tap == THRU else tap
+                node = self.board.points[point].node
                 self.operator.confirm(
-                    f"The generator is off. Put the probe of channel {wire.channel} on test point {tap!r} (node {node})"
+                    f"The generator is off. Put the probe of channel {wire.channel} on test point {point!r} "
+                    f"(node {node})"
                 )
         self.journal.told(self.elapsed(), "wired", stage=stage.name)
 
@@ -191,7 +199,7 @@ class Sweep:
         """Take a step's record, again while it has not settled, at most `repeats` times more."""
         for attempt in range(first, first + self.repeats + 1):
             taken = self._taken(step, stage, attempt)
-            point = point_of(step, taken, self.bench.mains, self.bench.linearity)
+            point = point_of(step, taken, self.bench.mains, self.bench.accuracy.linearity)
             wrong = frequency_problem(point) or level_problem(stage, self._low_level(step), point)
             if "unsettled" not in point.flags and not wrong:
                 return point, taken.volts

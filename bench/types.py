@@ -5,11 +5,15 @@ All frozen; SI inside; plain enough to be written as JSON and read back unchange
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
-from typing import Any, Literal
+from typing import TYPE_CHECKING, Any, Literal
+
+if TYPE_CHECKING:
+    from bandproof.analysis.uncertainty import Combined
 
 from bandproof.drivers.serial_line import Serial
 
 __all__ = [
+    "Accuracy",
     "Bench",
     "Board",
     "Comparison",
@@ -24,13 +28,14 @@ __all__ = [
     "StageResult",
     "Step",
     "TestPoint",
+    "Thru",
     "Tone",
     "Verdict",
     "Wire",
 ]
 
 Verdict = Literal["pass", "fail", "undecided"]
-Purpose = Literal["no-signal", "low-level", "curve", "closing"]
+Purpose = Literal["no-signal", "low-level", "curve", "closing", "thru"]
 Quantity = Literal["centre", "q", "gain"]
 
 QUANTITIES: tuple[Quantity, ...] = ("centre", "q", "gain")
@@ -94,10 +99,10 @@ class TestPoint:
 
 @dataclass(frozen=True, slots=True)
 class Stage:
-    """One band of a board: taps, limits per figure, circuit and parts."""
+    """One band of a board: taps, limits per figure, circuit and parts; or the path itself (``thru``), without any."""
 
     name: str
-    kind: Literal["band"]
+    kind: Literal["band", "thru"]
     tap_in: str
     tap_out: str
     limits: Mapping[Quantity, Limit]
@@ -148,12 +153,34 @@ class Wire:
 
 
 @dataclass(frozen=True, slots=True)
+class Accuracy:
+    """What a bench file says about errors of its instruments: half-widths of uniform distributions.
+
+    Relative and per channel, except: ``generator_frequency``; ``channel_skew`` in s; ``linearity`` in steps of the
+    converter; ``drift`` of a channel's gain in 1/s; ``probe_compensation`` of the division above ``probe_corner`` Hz;
+    ``probe_resistance`` in Ω and ``probe_capacitance`` in F load the point that is probed. ``reseating`` is that of a
+    contact made anew. ``declared`` names those that the file states, the others have careful defaults.
+    """
+
+    channel_gain: float
+    generator_frequency: float
+    channel_skew: float = 100e-9
+    linearity: float = 0.5
+    range_gain: float = 0.02
+    drift: float = 0.001 / 60.0
+    reseating: float = 0.005
+    probe_compensation: float = 0.05
+    probe_corner: float = 1.5e3
+    probe_resistance: float = 1e6
+    probe_capacitance: float = 100e-12
+    declared: frozenset[str] = frozenset()
+
+
+@dataclass(frozen=True, slots=True)
 class Bench:
     """A bench: instruments, wiring, ceilings and what is declared about its accuracy.
 
-    ``channel_gain`` and ``generator_frequency`` are half-widths of rectangular distributions (relative),
-    ``channel_skew`` that of each channel's delay in s, ``linearity`` that of the converter in its steps;
-    ``rails`` are the supply's channels of the positive and the negative rail.
+    ``rails`` are the supply's channels of the positive and the negative rail; a thru is valid for ``thru_valid`` s.
     """
 
     title: str
@@ -162,14 +189,12 @@ class Bench:
     instruments: Mapping[str, Instrument]
     wires: Mapping[str, Wire]
     probe_factors: Mapping[int, float]
-    channel_gain: float
-    channel_skew: float
-    linearity: float
-    generator_frequency: float
+    accuracy: Accuracy
     visa_library: str
     clock: str | None
     text: str
     rails: tuple[int, int] = (1, 2)
+    thru_valid: float = 12.0 * 3600.0
     dialect_texts: Mapping[str, str] = field(default_factory=dict)
 
 
@@ -243,6 +268,15 @@ class Point:
     flags: tuple[str, ...]
 
 
+@dataclass(frozen=True, slots=True)
+class Thru:
+    """The path itself, measured before: when (UTC), under which conditions, the points with both probes on one node."""
+
+    started: str
+    conditions: Mapping[str, Any]
+    points: tuple[Point, ...]
+
+
 # --- concluded ---
 
 
@@ -287,11 +321,16 @@ class StageResult:
     lack_of_fit: bool
     status: str
     alarms: tuple[str, ...]
+    budgets: "Mapping[Quantity, Combined]"
 
 
 @dataclass(frozen=True, slots=True)
 class Run:
-    """A whole run: who, what, with what, every point, how it ended (``stopped``: cut short because somebody asked)."""
+    """A whole run: who, what, with what, every point, how it ended (``stopped``: cut short because somebody asked).
+
+    ``ambient`` in °C, None when nobody stated it; ``thru`` is a stored one that was used, None where the run measured
+    its own or had none.
+    """
 
     run_id: str
     serial: str
@@ -311,3 +350,5 @@ class Run:
     points: tuple[Point, ...]
     alarms: tuple[str, ...]
     history: tuple[Mapping[str, Any], ...]
+    ambient: float | None = None
+    thru: Thru | None = None

@@ -165,13 +165,14 @@ class Rehearsal:
 def world_of(board: Board, bench: Bench, drawn: Drawn, seed: int, run: int, **sizes: float) -> "World":
     """Return the world of a rehearsal in real time: the drawn board behind a reference bench, or one of other sizes."""
     from bandproof.bench.circuit import board_network
+    from bandproof.bench.thru import THRU
     from bandproof.simulated_instruments.bench import World
     from bandproof.simulated_instruments.imperfections import Imperfections, Sizes
 
-    # Left out until a row of the budget speaks of them.
-    left_out = ("range_gain", "probe_compensation", "ac_corner", "nonlinearity", "hum", "drift", "reseating")
-    wanted: dict[str, Any] = {**dict.fromkeys(left_out, 0.0), **sizes}
-    routes = {wire.route: board.points[tap].node for tap, wire in bench.wires.items() if wire.route}
+    wanted: dict[str, Any] = dict(sizes)
+    first = board.points[board.stages[0].tap_in].node  # where the thru looks at
+    nodes = {THRU: first} | {tap: point.node for tap, point in board.points.items()}
+    routes = {wire.route: nodes[tap] for tap, wire in bench.wires.items() if wire.route}
     fixed = next(board.points[tap].node for tap, wire in bench.wires.items() if not wire.route)
     return World(
         network=board_network(board, drawn),

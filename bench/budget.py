@@ -1,0 +1,105 @@
+"""The budget of each figure: every source as a row that is a number or says why it is 0.
+
+The fit's linear response carries what a source does to the points to f0, Q and gain.
+"""
+
+from collections.abc import Mapping
+from dataclasses import replace
+from math import inf
+
+import numpy as np
+
+from bandproof.analysis.sensitivity import figure_response
+from bandproof.analysis.types import FloatArray
+from bandproof.analysis.uncertainty import Combined, Row, combine
+from bandproof.bench.sources import Measured, Source, sources
+from bandproof.bench.types import QUANTITIES, Quantity
+
+__all__ = ["ROWS", "budget_plain", "budgets", "dominating"]
+
+ROWS = (
+    "repeatability",
+    "reseating and reproducibility",
+    "thru",
+    "drift",
+    "range to range",
+    "probe compensation",
+    "probe and tap loading",
+    "coupling corners",
+    "channel skew",
+    "converter linearity, tap in",
+    "converter linearity, tap out",
+    "hum residual",
+    "settling residual",
+    "generator frequency",
+    "board temperature",
+    "control position",
+    "model misfit",
+    "channel gain",
+    "source level",
+    "definition",
+)
+_NOTHING = 1e-9  # relative change of a figure per unit that is only rounding
+_ELSEWHERE = {
+    False: "0, because what is common to all points lands wholly in gain",
+    True: "0, because it moves f0 alone",
+}
+
+
+def budgets(measured: Measured) -> dict[Quantity, Combined]:
+    """Return the combined budget of each figure, all rows in it."""
+    fit = measured.fit
+    frequency = np.array([point.frequency for point in measured.points])
+    moved = figure_response(fit.theta[0], fit.free, frequency, measured.covariance)
+    values = {"centre": float(fit.f0[0]), "q": float(fit.q[0]), "gain": float(abs(fit.gain[0]))}
+    noise = {"centre": float(fit.u_f0[0]), "q": float(fit.u_q[0]), "gain": float(fit.u_gain[0])}
+    found = sources(measured)
+    return {
+        quantity: combine(
+            [
+                Row(ROWS[0], "A", "normal", noise[quantity], 1.0, inf, "noise of the records, through the fit"),
+                *(_row(source, quantity, moved[i], values[quantity]) for source in found),
+            ]
+        )
+        for i, quantity in enumerate(QUANTITIES)
+    }
+
+
+def _row(source: Source, quantity: Quantity, moved: FloatArray, value: float) -> Row:
+    """Return a source as a row of one figure's budget; ``moved`` (N, 2) is the figure's response to the points."""
+    effects = np.zeros(1)
+    if source.shapes is not None:
+        effects = moved[:, 0] @ source.shapes.real.T + moved[:, 1] @ source.shapes.imag.T
+    if source.direct is not None:
+        effects = np.append(effects, source.direct.get(quantity, 0.0))
+    effect = float(effects.sum()) if np.count_nonzero(effects) <= 1 else float(np.linalg.norm(effects))
+    distribution = source.distribution if np.count_nonzero(effects) <= 1 else "normal"
+    row = Row(source.name, source.type, distribution, source.u, value * effect, source.dof, source.reason)
+    if source.u and abs(effect) < _NOTHING:
+        return replace(row, sensitivity=0.0, reason=_ELSEWHERE[source.direct is not None])
+    return row
+
+
+def budget_plain(found: Mapping[Quantity, Combined]) -> dict[str, list[dict[str, object]]]:
+    """Return budgets as plain values for the run file."""
+    return {
+        quantity: [
+            {
+                "source": row.name,
+                "type": row.type,
+                "distribution": row.distribution,
+                "standard_uncertainty": row.standard_uncertainty,
+                "sensitivity": row.sensitivity,
+                "contribution": row.contribution,
+                "degrees_of_freedom": row.dof if row.dof < inf else None,
+                "reason": row.reason,
+            }
+            for row in budget.rows
+        ]
+        for quantity, budget in found.items()
+    }
+
+
+def dominating(budget: Combined) -> Row:
+    """Return the row with the largest contribution."""
+    return max(budget.rows, key=lambda row: row.contribution)
