@@ -46,6 +46,35 @@ def test_noisy_band_with_leakage_fits_as_with_another_library(outside):
     assert fit.q[0] == pytest.approx(9.9995704876, rel=1e-7)
 
 
+def test_measured_resonance_at_microwaves_reads_as_published(outside):
+    # Source: NPL Report MAT 58, figure 6(b): 3.987848 GHz, Q 7454, with a leakage; without one its Q comes out at 7536
+    f, re, im = np.loadtxt(outside / "npl_mat58" / "Figure6b.txt", comments="%").T
+    f, h = 1e9 * f[None], (re + 1j * im)[None]
+    for delay in (False, True):  # 4e-9 s turn the gain by sixteen turns before the first point
+        fit = fit_bands(f, h, _white(f.shape, 8.7e-6), delay=delay, leakage=True)
+        assert fit.status == ("converged",)
+        assert f"{fit.f0[0] / 1e9:.6f}" == "3.987848"
+        assert fit.q[0] == pytest.approx(7454, rel=1e-3)
+    bare = fit_bands(f, h, _white(f.shape, 8.7e-6), delay=False)
+    assert bare.q[0] == pytest.approx(7536, abs=0.5)
+
+
+def test_far_from_0_hz_delay_and_gain_keep_their_meaning_and_their_covariance():
+    # a narrow band at 1 GHz whose delay turns it by seven turns; the covariance against the derivatives of the model
+    theta = np.array([[np.log(1e9), np.log(500.0), -2.0, 0.7, 7.3e-9, 0.02, -0.01]])
+    f = band_frequencies(1e9, 500.0)
+    fit = fit_bands(f, band_response(theta, f), _white(f.shape, 1e-4), leakage=True)
+    assert fit.status == ("converged",)
+    np.testing.assert_allclose(fit.theta, theta, rtol=1e-6)
+    np.testing.assert_allclose(fit.residual, 0.0, atol=1e-12)
+    columns = np.stack(band_jacobian(theta, f)[1], axis=-1)[0] / 1e-4
+    columns = np.concatenate([columns.real, columns.imag])
+    size = np.linalg.norm(columns, axis=0)
+    expected = np.linalg.inv((columns / size).T @ (columns / size)) / np.outer(size, size)
+    u = np.sqrt(np.diagonal(expected))
+    np.testing.assert_allclose(fit.covariance[0] / np.outer(u, u), expected / np.outer(u, u), atol=1e-5)
+
+
 # Source: a fit of the second-order band over 800..1200 Hz to nodal analysis, made apart from this project. Its f0 is
 # good to 1e-4; for Q and gain the kind of fit matters: complex, magnitude, with delay or leakage differ by 6e-4 here.
 @pytest.mark.parametrize(
