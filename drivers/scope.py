@@ -193,9 +193,10 @@ class Scope(Instrument):
         return self._set_number("probe_factor", self.dialect.probe_factor, factor, name)
 
     def _set_coupling(self, name: str, coupling: Coupling) -> None:
+        words = list(self.dialect.coupling.words)
         if self.dialect.coupling.set:
             self._set_choice("coupling", self.dialect.coupling, coupling, name)
-        elif coupling not in (self.dialect.coupling.words or {"DC": ""}):
+        elif coupling != (words[0] if len(words) == 1 else "DC"):
             raise self._beyond("coupling", f"coupling must be what it has without a command, got {coupling!r}")
 
     def _set_bandwidth(self, name: str, limited: bool) -> bool:

@@ -2,10 +2,23 @@
 
 from __future__ import annotations
 
-import math
 from dataclasses import dataclass, field
-from typing import Any, Literal
+from typing import Literal
 
+from bandproof.drivers.quantities import (
+    Amplitude,
+    CurrentLimit,
+    Duration,
+    Frequency,
+    Level,
+    Load,
+    Middle,
+    Number,
+    Peak,
+    Points,
+    Voltage,
+    template,
+)
 from bandproof.drivers.scpi import ByteOrder, Encoding
 from bandproof.drivers.session import Habits
 
@@ -13,6 +26,7 @@ __all__ = [
     "Acquisition",
     "Amplitude",
     "Choice",
+    "Coupling",
     "Dialect",
     "GeneratorDialect",
     "Identity",
@@ -27,13 +41,6 @@ __all__ = [
     "Transfer",
 ]
 
-Range = tuple[float, float]
-
-
-def _template(*names: str, needs: tuple[str, ...] = ()) -> Any:
-    """Return a slot for a command that may contain the placeholders named; empty: no such command."""
-    return field(default="", metadata={"names": names, "needs": needs})
-
 
 @dataclass(frozen=True, slots=True)
 class Identity:
@@ -46,74 +53,28 @@ class Identity:
 
 
 @dataclass(frozen=True, slots=True)
-class Number:
-    """A setting that is a number.
-
-    Parameters
-    ----------
-    set : str
-        Command with ``{value}`` and, on a scope, ``{channel}``.
-    query : str
-        Query of the value really used.
-    format : str
-        Python's format of the number, ``.9g`` or ``.3f`` or ``d``.
-    unit : float
-        How many of ours (SI) make one of the instrument's: 1000 if it counts in kHz, 4 if it is told volts per
-        division and we mean the peak over four divisions.
-    reciprocal : bool
-        The instrument is told 1 / value (a sample rate for a sample interval).
-    limits : (low, high)
-        SI; what the instrument can be asked for.
-    readback : (low, high)
-        Accepted ratio of the value read back to the value asked.
-    absolute : float
-        SI; a difference this small is accepted whatever its ratio.
-    place : int
-        Which of the answer's comma-separated fields is the number, 0 the first.
-    """
-
-    set: str = _template("value", "channel", needs=("value",))
-    query: str = _template("channel")
-    format: str = field(default=".9g", metadata={"format": True})
-    unit: float = 1.0
-    reciprocal: bool = False
-    limits: Range = (-math.inf, math.inf)
-    readback: Range = (0.999999, 1.000001)
-    absolute: float = 0.0
-    place: int = 0
-
-
-@dataclass(frozen=True, slots=True)
-class Amplitude(Number):
-    """A sine's amplitude; `meaning` is what the instrument's number counts."""
-
-    meaning: Literal["peak", "peak-to-peak", "rms"] = "peak"
-
-
-@dataclass(frozen=True, slots=True)
-class Load(Number):
-    """The load a generator assumes; `fixed` is its ohms if it cannot be told, `high` its word for no load."""
-
-    fixed: float = math.inf
-    high: str = ""
-
-
-@dataclass(frozen=True, slots=True)
 class Choice:
     """A setting that is one of some words; `words` gives the instrument's word for each of ours."""
 
-    set: str = _template("value", "channel", needs=("value",))
-    query: str = _template("channel")
+    set: str = template("value", "channel", needs=("value",))
+    query: str = template("channel")
     words: dict[str, str] = field(default_factory=dict)
+
+
+@dataclass(frozen=True, slots=True)
+class Coupling(Choice):
+    """Of a scope's input."""
+
+    words: dict[str, str] = field(default_factory=lambda: {"DC": "DC", "AC": "AC"})
 
 
 @dataclass(frozen=True, slots=True)
 class Toggle:
     """A setting that is on or off; `is_on` and `is_off` are the answers to the query."""
 
-    on: str = _template("channel")
-    off: str = _template("channel")
-    query: str = _template("channel")
+    on: str = template("channel")
+    off: str = template("channel")
+    query: str = template("channel")
     is_on: str = "1"
     is_off: str = "0"
 
@@ -194,16 +155,16 @@ class Transfer:
     """
 
     before: tuple[str, ...] = field(default=(), metadata={"names": ("channel",)})
-    read: str = _template("channel")
+    read: str = template("channel")
     framing: Literal["block", "line"] = "block"
     terminated: bool = True
     encoding: Encoding = "real32"
     byte_order: ByteOrder = "big"
     scaling: Literal["volts", "query", "preamble"] = "volts"
-    scale: str = _template("channel")
-    offset: str = _template("channel")
-    origin: str = _template("channel")
-    preamble: str = _template("channel")
+    scale: str = template("channel")
+    offset: str = template("channel")
+    origin: str = template("channel")
+    preamble: str = template("channel")
     separator: str = ","
     scale_field: int = -1
     offset_field: int = -1
@@ -235,7 +196,7 @@ class Overload:
     bits: int = 0
     low: float = 0.0
     high: float = 0.0
-    query: str = _template("channel")
+    query: str = template("channel")
     is_overloaded: str = "1"
 
 
@@ -245,14 +206,14 @@ class GeneratorDialect:
 
     title: str
     kind: Literal["generator"]
-    frequency: Number
+    frequency: Frequency
     amplitude: Amplitude
-    offset: Number
+    offset: Level
     output: Toggle
     identity: Identity = Identity()
     habits: Habits = field(default_factory=Habits)
     shape: Shape = Shape()
-    load: Load = Load()
+    load: Load = field(default_factory=Load)
 
 
 @dataclass(frozen=True, slots=True)
@@ -261,9 +222,9 @@ class ScopeDialect:
 
     title: str
     kind: Literal["scope"]
-    range: Number
-    duration: Number
-    points: Number
+    range: Peak
+    duration: Duration
+    points: Points
     interval: Number
     acquisition: Acquisition
     transfer: Transfer
@@ -271,10 +232,10 @@ class ScopeDialect:
     identity: Identity = Identity()
     habits: Habits = field(default_factory=Habits)
     channels: tuple[str, ...] = ("1", "2")
-    offset: Number = Number()
-    coupling: Choice = Choice()
+    offset: Middle = field(default_factory=Middle)
+    coupling: Coupling = Coupling()
     bandwidth_limit: Toggle = Toggle()
-    probe_factor: Number = Number()
+    probe_factor: Number = field(default_factory=Number)
 
 
 @dataclass(frozen=True, slots=True)
@@ -295,8 +256,8 @@ class SwitchDialect:
 
     title: str
     kind: Literal["switch"]
-    close: str = _template("route", needs=("route",))
-    query: str = _template("route", needs=("route",))
+    close: str = template("route", needs=("route",))
+    query: str = template("route", needs=("route",))
     open_all: str = ""
     is_closed: str = "1"
     exclusive: bool = True
@@ -320,8 +281,8 @@ class SupplyDialect:
 
     title: str
     kind: Literal["supply"]
-    voltage: Number
-    current_limit: Number
+    voltage: Voltage
+    current_limit: CurrentLimit
     current: Number
     output: Toggle
     identity: Identity = Identity()

@@ -4,12 +4,13 @@ from __future__ import annotations
 
 import re
 import tomllib
-from dataclasses import fields, is_dataclass
+from dataclasses import MISSING, fields, is_dataclass
 from typing import get_type_hints
 
 import pytest
 
 from bandproof.drivers.dialect import DialectMistakes, blanks, parse, shipped, source
+from bandproof.drivers.schema import read_table
 from bandproof.drivers.slots import GeneratorDialect, ScopeDialect, SupplyDialect, SwitchDialect
 
 KINDS = {"generator": GeneratorDialect, "scope": ScopeDialect, "switch": SwitchDialect, "supply": SupplyDialect}
@@ -89,6 +90,21 @@ def test_a_blank_dialect_filled_in_line_by_line_loads_with_those_values(kind, la
         for name in path:
             value, expected = getattr(value, name), expected[name]
         assert value == (tuple(expected) if isinstance(expected, list) else expected), path
+
+
+@pytest.mark.parametrize("kind", KINDS)
+def test_a_line_left_out_has_the_value_that_the_blank_dialect_shows(kind):
+    table = tomllib.loads(source(f"blank-{kind}"))
+    findings = []
+    shown = read_table(KINDS[kind], table, "", findings)
+    bare = {name: {} if isinstance(value, dict) else value for name, value in table.items()}
+    assert read_table(KINDS[kind], bare, "", findings) == shown
+    assert findings == []
+    tables = {name for name, value in table.items() if isinstance(value, dict)}
+    required = {slot.name for slot in fields(KINDS[kind]) if slot.default is slot.default_factory is MISSING}
+    least = {name: value for name, value in bare.items() if name in required}
+    assert read_table(KINDS[kind], least, "", findings) == shown  # nor do tables left out, and names of channels
+    assert required & tables or kind == "switch"
 
 
 NEEDED = {

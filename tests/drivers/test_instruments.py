@@ -446,6 +446,18 @@ def test_range_is_told_per_division_and_divided_by_the_probe(build, registers):
     assert b"SPAN RIGHT 0.5" in port.messages
 
 
+@pytest.mark.parametrize(
+    ("table", "has", "other"),
+    [("", "DC", "AC"), ("[coupling]\n", "DC", "AC"), ('[coupling]\nwords = { AC = "AC" }\n', "AC", "DC")],
+    ids=["nothing said", "the blank's words", "AC only"],
+)
+def test_a_coupling_that_cannot_be_told_is_dc_unless_the_dialect_has_one_word(build, registers, table, has, other):
+    scope, _ = build(Scope, SCOPE + table + AS_REALS, scope_instrument(registers))
+    assert scope.set_channel(1, range=2.0, coupling=has).coupling == has
+    with pytest.raises(ValueError, match="coupling"):
+        scope.set_channel(1, range=2.0, coupling=other)
+
+
 def test_a_text_record_of_another_length_is_not_understood(build, registers):
     text, fixed, _ = SCALINGS["volts as text"]
     answers = fixed()
