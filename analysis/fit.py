@@ -9,18 +9,19 @@ import numpy as np
 from bandproof.analysis.least_squares import LeastSquares, Status, least_squares
 from bandproof.analysis.models import (
     VARIABLES,
-    band_jacobian,
     band_response,
     band_start,
     refer_delay,
     refer_delay_jacobian,
 )
-from bandproof.analysis.types import BoolArray, ComplexArray, FloatArray, IndexArray
+from bandproof.analysis.types import BoolArray, ComplexArray, FloatArray
+from bandproof.analysis.weighting import WeightedBands
 
 __all__ = ["BandFit", "fit_bands"]
 
 
-_OFFSET = 1e-6  # of the variables' own uncertainty; arbitrary, far below anything that is reported
+# Of the variables' own uncertainty, before the last step; arbitrary, far below anything that is reported.
+_OFFSET = 2e-5
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -116,24 +117,13 @@ def fit_bands(
     dof = 2.0 * mask.sum(axis=1) - len(free)
     if (dof < 0).any():
         raise ValueError(f"sweep {int(dof.argmin())} has fewer data than the {len(free)} variables of the model")
-    f = np.where(mask, frequency, np.exp(np.log(frequency).mean()))
-    h = np.where(mask, response, 0.0)
-    diagonal, below = _whitening(covariance, mask)
+    f, h = frequency, response
+    if not mask.all():
+        f, h = np.where(mask, f, np.exp(np.log(f).mean())), np.where(mask, h, 0.0)
     theta = band_start(f, h, mask) if start is None else np.array(start, dtype=np.float64)
     centre = np.exp(theta[:, 0])
     theta = refer_delay(theta, centre)
-
-    space = np.empty((len(f), len(free) + 1, 2 * f.shape[1]))  # taken once: new memory costs more than the arithmetic
-
-    def weighted(variables: FloatArray, which: IndexArray) -> FloatArray:
-        whole = theta[which]
-        whole[:, free] = variables
-        model, derivatives = band_jacobian(whole, f[which], centre[which])
-        rows = space[: len(which)]
-        columns = [*(derivatives[i] for i in free), model - h[which]]
-        _whiten(diagonal[which], below[which], columns, rows)
-        return rows.swapaxes(1, 2)
-
+    weighted = WeightedBands(f, h, covariance, mask, centre, theta, free)
     found = least_squares(weighted, theta[:, free], step_limit=step_limit, offset=_OFFSET)
     theta[:, free] = found.theta
     back = refer_delay_jacobian(theta, -centre)[:, free][:, :, free]
@@ -185,27 +175,3 @@ def _check(frequency: FloatArray, response: ComplexArray, covariance: FloatArray
         )
     if not (frequency > 0).all():
         raise ValueError(f"frequency must be positive, found {frequency.min()!r}")
-
-
-def _whitening(covariance: FloatArray, mask: BoolArray) -> tuple[FloatArray, FloatArray]:
-    """Return the inverse Cholesky factors: their diagonals in turn (S, 2N), and the entries 10 (S, N); 0 if unused."""
-    a, b, c = covariance[..., 0, 0], covariance[..., 1, 0], covariance[..., 1, 1]
-    with np.errstate(invalid="ignore", divide="ignore"):
-        first = 1 / np.sqrt(a)
-        second = 1 / np.sqrt(c - b * b / a)
-        diagonal, below = np.stack([first, second], axis=-1), -b / a * second
-    bad = ~(np.isfinite(diagonal).all(axis=-1) & np.isfinite(below)) & mask
-    if bad.any():
-        sweep, point = (int(i) for i in np.argwhere(bad)[0])
-        raise ValueError(f"the covariance of sweep {sweep}, point {point} is not positive definite")
-    diagonal[~mask], below[~mask] = 0.0, 0.0
-    return diagonal.reshape(len(mask), -1), below
-
-
-def _whiten(diagonal: FloatArray, below: FloatArray, columns: list[ComplexArray], out: FloatArray) -> None:
-    """Write P complex columns, (S, N) each, as whitened real and imaginary parts in turn to (S, P, 2N)."""
-    correlated = below.any()
-    for rows, column in zip(out.swapaxes(0, 1), columns, strict=True):
-        np.multiply(diagonal, column.view(np.float64), out=rows)
-        if correlated:
-            rows[:, 1::2] += below * column.real

@@ -107,8 +107,8 @@ class _Run:
         whole, squares, sound = self._evaluate(trial, at)
         before = self.triangle[at]
         moved = np.einsum("spq,sq->sp", before[..., :-1], step)
-        damped = self.damping[at] * np.einsum("sp,sp->s", self.scale[at] * step, self.scale[at] * step)
-        predicted = np.einsum("sp,sp->s", moved, moved) + 2 * damped
+        scaled = self.scale[at] * step
+        predicted = _square(moved) + 2 * self.damping[at] * _square(scaled)
         with np.errstate(all="ignore"):
             quality = np.where(sound, (self.squares[at] - squares) / predicted, -1.0)
         # This near, the squares' own rounding hides the gain: an undamped step is taken unless it does harm.
@@ -130,7 +130,7 @@ class _Run:
         """
         with np.errstate(all="ignore"):
             rows = self.function(theta, at)
-            squares = np.einsum("sn,sn->s", rows[..., -1], rows[..., -1])
+            squares = _square(rows[..., -1])
         whole = triangle(rows)
         return whole, squares, np.isfinite(squares) & np.isfinite(whole).all(axis=(1, 2))
 
@@ -181,12 +181,18 @@ class _Run:
         unit = np.broadcast_to(np.eye(scale.shape[1]), scaled.shape)
         inverse = solve_triangle(np.concatenate([scaled, unit], axis=2))
         singular = ~np.isfinite(inverse).all(axis=(1, 2))  # a parameter has no effect
-        inverse[singular] = np.linalg.pinv(scaled[singular], rcond=1e-15)
+        if singular.any():
+            inverse[singular] = np.linalg.pinv(scaled[singular], rcond=1e-15)
         inverse /= scale[..., None]
         covariance: FloatArray = inverse @ inverse.swapaxes(1, 2)
         return LeastSquares(self.theta, self.squares, covariance, self.steps, tuple(self.words))
 
 
+def _square(vectors: FloatArray) -> FloatArray:
+    square: FloatArray = np.einsum("...p,...p->...", vectors, vectors)
+    return square
+
+
 def _norm(vectors: FloatArray) -> FloatArray:
-    norm: FloatArray = np.sqrt(np.einsum("...p,...p->...", vectors, vectors))
+    norm: FloatArray = np.sqrt(_square(vectors))
     return norm

@@ -13,6 +13,7 @@ from bandproof.analysis.fit import fit_bands
 from bandproof.analysis.models import band_jacobian, band_response
 from bandproof.analysis.network import OpAmp
 from bandproof.analysis.planning import band_frequencies
+from tests.benchmarks.batched_fit import DIFFERENCE_BOUND, at_once, differences, draw, one_by_one
 
 
 def _white(shape, noise):
@@ -57,6 +58,26 @@ def test_measured_resonance_at_microwaves_reads_as_published(outside):
         assert fit.q[0] == pytest.approx(7454, rel=1e-3)
     bare = fit_bands(f, h, _white(f.shape, 8.7e-6), delay=False)
     assert bare.q[0] == pytest.approx(7536, abs=0.5)
+
+
+def test_a_batch_gives_the_answers_of_another_solver_one_by_one():
+    # Source: scipy's least_squares with tolerances of 1e-15; in full, and with its time, `tests.benchmarks batched_fit`
+    sweeps = draw(50, seed=21)
+    apart = differences(one_by_one(sweeps), at_once(sweeps))
+    assert max(apart.values()) < DIFFERENCE_BOUND, apart
+
+
+def test_masked_batches_larger_than_a_block_and_in_any_layout_are_fitted_as_one_by_one():
+    sweeps = draw(600, seed=22)
+    used = np.random.default_rng(22).uniform(size=sweeps.response.shape) < 0.8
+    f, h = np.asfortranarray(sweeps.frequency), np.asfortranarray(sweeps.response)
+    fit = fit_bands(f, h, sweeps.covariance, used=used)
+    for i in (0, 300, 599):
+        one = slice(i, i + 1)
+        on = used[i]
+        alone = fit_bands(sweeps.frequency[one, on], sweeps.response[one, on], sweeps.covariance[one, on])
+        np.testing.assert_allclose(fit.theta[one], alone.theta, rtol=1e-8)
+        np.testing.assert_allclose(fit.covariance[one], alone.covariance, rtol=1e-6)
 
 
 def test_far_from_0_hz_delay_and_gain_keep_their_meaning_and_their_covariance():
