@@ -32,12 +32,12 @@ def walk_scope(steps: Walk, scope: Scope) -> None:
         steps.number("offset", dialect.offset, name, values=OFFSETS, stays=True)
     steps.number("points", dialect.points, values=POINTS, stays=True)
     steps.number("duration", dialect.duration, values=DURATIONS, stays=True)
-    steps.attempt("interval.query", dialect.interval.query, lambda: checked_interval(scope))
-    _acquisition(steps, scope)
+    known = steps.attempt("interval.query", dialect.interval.query, lambda: checked_interval(scope))
+    _acquisition(steps, scope, known)
     steps.restore()
 
 
-def _acquisition(steps: Walk, scope: Scope) -> None:
+def _acquisition(steps: Walk, scope: Scope, interval_known: bool) -> None:
     dialect = scope.dialect
     steps.tell("acquisition.abort", dialect.acquisition.abort, needed=False)
     for text in dialect.acquisition.prepare:
@@ -49,10 +49,12 @@ def _acquisition(steps: Walk, scope: Scope) -> None:
         return
     try:
         points = round(scope.read_number(dialect.points))
-        duration = points * scope.read_number(dialect.interval)
+        duration = points * scope.read_number(dialect.interval) if interval_known else LONGEST
+        if dialect.duration.query and not interval_known:
+            duration = scope.read_number(dialect.duration)
         settings = {name: _setting(scope, name) for name in dialect.channels[:2]}
     except (InstrumentProblem, ValueError) as problem:
-        steps.note("transfer.read", "refused", dialect.transfer.read, problem)
+        steps.refuse("transfer.read", dialect.transfer.read, problem)
         return
     _Records(steps, scope, points, min(abs(duration), LONGEST)).take(settings)
 

@@ -80,12 +80,16 @@ class Walk:
             came = act()
             self.instrument.check_errors()
         except (InstrumentProblem, ValueError) as problem:
-            self._give_up_if_hopeless(problem)
             more = hint(problem) if hint and isinstance(problem, InstrumentProblem) else ""
-            self.note(slot, "refused", sent, self._reason(problem) + (f": {more}" if more else ""), needed=needed)
+            self.refuse(slot, sent, problem, more, needed=needed)
             return False
         self.note(slot, "accepted", sent, "" if came is None else came, needed=needed)
         return True
+
+    def refuse(self, slot: str, sent: str, problem: Exception, more: str = "", *, needed: bool = True) -> None:
+        """Note what went wrong, reopen the link where it has to be; raise where nobody is there at all."""
+        self._give_up_if_hopeless(problem)
+        self.note(slot, "refused", sent, self._reason(problem) + (f": {more}" if more else ""), needed=needed)
 
     def _give_up_if_hopeless(self, problem: Exception) -> None:
         """Raise what says that nobody is there: a broken connection, or nothing but silence from the first slot on."""

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from functools import partial
 
 from bandproof.drivers.generator import Generator
 from bandproof.drivers.instrument import Instrument
@@ -94,10 +95,22 @@ def _switch(steps: Walk, instrument: Switch, routes: Sequence[str]) -> None:
     for route in routes[:1]:
         text, query = dialect.close.format(route=route), dialect.query.format(route=route)
         steps.answered(f"close {route}", text, query, dialect.is_closed)
-        steps.tell("open_all", dialect.open_all)
+        steps.attempt("open_all", dialect.open_all, partial(_open_all, instrument, route))
     for route in closed:
         text, query = dialect.close.format(route=route), dialect.query.format(route=route)
         steps.answered(f"close {route} back", text, query, dialect.is_closed)
+
+
+def _open_all(instrument: Switch, route: str) -> str:
+    """Open every route; return what the one closed before answers then, which must be another answer."""
+    dialect = instrument.dialect
+    instrument.session.command(dialect.open_all)
+    if not dialect.query:
+        return ""
+    answer = instrument.session.ask(dialect.query.format(route=route), as_text)
+    if answer.upper() == dialect.is_closed.upper():
+        raise ValueError(f"then {route} answers {answer}, as when it was closed: is `open_all` or `query` wrong?")
+    return answer
 
 
 def _is_closed(steps: Walk, instrument: Switch, route: str) -> bool:

@@ -13,6 +13,7 @@ from bandproof.drivers.generator import Generator
 from bandproof.drivers.link import Link
 from bandproof.drivers.session import Session
 from bandproof.drivers.slots import Number
+from bandproof.drivers.switch import Switch
 from bandproof.drivers.trials import limits_of, trials
 from bandproof.drivers.walks import walk
 from bandproof.simulated_instruments.bench import World
@@ -98,13 +99,13 @@ SLIPS = {  # language, what stands in its scope's dialect, what stands there ins
 def scope_of(stand, invented):
     """Return a maker of scopes that speak a language, with a changed dialect."""
 
-    def make(name, old="", new=""):
+    def make(name, old="", new="", *, world=WORLD):
         def slipped(text):
             assert text.count(old) >= 1
             return text.replace(old, new, 1)
 
         language, texts = invented.get(name, ("", {}))
-        return stand(replace(WORLD, language=language), {"scope": slipped}, **texts).scope
+        return stand(replace(world, language=language), {"scope": slipped}, **texts).scope
 
     return make
 
@@ -117,11 +118,33 @@ def test_a_slip_is_refused_and_named(scope_of, name, old, new, slot, words):
     assert words in refused[0].came
 
 
+LIVE = replace(  # a powered board: 4.5 V under the second input, 2 V of hum at both, so that a shifted range overloads
+    WORLD,
+    network=replace(FOLLOWER, opamps=(replace(FOLLOWER.opamps[0], offset=-4.5),)),
+    scope={1: "in", 2: "out"},
+    routes={},
+    imperfections=replace(WORLD.imperfections, hum=(2.0, 2.0)),
+)
+
+
+@pytest.mark.parametrize("world", [WORLD, LIVE], ids=["quiet", "live"])
 @pytest.mark.parametrize("name", ["scpi99", "orchard", "orchard, text", "harbour", "harbour, reals"])
-def test_a_right_dialect_is_not_doubted_where_inputs_carry_noise_and_hum(scope_of, name):
-    lines = walk(scope_of(name))
+def test_a_right_dialect_is_not_doubted_whatever_its_inputs_carry(scope_of, name, world):
+    lines = walk(scope_of(name, world=world))
     assert [line for line in lines if line.verdict == "refused"] == []
     assert len([line for line in lines if line.slot.startswith("transfer.read")]) == 4
+
+
+def test_several_slips_are_told_at_once_and_the_settings_are_what_they_were(scope_of):
+    scope = scope_of("harbour", "place = 1", "place = 0")
+    slots = [("range", "P"), ("range", "S"), ("offset", "S"), ("points", ""), ("duration", "")]
+    scope.dialect = replace(scope.dialect, transfer=replace(scope.dialect.transfer, byte_order="little"))
+    before = [scope.read_number(getattr(scope.dialect, slot), channel) for slot, channel in slots]
+    refused = {line.slot: line.came for line in walk(scope) if line.verdict == "refused"}
+    assert set(refused) == {"interval.query", "transfer.read shifted P", "transfer.read shifted S"}
+    assert "place = 1" in refused["interval.query"]
+    assert "byte_order" in refused["transfer.read shifted S"]
+    assert [scope.read_number(getattr(scope.dialect, slot), channel) for slot, channel in slots] == before
 
 
 def test_trial_values_are_the_same_wherever_the_instrument_stands(scope_of):
@@ -171,3 +194,12 @@ def test_an_answer_that_never_changes_is_refused(memory_port, registers):
     (line,) = [line for line in lines if line.slot == "frequency.set"]
     assert line.verdict == "refused"
     assert "answers 777 to both" in line.came
+
+
+def test_a_route_that_always_answers_closed_is_refused(memory_port, registers):
+    dialect = parse(source("scpi99-switch"), "switch")
+    port = memory_port(registers({"ROUTe:CLOSe? (@101)": b"1"}))
+    switch = Switch(Session(Link("MEMORY", RealClock(), opener=lambda *_: port), dialect.habits), dialect)
+    refused = [line for line in walk(switch, routes=("101",)) if line.verdict == "refused"]
+    assert [line.slot for line in refused] == ["open_all"]
+    assert "101 answers 1, as when it was closed" in refused[0].came
