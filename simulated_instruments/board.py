@@ -2,7 +2,8 @@
 
 Between two events everything is linear and time-invariant, so the solution is exact: steady state plus decaying modes,
 carried from event to event. An event is a change of the generator, of the routes, or of a channel's coupling. The
-generator's EMF is `offset + amplitude sin(2 pi frequency (t - event))`: its phase begins at each event of its own.
+generator's EMF is a sum of harmonics, most often of one: `offset + amplitude sin(2 pi frequency (t - event))`. Its
+phase begins at each event of its own.
 
 Clipping is memoryless: a tap that is an op-amp output is limited to +-swing, and what lies behind that op-amp
 still sees the unlimited voltage. So is slewing: such a tap shows its steady state as `slewing` has it, what decays is
@@ -17,6 +18,7 @@ from dataclasses import dataclass, field, replace
 from math import inf, isfinite
 
 import numpy as np
+from numpy.typing import NDArray
 
 from bandproof.analysis.network import GROUND, Capacitor, Network, Resistor, state_space
 from bandproof.simulated_instruments.dynamics import ComplexArray, Dynamics, FloatArray, sum_of_exponentials
@@ -29,11 +31,30 @@ HISTORY = 256  # events kept, arbitrary: more than fall into one record
 
 @dataclass(frozen=True, slots=True)
 class Drive:
-    """EMF of the generator: Hz, V peak, V."""
+    """EMF of the generator: Hz, V peak, V.
+
+    With harmonics (order, weight) it is offset + amplitude Im(sum of weight exp(j 2 pi order frequency (t - event))).
+    """
 
     frequency: float = 1000.0
     amplitude: float = 0.0
     offset: float = 0.0
+    harmonics: tuple[tuple[int, complex], ...] = ((1, 1.0 + 0.0j),)
+
+    @property
+    def orders(self) -> NDArray[np.int_]:
+        """Multiples of the frequency, (K,)."""
+        return np.array([order for order, _ in self.harmonics], dtype=np.int_)
+
+    @property
+    def phasors(self) -> ComplexArray:
+        """V peak of the harmonics, (K,)."""
+        return self.amplitude * np.array([weight for _, weight in self.harmonics], dtype=np.complex128)
+
+    def turned(self, elapsed: float) -> ComplexArray:
+        """Return exp(j angle) of each harmonic some s after the event, (K,)."""
+        angle = 2 * np.pi * (self.frequency * elapsed % 1.0)
+        return np.asarray(np.exp(1j * angle * self.orders), dtype=np.complex128)
 
 
 @dataclass(frozen=True, slots=True)
@@ -73,7 +94,7 @@ class _Event:
     front_ends: tuple[FrontEnd, ...]
     dynamics: Dynamics
     constant: FloatArray  # (n,) steady state of the constant inputs
-    phasor: ComplexArray  # (n,) steady state of the sine, peak, phase from drive_at
+    phasor: ComplexArray  # (K, n) steady state of the harmonics, peak, phase from drive_at
     free: ComplexArray  # (n,) what decays, at the event
 
 
@@ -161,18 +182,29 @@ class Board:
         rows = np.array([2 * channel, 2 * channel + 1])  # through the front end; at the node
         swing, slew = self._limits(front_end)
         rows = rows if isfinite(swing) or isfinite(slew) else rows[:1]
-        inputs = self._inputs(event.drive)
+        drive, orders = event.drive, event.drive.orders
+        inputs = self._inputs(drive)
         constant = system.c[rows] @ event.constant + system.d[rows] @ inputs
-        phasor = system.c[rows] @ event.phasor + system.d[rows, 0] * event.drive.amplitude
-        start = event.drive.frequency * (_elapsed(event.drive_at, first) + ahead) % 1.0
-        sine = (phasor * np.exp(2j * np.pi * start) / 1j)[:, None]
-        step = np.array([2j * np.pi * event.drive.frequency * interval])
-        volts = sum_of_exponentials(sine, step, count)
+        # one by one: so the last bits of a sine do not depend on how many an algebra library takes together
+        lines = [
+            system.c[rows] @ line + system.d[rows, 0] * emf
+            for line, emf in zip(event.phasor, drive.phasors, strict=True)
+        ]
+        since = _elapsed(event.drive_at, first) + ahead
+        steps = np.asarray(2j * np.pi * drive.frequency * interval * orders, dtype=np.complex128)
+        sines = [line * turn / 1j for line, turn in zip(lines, drive.turned(since), strict=True)]
+        volts = sum_of_exponentials(np.stack(sines, axis=1), steps, count)
         volts += constant[:, None]
         volts += system.outputs(event.free, rows, _elapsed(event.at, first) + ahead, interval, count)
         if isfinite(slew):
-            phase = np.asarray(start + event.drive.frequency * interval * np.arange(count), dtype=np.float64)
-            volts -= excess(phasor[1:], np.array([1]), event.drive.frequency, slew, phase)
+            start, turn = drive.frequency * since % 1.0, drive.frequency * interval
+            volts -= excess(
+                np.array([line[1] for line in lines]),
+                orders,
+                drive.frequency,
+                slew,
+                start + turn * np.arange(count, dtype=np.float64),
+            )
         if isfinite(swing):
             volts[0] -= volts[1] - np.clip(volts[1], -swing, swing)
         return np.asarray(volts[0])
@@ -180,21 +212,17 @@ class Board:
     def _change(self, at: float, drive_at: float, drive: Drive, front_ends: tuple[FrontEnd, ...]) -> None:
         last = self._events[-1]
         at = max(at, last.at)
-        angle = 2 * np.pi * (last.drive.frequency * _elapsed(last.drive_at, at) % 1.0)
-        state = (
-            last.constant
-            + (last.phasor * np.exp(1j * angle)).imag
-            + last.dynamics.later(last.free, _elapsed(last.at, at))
-        )
+        turned = last.drive.turned(_elapsed(last.drive_at, at))
+        state = last.constant + _instant(last.phasor, turned) + last.dynamics.later(last.free, _elapsed(last.at, at))
         before, after = _loaded(self.network, last.front_ends), _loaded(self.network, front_ends)
         if after != before:
             inputs = self._inputs(last.drive)
-            inputs[0] += last.drive.amplitude * np.sin(angle)
+            inputs[0] += (last.drive.phasors * turned).imag.sum()
             state = _met(before, after, state, inputs)
         dynamics = self._dynamics(front_ends)
         constant, phasor = self._steady(dynamics, drive)
-        angle = 2 * np.pi * (drive.frequency * _elapsed(drive_at, at) % 1.0)
-        free = dynamics.free(state - constant - (phasor * np.exp(1j * angle)).imag)
+        turned = drive.turned(_elapsed(drive_at, at))
+        free = dynamics.free(state - constant - _instant(phasor, turned))
         self._events.append(_Event(at, drive_at, drive, front_ends, dynamics, constant, phasor, free))
         del self._events[:-HISTORY]
 
@@ -204,8 +232,9 @@ class Board:
     def _steady(self, system: Dynamics, drive: Drive) -> tuple[FloatArray, ComplexArray]:
         constant = system.constant(self._inputs(drive))
         if drive.amplitude == 0:
-            return constant, np.zeros(len(constant), dtype=complex)
-        return constant, system.phasor(drive.frequency) * drive.amplitude
+            return constant, np.zeros((len(drive.harmonics), len(constant)), dtype=complex)
+        steady = [system.phasor(float(order) * drive.frequency) for order in drive.orders]
+        return constant, np.stack(steady) * drive.phasors[:, None]
 
     def _limits(self, front_end: FrontEnd) -> tuple[float, float]:
         """Return swing in V and slew rate in V/s of the op-amp a channel looks at, without end where there is none."""
@@ -217,6 +246,12 @@ class Board:
         if front_ends not in self._known:
             self._known[front_ends] = _assemble(_loaded(self.network, front_ends), front_ends)
         return self._known[front_ends]
+
+
+def _instant(phasors: ComplexArray, turned: ComplexArray) -> FloatArray:
+    """Return what (K, n) phasors, turned (K,), are at an instant, (n,)."""
+    volts = [(phasor * turn).imag for phasor, turn in zip(phasors, turned, strict=True)]
+    return np.asarray(np.sum(volts, axis=0), dtype=np.float64)
 
 
 def _elapsed(earlier: float, later: float) -> float:

@@ -34,6 +34,8 @@ class Command:
         s the instrument is busy before the action takes effect.
     indefinite : bool
         The response has no marked end, so that no query may follow in the message.
+    repeated : bool
+        The last parameter may come any number of times.
     """
 
     header: str
@@ -42,14 +44,18 @@ class Command:
     required: int = 0
     duration: float = 0.0
     indefinite: bool = False
+    repeated: bool = False
 
     def values(self, elements: tuple[Element, ...]) -> list[Any]:
         """Return the values of the data elements, or raise ScpiError."""
-        if len(elements) > len(self.parameters):
+        if len(elements) > len(self.parameters) and not self.repeated:
             raise ScpiError(-108)
         if len(elements) < self.required:
             raise ScpiError(-109)
-        return [parameter.read(element) for parameter, element in zip(self.parameters, elements, strict=False)]
+        more = self.parameters[-1:] * (len(elements) - len(self.parameters))
+        return [
+            parameter.read(element) for parameter, element in zip((*self.parameters, *more), elements, strict=False)
+        ]
 
 
 @dataclass(frozen=True, slots=True)

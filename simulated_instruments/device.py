@@ -21,19 +21,21 @@ REPLY_LIMIT = 4_000_000  # bytes of replies to one message, arbitrary: ten of th
 
 @dataclass(frozen=True, slots=True)
 class Timing:
-    """How long instruments take: s, and B/s for `transfer`."""
+    """How long instruments take: s, and B/s for `transfer` and `upload`."""
 
     message: float = 0.2e-3
     setting: float = 5e-3
     arming: float = 10e-3
     switching: float = 20e-3
     transfer: float = 4e6
+    upload_delay: float = 0.1
+    upload: float = 1e6
 
     def __post_init__(self) -> None:
-        if not (self.message > 0 and self.transfer > 0):
-            raise ValueError("message and transfer must be positive: every message costs more than 0 s")
-        if min(self.setting, self.arming, self.switching) < 0:
-            raise ValueError("setting, arming and switching must not be negative")
+        if not (self.message > 0 and self.transfer > 0 and self.upload > 0):
+            raise ValueError("message, transfer and upload must be positive: every message costs more than 0 s")
+        if min(self.setting, self.arming, self.switching, self.upload_delay) < 0:
+            raise ValueError("setting, arming, switching and upload_delay must not be negative")
 
 
 @dataclass(frozen=True, slots=True)
@@ -75,6 +77,7 @@ class Device:
     ) -> None:
         self.identity, self.timing, self.status = identity, timing, Status()
         self.at = -math.inf  # time may have begun anywhere
+        self.message_length = 0  # bytes of the message being executed
         self._settings = {setting.name: setting for setting in settings}
         self._values: dict[tuple[str, tuple[int, ...]], Any] = {}
         declared = [command for setting in settings for command in self._access(setting)]
@@ -110,6 +113,7 @@ class Device:
             Mistakes are in the error queue; a command error drops the rest of the message.
         """
         self.at = max(self.at, received) + self.timing.message
+        self.message_length = len(message)
         replies: list[bytes] = []
         try:
             self.interpret(message, replies)

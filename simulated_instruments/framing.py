@@ -29,6 +29,7 @@ class Framer:
     def __init__(self) -> None:
         self._buffer = bytearray()
         self._position = 0  # what lies before is understood
+        self._solid = 0  # where the last definite block ends: what lies before is data
         self._discarding = False
 
     def feed(self, data: bytes) -> Iterator[bytes | Overrun]:
@@ -44,9 +45,9 @@ class Framer:
             elif end is None:
                 return
             else:
-                message = bytes(self._buffer[:end])
+                message, solid = bytes(self._buffer[:end]), self._solid
                 self._drop(end + 1)
-                yield message.removesuffix(b"\r")
+                yield message if end == solid else message.removesuffix(b"\r")
 
     def end(self) -> bytes:
         """Return what lies here without its terminator and begin anew: the wire says that a message has ended."""
@@ -63,7 +64,7 @@ class Framer:
 
     def _drop(self, count: int) -> None:
         del self._buffer[:count]
-        self._position = 0
+        self._position = self._solid = 0
 
     def _end(self) -> int | Overrun | None:
         """Return where the first message ends, an overrun, or None while it is incomplete."""
@@ -82,6 +83,8 @@ class Framer:
             if not isinstance(resolved, int):
                 return resolved
             self._position = resolved
+            if not mark[0].startswith(b"#0"):  # where an indefinite block ends only the newline tells
+                self._solid = resolved
             if resolved > len(self._buffer):
                 return None
         else:

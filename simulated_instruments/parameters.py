@@ -234,6 +234,44 @@ class Blob:
 
 
 @dataclass(frozen=True, slots=True)
+class Word:
+    """A name the user gives, as a bare word."""
+
+    default: str = ""
+
+    def read(self, element: Element) -> str:
+        """Return the word, upper case."""
+        if not isinstance(element, Character):
+            raise _refuse(element)
+        return element.word
+
+    def show(self, value: str) -> bytes:
+        """Return the word."""
+        return value.encode("ascii")
+
+
+@dataclass(frozen=True, slots=True)
+class Sample:
+    """A plain number, or a block of bytes that holds many."""
+
+    default: float = 0.0
+
+    def read(self, element: Element) -> float | bytes:
+        """Return the number or the bytes."""
+        if isinstance(element, Block):
+            return element.data
+        if not isinstance(element, Numeric):
+            raise _refuse(element)
+        if element.suffix:
+            raise ScpiError(-138)
+        return element.value
+
+    def show(self, value: float) -> bytes:
+        """Return the number as response data."""
+        return show_number(value)
+
+
+@dataclass(frozen=True, slots=True)
 class RouteList:
     """A channel list such as (@101) or (@101,103:105)."""
 

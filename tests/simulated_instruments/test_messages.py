@@ -108,6 +108,11 @@ def test_a_block_is_one_message_and_comes_back_whole(data):
     assert device.message(message, 0.0).reply == definite_block(data) + b"\n"
 
 
+@pytest.mark.parametrize("end", [b"\n", b"\r\n"])
+def test_a_carriage_return_is_data_in_a_block_and_part_of_the_terminator_behind_it(end):
+    assert list(Framer().feed(b"DATA:BLOC #12a\r" + end)) == [b"DATA:BLOC #12a\r"]
+
+
 @given(st.text(st.characters(min_codepoint=32, max_codepoint=255), max_size=50))
 def test_a_string_comes_back_whole(text):
     device, quoted = small_device(), Quoted().show(text)
@@ -233,5 +238,5 @@ def test_units_are_parsed_one_by_one():
 
 
 def test_message_that_costs_no_time_is_refused():
-    with pytest.raises(ValueError, match="message and transfer must be positive"):
+    with pytest.raises(ValueError, match="message, transfer and upload must be positive"):
         Timing(message=0.0)
