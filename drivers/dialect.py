@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
+import math
 import tomllib
 from importlib import resources
 from pathlib import Path
 from typing import Any
 
 from bandproof.drivers.schema import DialectMistakes, Finding, read_table
-from bandproof.drivers.slots import Dialect, GeneratorDialect, ScopeDialect, SupplyDialect, SwitchDialect
+from bandproof.drivers.slots import Dialect, GeneratorDialect, ScopeDialect, SupplyDialect, SwitchDialect, Waveform
 
 __all__ = [
     "Dialect",
@@ -116,10 +117,26 @@ def _other_rules(dialect: GeneratorDialect | SwitchDialect | SupplyDialect) -> d
         needed = {f"{name}.set": getattr(dialect, name).set for name in numbers}
         needed |= {"output.on": dialect.output.on, "output.off": dialect.output.off}
     rules = {path: (text == "", f"a command, every {dialect.kind} needs one") for path, text in needed.items()}
+    if isinstance(dialect, GeneratorDialect):
+        rules |= _waveform_rules(dialect.waveform)
     if isinstance(dialect, SupplyDialect):
         rules["current.query"] = (dialect.current.query == "", "a query of the measured current")
         rules["channels"] = (not dialect.channels, "the names of its outputs")
     return rules
+
+
+def _waveform_rules(waveform: Waveform) -> dict[str, tuple[bool, str]]:
+    """Return the rules of a slot that may also be left empty."""
+    if not waveform.upload:
+        return {}
+    is_block, is_text = "{block}" in waveform.upload, "{values}" in waveform.upload
+    most = 32767.0 if waveform.encoding == "int16" else math.inf
+    return {
+        "waveform.upload": (is_block == is_text, "either {block} or {values} somewhere in it"),
+        "waveform.encoding": (is_text != (waveform.encoding == "ascii"), "ascii with {values}, another with {block}"),
+        "waveform.full": (not 0 < waveform.full <= most, f"more than 0, at most {most:g}"),
+        "waveform.select": (not waveform.select, "commands, or nothing would be played"),
+    }
 
 
 def _scope_rules(dialect: ScopeDialect) -> dict[str, tuple[bool, str]]:

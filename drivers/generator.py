@@ -1,14 +1,20 @@
-"""A function generator: sine, frequency, amplitude, offset, output; every number read back."""
+"""A function generator: sine or table, frequency, amplitude, offset, output; every number read back."""
 
 from __future__ import annotations
 
 import math
 from functools import partial
+from typing import TYPE_CHECKING
 
+from bandproof.drivers.errors import SettingRefused
 from bandproof.drivers.instrument import Instrument
-from bandproof.drivers.scpi import ErrorEntry
+from bandproof.drivers.scpi import ErrorEntry, definite_block, encode_samples, parse_number
 from bandproof.drivers.session import Session
-from bandproof.drivers.slots import GeneratorDialect
+from bandproof.drivers.slots import GeneratorDialect, Waveform
+
+if TYPE_CHECKING:
+    import numpy as np
+    from numpy.typing import NDArray
 
 __all__ = ["Generator"]
 
@@ -89,12 +95,64 @@ class Generator(Instrument):
 
     def set_sine(self) -> None:
         """Make the output a steady sine."""
-        self._remember("sine", "", self.set_sine)
+        self._remember("shape", "", self.set_sine)
+        self._forget("waveform")
         shape = self.dialect.shape
         for text in shape.sine[:-1]:
             self._once(text, text, partial(self.session.command, text))
         for text in shape.sine[-1:]:
             self._once(text, text, partial(self._command_and_compare, text, shape.query, shape.is_sine))
+
+    def play(self, samples: NDArray[np.float64]) -> None:
+        """Upload one period of a waveform and make the output that, over and over at the frequency set.
+
+        Parameters
+        ----------
+        samples : (N,) float64 array
+            At equal distances, the first one period after the last; +1 stands for the amplitude set, V peak.
+
+        Raises
+        ------
+        BeyondLimits
+            The dialect has no slot for it, or counts amplitudes in rms, which of a table nobody knows; the samples are
+            not within +-1, or too few or too many. Nothing was sent.
+        """
+        slot = self.dialect.waveform
+        self._check_playable(slot, samples)
+        kept = samples.copy()
+        self._remember("shape", "", partial(self.play, kept))
+        self._forget(*self.dialect.shape.sine)
+        text = _upload(slot, kept)
+        self._once("table", text, partial(self._send_table, slot, text, len(kept)))
+        self._once("waveform", slot.upload, partial(self._select, slot))
+
+    def _check_playable(self, slot: Waveform, samples: NDArray[np.float64]) -> None:
+        if not slot.upload:
+            raise self._beyond("waveform", "its dialect has no waveform.upload slot")
+        if self.dialect.amplitude.meaning == "rms":
+            raise self._beyond("waveform", "its amplitudes are rms, what +1 of a table becomes is not known")
+        if samples.ndim != 1 or not (abs(samples) <= 1.0).all():
+            raise self._beyond("waveform", "a waveform is one row of samples from -1 to 1")
+        low, high = slot.limits
+        if not low <= len(samples) <= high:
+            rule = f"a waveform must have {low:g} to {high:g} points by the dialect, got {len(samples)}"
+            raise self._beyond("waveform", rule)
+
+    def _send_table(self, slot: Waveform, text: str, points: int) -> None:
+        self._forget("waveform")
+        for command in slot.prepare:
+            self.session.command(command)
+        self.session.command(text, expected=slot.latency + len(text) / slot.rate, named=slot.upload)
+        self.check_errors()  # what became of a table that was refused is not asked: nothing might come
+        found = self.session.ask(slot.points, parse_number) if slot.points else points
+        if found != points:
+            line = self.session.setting_line
+            raise SettingRefused(self.address, slot.upload, f"{points} points", f"{found:g}", f"{points}", line)
+
+    def _select(self, slot: Waveform) -> None:
+        for text in slot.select[:-1]:
+            self.session.command(text)
+        self._command_and_compare(slot.select[-1], slot.query, slot.is_selected)
 
     def set_frequency(self, frequency: float) -> float:
         """Set the frequency in Hz; return the one read back."""
@@ -155,3 +213,14 @@ class Generator(Instrument):
                 f"|offset| + peak amplitude must not exceed {self._ceiling:g} V, got {abs(offset) + abs(amplitude):g} V"
             )
             raise self._beyond("amplitude", rule)
+
+
+def _upload(slot: Waveform, samples: NDArray[np.float64]) -> str:
+    """Return the command that carries a table, its bytes as latin-1."""
+    numbers = samples * slot.full
+    if slot.encoding == "ascii":
+        values = numbers.round() if slot.format == "d" else numbers
+        spelt = (format(int(value) if slot.format == "d" else value, slot.format) for value in values.tolist())
+        return slot.upload.format(values=slot.separator.join(spelt), points=len(samples))
+    block = definite_block(encode_samples(numbers, slot.encoding, slot.byte_order))
+    return slot.upload.format(block=block.decode("latin-1"), points=len(samples))

@@ -15,6 +15,7 @@ __all__ = [
     "Encoding",
     "ErrorEntry",
     "definite_block",
+    "encode_samples",
     "parse_boolean",
     "parse_error_entry",
     "parse_integer",
@@ -128,6 +129,19 @@ def definite_block(data: bytes) -> bytes:
 def sample_size(encoding: Encoding) -> int:
     """Return the bytes of one sample; 0 for text, where it varies."""
     return 0 if encoding == "ascii" else int(_TYPES[encoding][1:])
+
+
+def encode_samples(samples: NDArray[np.float64], encoding: Encoding, byte_order: ByteOrder = "big") -> bytes:
+    r"""Return samples as bytes of a block, whole numbers rounded; the inverse of `parse_samples` but for text.
+
+    >>> import numpy as np
+    >>> encode_samples(np.array([1.0, -2.0]), "int16")
+    b'\x00\x01\xff\xfe'
+    """
+    import numpy as np
+
+    kind = np.dtype((">" if byte_order == "big" else "<") + _TYPES[encoding])
+    return (samples if kind.kind == "f" else np.rint(samples)).astype(kind).tobytes()
 
 
 def parse_samples(data: bytes | bytearray, encoding: Encoding, byte_order: ByteOrder = "big") -> NDArray[np.float64]:

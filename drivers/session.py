@@ -67,7 +67,13 @@ class Session:
         return self.link.address
 
     def command(
-        self, text: str, *, confirm: str | None = None, confirmed: str | None = None, expected: float = 0.0
+        self,
+        text: str,
+        *,
+        confirm: str | None = None,
+        confirmed: str | None = None,
+        expected: float = 0.0,
+        named: str = "",
     ) -> None:
         """Send a setting and await the answer that it is done (a message of its own).
 
@@ -81,6 +87,8 @@ class Session:
             Another answer than the habitual one.
         expected : float
             Seconds the setting should take.
+        named : str
+            What errors call it instead of repeating it whole.
 
         Raises
         ------
@@ -89,9 +97,9 @@ class Session:
         InstrumentError
             Only where the error query does the confirming.
         """
-        self._last_setting = text
+        self._last_setting = named or text
         query = self.habits.confirm if confirm is None else confirm
-        with self.link.transaction(text, expected=expected) as exchange:
+        with self.link.transaction(self._last_setting, expected=expected) as exchange:
             self._send(exchange, text)
             self.setting_line = exchange.line
             if query:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass, field
 from typing import Literal
 
@@ -16,6 +17,7 @@ from bandproof.drivers.quantities import (
     Number,
     Peak,
     Points,
+    Range,
     Voltage,
     template,
 )
@@ -39,6 +41,7 @@ __all__ = [
     "SwitchDialect",
     "Toggle",
     "Transfer",
+    "Waveform",
 ]
 
 
@@ -86,6 +89,50 @@ class Shape:
     sine: tuple[str, ...] = ()
     query: str = ""
     is_sine: str = ""
+
+
+@dataclass(frozen=True, slots=True)
+class Waveform:
+    """How one period of an arbitrary waveform is uploaded and played.
+
+    Parameters
+    ----------
+    prepare : tuple of str
+        Sent before the upload: the format of the data, a place for them.
+    upload : str
+        With ``{block}`` (IEEE 488.2) or ``{values}`` (numbers as text), perhaps ``{points}``, their count.
+    encoding, byte_order
+        Of one sample in a block; ``ascii`` for values.
+    full : float
+        The number that stands for +1: 32767 for codes of 16 bits.
+    format, separator : str
+        Of values: Python's number format, and what stands between them.
+    points : str
+        Query of how many points the instrument has, compared with those sent; empty: not compared.
+    limits : (low, high)
+        How many points it takes.
+    select : tuple of str
+        Commands that make the output this waveform.
+    query, is_selected : str
+        Query of the shape, the answer that says so.
+    rate, latency : float
+        Bytes per second, at least, and seconds, at most, besides; for the time limit.
+    """
+
+    prepare: tuple[str, ...] = ()
+    upload: str = template("block", "values", "points")
+    encoding: Literal["ascii", "real32", "real64", "int16"] = "real32"
+    byte_order: ByteOrder = "big"
+    full: float = 1.0
+    format: str = field(default=".7g", metadata={"format": True})
+    separator: str = ","
+    points: str = ""
+    limits: Range = (2, math.inf)
+    select: tuple[str, ...] = ()
+    query: str = ""
+    is_selected: str = ""
+    rate: float = 1e5
+    latency: float = 1.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -214,6 +261,7 @@ class GeneratorDialect:
     habits: Habits = field(default_factory=Habits)
     shape: Shape = Shape()
     load: Load = field(default_factory=Load)
+    waveform: Waveform = Waveform()
 
 
 @dataclass(frozen=True, slots=True)

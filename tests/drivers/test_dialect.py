@@ -138,6 +138,32 @@ def test_a_mistake_is_named_with_its_place(text, path, words):
     assert words in str(found)
 
 
+WAVEFORM = (
+    GENERATOR
+    + """
+[waveform]
+upload = "T {block}"
+select = ["P"]
+"""
+)
+
+
+@pytest.mark.parametrize(
+    ("old", "new", "path"),
+    [
+        ("{block}", "", "waveform.upload"),
+        ("{block}", "{block}{values}", "waveform.upload"),
+        ("{block}", "{values}", "waveform.encoding"),
+        ("T {block}", 'T {block}"\nencoding = "ascii', "waveform.encoding"),
+        ("T {block}", 'T {block}"\nencoding = "int16"\nfull = 32768\nquery = "', "waveform.full"),
+        ('["P"]', "[]", "waveform.select"),
+    ],
+)
+def test_a_waveform_slot_that_contradicts_itself_is_named(old, new, path):
+    assert dialect.parse(WAVEFORM, "mine.toml").waveform.select == ("P",)
+    assert path in {finding.path for finding in mistakes(WAVEFORM.replace(old, new)).findings}
+
+
 def test_the_texts_these_tests_start_from_have_no_mistake():
     assert dialect.parse(SCOPE, "mine.toml").title == "mine"
     assert dialect.parse(GENERATOR, "mine.toml").title == "mine"

@@ -7,15 +7,26 @@ from dataclasses import replace
 import numpy as np
 import pytest
 
-from bandproof.analysis.network import Capacitor, Network, Resistor
+from bandproof.analysis.network import Capacitor, Network, Resistor, response
+from bandproof.analysis.sine import fit_sines
 from bandproof.drivers.clock import VirtualClock, create_clock_file
 from bandproof.drivers.dialect import load
-from bandproof.drivers.errors import InstrumentError, InstrumentProblem, LinkBroken, LinkClosed, NoAnswer, ReplyError
+from bandproof.drivers.errors import (
+    BeyondLimits,
+    InstrumentError,
+    InstrumentProblem,
+    LinkBroken,
+    LinkClosed,
+    NoAnswer,
+    ReplyError,
+    SettingRefused,
+)
 from bandproof.drivers.generator import Generator
 from bandproof.drivers.link import Link
 from bandproof.drivers.log import ExchangeLog
 from bandproof.drivers.scope import Scope
 from bandproof.drivers.session import Session
+from bandproof.drivers.slots import Waveform
 from bandproof.drivers.switch import Switch
 from bandproof.simulated_instruments.bench import World, start
 from bandproof.simulated_instruments.faults import Fault
@@ -148,6 +159,117 @@ def test_a_setting_outside_the_instruments_range_is_named_by_the_instrument(cont
     with pytest.raises(InstrumentError, match=r"-222.*after 'SOURce:FREQuency:CW 1e"):
         bench.generator.set_frequency(1e15)
     assert bench.generator.set_frequency(500.0) == 500.0
+
+
+TWO_TONES = 0.5 * np.sin(2 * np.pi * 3 * np.arange(256) / 256) + 0.3 * np.cos(2 * np.pi * 7 * np.arange(256) / 256)
+
+
+def assert_two_tones(bench):
+    """Both tones of the table, 300 and 700 Hz, at 1 V for +1, and what the network makes of them."""
+    record = settled_record(bench)
+    fit = fit_sines(record.volts, record.sample_interval, [300.0, 700.0])
+    four = 4 * np.sqrt(fit.covariance[..., 0, 0] + fit.covariance[..., 1, 1])
+    assert (np.abs(np.abs(fit.phasor[0]) - [0.5, 0.3]) < four[0]).all()
+    ratio = response(LOW_PASS, [300.0, 700.0], ["out"])[0]
+    assert (np.abs(fit.phasor[1] - ratio * fit.phasor[0]) < four[0] + four[1]).all()
+    assert four.max() < 0.01
+    # both tones of one wave: at the table's beginning the phases are those of a sine and of a cosine
+    beginning = 7 * np.angle(fit.phasor[0, 0] * 1j) - 3 * np.angle(fit.phasor[0, 1])
+    assert abs(np.exp(1j * beginning) - 1) < 7 * four[0, 0] / 0.5 + 3 * four[0, 1] / 0.3
+
+
+@pytest.mark.parametrize("form", ["real32", "real64", "int16", "ascii"])
+def test_a_table_of_two_tones_comes_out_as_both_and_the_board_answers_each(controller, form):
+    bench = controller()
+    bench.prepare()
+    bench.generator.set_frequency(100.0)
+    bench.scope.set_record(0.02, 2000)
+    slot = bench.generator.dialect.waveform
+    words = {"real32": "REAL,32", "real64": "REAL,64", "int16": "INTeger,16", "ascii": "ASCii"}
+    data, full = ("{values}" if form == "ascii" else "{block}"), (32767.0 if form == "int16" else 1.0)
+    upload = slot.upload.replace("{block}", data)
+    changed = replace(slot, prepare=(f"FORMat:DATA {words[form]}",), upload=upload, encoding=form, full=full)
+    bench.generator.dialect = replace(bench.generator.dialect, waveform=changed)
+    bench.generator.play(TWO_TONES)
+    assert_two_tones(bench)
+
+
+def test_a_table_is_sent_once_and_the_sine_comes_back(controller):
+    bench = controller()
+    bench.prepare()
+    bench.generator.play(TWO_TONES)
+    before = bench.generator.session.sent
+    bench.generator.play(TWO_TONES)
+    assert bench.generator.session.sent == before
+    bench.generator.set_sine()
+    record = settled_record(bench)
+    amplitude, _ = sine(record.volts, record.sample_interval, 1000.0)
+    assert abs(amplitude[0]) == pytest.approx(1.0, abs=4 * NOISE * record.lsb[0] * np.sqrt(2 / 1000))
+    bench.generator.play(TWO_TONES)
+    lines = bench.path.read_text().splitlines()
+    assert sum("TRACe:DATA WAVE" in line for line in lines) == 1
+    assert sum("FUNCtion:SHAPe USER" in line for line in lines) == 2
+    assert sum("FUNCtion:SHAPe SINusoid" in line for line in lines) == 2
+
+
+def test_a_table_is_played_again_after_reopening_and_resetting_the_instrument(controller):
+    bench = controller()
+    bench.prepare()
+    bench.generator.set_frequency(100.0)
+    bench.scope.set_record(0.02, 2000)
+    table = TWO_TONES.copy()
+    bench.generator.play(table)
+    table[:] = 0.0  # the caller's own: what was played is remembered
+    bench.generator.session.command("*RST")
+    bench.generator.reopen()
+    bench.generator.restore()
+    assert_two_tones(bench)
+
+
+def test_a_generator_without_a_waveform_slot_says_so(controller):
+    generator = controller().generator
+    generator.dialect = replace(generator.dialect, waveform=Waveform())
+    with pytest.raises(BeyondLimits, match=r"its dialect has no waveform\.upload slot: nothing was sent"):
+        generator.play(TWO_TONES)
+
+
+@pytest.mark.parametrize(
+    ("samples", "words"),
+    [
+        (np.array([0.0, 1.01]), "from -1 to 1"),
+        (np.array([0.0, np.nan]), "from -1 to 1"),
+        (np.zeros((2, 2)), "one row"),
+        (np.zeros(1), "2 to inf points by the dialect, got 1"),
+    ],
+)
+def test_a_table_that_is_none_is_refused_before_anything_is_sent(controller, samples, words):
+    generator = controller().generator
+    with pytest.raises(BeyondLimits, match=words):
+        generator.play(samples)
+    assert generator.session.sent == 0
+
+
+def test_amplitudes_in_rms_and_tables_do_not_go_together(controller):
+    generator = controller().generator
+    generator.dialect = replace(generator.dialect, amplitude=replace(generator.dialect.amplitude, meaning="rms"))
+    with pytest.raises(BeyondLimits, match="rms"):
+        generator.play(TWO_TONES)
+
+
+def test_a_table_the_instrument_refuses_is_named_by_its_slot_not_by_its_bytes(controller):
+    bench = controller()
+    bench.prepare()
+    with pytest.raises(InstrumentError, match=r"-223.*after 'TRACe:DATA WAVE,{block}'"):
+        bench.generator.play(np.zeros(5000))
+    bench.generator.play(TWO_TONES)
+
+
+def test_points_that_got_lost_on_the_way_are_seen(controller):
+    generator = controller().generator
+    slot = replace(generator.dialect.waveform, points="SYSTem:VERSion?")  # 1999.0
+    generator.dialect = replace(generator.dialect, waveform=slot)
+    with pytest.raises(SettingRefused, match="256 points"):
+        generator.play(TWO_TONES)
 
 
 FAULTS = {
