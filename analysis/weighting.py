@@ -34,9 +34,7 @@ class WeightedBands:
         theta: FloatArray,
         free: list[int],
     ) -> None:
-        self.frequency = np.ascontiguousarray(frequency, dtype=np.float64)
-        self.response = np.ascontiguousarray(response, dtype=np.complex128)
-        self.centre, self.theta, self.free = centre, theta, free
+        self.frequency, self.response, self.centre, self.theta, self.free = frequency, response, centre, theta, free
         self.diagonal, self.below = _whitening(covariance, used)
         self.correlated = bool(self.below.any())
         # taken once: new memory costs more than the arithmetic

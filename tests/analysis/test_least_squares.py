@@ -166,6 +166,15 @@ def test_start_2_leads_to_the_certified_values(name):
         np.testing.assert_allclose(deviations, case.deviations, rtol=DEVIATION)
 
 
+@pytest.mark.parametrize("name", ["Misra1a", "Rat42", "Gauss1"])  # of residuals small enough for it
+def test_the_last_step_gains_what_a_coarse_offset_left(name):
+    case = _certified(name)
+    found = least_squares(_residual(case), case.start[1:], offset=1e-2)
+    off = np.abs(found.theta[0] - case.values) / case.deviations
+    assert found.status == ("converged",)
+    assert (off < 1e-3).all()
+
+
 def test_problems_solved_together_are_solved_as_alone():
     case = _certified("Thurber")
     starts = np.concatenate([case.start, case.values[None]])
