@@ -77,8 +77,8 @@ def _is_large(point: Point) -> bool:
 
 
 def evaluate(run: Run) -> tuple[StageResult, ...]:
-    """Return what is concluded about every stage that has points; one without a fit is undecided, and why."""
-    measured, known = {point.stage for point in run.points}, known_paths(run)
+    """Return what is concluded about every stage that was driven; one without a fit is undecided, and why."""
+    measured, known = {point.stage for point in run.points if point.purpose != "no-signal"}, known_paths(run)
     return tuple(
         evaluate_stage(run.board, run.bench, stage, [p for p in run.points if p.stage == stage.name], known)
         for stage in run.board.stages

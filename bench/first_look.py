@@ -18,19 +18,25 @@ _NOISY = 2.0  # steps of the converter; its own noise and rounding are about 0.6
 _STRANGE = 2.0  # a response off by more than this factor is told; arbitrary
 
 
-def check_quiet(bench: Bench, stage: Stage, point: Point) -> list[str]:
-    """Refuse a tap whose direct voltage fills its range: the signal would not fit; return what is strange.
+def check_quiet(board: Board, bench: Bench, stage: Stage, point: Point) -> list[str]:
+    """Refuse a tap whose direct voltage leaves the signal no room, in its range or in the op-amp's swing.
+
+    Returns what is strange.
 
     Raises
     ------
     BenchFault
         Names tap, channel and the voltage found.
     """
+    swing = board.op_amp.swing
     for tap, offset, reach in zip((stage.tap_in, stage.tap_out), point.offsets, point.ranges, strict=True):
-        if abs(offset) > 0.5 * reach:
+        if abs(offset) > 0.5 * min(reach, swing):  # half of the swing is the signal's
+            most = (
+                f"{engineering(reach, 'V')} range" if reach <= swing else f"{engineering(swing, 'V')} an op-amp gives"
+            )
             raise BenchFault(
                 f"{tap} (channel {bench.wires[tap].channel}) stands at {engineering(offset, 'V')} DC without signal, "
-                f"more than half of the {engineering(reach, 'V')} range: is the board powered, is it the right point?"
+                f"more than half of the {most}: is the board powered, is it the right point?"
             )
     return [
         f"{stage.name}: {tap} has {engineering(rms, 'V')} rms of hum or noise without signal: look for a ground loop, "

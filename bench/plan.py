@@ -56,7 +56,12 @@ class Planner:
             self._seconds(stage)
 
     def more(self, points: Sequence[Point]) -> tuple[Step, ...]:
-        """Return the next batch of steps; empty when every stage has what it needs."""
+        """Return the next batch of steps; empty when every stage has what it needs.
+
+        Before any signal, every stage that needs no hands is looked at without one.
+        """
+        if steps := self._without_signal(points):
+            return steps
         for stage in self._board.stages:
             had = [point for point in points if point.stage == stage.name]
             if self._finished.get(stage.name) == len(had):
@@ -65,6 +70,16 @@ class Planner:
                 return steps
             self._finished[stage.name] = len(had)
         return self._thru(points)
+
+    def _without_signal(self, points: Sequence[Point]) -> tuple[Step, ...]:
+        """Return a record without signal for each stage that was not looked at yet and needs no hands to be wired."""
+        seen, wires = {point.stage for point in points}, self._bench.wires
+        waiting = [
+            stage
+            for stage in self._board.stages
+            if stage.name not in seen and not (wires[stage.tap_in].by_hand or wires[stage.tap_out].by_hand)
+        ]
+        return tuple(self._quiet(stage, len(points) + i) for i, stage in enumerate(waiting))
 
     def seconds_left(self, points: Sequence[Point]) -> float:
         """Return an estimate of the bench seconds still needed."""
@@ -96,7 +111,9 @@ class Planner:
     def _stage_steps(self, stage: Stage, had: Sequence[Point], *, first: int) -> tuple[Step, ...]:
         prediction = self._predictions[stage.name]
         if not had:
-            return self._first_look(stage, prediction, first)
+            return self._quiet(stage, first), self._low_level(stage, first + 1)
+        if len(had) == 1:
+            return (self._low_level(stage, first),)
         scale = _scale(self._board, stage, had)
         batches = sum(point.purpose == "closing" for point in had)
         if batches == 0:
@@ -131,14 +148,20 @@ class Planner:
         part = min(1.0, last[-1].amplitude / self._levels[stage.name]) * (_BACK_OFF if distorted else 1.0)
         return self._curve(stage, found, scale, widen, first, last[-1].frequency, 1.0 / part, part)
 
-    def _first_look(self, stage: Stage, prediction: Prediction, first: int) -> tuple[Step, ...]:
-        level, low = self._levels[stage.name], LOW_LEVEL * self._levels[stage.name]
-        ranges = (HEADROOM * level, HEADROOM * level * prediction.gain)
-        quiet_time = max(2.0 / self._bench.mains, 3.0 / prediction.centre)
-        quiet = Step(first, stage.name, "no-signal", (), 0.0, quiet_time, _QUIET_SAMPLES, ranges)
-        frequency = self._look_at(stage)
-        # The sweep's own ranges: a level ten times too high (a wrong probe factor) must be seen as what it is.
-        return quiet, self._step(first + 1, stage, "low-level", frequency, None, low, ranges)
+    def _quiet(self, stage: Stage, index: int) -> Step:
+        """Return the record without signal."""
+        longest = max(2.0 / self._bench.mains, 3.0 / self._predictions[stage.name].centre)
+        return Step(index, stage.name, "no-signal", (), 0.0, longest, _QUIET_SAMPLES, self._first_ranges(stage))
+
+    def _low_level(self, stage: Stage, index: int) -> Step:
+        """Return the first point with a signal."""
+        low, frequency = LOW_LEVEL * self._levels[stage.name], self._look_at(stage)
+        return self._step(index, stage, "low-level", frequency, None, low, self._first_ranges(stage))
+
+    def _first_ranges(self, stage: Stage) -> tuple[float, float]:
+        """Return the sweep's own ranges: a level ten times too high (a wrong probe factor) must be seen as it is."""
+        level = HEADROOM * self._levels[stage.name]
+        return level, level * self._predictions[stage.name].gain
 
     def _look_at(self, stage: Stage) -> float:
         """Return the frequency of a stage's low-level point: the predicted centre, clear of mains."""

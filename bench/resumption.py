@@ -90,6 +90,8 @@ def check_again(sweep: Sweep, journal: Journal) -> None:
     ------
     ResumeRefused
         The point reads something else: another board, no supply, another wiring.
+    BenchFault
+        The point, a first look at a stage, still says that the board must not be driven.
     """
     if not journal.points:
         return
@@ -98,6 +100,7 @@ def check_again(sweep: Sweep, journal: Journal) -> None:
         sweep.repeat(journal.steps[index - 1])
     sweep.clock.catch_up(journal.began[index])
     point = sweep.repeat(journal.steps[index])
+    sweep.look(journal.steps[index], point)  # what ended the run here may still be so
     _compare(journal.points[index], point)
     if not sweep.clock.is_virtual:
         sweep.continue_at(journal.finished[index] - journal.head["clock_start"])

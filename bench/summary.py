@@ -24,9 +24,9 @@ def dB(ratio: float) -> float:
 
 
 def summary_lines(stages: Sequence[StageResult]) -> list[str]:
-    """Return the lines of the table: per figure, one line per band."""
+    """Return the lines of the table: per figure, one line per band; none without bands."""
     lines: list[str] = []
-    for quantity in QUANTITIES:
+    for quantity in QUANTITIES if stages else ():
         lines += ["", _TITLES[quantity], *_row(_HEADINGS), *_rows(quantity, stages)]
     return lines
 

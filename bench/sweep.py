@@ -1,8 +1,9 @@
 """The sweep: carries out steps on the instruments, in the order that is safe, one message at a time.
 
-Order of a run: generator off, then per stage wiring (generator off), a record without signal, one low-level point, the
-curve, the closing point, generator off. The generator stays on from the first to the last point of a stage: switching
-it per point would wear its relay and restart the settling.
+Order of a run: generator off; a record without signal of every stage that needs no hands to be wired, so that a direct
+voltage anywhere ends the run before the board is given any; then per stage wiring (generator off), a record without
+signal if hands did the wiring, one low-level point, the curve, the closing point, generator off. The generator stays on
+from the first to the last point of a stage: switching it per point would wear its relay and restart the settling.
 """
 
 from collections.abc import Callable
@@ -107,6 +108,24 @@ class Sweep:
         """Measure a step once more without keeping it."""
         return self._recovered(step)[0]
 
+    def look(self, step: Step, point: Point) -> None:
+        """Check the first records of a stage: they prove wiring, probes, level and supply before the sweep.
+
+        Raises
+        ------
+        BenchFault
+            The board must not be driven as it is.
+        """
+        stage = self._stage_of(step)
+        if step.purpose == "no-signal":
+            alarms = check_quiet(self.board, self.bench, stage, point)
+        elif step.purpose == "low-level":
+            alarms = check_low_level(self.board, self.bench, stage, point)
+        else:
+            alarms = []
+        for alarm in alarms:
+            self.journal.alarm(alarm)
+
     def continue_at(self, elapsed: float) -> None:
         """Let the bench time go on at so many seconds."""
         self._start = self.clock.now() - elapsed
@@ -128,7 +147,7 @@ class Sweep:
         point, volts = self._second_look(step, point, volts)
         self._last_seen = self.clock.now(), self.clock.utc()
         self.journal.measured(point, began=began, finished=self.stamp(), volts=volts if self.keep_raw else None)
-        self._look(step, self._stage_of(step), point)
+        self.look(step, point)
 
     def _second_look(self, step: Step, point: Point, volts: FloatArray) -> tuple[Point, FloatArray]:
         """Ask whoever put a probe by hand to look again when the first signal says it is on another point."""
@@ -259,14 +278,3 @@ class Sweep:
         self.devices.await_lifeline()
         generator.output(True)
         return frequency, amplitude
-
-    def _look(self, step: Step, stage: Stage, point: Point) -> None:
-        """Check the first records of a stage: they prove wiring, probes, level and supply before the sweep."""
-        if step.purpose == "no-signal":
-            alarms = check_quiet(self.bench, stage, point)
-        elif step.purpose == "low-level":
-            alarms = check_low_level(self.board, self.bench, stage, point)
-        else:
-            alarms = []
-        for alarm in alarms:
-            self.journal.alarm(alarm)

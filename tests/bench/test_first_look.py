@@ -1,11 +1,19 @@
 """What the first records of a stage prove before it is driven: each fault names tap, channel and cause."""
 
+import re
 from dataclasses import replace
 
 import pytest
 
 from bandproof.analysis.network import Resistor
 from bandproof.bench.errors import BenchFault
+from bandproof.bench.instruments import opened
+from bandproof.bench.operator import Absent
+from bandproof.bench.rehearsal import rehearsal_bench
+from bandproof.bench.resumption import check_again
+from bandproof.bench.sweep import Sweep
+from bandproof.bench.verbs.rehearse import simulated
+from bandproof.simulated_instruments.faults import Fault
 
 
 def probes(first, second):
@@ -68,6 +76,60 @@ def test_a_bench_fault_is_found_before_the_board_is_driven(swept, one_band, chan
     with pytest.raises(BenchFault, match=words):
         raise found.problem
     assert [point.purpose for point in found.journal.points] in (["no-signal"], ["no-signal", "low-level"])
+
+
+def with_last(amp):
+    """The board's last stage has another op-amp."""
+
+    def change(world):
+        *others, last = world.network.opamps
+        return replace(world, network=replace(world.network, opamps=(*others, amp(last))))
+
+    return change
+
+
+@pytest.mark.parametrize("volts", [13.5, -13.5])
+def test_an_output_stuck_at_a_rail_in_the_last_stage_is_refused_before_any_signal(swept, tmp_path, volts):
+    """A band-pass passes its op-amp's offset with a gain of one, so the offset is the output's direct voltage."""
+    log = tmp_path / "exchange.log"
+    stuck = with_last(lambda amp: replace(amp, offset=volts, swing=abs(volts)))
+    found = swept(1, change=stuck, raises=BenchFault, log=log)
+    assert re.match(
+        rf"breath_out \(channel 2\) stands at {'-' * (volts < 0)}\d.* V DC without signal", str(found.problem)
+    )
+    assert [point.stage for point in found.journal.points] == [stage.name for stage in found.board.stages]
+    assert {point.purpose for point in found.journal.points} == {"no-signal"}
+    sent = log.read_text()
+    assert "OUTPut:STATe OFF" in sent
+    assert "OUTPut:STATe ON" not in sent
+
+
+def test_a_resume_does_not_go_past_a_direct_voltage_that_is_still_there(swept, tmp_path):
+    log = tmp_path / "exchange.log"
+    stuck = with_last(lambda amp: replace(amp, offset=13.5, swing=13.5))
+    found = swept(1, change=stuck, raises=BenchFault)
+    journal, bench = found.journal, rehearsal_bench(found.board)
+    with (
+        simulated(found.world, bench) as (reachable, clock),
+        pytest.raises(BenchFault, match=r"^breath_out .* DC"),
+        opened(reachable, clock, log) as devices,
+    ):
+        check_again(Sweep(found.board, reachable, devices, clock, Absent(), journal), journal)
+    assert "OUTPut:STATe ON" not in log.read_text()
+
+
+def test_a_direct_voltage_beyond_half_the_swing_is_refused_though_the_range_would_hold_it(swept, one_band):
+    """The sweep may use the other half of the swing (DEVELOPERS.md), so an output there would clip."""
+    board = replace(one_band, op_amp=replace(one_band.op_amp, swing=4.0))
+    found = swept(1, board=board, change=stuck_at(2.2), raises=BenchFault)
+    (point,) = found.journal.points
+    assert 2.0 < abs(point.offsets[1]) < 0.5 * point.ranges[1]
+    assert re.match(r"low_out \(channel 2\) .* more than half of the 4 V an op-amp gives", str(found.problem))
+
+
+def test_hum_without_signal_is_told(swept, one_band):
+    found = swept(1, board=one_band, change=lambda world: replace(world, faults=(Fault("strong-hum", 0),)))
+    assert any("input has" in alarm and "hum or noise without signal" in alarm for alarm in found.journal.alarms)
 
 
 # What no bench fault is: 8 % is what 50 Ω into 600 Ω take (a voltage divider).

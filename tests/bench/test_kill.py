@@ -84,7 +84,7 @@ STATES = {
     "record taken": (halting(Scope, "acquire", nth=6), 5),
     "between raw record and line": (halting(Journal, "_keep_raw", nth=6), 5),
     "half a line": (half_a_line, 5),
-    "line not yet synced": (halting(os, "fsync", before=True, nth=9, when=is_journal), 6),
+    "line not yet synced": (halting(os, "fsync", before=True, nth=10, when=is_journal), 6),
     "after a point": (halting(Journal, "measured", nth=7), 7),
     "sweep done, no file yet": (halting(finish, "run_of", before=True), 14),
     "part file written": (halting(Path, "rename", before=True), 14),

@@ -221,7 +221,7 @@ def rehearsal_of(place, **changes):
     return {**Journal.peeked(place).head["rehearsal"], **changes}
 
 
-@pytest.mark.parametrize("points", [2, 14])
+@pytest.mark.parametrize("points", [3, 15])
 def test_another_board_is_refused_by_its_last_point(console, unbroken, tmp_path, points):
     place = cut_after(unbroken, tmp_path / "run", points)
     rehearsal = rehearsal_of(place)

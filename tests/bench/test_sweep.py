@@ -79,7 +79,10 @@ def healthy(swept, two_bands, tmp_path_factory):
 
 def test_the_generator_is_confirmed_off_before_every_wiring(healthy):
     wirings = [message for message in healthy[1] if message.text.startswith("ROUTe:CLOSe (")]
-    assert [message.text for message in wirings] == ["ROUTe:CLOSe (@101)", "ROUTe:CLOSe (@102)"]
+    assert [message.text for message in wirings] == [
+        *["ROUTe:CLOSe (@101)", "ROUTe:CLOSe (@102)"] * 2,
+        "ROUTe:CLOSe (@100)",
+    ]
     assert all(message.is_on is False and message.confirmed_off for message in wirings)
 
 
