@@ -92,8 +92,6 @@ def _points(table: Table) -> dict[str, TestPoint]:
         points[name] = TestPoint(
             name, entry.text("node"), entry.quantity("source_resistance", "resistance", 0.0, positive=False)
         )
-        if points[name].source_resistance < 0.0:
-            entry.mistake("source_resistance", "is negative; a source resistance is 0 Ω or more")
         entry.close()
         _check_name(table, name)
     return points

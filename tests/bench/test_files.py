@@ -94,7 +94,7 @@ ONE_IN_A_BOARD = {
     "both taps the same": (('to        = "low_out"', 'to        = "input"'), r"stages\.low: from and to are the same"),
     "stage named oddly": (("[stages.low]", '[stages."low/out"]'), r"stages\.low/out: cannot be a name"),
     "point named oddly": (("input      = {", '"in put" = {'), r"points\.in put: cannot be a name"),
-    "source resistance negative": (('"0 Ω"', '"-1 Ω"'), r"points\.input\.source_resistance: is negative"),
+    "source resistance negative": (('"0 Ω"', '"-1 Ω"'), r"points\.input\.source_resistance: '-1 Ω' is below zero"),
     "empty title": ((TITLE, 'title = " "'), "title: found ' '; expected a text"),
     "title a number": ((TITLE, "title = 5"), "title: found 5; expected a text"),
     "table a number": (("parts     = {", "parts = 1 # "), r"stages\.low\.parts: found 1; expected a table"),

@@ -86,11 +86,11 @@ STATES = {
     "half a line": (half_a_line, 5),
     "line not yet synced": (halting(os, "fsync", before=True, nth=10, when=is_journal), 6),
     "after a point": (halting(Journal, "measured", nth=7), 7),
-    "sweep done, no file yet": (halting(finish, "run_of", before=True), 14),
-    "part file written": (halting(Path, "rename", before=True), 14),
-    "renamed": (halting(Path, "rename"), 14),
-    "before the end line": (halting(Journal, "ended", before=True), 14),
-    "after the end line": (halting(Journal, "ended"), 14),
+    "sweep done, no file yet": (halting(finish, "run_of", before=True), 25),
+    "part file written": (halting(Path, "rename", before=True), 25),
+    "renamed": (halting(Path, "rename"), 25),
+    "before the end line": (halting(Journal, "ended", before=True), 25),
+    "after the end line": (halting(Journal, "ended"), 25),
 }
 
 

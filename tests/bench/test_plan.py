@@ -13,7 +13,7 @@ from bandproof.bench.errors import BadInput
 from bandproof.bench.evaluate import fit_points
 from bandproof.bench.plan import HEADROOM, Planner, greatest_level
 from bandproof.bench.rehearsal import demo_board, rehearsal_bench
-from bandproof.bench.types import OpAmpData
+from bandproof.bench.types import OpAmpData, Wire
 
 FAST = OpAmpData(gbw=1e13, slew=inf, swing=inf)
 LARGE = replace(FAST, slew=1e12, swing=1e3)
@@ -213,9 +213,10 @@ def test_the_same_points_get_the_same_steps(healthy, one_band):
 
 
 def test_a_stage_is_looked_at_quietly_then_low_then_in_full(healthy):
-    purposes = [step.purpose for step in healthy.journal.steps]
+    steps = [step for step in healthy.journal.steps if step.stage == "low"]
+    purposes = [step.purpose for step in steps]
     assert purposes == ["no-signal", "low-level", *["curve"] * (len(purposes) - 3), "closing"]
-    quiet, low, *curve = healthy.journal.steps
+    quiet, low, *curve = steps
     assert (quiet.tones, quiet.amplitude) == ((), 0.0)
     assert low.amplitude <= 0.1 * curve[0].amplitude * (1 + 1e-9)
     assert curve[-1].frequency == curve[0].frequency
@@ -263,6 +264,27 @@ def test_ranges_hold_the_predicted_peak_and_its_headroom(healthy):
     assert not any("overload" in point.flags for point in healthy.journal.points)
 
 
+def test_the_path_is_measured_last_on_every_pair_of_ranges_that_a_curve_used(healthy):
+    thru = [step for step in healthy.journal.steps if step.purpose == "thru"]
+    curve = [point for point in healthy.journal.points if point.purpose == "curve"]
+    assert healthy.journal.steps[-len(thru) :] == thru
+    assert {step.ranges for step in thru} == {point.ranges for point in curve}
+    assert min(step.frequency for step in thru) < min(point.frequency for point in curve)
+    assert max(step.frequency for step in thru) > max(point.frequency for point in curve)
+    assert all(step.amplitude <= min(step.ranges) for step in thru)
+
+
+def test_a_path_known_or_reached_only_by_hand_is_not_measured(healthy, one_band):
+    points, bench = tuple(p for p in healthy.journal.points if p.purpose != "thru"), rehearsal_bench(one_band)
+    known = {point.ranges for point in points if point.purpose in ("curve", "closing")}
+    assert Planner(one_band, bench).more(points)
+    assert Planner(one_band, bench, known).more(points) == ()
+    by_hand = replace(bench, wires=bench.wires | {"thru": Wire(2, by_hand=True)})
+    assert Planner(one_band, by_hand).more(points) == ()
+    without = replace(bench, wires={name: wire for name, wire in bench.wires.items() if name != "thru"})
+    assert Planner(one_band, without).more(points) == ()
+
+
 def test_a_centre_that_moved_is_looked_at_again_and_found(swept, one_band):
     board = swept(1, board=one_band, defects={("low", "R_shunt"): 3.4e3})
     true = predict(one_band, one_band.stages[0], board.drawn["low"])
@@ -282,7 +304,7 @@ def test_an_overloaded_batch_is_measured_again_on_a_wider_range(healthy, one_ban
     loud = [replace(p, flags=("overload",)) if p.purpose in ("curve", "closing") else p for p in first]
     again = planner.more(tuple(loud))
     assert [step.purpose for step in again] == ["curve"] * 11 + ["closing"]
-    before = max(step.ranges[1] for step in healthy.journal.steps)
+    before = max(step.ranges[1] for step in healthy.journal.steps if step.purpose == "curve")
     assert all(step.ranges[1] >= 2.0 * before for step in again)
 
 

@@ -345,5 +345,5 @@ def test_a_run_on_a_bench_in_real_time_goes_on(console, one_band_text, tmp_path)
     assert resumed.points[:7] == whole.points[:7]
     times = [point.time for point in resumed.points]
     assert times == sorted(times)
-    assert [entry["event"] for entry in resumed.history][-3:] == ["resumed", "wired", "checked"]
+    assert [entry["event"] for entry in resumed.history][-4:] == ["resumed", "wired", "checked", "wired"]
     assert read_result(place / "run.h5")["verdict"] == "pass"
