@@ -13,6 +13,7 @@ from bandproof.analysis.types import FloatArray
 from bandproof.analysis.uncertainty import Combined
 from bandproof.bench.budget import budgets
 from bandproof.bench.circuit import Prediction, predict
+from bandproof.bench.levels import level_alarms
 from bandproof.bench.misfit import StageFit, arrays, look_for_misfit
 from bandproof.bench.picture import StageView
 from bandproof.bench.sources import Measured
@@ -109,7 +110,9 @@ def evaluate_stage(
     figures = {name: _compared(stage, name, prediction, found.fit, rows.get(name), doubt) for name in QUANTITIES}
     fit = found.fit
     alarms = [doubt] if doubt else []
-    alarms += [*misfit.alarms, *_outside_by_design(stage, prediction)]
+    expanded_gain = rows["gain"].expanded if rows else nan
+    alarms += [*misfit.alarms, *level_alarms(bench, points, found, known or {}, expanded_gain)]
+    alarms += _outside_by_design(stage, prediction)
     return StageResult(
         name=stage.name,
         kind=stage.kind,

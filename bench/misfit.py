@@ -89,7 +89,7 @@ def look_for_misfit(board: Board, bench: Bench, stage: Stage, points: Sequence[P
         return Misfit(nan, False, {}, distorted, "", tuple(alarms))
     chi_square, dof = float(found.fit.chi_square[0]), float(found.fit.dof[0])
     significant = float(chdtrc(dof, chi_square * dof)) < _SIGNIFICANT
-    alarms += [*_delay(board, bench, found), *_nonlinear(points, found)]
+    alarms += _delay(board, bench, found)
     shifts = _with_leakage(found) if significant else {}
     return Misfit(chi_square, significant, shifts, distorted, _changed(points), tuple(alarms))
 
@@ -130,22 +130,6 @@ def _overloads(points: Sequence[Point]) -> list[str]:
         return []
     reach = max(point.ranges[1] for point in lost)
     return [f"{len(lost)} records were overloaded (range of the output tap up to {reach:.3g} V) and left out"]
-
-
-def _nonlinear(points: Sequence[Point], found: StageFit) -> list[str]:
-    """Return an alarm when the gain at the level first tried is not the gain at the lower one that was used."""
-    used = max(point.amplitude for point in found.points)
-    higher = [p for p in points if p.purpose == "curve" and p.amplitude > 1.01 * used and "overload" not in p.flags]
-    if found.fit is None or len(higher) < 3:
-        return []
-    frequency, response, covariance = arrays(higher)
-    before = fit_bands(frequency[None], response[None], covariance[None])
-    gains = [float(abs(fit.gain[0])) for fit in (before, found.fit)]
-    expanded = 2.0 * sqrt(sum(float(fit.u_gain[0]) ** 2 for fit in (before, found.fit)))
-    if abs(gains[0] - gains[1]) <= expanded:
-        return []
-    change = 100.0 * (gains[0] / gains[1] - 1.0)
-    return [f"nonlinear: its gain differs by {change:+.2f} % between {higher[0].amplitude:.3g} V and {used:.3g} V"]
 
 
 def _delay(board: Board, bench: Bench, found: StageFit) -> list[str]:

@@ -18,7 +18,7 @@ from bandproof.bench.record import HUM_BELOW
 from bandproof.bench.thru import Path
 from bandproof.bench.types import Bench, Board, Point, Quantity, Stage
 
-__all__ = ["Measured", "Source", "sources"]
+__all__ = ["Measured", "Source", "departure", "sources"]
 
 _TWO = sqrt(2.0 / 3.0)  # standard uncertainty of the difference of two uniform errors, per half-width of each
 _ONE = sqrt(1.0 / 3.0)
@@ -193,8 +193,8 @@ def _linearity(measured: Measured) -> list[Source]:
     accuracy, found = measured.bench.accuracy, []
     for channel, where, sign in ((0, "in", -1.0), (1, "out", 1.0)):
         shape = [
-            sign * _departure(point.levels, point, channel)
-            - (sign * _departure(path.levels, point, channel) if path else 0.0)
+            sign * departure(point.levels, point, channel)
+            - (sign * departure(path.levels, point, channel) if path else 0.0)
             for point, path in zip(measured.points, measured.paths, strict=True)
         ]
         reason = f"{_stated(measured, 'linearity')}: an S of {accuracy.linearity:.3g} LSB"
@@ -206,7 +206,7 @@ def _linearity(measured: Measured) -> list[Source]:
     return found
 
 
-def _departure(levels: tuple[float, float], point: Point, channel: int) -> float:
+def departure(levels: tuple[float, float], point: Point, channel: int) -> float:
     """Return the relative growth of a channel's sine of a level in V per step of departure, on a point's range."""
     from scipy.special import j1
 

@@ -10,23 +10,22 @@ import pytest
 
 from bandproof.analysis.curve import curve_figures
 from bandproof.bench.circuit import predict
-from bandproof.bench.evaluate import fit_points
+from bandproof.bench.evaluate import evaluate_stage
+from bandproof.bench.rehearsal import rehearsal_bench
+from bandproof.bench.thru import paths
 
 SEEDS = range(1, 21)  # the first twenty, not chosen
 FIGURES = ("centre", "q", "gain")
 
 
 def scores(swept_board, truth):
-    """Return (error / u) of f0, Q and gain of every stage; u from the records' noise alone; (stages, 3)."""
-    gains = swept_board.world.imperfections.channel_gain
-    ratio = (1.0 + gains[1]) / (1.0 + gains[0])
-    rows = []
+    """Return (error / u) of f0, Q and gain of every stage, (stages, 3), as they are concluded."""
+    points, bench = swept_board.journal.points, rehearsal_bench(swept_board.board)
+    known, rows = paths(points), []
     for stage in swept_board.board.stages:
-        fit = fit_points([p for p in swept_board.journal.points if p.stage == stage.name]).fit
-        true = truth(stage)
-        measured = (fit.f0[0], fit.q[0], abs(fit.gain[0]) / ratio)
-        uncertainty = (fit.u_f0[0], fit.u_q[0], fit.u_gain[0] / ratio)
-        rows.append([(m - t) / u for m, t, u in zip(measured, true, uncertainty, strict=True)])
+        result = evaluate_stage(swept_board.board, bench, stage, [p for p in points if p.stage == stage.name], known)
+        figures = [result.figures[name] for name in FIGURES]
+        rows.append([(f.measured - t) / f.standard_uncertainty for f, t in zip(figures, truth(stage), strict=True)])
     return np.array(rows)
 
 

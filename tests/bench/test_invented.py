@@ -45,7 +45,7 @@ def test_figures_through_an_invented_dialect_agree_with_those_through_scpi99(swe
     (value, u), (expected, u_expected) = figures(board), figures(plain)
     assert np.abs((value - expected) / np.hypot(u, u_expected)).max() < 4.0
     assert len(board.journal.points) == len(plain.journal.points)
-    assert board.journal.points[-1].purpose == "closing"
+    assert board.journal.points[-1].purpose == "thru"
 
 
 def test_an_invented_dialect_with_the_wrong_meaning_of_amplitude_is_seen(swept, one_band, invented):
