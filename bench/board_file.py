@@ -5,7 +5,7 @@ from typing import Literal, cast
 
 from bandproof.bench.quantities import Kind, QuantityError, read_quantity
 from bandproof.bench.reading import Mistakes, Table, nearest, parse_toml, read_text
-from bandproof.bench.types import Board, Limit, OpAmpData, Part, Power, Quantity, Stage, TestPoint
+from bandproof.bench.types import Board, Limit, OpAmpData, Part, Power, Quantity, Stage, Temperature, TestPoint
 
 __all__ = ["STAGE_PARTS", "parse_board", "parse_defect", "read_board"]
 
@@ -45,6 +45,7 @@ def parse_board(text: str, path: str) -> Board:
         input_maximum=_input_maximum(top.table("limits")),
         op_amp=_op_amp(top.table("op_amp")),
         power=_power(top.table("supply")) if "supply" in top else None,
+        temperature=_temperature(top.table("temperature")) if "temperature" in top else None,
         points=_points(top.table("points")),
         stages=_stages(top),
         text=text,
@@ -83,6 +84,15 @@ def _power(table: Table) -> Power:
         table.mistake("most_current", "must be above least_current and not above current_limit")
     table.close()
     return power
+
+
+def _temperature(table: Table) -> Temperature:
+    temperature = Temperature(
+        reference=table.quantity("reference", "temperature"),
+        coefficient=table.quantity("coefficient", "relative", positive=False),
+    )
+    table.close()
+    return temperature
 
 
 def _points(table: Table) -> dict[str, TestPoint]:

@@ -80,9 +80,10 @@ def _is_large(point: Point) -> bool:
 def evaluate(run: Run) -> tuple[StageResult, ...]:
     """Return what is concluded about every stage that was driven; one without a fit is undecided, and why."""
     measured, known = {point.stage for point in run.points if point.purpose != "no-signal"}, known_paths(run)
+    board, bench = run.board, run.bench
     return tuple(
-        evaluate_stage(run.board, run.bench, stage, [p for p in run.points if p.stage == stage.name], known)
-        for stage in run.board.stages
+        evaluate_stage(board, bench, stage, [p for p in run.points if p.stage == stage.name], known, run.ambient)
+        for stage in board.stages
         if stage.name in measured
     )
 
@@ -90,23 +91,28 @@ def evaluate(run: Run) -> tuple[StageResult, ...]:
 def known_paths(run: Run) -> dict[Ranges, Path]:
     """Return the path on each pair of ranges, from the thru the run measured, else from the stored one it used."""
     own = paths(run.points)
-    if own or run.thru is None:
+    if run.thru is None:
         return own
     age = datetime.fromisoformat(run.started) - datetime.fromisoformat(run.thru.started)
-    return paths(run.thru.points, before=age.total_seconds())
+    return {**paths(run.thru.points, before=age.total_seconds()), **own}
 
 
 def evaluate_stage(
-    board: Board, bench: Bench, stage: Stage, points: Sequence[Point], known: Mapping[Ranges, Path] | None = None
+    board: Board,
+    bench: Bench,
+    stage: Stage,
+    points: Sequence[Point],
+    known: Mapping[Ranges, Path] | None = None,
+    ambient: float | None = None,
 ) -> StageResult:
-    """Return what is concluded about one stage from its points and the path known."""
+    """Return what is concluded about one stage from its points and the path known, in a room at ``ambient`` °C."""
     found = fit_points(points, known)
     prediction = predict(board, stage)
     misfit = look_for_misfit(board, bench, stage, points, found)
-    rows = _budgets(board, bench, stage, points, found, {})
+    rows = _budgets(board, bench, stage, points, found, {}, ambient)
     doubt = found.reason or misfit.doubt({name: budget.expanded for name, budget in rows.items()})
     if misfit.shifts and not doubt:
-        rows = _budgets(board, bench, stage, points, found, misfit.shifts)
+        rows = _budgets(board, bench, stage, points, found, misfit.shifts, ambient)
     figures = {name: _compared(stage, name, prediction, found.fit, rows.get(name), doubt) for name in QUANTITIES}
     fit = found.fit
     alarms = [doubt] if doubt else []
@@ -147,12 +153,14 @@ def _budgets(
     points: Sequence[Point],
     found: StageFit,
     shifts: Mapping[Quantity, float],
+    ambient: float | None,
 ) -> dict[Quantity, Combined]:
     """Return each figure's budget; none without a fit."""
     if found.fit is None:
         return {}
     quiet = next((point for point in points if point.purpose == "no-signal"), None)
-    return budgets(Measured(board, bench, stage, found.points, found.covariance, found.paths, found.fit, quiet, shifts))
+    measured = (found.points, found.covariance, found.paths, found.fit, quiet, shifts, ambient)
+    return budgets(Measured(board, bench, stage, *measured))
 
 
 def _compared(

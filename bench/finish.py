@@ -9,6 +9,7 @@ from bandproof.bench.board_file import parse_board
 from bandproof.bench.errors import BadInput, Stopped
 from bandproof.bench.evaluate import evaluate, views
 from bandproof.bench.journal import Journal
+from bandproof.bench.plain import thru_from
 from bandproof.bench.result import result_object
 from bandproof.bench.runfile import digest_of, read_result, read_run, write_run
 from bandproof.bench.thru import THRU
@@ -60,11 +61,12 @@ def run_of(journal: Journal, problem: Exception | None, words: str) -> Run:
     """Return the run a journal tells of, complete or cut short by a problem."""
     head = journal.head
     board, bench = board_and_bench(journal)
-    kept = ("run_id", "serial", "attempt", "identities", "version", "started", "operator", "note")
+    kept = ("run_id", "serial", "attempt", "identities", "version", "started", "operator", "note", "ambient")
     return Run(
         **{name: head[name] for name in kept},
         board=board,
         bench=bench,
+        thru=None if head["thru"] is None else thru_from(head["thru"]),
         ended="complete" if problem is None else "cut_short",
         reason=words,
         stopped=isinstance(problem, Stopped),

@@ -60,6 +60,7 @@ class Job:
     progress: Progress
     operator_name: str = ""
     note: str = ""
+    ambient: float | None = None
     keep_raw: bool = False
     rehearsal: Mapping[str, Any] | None = None
     bench_path: str = ""
@@ -169,6 +170,8 @@ class Job:
             "clock_start": self.clock.now(),
             "operator": self.operator_name or "not stated",
             "note": self.note,
+            "ambient": self.ambient,
+            "thru": None,
             "identities": dict(identities),
             "board": self.board.text,
             "bench": bench.text,

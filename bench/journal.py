@@ -16,6 +16,7 @@ from typing import Any, BinaryIO
 
 from bandproof.analysis.types import FloatArray
 from bandproof.bench.errors import BadInput
+from bandproof.bench.head import checked_head, whole
 from bandproof.bench.plain import fits, point_from, point_plain, step_from, to_json
 from bandproof.bench.system import sync_folder, try_lock
 from bandproof.bench.types import Point, Step
@@ -24,29 +25,6 @@ __all__ = ["JOURNAL", "RAW", "Journal"]
 
 JOURNAL, RAW = "journal.txt", "raw.bin"
 _LONGEST = 256_000_000  # bytes of a journal; arbitrary, some 200,000 records
-_HEAD: dict[str, Any] = {
-    "run_id": str,
-    "serial": str,
-    "attempt": int,
-    "version": str,
-    "started": str,
-    "clock_start": float,
-    "operator": str,
-    "note": str,
-    "identities": dict[str, str],
-    "board": str,
-    "bench": str,
-    "bench_path": str,
-    "dialects": dict[str, str],
-    "keep_raw": bool,
-}
-_REHEARSAL: dict[str, Any] = {
-    "seed": int,
-    "defects": list[str],
-    "faults": list[str],
-    "imperfections": list[str],
-    "pace": str,
-}
 
 
 class Journal:
@@ -232,20 +210,20 @@ class Journal:
         """Take an entry in whole or not at all (KeyError, TypeError, ValueError)."""
         kind = entry.pop("kind")
         if kind == "head":
-            self.head = _head(entry)
+            self.head = checked_head(entry)
         elif kind == "steps":
             self._apply_steps([step_from(step) for step in entry["steps"]])
         elif kind == "point":
             self._apply_point(entry)
         elif kind == "alarm":
-            self.alarms.append(_whole(entry, text=str)["text"])
+            self.alarms.append(whole(entry, text=str)["text"])
         elif kind == "story":
-            self.history.append(_whole(entry, time=float, event=str))
+            self.history.append(whole(entry, time=float, event=str))
         elif kind == "resumed":
             self.end = None
             self.history.append({"time": self.finished[-1] if self.finished else 0.0, "event": "resumed", **entry})
         elif kind == "end":
-            self.end = _whole(entry, ended=str, run=str, digest=str)
+            self.end = whole(entry, ended=str, run=str, digest=str)
         else:
             raise ValueError(f"unknown entry {kind!r}")
 
@@ -256,7 +234,7 @@ class Journal:
 
     def _apply_point(self, entry: dict[str, Any]) -> None:
         point = point_from(entry["point"])
-        _whole(entry, began=float, finished=float)
+        whole(entry, began=float, finished=float)
         raw = tuple(entry["raw"]) if entry["raw"] else None
         if raw is not None and not (fits(raw, tuple[int, int]) and min(raw) >= 0):
             raise ValueError(f"no place of a record: {raw!r}")
@@ -267,21 +245,6 @@ class Journal:
         self.began.append(entry["began"])
         self.finished.append(entry["finished"])
         self.raw.append(raw)
-
-
-def _whole(entry: dict[str, Any], **kinds: Any) -> dict[str, Any]:
-    """Return an entry that has these values of these kinds."""
-    for name, kind in kinds.items():
-        if not fits(entry[name], kind):
-            raise ValueError(f"{name} is {entry[name]!r:.40}")
-    return entry
-
-
-def _head(entry: dict[str, Any]) -> dict[str, Any]:
-    rehearsal = entry["rehearsal"]
-    if rehearsal is not None:
-        _whole(rehearsal, **_REHEARSAL)
-    return _whole(entry, **_HEAD)
 
 
 def _line(entry: dict[str, Any]) -> bytes:

@@ -3,12 +3,13 @@
 import json
 from collections.abc import Mapping
 from dataclasses import asdict, fields
+from datetime import datetime
 from functools import cache
 from typing import Any, Literal, get_args, get_origin, get_type_hints
 
-from bandproof.bench.types import Point, Step, Tone
+from bandproof.bench.types import Point, Step, Thru, Tone
 
-__all__ = ["fits", "point_from", "point_plain", "step_from", "to_json"]
+__all__ = ["fits", "point_from", "point_plain", "step_from", "thru_from", "thru_plain", "to_json"]
 
 
 def to_json(value: object) -> str:
@@ -73,3 +74,32 @@ def point_from(plain: dict[str, Any]) -> Point:
         raise ValueError(f"response of a Point is {response!r:.40}")
     point: Point = _made(Point, {**values, **tuples, "response": complex(*response)})
     return point
+
+
+def thru_plain(thru: Thru) -> dict[str, Any]:
+    """Return a thru as plain values."""
+    points = [point_plain(point) for point in thru.points]
+    return {"started": thru.started, "conditions": dict(thru.conditions), "points": points}
+
+
+_CONDITIONS: dict[str, Any] = {
+    "identities": dict[str, str],
+    "dialects": dict[str, str],
+    "probe_factors": dict[str, float],
+    "channels": list[int],
+    "operator": str,
+    "version": str,
+}
+
+
+def thru_from(plain: dict[str, Any]) -> Thru:
+    """Return a Thru from what `thru_plain` gave, before or after JSON (KeyError, TypeError, ValueError: it is none)."""
+    conditions, started = plain["conditions"], plain["started"]
+    for name, kind in _CONDITIONS.items():
+        if not fits(conditions[name], kind):
+            raise ValueError(f"{name} of a thru is {conditions[name]!r:.40}")
+    if conditions["ambient"] is not None and not fits(conditions["ambient"], float):
+        raise ValueError(f"ambient of a thru is {conditions['ambient']!r:.40}")
+    if datetime.fromisoformat(started).tzinfo is None:
+        raise ValueError(f"started of a thru has no time zone: {started!r:.40}")
+    return Thru(started, conditions, tuple(point_from(point) for point in plain["points"]))

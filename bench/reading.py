@@ -110,7 +110,7 @@ class Table:
         return found
 
     def quantity(self, key: str, kind: Kind, default: float | None = None, *, positive: bool = True) -> float:
-        """Return a quantity in SI units, above zero; not ``positive``: 0 or more."""
+        """Return a quantity in SI units, above zero; not ``positive``: 0 or more; a temperature in °C has any sign."""
         return self._read(
             key, kind, default, lambda found: _positive(read_quantity(found, kind), found, kind, positive), 1.0
         )
@@ -175,6 +175,6 @@ def nearest(word: str, accepted: Iterable[str]) -> str:
 
 
 def _positive(value: float, found: object, kind: Kind, positive: bool) -> float:
-    if value < 0.0 or (positive and value == 0.0):
+    if kind != "temperature" and (value < 0.0 or (positive and value == 0.0)):
         raise QuantityError(shown(found), kind, f"{shown(found)} is {'not above' if positive else 'below'} zero")
     return value

@@ -18,7 +18,7 @@ from bandproof.analysis.types import FloatArray
 from bandproof.bench.bench_file import parse_bench
 from bandproof.bench.board_file import parse_board
 from bandproof.bench.errors import RunFileDamaged
-from bandproof.bench.plain import step_from, to_json
+from bandproof.bench.plain import step_from, thru_from, thru_plain, to_json
 from bandproof.bench.system import sync_folder
 from bandproof.bench.types import Point, Run
 
@@ -126,6 +126,7 @@ def _texts(run: Run, result: Mapping[str, Any]) -> dict[str, str]:
         "texts/bench": run.bench.text,
         "texts/board": run.board.text,
         **dialects,
+        **({"texts/thru": to_json(thru_plain(run.thru))} if run.thru is not None else {}),
     }
 
 
@@ -142,6 +143,7 @@ _ABOUT = [
     "bench_seconds",
     "operator",
     "note",
+    "ambient",
     "alarms",
 ]  # fields of Run kept as they are
 
@@ -272,6 +274,7 @@ def _run(file: "h5py.File") -> Run:
         bench=replace(bench, dialect_texts=dialects),
         steps=tuple(step_from(json.loads(line)) for line in _text(file, "steps").splitlines()),
         points=tuple(sorted(points, key=lambda point: point.step)),
+        thru=thru_from(json.loads(_text(file, "texts/thru"))) if "thru" in file["texts"] else None,
         history=tuple(json.loads(line) for line in _text(file, "history").splitlines()),
     )
 

@@ -22,6 +22,8 @@ __all__ = ["Measured", "Source", "departure", "sources"]
 
 _TWO = sqrt(2.0 / 3.0)  # standard uncertainty of the difference of two uniform errors, per half-width of each
 _ONE = sqrt(1.0 / 3.0)
+_UNKNOWN_ROOM = 15.0  # K a room may be away from a board's reference when nobody stated it; arbitrary
+_BOARD_IN_ROOM = 1.0  # K a board may be away from the room it lies in; arbitrary
 _UNSETTLED = 1e-4  # of the response: what every dwell is planned for
 _WHITE = 0.6  # steps: residual of a record without hum, rounding and noise of the converter
 
@@ -30,7 +32,8 @@ _WHITE = 0.6  # steps: residual of a record without hum, rounding and noise of t
 class Measured:
     """A stage as measured: the points that were fitted (with the path divided out), their fit, their paths.
 
-    ``no_signal`` is its record without signal, if there is one; ``shifts`` how far a larger model moves each figure.
+    ``no_signal`` is its record without signal, if there is one; ``shifts`` how far a larger model moves each figure;
+    ``ambient`` is the temperature of the room in °C, None when nobody stated it.
     """
 
     board: Board
@@ -42,6 +45,7 @@ class Measured:
     fit: BandFit
     no_signal: Point | None
     shifts: Mapping[Quantity, float]
+    ambient: float | None = None
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -78,7 +82,7 @@ def sources(measured: Measured) -> list[Source]:
         _hum(measured),
         _settling(measured),
         _generator(measured),
-        Source("board temperature", "0, because the board file names no temperature that its limits hold at"),
+        _temperature(measured),
         Source("control position", "0, because the stage has no control"),
         _misfit(measured),
         _channel_gain(measured),
@@ -244,6 +248,18 @@ def _generator(measured: Measured) -> Source:
     reason = f"{_stated(measured, 'generator_frequency')}; f0 is traceable to the generator"
     u = _ONE * measured.bench.accuracy.generator_frequency
     return Source("generator frequency", reason, u, "uniform", direct={"centre": 1.0})
+
+
+def _temperature(measured: Measured) -> Source:
+    name, declared, ambient = "board temperature", measured.board.temperature, measured.ambient
+    if declared is None:
+        return Source(name, "0, because the board file names no temperature that its limits hold at")
+    away, room = _UNKNOWN_ROOM, "room not stated"
+    if ambient is not None:
+        away, room = abs(ambient - declared.reference) + _BOARD_IN_ROOM, f"room {ambient:g} °C"
+    limits = f"{declared.coefficient * 1e6:.3g} ppm/K from {declared.reference:g} °C"
+    u = _ONE * declared.coefficient * away
+    return Source(name, f"board file: {limits}; {room}: {away:.3g} K away", u, "uniform", direct={"centre": 1.0})
 
 
 def _misfit(measured: Measured) -> Source:

@@ -27,6 +27,7 @@ __all__ = [
     "Stage",
     "StageResult",
     "Step",
+    "Temperature",
     "TestPoint",
     "Thru",
     "Tone",
@@ -88,6 +89,14 @@ class Power:
 
 
 @dataclass(frozen=True, slots=True)
+class Temperature:
+    """Where a board's limits hold, in °C, and what f0 changes per kelvin, relative: half-width of either sign."""
+
+    reference: float
+    coefficient: float
+
+
+@dataclass(frozen=True, slots=True)
 class TestPoint:
     """A place a probe can reach: its node in the circuit, its source resistance in Ω."""
 
@@ -124,6 +133,7 @@ class Board:
     text: str
     frequencies: Literal["nominal", "exact"] = "nominal"
     power: Power | None = None
+    temperature: Temperature | None = None
 
     def stage(self, name: str) -> Stage:
         """Return a stage by name (KeyError when there is none)."""

@@ -168,7 +168,7 @@ def job_of(**facts: Any) -> "Job":
 
 def of_head(head: dict[str, Any]) -> dict[str, Any]:
     """Return what a job is told again when it is resumed, from its journal's head."""
-    kept = ("serial", "attempt", "run_id", "note", "keep_raw", "rehearsal", "bench_path")
+    kept = ("serial", "attempt", "run_id", "note", "ambient", "keep_raw", "rehearsal", "bench_path")
     return {**{name: head[name] for name in kept}, "operator_name": head["operator"]}
 
 

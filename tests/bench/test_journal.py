@@ -26,6 +26,8 @@ HEAD = {
     "clock_start": 0.25,
     "operator": "Ann Ω",
     "note": 'two\nlines, \u2028 and "quotes"',
+    "ambient": 23.5,
+    "thru": None,
     "identities": {"scope": "X"},
     "board": "b",
     "bench": "b",
