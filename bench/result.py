@@ -4,9 +4,10 @@ from collections.abc import Mapping, Sequence
 from math import isfinite
 from typing import Any
 
+from bandproof.analysis.uncertainty import Combined
 from bandproof.bench.types import Comparison, Run, StageResult, Verdict
 
-__all__ = ["RESULT_SCHEMA", "board_verdict", "result_object"]
+__all__ = ["RESULT_SCHEMA", "bare_parameter", "board_verdict", "result_object", "stage_object"]
 
 RESULT_SCHEMA = "bandproof-result/1"
 _WORST_FIRST: tuple[Verdict, ...] = ("fail", "undecided", "pass")
@@ -32,12 +33,13 @@ def result_object(run: Run, stages: Sequence[StageResult], files: Mapping[str, s
         "wall_seconds": None,
         "points": sum(point.purpose in ("curve", "closing") for point in run.points),
         "alarms": [*run.alarms, *(alarm for stage in stages for alarm in stage.alarms)],
-        "stages": [_stage(stage) for stage in stages],
+        "stages": [stage_object(stage) for stage in stages],
         "files": dict(files),
     }
 
 
-def _stage(stage: StageResult) -> dict[str, Any]:
+def stage_object(stage: StageResult) -> dict[str, Any]:
+    """Return what is concluded about one stage."""
     return {
         "name": stage.name,
         "kind": stage.kind,
@@ -50,6 +52,25 @@ def _stage(stage: StageResult) -> dict[str, Any]:
             "lack_of_fit": stage.lack_of_fit,
         },
         "suspects": [],
+    }
+
+
+def bare_parameter(unit: str, measured: float, budget: Combined) -> dict[str, Any]:
+    """Return a figure that has no design to be compared with: the same keys, null what only a design could say."""
+    return {
+        "unit": unit,
+        "designed": None,
+        "predicted": None,
+        "measured": _number(measured),
+        "standard_uncertainty": _number(budget.u),
+        "expanded_uncertainty": _number(budget.expanded),
+        "coverage_factor": _number(budget.coverage_factor),
+        "rule": None,
+        "deviation": None,
+        "lower_limit": None,
+        "upper_limit": None,
+        "verdict": None,
+        "conformance_probability": None,
     }
 
 

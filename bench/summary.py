@@ -1,12 +1,16 @@
 """What a person reads at the end of a run: one line per band and figure, 80 columns, plain text."""
 
-from collections.abc import Iterable, Iterator, Sequence
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from math import isfinite, log10
+from typing import TYPE_CHECKING
 
 from bandproof.bench.quantities import decimals, engineering, with_uncertainty
-from bandproof.bench.types import QUANTITIES, Comparison, Quantity, StageResult, Verdict
+from bandproof.bench.types import QUANTITIES, UNITS, Comparison, Quantity, StageResult, Verdict
 
-__all__ = ["dB", "summary_lines"]
+if TYPE_CHECKING:
+    from bandproof.analysis.uncertainty import Combined
+
+__all__ = ["dB", "figure_lines", "summary_lines"]
 
 _TITLES: dict[Quantity, str] = {
     "centre": "Centre frequency f0",
@@ -28,6 +32,16 @@ def summary_lines(stages: Sequence[StageResult]) -> list[str]:
     lines: list[str] = []
     for quantity in QUANTITIES if stages else ():
         lines += ["", _TITLES[quantity], *_row(_HEADINGS), *_rows(quantity, stages)]
+    return lines
+
+
+def figure_lines(measured: Mapping[Quantity, float], budgets: "Mapping[Quantity, Combined]") -> list[str]:
+    """Return the lines of figures that have no design to be compared with: value ± U, coverage factor."""
+    lines = ["", f"{'':<28}{'measured ± U':>32}{'k':>8}"]
+    for quantity, budget in budgets.items():
+        value, expanded = measured[quantity], budget.expanded
+        text = _gain(value, expanded) if quantity == "gain" else with_uncertainty(value, expanded, UNITS[quantity])
+        lines.append(f"{_TITLES[quantity]:<28}{text:>32}{budget.coverage_factor:>8.2f}")
     return lines
 
 
@@ -62,16 +76,16 @@ def _gain_cells(figure: Comparison) -> list[str]:
     return [
         f"{dB(figure.designed):.4g} dB",
         f"{dB(figure.predicted):.4g} dB",
-        _gain(figure) if found else "not found",
+        _gain(figure.measured, figure.expanded_uncertainty) if found else "not found",
         f"{dB(figure.measured / figure.designed):+.2f} dB" if found else "-",
     ]
 
 
-def _gain(figure: Comparison) -> str:
+def _gain(measured: float, expanded: float) -> str:
     """Decibels; U is half the span between the gain's ends, which is symmetric enough below 3 dB."""
-    relative = figure.expanded_uncertainty / figure.measured
+    relative = expanded / measured
     if not 0.0 < relative < 1.0:
-        return f"{dB(figure.measured):.2f} dB ± unknown"
+        return f"{dB(measured):.2f} dB ± unknown"
     expanded = 0.5 * (dB(1.0 + relative) - dB(1.0 - relative))
     places = max(0, decimals(expanded))
-    return f"{dB(figure.measured):.{places}f} ± {expanded:.{places}f} dB"
+    return f"{dB(measured):.{places}f} ± {expanded:.{places}f} dB"

@@ -1,0 +1,59 @@
+"""A fitted figure beside its design: what it is, how sure, within its limits or not."""
+
+from math import nan
+
+from bandproof.analysis.decision import decide
+from bandproof.analysis.fit import BandFit
+from bandproof.analysis.uncertainty import Combined
+from bandproof.bench.circuit import Prediction
+from bandproof.bench.types import UNITS, Comparison, Quantity, Stage
+
+__all__ = ["compared", "figure", "outside_by_design"]
+
+
+def figure(fit: BandFit | None, quantity: Quantity) -> tuple[float, float]:
+    """Return a fitted figure and its standard uncertainty from the noise of the points; NaN without a fit."""
+    if fit is None:
+        return nan, nan
+    match quantity:
+        case "centre":
+            return float(fit.f0[0]), float(fit.u_f0[0])
+        case "q":
+            return float(fit.q[0]), float(fit.u_q[0])
+        case "gain":
+            return float(abs(fit.gain[0])), float(fit.u_gain[0])
+
+
+def compared(
+    stage: Stage, quantity: Quantity, prediction: Prediction, fit: BandFit | None, budget: Combined | None, doubt: str
+) -> Comparison:
+    """Return a figure of a stage compared with its limits; ``doubt`` says why no verdict can be given, or nothing."""
+    limit = stage.limits[quantity]
+    value, repeatability = figure(fit, quantity)
+    decision = decide(value, budget.u if budget else 0.0, low=limit.lower, high=limit.upper, doubt=doubt)
+    return Comparison(
+        quantity=quantity,
+        unit=UNITS[quantity],
+        designed=limit.designed,
+        predicted=prediction[quantity],
+        measured=value,
+        repeatability=repeatability,
+        standard_uncertainty=budget.u if budget else nan,
+        expanded_uncertainty=budget.expanded if budget else nan,
+        coverage_factor=budget.coverage_factor if budget else nan,
+        rule=limit.rule,
+        lower_limit=limit.lower,
+        upper_limit=limit.upper,
+        verdict=decision.verdict,
+        conformance_probability=decision.probability,
+    )
+
+
+def outside_by_design(stage: Stage, prediction: Prediction) -> list[str]:
+    """Return what the stage's own parts cannot keep, so that the board is not blamed for its drawing."""
+    return [
+        f"its parts as drawn should give {quantity} {prediction[quantity]:.4g}, outside its own limits "
+        f"{limit.lower:.4g} to {limit.upper:.4g}: look at the design first"
+        for quantity, limit in stage.limits.items()
+        if not limit.lower <= prediction[quantity] <= limit.upper
+    ]
