@@ -6,19 +6,20 @@ from math import isfinite, nan
 
 import numpy as np
 
-from bandproof.analysis.decision import decide, worst
-from bandproof.analysis.fit import BandFit, fit_bands
+from bandproof.analysis.decision import worst
+from bandproof.analysis.fit import fit_bands
 from bandproof.analysis.models import band_response
 from bandproof.analysis.types import FloatArray
 from bandproof.analysis.uncertainty import Combined
 from bandproof.bench.budget import budgets
-from bandproof.bench.circuit import Prediction, predict
+from bandproof.bench.circuit import predict
+from bandproof.bench.comparison import compared, outside_by_design
 from bandproof.bench.levels import level_alarms
 from bandproof.bench.misfit import StageFit, arrays, look_for_misfit
 from bandproof.bench.picture import StageView
 from bandproof.bench.sources import Measured
 from bandproof.bench.thru import Path, Ranges, corrected, paths
-from bandproof.bench.types import QUANTITIES, UNITS, Bench, Board, Comparison, Point, Quantity, Run, Stage, StageResult
+from bandproof.bench.types import QUANTITIES, Bench, Board, Point, Quantity, Run, Stage, StageResult
 
 __all__ = ["StageFit", "evaluate", "evaluate_stage", "fit_points", "known_paths", "usable", "views"]
 
@@ -113,12 +114,12 @@ def evaluate_stage(
     doubt = found.reason or misfit.doubt({name: budget.expanded for name, budget in rows.items()})
     if misfit.shifts and not doubt:
         rows = _budgets(board, bench, stage, points, found, misfit.shifts, ambient)
-    figures = {name: _compared(stage, name, prediction, found.fit, rows.get(name), doubt) for name in QUANTITIES}
+    figures = {name: compared(stage, name, prediction, found.fit, rows.get(name), doubt) for name in QUANTITIES}
     fit = found.fit
     alarms = [doubt] if doubt else []
     expanded_gain = rows["gain"].expanded if rows else nan
     alarms += [*misfit.alarms, *level_alarms(bench, points, found, known or {}, expanded_gain)]
-    alarms += _outside_by_design(stage, prediction)
+    alarms += outside_by_design(stage, prediction)
     return StageResult(
         name=stage.name,
         kind=stage.kind,
@@ -136,16 +137,6 @@ def evaluate_stage(
     )
 
 
-def _outside_by_design(stage: Stage, prediction: Prediction) -> list[str]:
-    """Return what the stage's own parts cannot keep, so that the board is not blamed for its drawing."""
-    return [
-        f"its parts as drawn should give {quantity} {prediction[quantity]:.4g}, outside its own limits "
-        f"{limit.lower:.4g} to {limit.upper:.4g}: look at the design first"
-        for quantity, limit in stage.limits.items()
-        if not limit.lower <= prediction[quantity] <= limit.upper
-    ]
-
-
 def _budgets(
     board: Board,
     bench: Bench,
@@ -161,44 +152,6 @@ def _budgets(
     quiet = next((point for point in points if point.purpose == "no-signal"), None)
     measured = (found.points, found.covariance, found.paths, found.fit, quiet, shifts, ambient)
     return budgets(Measured(board, bench, stage, *measured))
-
-
-def _compared(
-    stage: Stage, quantity: Quantity, prediction: Prediction, fit: BandFit | None, budget: Combined | None, doubt: str
-) -> Comparison:
-    limit = stage.limits[quantity]
-    value, repeatability = _measured(fit, quantity)
-    u = budget.u if budget else nan
-    decision = decide(value, 0.0 if budget is None else u, low=limit.lower, high=limit.upper, doubt=doubt)
-    return Comparison(
-        quantity=quantity,
-        unit=UNITS[quantity],
-        designed=limit.designed,
-        predicted=prediction[quantity],
-        measured=value,
-        repeatability=repeatability,
-        standard_uncertainty=u,
-        expanded_uncertainty=budget.expanded if budget else nan,
-        coverage_factor=budget.coverage_factor if budget else nan,
-        rule=limit.rule,
-        lower_limit=limit.lower,
-        upper_limit=limit.upper,
-        verdict=decision.verdict,
-        conformance_probability=decision.probability,
-    )
-
-
-def _measured(fit: BandFit | None, quantity: Quantity) -> tuple[float, float]:
-    """Return a figure and its standard uncertainty from the records' noise."""
-    if fit is None:
-        return nan, nan
-    match quantity:
-        case "centre":
-            return float(fit.f0[0]), float(fit.u_f0[0])
-        case "q":
-            return float(fit.q[0]), float(fit.u_q[0])
-        case "gain":
-            return float(abs(fit.gain[0])), float(fit.u_gain[0])
 
 
 def views(run: Run, stages: Sequence[StageResult]) -> list[StageView]:
