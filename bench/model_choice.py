@@ -39,6 +39,7 @@ Figures: TypeAlias = Mapping[Quantity, float]
 _SIGNIFICANT = 1e-4  # as of a run: noise alone does this once in ten thousand files
 _MATERIAL = 1.0 / 3.0  # of U, as of a run
 _MOST_LEAKAGE = 1e-3  # of gain: beyond it something is wrong with what was measured
+_HARDLY = 0.5  # of Q: with a U beyond it pure noise passes for a band (121 of 200 draws were not refused otherwise)
 _SOUND = ("converged", "no progress")
 _EXACT = 1e-12  # of the peak: the least noise that is believed, where the points were computed; arbitrary
 _LABELS: Mapping[Quantity, tuple[str, str]] = {"centre": ("f0", "Hz"), "q": ("Q", ""), "gain": ("gain", "V/V")}
@@ -121,6 +122,7 @@ def choose(found: Response, asked: str | None = None) -> Choice:
     model, fit = (LARGEST, large) if moved else (first, small)
     lack = _lack(first, model, small, shifts, expanded, material) if compared else ""
     beyond = _beyond(large, scatter) if significant else ""
+    hardly = _hardly(fit, scatter)
     return Choice(
         model=model,
         why=_why(asked, moved, compared, material),
@@ -130,14 +132,15 @@ def choose(found: Response, asked: str | None = None) -> Choice:
         significant=significant,
         material=material,
         shifts=shifts if compared and not material else {},
-        alarms=tuple(filter(None, (lack, beyond, _leaks(fit), _unsettled(scatter)))),
-        doubt=lack if material else beyond if first == LARGEST else "",
+        alarms=tuple(filter(None, (hardly, lack, beyond, _leaks(fit), _unsettled(scatter)))),
+        doubt=hardly or (lack if material else beyond if first == LARGEST else ""),
     )
 
 
 def _fitted(found: Response, scatter: Scatter, model: str) -> BandFit:
     delay, leakage = MODELS[model]
-    return fit_bands(found.frequency[None], found.response[None], scatter.covariance, delay=delay, leakage=leakage)
+    with np.errstate(all="ignore"):  # what points that hold no band lead to is told by `_is_sound`
+        return fit_bands(found.frequency[None], found.response[None], scatter.covariance, delay=delay, leakage=leakage)
 
 
 def _scatter(found: Response) -> Scatter:
@@ -218,6 +221,17 @@ def _beyond(large: BandFit, scatter: Scatter) -> str:
     return (
         f"not even {LARGEST} follows the points (chi-square {chi_square:.3g} times what noise gives): {reason} "
         "this is no second-order band; U is too small"
+    )
+
+
+def _hardly(fit: BandFit, scatter: Scatter) -> str:
+    """Return in words that the points need not hold a band at all, or nothing."""
+    q, expanded = float(fit.q[0]), _expanded(fit, scatter)["q"]
+    if expanded <= _HARDLY * q:
+        return ""
+    return (
+        f"Q is not known (U is {expanded / q:.1g} of it): the points need not hold a band at all, or it is narrower "
+        "than their steps; plot them, measure closer and wider"
     )
 
 
