@@ -52,7 +52,7 @@ def check_low_level(board: Board, bench: Bench, stage: Stage, point: Point) -> l
     Raises
     ------
     BenchFault
-        No signal at a tap, or a level at the input tap that no loading explains.
+        No signal at a tap, a level at the input tap that no loading explains, or a path that is far from 1.
     """
     taps = (stage.tap_in, stage.tap_out)
     for tap, level, noise in zip(taps, point.levels, point.residuals, strict=True):
@@ -63,7 +63,10 @@ def check_low_level(board: Board, bench: Bench, stage: Stage, point: Point) -> l
                 "route to this test point and the board's supply"
             )
     _check_input(bench, stage, point)
-    return strange_response(board, stage, point)
+    strange = strange_response(board, stage, point)
+    if strange and stage.kind == "thru":
+        raise BenchFault(strange[0])  # every later figure would be divided by it
+    return strange
 
 
 def frequency_problem(point: Point) -> str:
@@ -82,7 +85,7 @@ def level_problem(stage: Stage, low_level: Point | None, point: Point) -> str:
     A generator that somebody switched off, or that protects itself, and a cable knocked off leave a record that fits
     nothing and says nothing: its level does.
     """
-    if low_level is None or point.purpose not in ("curve", "closing"):
+    if low_level is None or point.purpose not in ("curve", "closing", "thru"):
         return ""
     expected = low_level.levels[0] / low_level.amplitude * point.amplitude
     if abs(point.levels[0] / expected - 1.0) <= _LEVEL_MOVED:
@@ -120,12 +123,15 @@ def _cause(ratio: float) -> str:
 
 
 def strange_response(board: Board, stage: Stage, point: Point) -> list[str]:
-    """Return in words that a low-level point is far from what is predicted, or nothing."""
-    expected = predicted_response(board, stage, np.array([point.frequency]))[0]
+    """Return in words that a low-level point is far from what is predicted, or nothing; the path itself gives 1."""
+    is_path = stage.kind == "thru"
+    expected = 1.0 if is_path else predicted_response(board, stage, np.array([point.frequency]))[0]
     ratio = abs(point.response) / abs(expected)
     if 1.0 / _STRANGE <= ratio <= _STRANGE:
         return []
     where = engineering(point.frequency, "Hz")
+    if is_path:
+        return [f"both probes on one node read × {ratio:.3g} at {where}: a probe factor set wrong, or another node?"]
     decade = any(abs(log10(ratio / factor)) < log10(1.25) for factor in (0.1, 10.0))
     cause = "a probe factor set wrong by ten, or a wrong part" if decade else "a wrong part, or a wrong tap"
     return [f"{stage.name}: the low-level point at {where} is × {ratio:.3g} of the predicted gain: {cause}"]

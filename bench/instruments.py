@@ -1,12 +1,15 @@
 """The instruments of a bench: opened, identified, made safe on every road out."""
 
-from collections.abc import Callable, Iterator
-from contextlib import closing, contextmanager
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from contextlib import closing, contextmanager, nullcontext
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 
 from bandproof.bench.bench_file import parse_bench
 from bandproof.bench.errors import BenchFault
+from bandproof.bench.locks import locked
+from bandproof.bench.system import detached
+from bandproof.bench.thru import Ranges
 from bandproof.bench.types import Bench
 from bandproof.drivers.clock import Clock
 from bandproof.drivers.dialect import (
@@ -29,7 +32,7 @@ from bandproof.drivers.session import Session
 from bandproof.drivers.supply import Supply
 from bandproof.drivers.switch import Switch
 
-__all__ = ["Devices", "load_dialects", "opened", "with_dialect_texts"]
+__all__ = ["Devices", "load_dialects", "occupied", "opened", "with_dialect_texts"]
 
 
 @dataclass(slots=True)
@@ -72,6 +75,14 @@ class Devices:
         """
         return {role: self._identified(role, instrument) for role, instrument in self.by_role().items()}
 
+    def set_ranges(self, channels: Sequence[int], ranges: Sequence[float], factors: Mapping[int, float]) -> Ranges:
+        """Set channels to ranges in V peak at the tips of probes of these factors; return the ranges read back."""
+        first, second = (
+            self.scope.set_channel(channel, range=wanted, probe_factor=factors[channel]).range
+            for channel, wanted in zip(channels, ranges, strict=True)
+        )
+        return first, second
+
     def _identified(self, role: str, instrument: Generator | Scope | Switch | Supply) -> str:
         """Return what an instrument says it is, after a question only its kind can answer (BenchFault)."""
         words = instrument.identify()
@@ -81,6 +92,40 @@ class Devices:
                 f"{words or 'nothing'!r}. Is it another instrument, or is the dialect wrong? ({problem})"
             ) from problem
         return words
+
+
+@contextmanager
+def occupied(bench: Bench, clock: Clock, log_path: Path | None, *, who: str) -> Iterator[Devices]:
+    """Yield the bench's instruments, locked, with a lifeline that switches the generator off should this process die.
+
+    ``who`` is told to whoever comes second; without it nothing is locked: a rehearsal's instruments are its own.
+    ``bench`` has its dialects' texts.
+
+    Raises
+    ------
+    DialectMistakes, BenchFault, InstrumentProblem
+        As ``opened``, and another process has an instrument.
+    """
+    addresses = [instrument.address for instrument in bench.instruments.values()]
+    with (
+        locked(addresses, who=who) if who else nullcontext(),
+        _lifeline(bench) as lifeline,
+        opened(bench, clock, log_path, lifeline) as devices,
+    ):
+        yield devices
+
+
+def _lifeline(bench: Bench) -> Lifeline:
+    """Return the process that switches the generator off should this one be killed."""
+    generator = bench.instruments["generator"]
+    return Lifeline.start(
+        generator.address,
+        dialect_text=bench.dialect_texts["generator"],
+        visa_library=bench.visa_library,
+        clock_path=bench.clock,
+        popen_options=detached(),
+        serial=generator.serial,
+    )
 
 
 @contextmanager

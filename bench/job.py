@@ -2,7 +2,7 @@
 
 import re
 from collections.abc import Callable, Mapping
-from contextlib import AbstractContextManager, closing, nullcontext
+from contextlib import closing
 from dataclasses import dataclass
 from importlib.metadata import version
 from pathlib import Path
@@ -10,19 +10,20 @@ from typing import Any, Protocol
 
 from bandproof.bench.errors import BadInput, BenchFault, BenchProblem
 from bandproof.bench.finish import Outcome, finish
-from bandproof.bench.instruments import Devices, opened, with_dialect_texts
+from bandproof.bench.instruments import Devices, occupied, with_dialect_texts
 from bandproof.bench.journal import Journal
-from bandproof.bench.locks import locked
 from bandproof.bench.operator import Operator
+from bandproof.bench.plain import thru_from, thru_plain
+from bandproof.bench.plan import Planner
 from bandproof.bench.recovery import plainly
 from bandproof.bench.resumption import ResumeRefused, check_again, check_identities
 from bandproof.bench.stop import Stop
 from bandproof.bench.sweep import Sweep
-from bandproof.bench.system import detached
-from bandproof.bench.types import Bench, Board
+from bandproof.bench.thru import paths
+from bandproof.bench.thru_use import Now, asked_of_scope, thru_for
+from bandproof.bench.types import Bench, Board, Thru
 from bandproof.drivers.clock import Clock
 from bandproof.drivers.errors import InstrumentProblem
-from bandproof.drivers.lifeline import Lifeline
 
 __all__ = ["Job", "Progress", "new_attempt"]
 
@@ -45,7 +46,8 @@ class Job:
     """What a job needs.
 
     ``rehearsal`` is what a rehearsal was asked for (seed, defects, faults): a resume starts the same simulated bench
-    again. ``begin_journal`` makes the journal of a new run in its folder.
+    again. ``thru`` is one stored in a file, used by a new run if all its conditions hold; a resumed run uses that of
+    its journal. ``begin_journal`` makes the journal of a new run in its folder.
     """
 
     board: Board
@@ -61,6 +63,8 @@ class Job:
     operator_name: str = ""
     note: str = ""
     ambient: float | None = None
+    thru: Thru | None = None
+    thru_path: str = ""
     keep_raw: bool = False
     rehearsal: Mapping[str, Any] | None = None
     bench_path: str = ""
@@ -94,14 +98,13 @@ class Job:
         bench = with_dialect_texts(self.bench)
         problem, words = None, ""
         try:
-            with (
-                self._lock(),
-                self._lifeline(bench) as lifeline,
-                opened(bench, self.clock, self.folder / LOG, lifeline) as devices,
-            ):
+            with occupied(bench, self.clock, self.folder / LOG, who=self._who()) as devices:
                 identities = devices.identities()
                 if journal is None:
-                    journal = self.begin_journal(self.folder, self._head(bench, identities))
+                    thru, told = self._usable_thru(devices, bench, identities)
+                    journal = self.begin_journal(self.folder, self._head(bench, identities, thru))
+                    if told:
+                        journal.alarm(told)
                     self._sweep(devices, bench, journal).run()
                 else:
                     check_identities(journal, identities)
@@ -125,26 +128,27 @@ class Job:
             except OSError as failure:
                 raise _no_room(self.folder, failure) from failure
 
-    def _lock(self) -> AbstractContextManager[None]:
-        """Return the lock of this bench; a rehearsal's instruments are its own."""
-        if self.rehearsal is not None:
-            return nullcontext()
-        addresses = [instrument.address for instrument in self.bench.instruments.values()]
-        return locked(addresses, who=f"the sweep of serial number {self.serial}")
+    def _who(self) -> str:
+        """Return who has the instruments, for whoever comes second; a rehearsal's are its own."""
+        return "" if self.rehearsal is not None else f"the sweep of serial number {self.serial}"
 
-    def _lifeline(self, bench: Bench) -> Lifeline:
-        """Return the process that switches the generator off should this one be killed."""
-        generator = bench.instruments["generator"]
-        return Lifeline.start(
-            generator.address,
-            dialect_text=bench.dialect_texts["generator"],
-            visa_library=bench.visa_library,
-            clock_path=bench.clock,
-            popen_options=detached(),
-            serial=generator.serial,
+    def _usable_thru(self, devices: Devices, bench: Bench, identities: Mapping[str, str]) -> tuple[Thru | None, str]:
+        """Return the stored thru if every condition of it holds, and what to tell (ThruRefused)."""
+        if self.thru is None:
+            return None, ""
+        asked = Planner(self.board, bench).asked()
+        devices.generator.be_safe()
+        devices.scope.reset()
+        real = asked_of_scope(devices, bench, self.board.stages, asked)
+        now = Now(identities, self.ambient, self.clock.utc(), real)
+        usable, told = thru_for(
+            self.thru, Path(self.thru_path), board=self.board, bench=bench, bench_path=self.bench_path, now=now
         )
+        return self.thru if usable else None, told
 
     def _sweep(self, devices: Devices, bench: Bench, journal: Journal) -> Sweep:
+        thru = journal.head["thru"]
+        known = paths(thru_from(thru).points) if thru else {}
         sweep = Sweep(
             self.board,
             bench,
@@ -156,11 +160,12 @@ class Job:
             progress=self.progress,
             keep_raw=self.keep_raw,
             start=journal.head["clock_start"],
+            planner=Planner(self.board, bench, known),
         )
         sweep.prepare()
         return sweep
 
-    def _head(self, bench: Bench, identities: Mapping[str, str]) -> dict[str, Any]:
+    def _head(self, bench: Bench, identities: Mapping[str, str], thru: Thru | None) -> dict[str, Any]:
         return {
             "run_id": self.run_id,
             "serial": self.serial,
@@ -171,7 +176,7 @@ class Job:
             "operator": self.operator_name or "not stated",
             "note": self.note,
             "ambient": self.ambient,
-            "thru": None,
+            "thru": None if thru is None else thru_plain(thru),
             "identities": dict(identities),
             "board": self.board.text,
             "bench": bench.text,

@@ -2,26 +2,25 @@
 
 from collections import Counter
 from collections.abc import Collection, Sequence
-from math import ceil, floor, log, log10
+from math import ceil, log, log10
 
 import numpy as np
 
-from bandproof.analysis.network import response
 from bandproof.analysis.planning import band_frequencies, dwell_after_step, plan_record, shift_from_mains
 from bandproof.analysis.types import FloatArray
 from bandproof.bench.circuit import Prediction, predict, predicted_response, stage_network, taps
 from bandproof.bench.errors import BadInput
 from bandproof.bench.evaluate import fit_points, usable
+from bandproof.bench.level import greatest_level
 from bandproof.bench.record import HUM_BELOW, hum_frequencies
-from bandproof.bench.thru import THRU, Ranges, thru_stage
+from bandproof.bench.thru import THRU, Asked, Ranges, thru_stage
 from bandproof.bench.types import Bench, Board, Point, Purpose, Stage, Step, Tone
 
-__all__ = ["Planner", "greatest_level"]
+__all__ = ["HEADROOM", "LOW_LEVEL", "Planner", "greatest_level", "thru_steps"]
 
 HEADROOM = 1.2  # ranges hold the expected peak + 20 %
 LOW_LEVEL = 0.1  # of the sweep's level: proves wiring and level before the board is driven
 LONGEST = 1.0  # s, of a record
-SWING_SHARE, SLEW_SHARE = 0.5, 0.25  # no op-amp output beyond these shares of what it can
 _QUIET_SAMPLES = 2048
 _MOVED = log(1.15)  # a centre further than this from where it was looked for is looked at again; arbitrary
 _MOST_BATCHES = 3
@@ -104,9 +103,20 @@ class Planner:
     def _seconds(self, stage: Stage) -> list[float]:
         """Return what each record of a stage's curve costs, as first planned."""
         if stage.name not in self._costs:
-            curve = self._curve(stage, self._predictions[stage.name], 1.0, 1.0, 0, self._look_at(stage), LOW_LEVEL)
-            self._costs[stage.name] = [step.dwell + step.duration + _OVERHEAD for step in curve]
+            self._costs[stage.name] = [step.dwell + step.duration + _OVERHEAD for step in self._first_curve(stage)]
         return self._costs[stage.name]
+
+    def _first_curve(self, stage: Stage) -> tuple[Step, ...]:
+        """Return a stage's curve where it is predicted to be."""
+        return self._curve(stage, self._predictions[stage.name], 1.0, 1.0, 0, self._look_at(stage), LOW_LEVEL)
+
+    def asked(self) -> tuple[Asked, ...]:
+        """Return what each stage's curve, where it is predicted to be, asks of the path."""
+        curves = [self._first_curve(stage) for stage in self._board.stages]
+        return tuple(
+            Asked(curve[0].ranges, curve[0].amplitude, (min(f), max(f)))
+            for curve, f in ((curve, [step.frequency for step in curve]) for curve in curves)
+        )
 
     def _stage_steps(self, stage: Stage, had: Sequence[Point], *, first: int) -> tuple[Step, ...]:
         prediction = self._predictions[stage.name]
@@ -246,52 +256,6 @@ def thru_steps(
         tones = (Tone(frequency, level),)
         steps.append(Step(first + i, path.name, "thru", tones, 0.0, record.duration, record.points, ranges))
     return tuple(steps)
-
-
-def greatest_level(board: Board, bench: Bench, stage: Stage, prediction: Prediction) -> float:
-    """Return the level in V peak a stage is swept at, two digits, rounded down.
-
-    Never above the bench's ceiling and the board's input maximum; with the parts anywhere in their tolerances the
-    op-amp's output stays below half its swing and a quarter of its slew rate.
-
-    Raises
-    ------
-    BadInput
-        No level above 1 mV is safe.
-    """
-    # Two octaves each way, so dense that no peak is missed by more than 0.1 %: (Q ln 16 / points)**2 / 2.
-    near = prediction.centre * np.geomspace(0.25, 4.0, max(121, ceil(62.0 * prediction.q)))
-    gain = _greatest(board, stage, near, np.ones_like(near))
-    slope = _greatest(board, stage, near, 2.0 * np.pi * near)
-    level = min(
-        bench.ceiling,
-        board.input_maximum,
-        SWING_SHARE * board.op_amp.swing / gain,
-        SLEW_SHARE * board.op_amp.slew / slope,
-    )
-    if level < 1e-3:
-        raise BadInput(f"stage {stage.name!r}: no level above 1 mV is safe; check the op-amp's swing and slew rate")
-    step = 10.0 ** (floor(log10(level)) - 1)
-    return round(floor(level / step * (1.0 + 1e-12)) * step, 9)
-
-
-def _greatest(board: Board, stage: Stage, frequency: FloatArray, weight: FloatArray) -> float:
-    """Return the greatest weighted |H| with every part at its worst end: the product of the parts' single effects.
-
-    For a band the product is above every corner of the tolerances (tests/bench/test_plan.py); their sum is not.
-    """
-    network, (node_in, node_out) = stage_network(board, stage), taps(board, stage)
-    ends = [(part, sign) for sign in (0.0, 1.0, -1.0) for part in stage.parts]
-    values = {
-        f"{stage.name}.{part.name}": np.array(
-            [part.value * (1.0 + sign * part.tolerance * (part is moved)) for moved, sign in ends]
-        )
-        for part in stage.parts
-    }
-    volts = np.abs(response(network, frequency, [node_in, node_out], values=values))
-    nominal, up, down = (weight * volts[:, 1] / volts[:, 0]).max(axis=1).reshape(3, -1)
-    effects = np.maximum(np.maximum(up, down) / nominal, 1.0)
-    return float(nominal[0] * effects.prod())
 
 
 def _refuse_series(board: Board) -> None:

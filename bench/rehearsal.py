@@ -1,14 +1,19 @@
-"""The demo board, and the bench file of a rehearsal made for any board."""
+"""The demo board, the bench file of a rehearsal made for any board, and what was true of a rehearsal."""
 
+import json
+from collections.abc import Mapping
 from importlib import resources
+from pathlib import Path
+from typing import Any
 
 from bandproof.bench.bench_file import parse_bench
 from bandproof.bench.board_file import parse_board
+from bandproof.bench.circuit import predict
 from bandproof.bench.errors import BadInput
 from bandproof.bench.thru import THRU
 from bandproof.bench.types import Bench, Board
 
-__all__ = ["demo_board", "demo_text", "rehearsal_bench"]
+__all__ = ["demo_board", "demo_text", "rehearsal_bench", "write_truth"]
 
 DEMO_BOARD = "talkback.board.toml"
 DEMO_BENCH = "simulated.bench.toml"
@@ -55,3 +60,16 @@ def rehearsal_bench(board: Board) -> Bench:
     if board.power is not None:
         head += _SUPPLY
     return parse_bench(head + mark + comment + "".join(wires), DEMO_BENCH)
+
+
+def write_truth(path: Path, board: Board, drawn: Mapping[str, Mapping[str, float]], world: Mapping[str, Any]) -> None:
+    """Write what is true of a drawn board, its figures by definition, and of the simulated world it is in."""
+    stages: dict[str, Any] = {}
+    for stage in board.stages:
+        try:
+            true = predict(board, stage, drawn[stage.name])
+            figures: dict[str, Any] = {"centre_Hz": true.centre, "q": true.q, "gain": true.gain}
+        except ValueError as no_band:
+            figures = {"no_band": str(no_band)}
+        stages[stage.name] = {"parts": drawn[stage.name], **figures}
+    path.write_text(json.dumps({"stages": stages, **world}, indent=1) + "\n", encoding="utf-8")

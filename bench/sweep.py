@@ -6,10 +6,11 @@ signal if hands did the wiring, one low-level point, the curve, the closing poin
 from the first to the last point of a stage: switching it per point would wear its relay and restart the settling.
 """
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 from datetime import datetime
 from math import inf
+from typing import Protocol
 
 from bandproof.analysis.types import FloatArray
 from bandproof.bench.errors import BenchFault
@@ -33,6 +34,16 @@ LONG_PAUSE = 60.0  # s between two records, beyond what they take; arbitrary
 REPEATS = 2  # most repetitions of a record that had not settled
 
 
+class Plans(Protocol):
+    """What asks for records: a board's plan, or that of the path itself."""
+
+    def more(self, points: Sequence[Point]) -> tuple[Step, ...]:
+        """Return the next batch of steps; empty when there is enough."""
+
+    def seconds_left(self, points: Sequence[Point]) -> float:
+        """Return an estimate of the bench seconds still needed."""
+
+
 @dataclass
 class Sweep:
     """One run of a board on opened instruments.
@@ -49,7 +60,7 @@ class Sweep:
     journal: Journal
     stop: Stop = field(default_factory=Stop)
     progress: Callable[[int, int, float, str], None] = lambda done, planned, left, stage: None
-    planner: Planner | None = None
+    planner: Plans | None = None
     repeats: int = REPEATS
     dwell_factor: float = 1.0
     keep_raw: bool = False
@@ -83,7 +94,7 @@ class Sweep:
         OSError
             The journal cannot be written.
         """
-        planner = self.planner or Planner(self.board, self.bench)
+        planner: Plans = self.planner or Planner(self.board, self.bench)
         while steps := self._next(planner):
             for step in steps:
                 self._carry_out(step)
@@ -130,7 +141,7 @@ class Sweep:
         """Let the bench time go on at so many seconds."""
         self._start = self.clock.now() - elapsed
 
-    def _next(self, planner: Planner) -> tuple[Step, ...]:
+    def _next(self, planner: Plans) -> tuple[Step, ...]:
         """Return the steps planned and not yet measured, else the next batch, which is kept before it is run."""
         waiting = tuple(self.journal.steps[len(self.journal.points) :])
         if waiting:
@@ -256,12 +267,9 @@ class Sweep:
         )
 
     def _set_scope(self, step: Step, channels: list[int]) -> tuple[float, float]:
-        found = [
-            self.devices.scope.set_channel(channel, range=wanted, probe_factor=self.bench.probe_factors[channel]).range
-            for channel, wanted in zip(channels, step.ranges, strict=True)
-        ]
+        found = self.devices.set_ranges(channels, step.ranges, self.bench.probe_factors)
         self.devices.scope.set_record(step.duration, step.samples)
-        return found[0], found[1]
+        return found
 
     def _set_generator(self, step: Step) -> tuple[float, float]:
         """Set the tone and make sure the output is on (or off, for a record without signal)."""

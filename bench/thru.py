@@ -8,16 +8,27 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
+from scipy.special import chdtrc
 
 from bandproof.analysis.thru import FEWEST, ThruFit, fit_thru
 from bandproof.analysis.types import ComplexArray, FloatArray
 from bandproof.bench.types import Bench, Board, Point, Stage
 
-__all__ = ["THRU", "Path", "Ranges", "corrected", "paths", "thru_stage"]
+__all__ = ["THRU", "Asked", "Path", "Ranges", "corrected", "paths", "thru_stage"]
 
 THRU = "thru"
 Ranges = tuple[float, float]
+_SIGNIFICANT = 1e-4  # noise alone makes a chi-square this unlikely once in ten thousand thrus
 _SPAN = 1.6  # times beyond its ends that a thru may be used; the model is smooth, and it was asked to reach further
+
+
+@dataclass(frozen=True, slots=True)
+class Asked:
+    """What a curve asks of the path: ranges in V as asked for, its level in V, its span in Hz."""
+
+    ranges: Ranges
+    level: float
+    span: tuple[float, float]
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -27,6 +38,16 @@ class Path:
     fit: ThruFit
     time: float
     levels: tuple[float, float]
+
+    @property
+    def probability(self) -> float:
+        """How likely noise alone leaves a chi-square as large as the fit's."""
+        return float(chdtrc(self.fit.dof, self.fit.chi_square)) if self.fit.dof else 1.0
+
+    @property
+    def is_smooth(self) -> bool:
+        """Whether noise explains what the smooth model leaves."""
+        return self.probability >= _SIGNIFICANT
 
     def reaches(self, frequency: float) -> bool:
         """Whether a frequency lies in its span."""

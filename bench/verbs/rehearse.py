@@ -1,6 +1,5 @@
 """``rehearse``: the whole job on simulated instruments, over real TCP."""
 
-import json
 import tempfile
 from collections.abc import Iterator
 from contextlib import closing, contextmanager
@@ -13,6 +12,7 @@ import click
 from bandproof.bench.errors import BadInput
 from bandproof.bench.reading import nearest
 from bandproof.bench.types import Bench, Board, Instrument
+from bandproof.bench.verbs.conditions import ambient_of
 from bandproof.bench.verbs.run import carried_out, job_of, of_head
 
 if TYPE_CHECKING:
@@ -48,6 +48,7 @@ Drawn = dict[str, dict[str, float]]
     show_default=True,
     help="Virtual: bench time passes at once. Real: it is waited for.",
 )
+@click.option("--ambient", help='Temperature of the room, such as "23 °C"; not stated without.')
 @click.option("--raw", is_flag=True, help="Keep every record in the run file.")
 @click.option("--folder", type=click.Path(path_type=Path), default=Path("rehearsals"), show_default=True)
 @click.option("--serve", is_flag=True, help="Only run the simulated bench, in real time, until Ctrl-C.")
@@ -59,6 +60,7 @@ def command(
     faults: tuple[str, ...],
     imperfections: tuple[str, ...],
     pace: str,
+    ambient: str | None,
     raw: bool,
     folder: Path,
     serve: bool,
@@ -86,7 +88,8 @@ def command(
     bench = rehearsal_bench(board)
     if serve:
         return _serve(rehearsal, board, bench, folder)
-    return _rehearse(rehearsal, board, bench, folder, raw, as_json)
+    facts = {"ambient": ambient_of(ambient), "keep_raw": raw}
+    return _rehearse(rehearsal, board, bench, folder, facts, as_json)
 
 
 @dataclass(frozen=True)
@@ -220,14 +223,18 @@ def simulated(
             yield _at(bench, server.ports, time_file), clock
 
 
-def _rehearse(rehearsal: Rehearsal, board: Board, bench: Bench, folder: Path, raw: bool, as_json: bool) -> int:
+def _rehearse(
+    rehearsal: Rehearsal, board: Board, bench: Bench, folder: Path, facts: dict[str, Any], as_json: bool
+) -> int:
     from bandproof.bench.job import new_attempt
     from bandproof.bench.mishaps import struck
+    from bandproof.bench.rehearsal import write_truth
 
     serial = f"rehearsal-{rehearsal.seed}"
     place, attempt = new_attempt(folder, serial)
     world = rehearsal.world(board, bench, attempt)
-    _write_truth(place / "truth.json", board, rehearsal.drawn(board), world)
+    facts_of_world = {"imperfections": world.imperfections.as_plain(), "seed": world.seed, "run": world.run}
+    write_truth(place / "truth.json", board, rehearsal.drawn(board), facts_of_world)
     with simulated(world, bench, pace=rehearsal.pace) as (reachable, clock):
         job = job_of(
             board=board,
@@ -237,9 +244,9 @@ def _rehearse(rehearsal: Rehearsal, board: Board, bench: Bench, folder: Path, ra
             run_id=f"rehearsal-{rehearsal.seed}-{attempt}",
             folder=place,
             clock=clock,
-            keep_raw=raw,
             rehearsal=asdict(rehearsal),
             begin_journal=struck(rehearsal.split_faults()[0], clock),
+            **facts,
         )
         return carried_out(job, as_json=as_json)
 
@@ -264,21 +271,6 @@ def resume_rehearsal(journal: "Journal", folder: Path, *, as_json: bool) -> int:
     with simulated(world, bench, t=t, pace=rehearsal.pace) as (reachable, clock):
         job = job_of(board=board, bench=reachable, folder=folder, clock=clock, **of_head(head))
         return carried_out(job, journal=journal, as_json=as_json)
-
-
-def _write_truth(path: Path, board: Board, drawn: Drawn, world: "World") -> None:
-    from bandproof.bench.circuit import predict
-
-    stages: dict[str, Any] = {}
-    for stage in board.stages:
-        try:
-            true = predict(board, stage, drawn[stage.name])
-            figures: dict[str, Any] = {"centre_Hz": true.centre, "q": true.q, "gain": true.gain}
-        except ValueError as no_band:
-            figures = {"no_band": str(no_band)}
-        stages[stage.name] = {"parts": drawn[stage.name], **figures}
-    truth = {"stages": stages, "imperfections": world.imperfections.as_plain(), "seed": world.seed, "run": world.run}
-    path.write_text(json.dumps(truth, indent=1) + "\n", encoding="utf-8")
 
 
 def _serve(rehearsal: Rehearsal, board: Board, bench: Bench, folder: Path) -> int:

@@ -11,6 +11,7 @@ from typing import TYPE_CHECKING, Any
 import click
 
 from bandproof.bench.types import Bench
+from bandproof.bench.verbs.conditions import person, stated
 
 if TYPE_CHECKING:
     from bandproof.bench.finish import Outcome
@@ -118,13 +119,26 @@ def worst_code(codes: Sequence[int]) -> int:
     "--folder", type=click.Path(path_type=Path), default=Path("runs"), show_default=True, help="Where runs go."
 )
 @click.option("--operator", "name", default="", help="Who does this; kept in the run file.")
+@click.option("--ambient", help='Temperature of the room, such as "23 °C"; kept in the run file.')
 @click.option("--note", default="", help="A remark; kept in the run file.")
+@click.option("--without-thru", is_flag=True, help="Leave out the thru that is stored beside the bench file.")
 @click.option("--raw", is_flag=True, help="Keep every record in the run file.")
 @click.option("--json", "as_json", is_flag=True, help="Print the result object and nothing else.")
 def command(
-    board_path: Path, bench_path: str | None, serial: str, folder: Path, name: str, note: str, raw: bool, as_json: bool
+    board_path: Path,
+    bench_path: str | None,
+    serial: str,
+    folder: Path,
+    name: str,
+    ambient: str | None,
+    note: str,
+    without_thru: bool,
+    raw: bool,
+    as_json: bool,
 ) -> int:
     """Sweep BOARD on a real bench: every stage, fit, compare with the design, decide, keep the record.
+
+    A thru that `bandproof thru` stored beside the bench file is used while all its conditions hold.
 
     \b
     Example:
@@ -133,11 +147,14 @@ def command(
     from bandproof.bench.bench_file import check_wiring, find_bench, read_bench
     from bandproof.bench.board_file import read_board
     from bandproof.bench.job import new_attempt
+    from bandproof.bench.thru_file import read_thru, thru_path
 
     path, why = find_bench(bench_path)
     board, bench = read_board(board_path), read_bench(path)
     check_wiring(board, bench, str(path))
     click.echo(f"bench: {path} ({why})", err=as_json)
+    thru = None if without_thru else read_thru(thru_path(path))
+    operator, room = stated(name, ambient)
     place, attempt = new_attempt(folder, serial)
     job = job_of(
         board=board,
@@ -147,8 +164,11 @@ def command(
         run_id=secrets.token_hex(8),
         folder=place,
         clock=clock_of(bench),
-        operator_name=name,
+        operator_name=operator,
         note=note,
+        ambient=room,
+        thru=thru,
+        thru_path=str(thru_path(path)),
         keep_raw=raw,
         bench_path=str(path.resolve()),
     )
@@ -158,11 +178,10 @@ def command(
 def job_of(**facts: Any) -> "Job":
     """Return a job with a person to ask where there is a terminal, progress on standard error, a flag to stop."""
     from bandproof.bench.job import Job
-    from bandproof.bench.operator import Absent, AtTerminal
     from bandproof.bench.stop import Stop
 
     stop = Stop()
-    operator = AtTerminal(_ask, stop) if sys.stdin.isatty() and not facts.get("rehearsal") else Absent()
+    operator = person(stop, there=not facts.get("rehearsal"))
     return Job(operator=operator, stop=stop, progress=Progress(), **facts)
 
 
@@ -190,8 +209,3 @@ def wall() -> float:
     from bandproof.drivers.clock import RealClock
 
     return RealClock().now()
-
-
-def _ask(request: str) -> str:
-    click.echo(request, err=True, nl=False)
-    return input()

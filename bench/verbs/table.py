@@ -21,6 +21,7 @@ VERBS = (
     Verb("begin", "begin", "write board, bench and dialect files to start one's own from"),
     Verb("rehearse", "rehearse", "the whole job on simulated instruments"),
     Verb("bench", "contact", "walk the dialects of a bench on its instruments, leave it safe"),
+    Verb("thru", "thru", "measure the path itself, both probes on one node, for later sweeps"),
     Verb("sweep", "run", "sweep a board on a real bench, fit, compare, record"),
     Verb("resume", "resume", "go on where a run stopped"),
     Verb("fit", "refit", "fit stored runs again, changing nothing that was measured"),
