@@ -55,9 +55,10 @@ def response_noise(frequency: FloatArray, response: ComplexArray) -> Noise:
 
     The lowest order is taken whose successor gives no less. Bends make the deviation too large, never too small: from
     30 points over the -3 dB bandwidth of a band, down to a noise of 1e-4 of its gain, no bias is seen; with 20 it is
-    5 % down to 1e-3 and more for less noise (27 % at 1e-5), with 10 up to half. Then take the noise of the residual of a fit with leakage instead: a misfit bends little.
-    The fit takes little of it away: 3 % of the deviation at 12 points, nothing at 20. Noise that is alike in
-    neighbouring points (smoothing) is underestimated; noise that varies over the sweep is averaged.
+    5 % down to a noise of 1e-3, more for less (27 % at 1e-5), with 10 up to half. Then take the noise of the residual
+    of a fit with leakage instead: a misfit bends little. The fit takes little of it away: 3 % of the deviation at 12
+    points, nothing at 20. Noise that is alike in neighbouring points (smoothing) is underestimated; noise that varies
+    over the sweep is averaged.
 
     Parameters
     ----------

@@ -135,6 +135,14 @@ def test_band_with_leakage_agrees_with_another_library_s_q_circle_fit(result, wh
     assert ours == pytest.approx(q, rel=1e-7)
 
 
+def test_the_help_lists_every_model(imported):
+    from bandproof.bench.model_choice import MODELS
+
+    code, out, _ = imported("--help")
+    assert code == PASS
+    assert f"[{'|'.join(MODELS)}]" in re.sub(r"\s", "", out)
+
+
 # --- a simulated band whose true values are known ---
 
 
@@ -179,6 +187,25 @@ def test_an_uncertainty_stated_far_too_small_is_lack_of_fit(result, noisy):
     assert any(
         "the uncertainty is stated too small, or this is no second-order band" in text for text in found["alarms"]
     )
+
+
+def test_a_misfit_that_moves_nothing_much_is_a_row_of_the_budget_and_told():
+    from bandproof.bench.imported import read_off
+    from bandproof.bench.response_file import Response
+
+    f = np.linspace(700.0, 1400.0, 60)
+    alternating = 3e-3 * np.where(np.arange(60) % 2, 1, -1)  # no smooth model follows it, none is moved by it
+    found = read_off(Response("given", f, 2 / (1 + 5j * (f / 1e3 - 1e3 / f)) + alternating, np.full(60, 1e-3)))
+    assert found.choice.significant
+    assert not found.choice.material
+    assert found.stage.model == "band+delay"
+    assert "less than a third of U, the shift is in the budget" in found.stage.alarms[0]
+    for quantity, budget in found.budgets.items():
+        noise, misfit = budget.rows
+        # uniform with the shift as half-width: its variance is a third of the square (JCGM 100:2008, 4.3.7)
+        assert misfit.standard_uncertainty**2 == pytest.approx(found.choice.shifts[quantity] ** 2 / 3)
+        assert budget.u == pytest.approx(np.hypot(noise.contribution, misfit.contribution))
+        assert misfit.contribution > 0.0
 
 
 def test_u_of_an_estimated_noise_is_that_of_a_t_distribution(result):
