@@ -2,8 +2,8 @@
 
 Both probes on one node read a ratio that is 1 only on an ideal bench: the channels' gains differ, one is later than the
 other, and a 10:1 probe that is not compensated goes over from one division to another round its corner. The model is
-ln ratio = g - j 2π f τ + D s(f / f_m) with s(x) = jx / (1 + jx): a zero and a pole D apart (in ln f) round f_m, right to
-D³/24. It is linear but for f_m, which is looked for on a grid and then taken along as one more unknown.
+ln ratio = g - j 2π f τ + D s(f / f_m) with s(x) = jx / (1 + jx): a zero and a pole D apart (in ln f) round f_m, right
+to D³/24. It is linear but for f_m, which is looked for on a grid and then taken along as one more unknown.
 """
 
 from __future__ import annotations

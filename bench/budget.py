@@ -3,7 +3,7 @@
 The fit's linear response carries what a source does to the points to f0, Q and gain.
 """
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import replace
 from math import inf
 
@@ -12,7 +12,7 @@ import numpy as np
 from bandproof.analysis.sensitivity import figure_response
 from bandproof.analysis.types import FloatArray
 from bandproof.analysis.uncertainty import Combined, Row, combine
-from bandproof.bench.sources import Measured, Source, sources
+from bandproof.bench.sources import Measured, Source
 from bandproof.bench.types import QUANTITIES, Quantity
 
 __all__ = ["ROWS", "budget_plain", "budgets", "dominating"]
@@ -46,19 +46,18 @@ _ELSEWHERE = {
 }
 
 
-def budgets(measured: Measured) -> dict[Quantity, Combined]:
-    """Return the combined budget of each figure, all rows in it."""
+def budgets(measured: Measured, listed: Sequence[Source]) -> dict[Quantity, Combined]:
+    """Return the combined budget of each figure from the sources but noise, all rows in it."""
     fit = measured.fit
     frequency = np.array([point.frequency for point in measured.points])
     moved = figure_response(fit.theta[0], fit.free, frequency, measured.covariance)
     values = {"centre": float(fit.f0[0]), "q": float(fit.q[0]), "gain": float(abs(fit.gain[0]))}
     noise = {"centre": float(fit.u_f0[0]), "q": float(fit.u_q[0]), "gain": float(fit.u_gain[0])}
-    found = sources(measured)
     return {
         quantity: combine(
             [
                 Row(ROWS[0], "A", "normal", noise[quantity], 1.0, inf, "noise of the records, through the fit"),
-                *(_row(source, quantity, moved[i], values[quantity]) for source in found),
+                *(_row(source, quantity, moved[i], values[quantity]) for source in listed),
             ]
         )
         for i, quantity in enumerate(QUANTITIES)

@@ -1,6 +1,7 @@
 """From points to conclusions: the fit of each stage, its figures with their uncertainty, compared with the design."""
 
 from collections.abc import Mapping, Sequence
+from dataclasses import replace
 from datetime import datetime
 from math import isfinite, nan
 
@@ -10,16 +11,15 @@ from bandproof.analysis.decision import worst
 from bandproof.analysis.fit import fit_bands
 from bandproof.analysis.models import band_response
 from bandproof.analysis.types import FloatArray
-from bandproof.analysis.uncertainty import Combined
 from bandproof.bench.budget import budgets
 from bandproof.bench.circuit import predict
 from bandproof.bench.comparison import compared, outside_by_design
-from bandproof.bench.levels import level_alarms
+from bandproof.bench.linear import level_alarms
 from bandproof.bench.misfit import StageFit, arrays, look_for_misfit
 from bandproof.bench.picture import StageView
-from bandproof.bench.sources import Measured
+from bandproof.bench.sources import Measured, sources, systematic
 from bandproof.bench.thru import Path, Ranges, corrected, paths
-from bandproof.bench.types import QUANTITIES, Bench, Board, Point, Quantity, Run, Stage, StageResult
+from bandproof.bench.types import QUANTITIES, Bench, Board, Point, Run, Stage, StageResult
 
 __all__ = ["StageFit", "evaluate", "evaluate_stage", "fit_points", "known_paths", "usable", "views"]
 
@@ -109,11 +109,13 @@ def evaluate_stage(
     """Return what is concluded about one stage from its points and the path known, in a room at ``ambient`` °C."""
     found = fit_points(points, known)
     prediction = predict(board, stage)
-    misfit = look_for_misfit(board, bench, stage, points, found)
-    rows = _budgets(board, bench, stage, points, found, {}, ambient)
+    seen = _measured(board, bench, stage, points, found, ambient)
+    listed = sources(seen) if seen else []
+    misfit = look_for_misfit(board, bench, points, found, systematic(listed, len(found.points)))
+    rows = budgets(seen, listed) if seen else {}
     doubt = found.reason or misfit.doubt({name: budget.expanded for name, budget in rows.items()})
-    if misfit.shifts and not doubt:
-        rows = _budgets(board, bench, stage, points, found, misfit.shifts, ambient)
+    if seen and misfit.shifts and not doubt:
+        rows = budgets(seen, sources(replace(seen, shifts=misfit.shifts)))
     figures = {name: compared(stage, name, prediction, found.fit, rows.get(name), doubt) for name in QUANTITIES}
     fit = found.fit
     alarms = [doubt] if doubt else []
@@ -137,21 +139,14 @@ def evaluate_stage(
     )
 
 
-def _budgets(
-    board: Board,
-    bench: Bench,
-    stage: Stage,
-    points: Sequence[Point],
-    found: StageFit,
-    shifts: Mapping[Quantity, float],
-    ambient: float | None,
-) -> dict[Quantity, Combined]:
-    """Return each figure's budget; none without a fit."""
+def _measured(
+    board: Board, bench: Bench, stage: Stage, points: Sequence[Point], found: StageFit, ambient: float | None
+) -> Measured | None:
+    """Return a stage as measured, None without a fit."""
     if found.fit is None:
-        return {}
+        return None
     quiet = next((point for point in points if point.purpose == "no-signal"), None)
-    measured = (found.points, found.covariance, found.paths, found.fit, quiet, shifts, ambient)
-    return budgets(Measured(board, bench, stage, *measured))
+    return Measured(board, bench, stage, found.points, found.covariance, found.paths, found.fit, quiet, {}, ambient)
 
 
 def views(run: Run, stages: Sequence[StageResult]) -> list[StageView]:

@@ -8,9 +8,11 @@ import numpy as np
 from scipy.special import chdtrc
 
 from bandproof.analysis.fit import BandFit, fit_bands
+from bandproof.analysis.models import band_response
+from bandproof.analysis.sensitivity import explained_chi_square, figure_response
 from bandproof.analysis.types import ComplexArray, FloatArray
 from bandproof.bench.thru import Path
-from bandproof.bench.types import Bench, Board, Point, Quantity, Stage
+from bandproof.bench.types import Bench, Board, Point, Quantity
 
 __all__ = ["Misfit", "StageFit", "arrays", "look_for_misfit"]
 
@@ -18,7 +20,7 @@ _SIGNIFICANT = 1e-4  # noise alone makes a chi-square this unlikely once in ten 
 _MATERIAL = 1.0 / 3.0  # of U: a shift below it is not worth a doubt
 _NOISE = 5.0  # standard uncertainties a closing point may differ by
 _DRIFTED = 0.01  # and this part of it; arbitrary, far above what a bench drifts in a minute
-_CERTAIN = 3.0  # standard uncertainties of the delay
+_CERTAIN = 3.0  # times U of the delay
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -34,6 +36,13 @@ class StageFit:
     response: ComplexArray
     covariance: FloatArray
     paths: tuple[Path | None, ...]
+
+    @property
+    def residual(self) -> ComplexArray:
+        """Response less fit, (N,)."""
+        assert self.fit is not None
+        residual: ComplexArray = self.response - band_response(self.fit.theta, self.frequency[None])[0]
+        return residual
 
     @property
     def frequency(self) -> FloatArray:
@@ -70,7 +79,7 @@ class Misfit:
         if moved:
             return (
                 f"the points do not follow a second-order band (chi-square {self.reduced_chi_square:.3g} times what "
-                f"noise gives); a leakage would move {' and '.join(moved)} by more than a third of U"
+                f"noise and declared errors give); a leakage would move {' and '.join(moved)} by more than a third of U"
             )
         return ""
 
@@ -81,17 +90,23 @@ def arrays(points: Sequence[Point]) -> tuple[FloatArray, ComplexArray, FloatArra
     return np.array([p.frequency for p in points]), np.array([p.response for p in points]), covariance
 
 
-def look_for_misfit(board: Board, bench: Bench, stage: Stage, points: Sequence[Point], found: StageFit) -> Misfit:
-    """Return what speaks against a stage's fit."""
+def look_for_misfit(
+    board: Board, bench: Bench, points: Sequence[Point], found: StageFit, systematic: ComplexArray
+) -> Misfit:
+    """Return what speaks against a stage's fit; ``systematic`` (K, N) are known errors of the points, of unit size."""
     distorted = max((p.distortion for p in found.points if "distorted" in p.flags), default=0.0)
     alarms = _overloads(points)
     if found.fit is None or not found.fit.dof[0]:
         return Misfit(nan, False, {}, distorted, "", tuple(alarms))
-    chi_square, dof = float(found.fit.chi_square[0]), float(found.fit.dof[0])
-    significant = float(chdtrc(dof, chi_square * dof)) < _SIGNIFICANT
-    alarms += _delay(board, bench, found)
+    fit, dof = found.fit, float(found.fit.dof[0])
+    data = (fit.theta[0], fit.free, found.frequency, found.covariance)
+    squares = explained_chi_square(*data, found.residual, systematic)
+    significant = float(chdtrc(dof, squares)) < _SIGNIFICANT
+    moved = figure_response(*data)[3]  # the delay's
+    effects = moved[:, 0] @ systematic.real.T + moved[:, 1] @ systematic.imag.T
+    alarms += _delay(board, bench, found, float(np.hypot(fit.u_delay[0], np.linalg.norm(effects))))
     shifts = _with_leakage(found) if significant else {}
-    return Misfit(chi_square, significant, shifts, distorted, _changed(points), tuple(alarms))
+    return Misfit(squares / dof, significant, shifts, distorted, _changed(points), tuple(alarms))
 
 
 def _changed(points: Sequence[Point]) -> str:
@@ -132,11 +147,11 @@ def _overloads(points: Sequence[Point]) -> list[str]:
     return [f"{len(lost)} records were overloaded (range of the output tap up to {reach:.3g} V) and left out"]
 
 
-def _delay(board: Board, bench: Bench, found: StageFit) -> list[str]:
+def _delay(board: Board, bench: Bench, found: StageFit, u: float) -> list[str]:
     """Return an alarm about the bench when the fitted delay is beyond what op-amp and channel skew explain."""
     if found.fit is None:
         return []
-    delay, u = float(found.fit.delay[0]), float(found.fit.u_delay[0])
+    delay = float(found.fit.delay[0])
     skew = 0.0 if all(found.paths) else 2.0 * bench.accuracy.channel_skew  # a thru holds it
     allowed = 1.0 / (2.0 * pi * board.op_amp.gbw) + skew + _CERTAIN * u
     if abs(delay) <= allowed:

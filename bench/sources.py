@@ -4,7 +4,7 @@ A source is told by what it does to the points (relative change of each response
 independent draw); one that does not apply says why it is 0.
 """
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from math import inf, pi, sqrt
 from typing import Literal
@@ -18,7 +18,7 @@ from bandproof.bench.record import HUM_BELOW
 from bandproof.bench.thru import Path
 from bandproof.bench.types import Bench, Board, Point, Quantity, Stage
 
-__all__ = ["Measured", "Source", "departure", "sources"]
+__all__ = ["Measured", "Source", "departures", "sources", "systematic"]
 
 _TWO = sqrt(2.0 / 3.0)  # standard uncertainty of the difference of two uniform errors, per half-width of each
 _ONE = sqrt(1.0 / 3.0)
@@ -91,6 +91,12 @@ def sources(measured: Measured) -> list[Source]:
             "definition", "0, because figure and limits share one definition: peak, half-power points, designed value"
         ),
     ]
+
+
+def systematic(listed: Sequence[Source], count: int) -> ComplexArray:
+    """Return what one standard uncertainty of each source does to the points, relative, (K, N)."""
+    shapes = [source.u * source.shapes for source in listed if source.shapes is not None and source.u]
+    return np.concatenate(shapes) if shapes else np.zeros((0, count), dtype=np.complex128)
 
 
 def _ones(measured: Measured) -> ComplexArray:
@@ -195,22 +201,27 @@ def _linearity(measured: Measured) -> list[Source]:
     shape) makes the sine of A steps grow by 2 L J1(π A / full), J1 the Bessel function, by definition of J1.
     """
     accuracy, found = measured.bench.accuracy, []
-    for channel, where, sign in ((0, "in", -1.0), (1, "out", 1.0)):
-        shape = [
-            sign * departure(point.levels, point, channel)
-            - (sign * departure(path.levels, point, channel) if path else 0.0)
-            for point, path in zip(measured.points, measured.paths, strict=True)
-        ]
+    for channel, where in enumerate(("in", "out")):
         reason = f"{_stated(measured, 'linearity')}: an S of {accuracy.linearity:.3g} LSB"
         reason += ", against that of the thru" if any(measured.paths) else ""
-        shapes = np.array([shape], dtype=np.complex128)
+        shapes = departures(measured.points, measured.paths, channel)[None]
         found.append(
             Source(f"converter linearity, tap {where}", reason, _ONE * accuracy.linearity, "uniform", shapes=shapes)
         )
     return found
 
 
-def departure(levels: tuple[float, float], point: Point, channel: int) -> float:
+def departures(points: Sequence[Point], along: Sequence[Path | None], channel: int) -> ComplexArray:
+    """Return the relative change (N,) of points, against their thru, per step that a channel departs from a line."""
+    sign = -1.0 if channel == 0 else 1.0
+    changes = [
+        _growth(point.levels, point, channel) - (_growth(path.levels, point, channel) if path else 0.0)
+        for point, path in zip(points, along, strict=True)
+    ]
+    return sign * np.array(changes, dtype=np.complex128)
+
+
+def _growth(levels: tuple[float, float], point: Point, channel: int) -> float:
     """Return the relative growth of a channel's sine of a level in V per step of departure, on a point's range."""
     from scipy.special import j1
 
