@@ -105,7 +105,7 @@ def _row(ranges: "Ranges", path: "Measured") -> dict[str, Any]:
 def _table(rows: list[dict[str, Any]]) -> list[str]:
     from bandproof.bench.quantities import engineering
 
-    lines = [f"{'ranges':<18}{'span':<22}{'gain - 1 at its ends':<22}{'later by ± U':<20}chi²/dof"]
+    lines = [f"{'ranges':<18}{'span':<22}{'gain - 1 at its ends':<22}{'delay ± U':<20}chi²/dof"]
     for row in rows:
         ranges = ", ".join(engineering(reach, "V") for reach in row["ranges"])
         span = " to ".join(engineering(end, "Hz", 3) for end in row["span"])
