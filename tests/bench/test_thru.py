@@ -188,8 +188,8 @@ def test_the_stored_points_are_those_of_two_probe_dividers(made, console):
     """Outside: the RC divider of a 10:1 probe, 9 MΩ and C_p into 1 MΩ and C_s, by its impedances (common practice)."""
     quiet = {"nonlinearity": 0.0, "reseating": 0.0, "drift": 0.0, "range_gain": 0.0}
     bench = made(**(GROSS | quiet))
-    assert bench.measure(console)[0] == 0
-    points = read_thru(bench.thru).points
+    assert console("thru", bench.file)[0] == 0
+    points = [point for point in read_thru(bench.thru).points if point.ranges == (5.0, 5.0)]
     f = np.array([point.frequency for point in points])
     real = bench.world.imperfections
 
@@ -208,10 +208,10 @@ def test_the_stored_points_are_those_of_two_probe_dividers(made, console):
     u = np.sqrt([point.covariance[0] + point.covariance[2] for point in points])
     # |error|^2 / u^2 of a complex normal is exponential: above 5^2 once in 7e10.
     assert np.abs(measured / expected - 1).max() < 5 * u.max()
-    assert np.abs(first / second - 1).max() > 0.005  # the probes do differ
+    assert np.abs(first / second - 1).max() > 0.02  # the probes do differ
     (path,) = paths(points).values()
-    # Between the points, too; the model of one zero and one pole is right to D**3 / 24.
-    assert np.abs(path.fit.at(f) / measured - 1).max() < 5 * u.max()
+    # The fitted path is surer than a point; its zero and pole are right to D**3 / 24, 4e-5 at most here.
+    assert np.abs(path.fit.at(f) / expected - 1).max() < 3 * u.max()
 
 
 def test_without_a_board_the_ranges_are_those_of_the_ceiling_over_the_audio_band(made, console):
