@@ -19,7 +19,7 @@ if TYPE_CHECKING:
     from bandproof.bench.journal import Journal
     from bandproof.drivers.clock import Clock
 
-__all__ = ["carried_out", "clock_of", "command", "exit_code", "job_of", "of_head", "show", "wall"]
+__all__ = ["carried_out", "clock_of", "command", "exit_code", "job_of", "of_head", "show", "wall", "wrapped"]
 
 
 def clock_of(bench: Bench) -> "Clock":
@@ -58,7 +58,7 @@ def _duration(seconds: float) -> str:
 
 def show(outcome: "Outcome", wall_seconds: float, as_json: bool) -> int:
     """Print a job's outcome and return the exit code."""
-    from bandproof.bench.summary import summary_lines
+    from bandproof.bench.summary import dominating_lines, summary_lines
 
     if as_json:
         files = {kind: str(outcome.folder / name) if name else None for kind, name in outcome.result["files"].items()}
@@ -67,13 +67,13 @@ def show(outcome: "Outcome", wall_seconds: float, as_json: bool) -> int:
     run, result = outcome.run, outcome.result
     click.echo(run.board.title)
     click.echo(f"serial {run.serial}, attempt {run.attempt}, {run.started[:16].replace('T', ' ')} UTC")
-    for line in summary_lines(outcome.stages):
+    for line in [*summary_lines(outcome.stages), *dominating_lines(outcome.stages)]:
         click.echo(line)
     click.echo("")
     for alarm in result["alarms"]:
-        click.echo(_wrapped(f"note: {alarm}"))
+        click.echo(wrapped(f"note: {alarm}"))
     if run.ended == "cut_short":
-        click.echo(_wrapped(f"CUT SHORT: {run.reason}"))
+        click.echo(wrapped(f"CUT SHORT: {run.reason}"))
         click.echo(f"No verdict. What was measured is kept; to go on:  bandproof resume {outcome.folder}")
     else:
         click.echo(f"Board: {str(result['verdict']).upper()}   {_counts(outcome)}")
@@ -83,10 +83,13 @@ def show(outcome: "Outcome", wall_seconds: float, as_json: bool) -> int:
     for kind, name in result["files"].items():
         if name:
             click.echo(f"  {kind:<8} {outcome.folder / name}")
+    if run.thru is not None:
+        click.echo(f"  thru     a stored one, of {run.thru.started[:16].replace('T', ' ')} UTC")
     return exit_code(outcome)
 
 
-def _wrapped(text: str) -> str:
+def wrapped(text: str) -> str:
+    """Return a text on lines of 80 columns, all but the first indented."""
     return textwrap.fill(text, 80, subsequent_indent="  ", break_long_words=False, break_on_hyphens=False)
 
 

@@ -71,13 +71,15 @@ def _show(measured: "MeasuredThru", kept: Path, earlier: Path | None, as_json: b
         files = {"thru": str(kept), "earlier": str(earlier) if earlier else None}
         click.echo(json.dumps({**facts, "conditions": measured.thru.conditions, "files": files}, indent=1))
         return
+    from bandproof.bench.verbs.run import wrapped
+
     first, second = measured.thru.conditions["channels"]
     when = measured.thru.started[:16].replace("T", " ")
     click.echo(f"The path itself, channel {second} over channel {first}, {when} UTC")
     for line in _table(rows):
         click.echo(line)
     for note in notes:
-        click.echo(f"note: {note}")
+        click.echo(wrapped(f"note: {note}"))
     click.echo(f"  thru     {kept}")
     if earlier:
         click.echo(f"  earlier  {earlier}")
@@ -105,13 +107,13 @@ def _row(ranges: "Ranges", path: "Measured") -> dict[str, Any]:
 def _table(rows: list[dict[str, Any]]) -> list[str]:
     from bandproof.bench.quantities import engineering
 
-    lines = [f"{'ranges':<18}{'span':<22}{'gain - 1 at its ends':<22}{'delay ± U':<20}chi²/dof"]
+    lines = [f"{'ranges':<14}{'span':<20}{'gain - 1 at its ends':<21}{'delay ± U':<17}chi²/dof"]
     for row in rows:
         ranges = ", ".join(engineering(reach, "V") for reach in row["ranges"])
         span = " to ".join(engineering(end, "Hz", 3) for end in row["span"])
         gains = ", ".join(f"{100.0 * (gain - 1.0):+.3f} %" for gain in row["gain_at_ends"])
         skew = f"{1e9 * row['skew']:+.1f} ± {1e9 * row['skew_expanded_uncertainty']:.1f} ns"
-        lines.append(f"{ranges:<18}{span:<22}{gains:<22}{skew:<20}{row['reduced_chi_square'] or 0.0:.2f}")
+        lines.append(f"{ranges:<14}{span:<20}{gains:<21}{skew:<17}{row['reduced_chi_square'] or 0.0:.2f}")
     return lines
 
 
