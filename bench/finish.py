@@ -6,6 +6,7 @@ from typing import Any
 
 from bandproof.bench.bench_file import parse_bench
 from bandproof.bench.board_file import parse_board
+from bandproof.bench.budget import budget_plain
 from bandproof.bench.errors import BadInput, Stopped
 from bandproof.bench.evaluate import evaluate, views
 from bandproof.bench.journal import Journal
@@ -51,7 +52,9 @@ def finish(journal: Journal, folder: Path, problem: Exception | None, words: str
     else:
         stages = evaluate(run)
         result = result_object(run, stages, {"run": path.name, "picture": PICTURE, "report": None})
-        write_run(path, run, result, raw=journal.volts)
+        write_run(
+            path, run, result, raw=journal.volts, budget={stage.name: budget_plain(stage.budgets) for stage in stages}
+        )
     _draw(run, stages, folder / PICTURE)
     journal.ended(run.ended, path.name, digest_of(path))
     return Outcome(run, stages, result, folder)

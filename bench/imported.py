@@ -70,7 +70,7 @@ def _rows(choice: Choice, quantity: Quantity) -> list[Row]:
     noise = Row("repeatability", "A", "normal" if dof == inf else "t", u, 1.0, dof, f"noise {source}, through the fit")
     shift = abs(choice.shifts.get(quantity, 0.0))
     reason = "what a leakage would move" if choice.shifts else "0, because the model follows the points, or see alarms"
-    return [noise, Row("model misfit", "B", "uniform", shift / sqrt(3.0), 1.0, inf, reason)]
+    return [noise, Row("misfit", "B", "uniform", shift / sqrt(3.0), 1.0, inf, reason)]
 
 
 def _result(

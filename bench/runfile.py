@@ -69,17 +69,19 @@ def write_run(
     result: Mapping[str, Any],
     *,
     raw: Callable[[int], FloatArray | None] = lambda index: None,
+    budget: Mapping[str, Any] | None = None,
 ) -> str:
     """Write a run file beside its final name, sync it, rename it; return its digest.
 
-    ``raw`` gives the record (2, N) V kept for the run's point of that index, or None.
+    ``raw`` gives the record (2, N) V kept for the run's point of that index, or None; ``budget`` has the rows of each
+    figure by stage.
 
     Raises
     ------
     OSError
         The folder cannot be written. Nothing is left under the final name.
     """
-    image = _image(run, result, raw)
+    image = _image(run, result, raw, budget or {})
     digest = hashlib.sha256(image).hexdigest()
     part = path.with_name(path.name + ".part")
     try:
@@ -99,13 +101,15 @@ def _user_block(digest: str) -> bytes:
     return f"{SCHEMA} sha256={digest}\n".encode("ascii").ljust(_USER_BLOCK, b"\0")
 
 
-def _image(run: Run, result: Mapping[str, Any], raw: Callable[[int], FloatArray | None]) -> bytes:
+def _image(
+    run: Run, result: Mapping[str, Any], raw: Callable[[int], FloatArray | None], budget: Mapping[str, Any]
+) -> bytes:
     import h5py
 
     memory = io.BytesIO()
     with h5py.File(memory, "w", libver=("v110", "v110"), userblock_size=_USER_BLOCK) as file:
         file.attrs["schema"] = _fixed(SCHEMA)
-        for name, text in _texts(run, result).items():
+        for name, text in {**_texts(run, result), "budget": to_json(budget)}.items():
             _write_text(file, name, text)
         for stage in dict.fromkeys(point.stage for point in run.points):
             _write_points(file.create_group(f"points/{stage}"), [p for p in run.points if p.stage == stage])

@@ -71,6 +71,7 @@ def sources(measured: Measured) -> list[Source]:
     """Return every source but the records' noise, in the order of `ROWS`."""
     return [
         _reseating(measured),
+        Source("reproducibility", "0, because this bench has no history of a check standard: U does not hold it"),
         _thru(measured),
         _drift(measured),
         _ranges(measured),
@@ -83,7 +84,7 @@ def sources(measured: Measured) -> list[Source]:
         _settling(measured),
         _generator(measured),
         _temperature(measured),
-        Source("control position", "0, because the stage has no control"),
+        Source("controls", "0, because the stage has no control"),
         _misfit(measured),
         _channel_gain(measured),
         Source("source level", "0, because the ratio of two channels of one record knows no level"),
@@ -109,7 +110,7 @@ def _stated(measured: Measured, name: str) -> str:
 
 
 def _reseating(measured: Measured) -> Source:
-    size, name = measured.bench.accuracy.reseating, "reseating and reproducibility"
+    size, name = measured.bench.accuracy.reseating, "reseating"
     wire = measured.bench.wires[measured.stage.tap_out]
     if wire.route is None and not wire.by_hand:
         return Source(name, "0, because the probe was not moved")
@@ -163,7 +164,7 @@ def _ranges(measured: Measured) -> Source:
 
 
 def _compensation(measured: Measured) -> Source:
-    name, accuracy = "probe compensation", measured.bench.accuracy
+    name, accuracy = "compensation", measured.bench.accuracy
     if all(measured.paths):
         return Source(name, "0, because the thru holds both probes")
     divided = any(factor != 1.0 for factor in measured.bench.probe_factors.values())
@@ -176,7 +177,7 @@ def _compensation(measured: Measured) -> Source:
 
 
 def _loading(measured: Measured) -> Source:
-    name, accuracy, board = "probe and tap loading", measured.bench.accuracy, measured.board
+    name, accuracy, board = "tap loading", measured.bench.accuracy, measured.board
     taps = (measured.stage.tap_in, measured.stage.tap_out)
     resistances = [board.points[tap].source_resistance for tap in taps]
     if not any(resistances):
@@ -205,9 +206,7 @@ def _linearity(measured: Measured) -> list[Source]:
         reason = f"{_stated(measured, 'linearity')}: an S of {accuracy.linearity:.3g} LSB"
         reason += ", against that of the thru" if any(measured.paths) else ""
         shapes = departures(measured.points, measured.paths, channel)[None]
-        found.append(
-            Source(f"converter linearity, tap {where}", reason, _ONE * accuracy.linearity, "uniform", shapes=shapes)
-        )
+        found.append(Source(f"linearity {where}", reason, _ONE * accuracy.linearity, "uniform", shapes=shapes))
     return found
 
 
@@ -230,7 +229,7 @@ def _growth(levels: tuple[float, float], point: Point, channel: int) -> float:
 
 
 def _hum(measured: Measured) -> Source:
-    name = "hum residual"
+    name = "hum"
     quiet = measured.no_signal
     high = np.array([point.frequency >= HUM_BELOW for point in measured.points])
     if not high.any():
@@ -245,6 +244,8 @@ def _hum(measured: Measured) -> Source:
             # A mains slope over the record looks like a sine of it: slope x length / (pi x cycles).
             seen = 2.0 * pi * measured.bench.mains * rms * length / (pi * max(1.0, point.frequency * length))
             shapes[2 * i + channel, i] = high[i] * (1j if channel else 1.0) * seen / point.levels[channel]
+    if not shapes.any():
+        return Source(name, "0, because the record without signal shows none beyond the converter's own noise")
     return Source(name, "left by the record without signal, above 1 kHz not fitted", 1.0, "normal", shapes=shapes)
 
 
@@ -252,17 +253,17 @@ def _settling(measured: Measured) -> Source:
     count = len(measured.points)
     shapes = np.concatenate([np.eye(count), 1j * np.eye(count)])
     reason = "every dwell leaves at most 1e-4 of the response, of any phase"
-    return Source("settling residual", reason, 0.5 * _UNSETTLED, "normal", shapes=shapes)
+    return Source("settling", reason, 0.5 * _UNSETTLED, "normal", shapes=shapes)
 
 
 def _generator(measured: Measured) -> Source:
     reason = f"{_stated(measured, 'generator_frequency')}; f0 is traceable to the generator"
     u = _ONE * measured.bench.accuracy.generator_frequency
-    return Source("generator frequency", reason, u, "uniform", direct={"centre": 1.0})
+    return Source("generator", reason, u, "uniform", direct={"centre": 1.0})
 
 
 def _temperature(measured: Measured) -> Source:
-    name, declared, ambient = "board temperature", measured.board.temperature, measured.ambient
+    name, declared, ambient = "temperature", measured.board.temperature, measured.ambient
     if declared is None:
         return Source(name, "0, because the board file names no temperature that its limits hold at")
     away, room = _UNKNOWN_ROOM, "room not stated"
@@ -275,11 +276,11 @@ def _temperature(measured: Measured) -> Source:
 
 def _misfit(measured: Measured) -> Source:
     if not measured.shifts:
-        return Source("model misfit", "0, because the points show no lack of fit")
+        return Source("misfit", "0, because the points show no lack of fit")
     fit = measured.fit
     values = {"centre": float(fit.f0[0]), "q": float(fit.q[0]), "gain": float(abs(fit.gain[0]))}
     shifts = {name: shift / values[name] for name, shift in measured.shifts.items() if np.isfinite(shift)}
-    return Source("model misfit", "what a leakage would move", _ONE, "uniform", direct=shifts)
+    return Source("misfit", "what a leakage would move", _ONE, "uniform", direct=shifts)
 
 
 def _channel_gain(measured: Measured) -> Source:

@@ -1,16 +1,19 @@
 """What a person reads at the end of a run: one line per band and figure, 80 columns, plain text."""
 
+import textwrap
 from collections.abc import Iterable, Iterator, Mapping, Sequence
 from math import isfinite, log10
 from typing import TYPE_CHECKING
 
+from bandproof.analysis.uncertainty import share
+from bandproof.bench.budget import dominating
 from bandproof.bench.quantities import decimals, engineering, with_uncertainty
 from bandproof.bench.types import QUANTITIES, UNITS, Comparison, Quantity, StageResult, Verdict
 
 if TYPE_CHECKING:
     from bandproof.analysis.uncertainty import Combined
 
-__all__ = ["dB", "figure_lines", "summary_lines"]
+__all__ = ["budget_lines", "dB", "dominating_lines", "figure_lines", "summary_lines"]
 
 _TITLES: dict[Quantity, str] = {
     "centre": "Centre frequency f0",
@@ -33,6 +36,56 @@ def summary_lines(stages: Sequence[StageResult]) -> list[str]:
     for quantity in QUANTITIES if stages else ():
         lines += ["", _TITLES[quantity], *_row(_HEADINGS), *_rows(quantity, stages)]
     return lines
+
+
+def dominating_lines(stages: Sequence[StageResult]) -> list[str]:
+    """Return, per band, the largest row of each figure's budget and its share of the variance."""
+    shown = [stage for stage in stages if stage.budgets]
+    if not shown:
+        return []
+    widths = (22, 22, 22)
+    headings = "".join(f"{'  ' + name:<{width}}" for name, width in zip(("f0", "Q", "gain"), widths, strict=True))
+    lines = ["", "Largest part of each U (share of u²; all parts: bandproof fit RUN --budget)"]
+    lines.append(f"{'band':<12}{headings}".rstrip())
+    for stage in shown:
+        rows = [(dominating(stage.budgets[quantity]), stage.budgets[quantity]) for quantity in QUANTITIES]
+        cells = [f"  {row.name} {100.0 * share(row, budget):.0f} %" for row, budget in rows]
+        name = [stage.name] if len(stage.name) >= _WIDTHS[0] else []
+        text = "".join(f"{cell:<{width}}" for cell, width in zip(cells, widths, strict=True))
+        lines += [*name, f"{'' if name else stage.name:<12}{text}".rstrip()]
+    return lines
+
+
+def budget_lines(stage: StageResult) -> list[str]:
+    """Return the whole budget of a stage: every source, what it gives to each figure in %, where it comes from."""
+    if not stage.budgets:
+        return []
+    found = [stage.budgets[quantity] for quantity in QUANTITIES]
+    values = [stage.figures[quantity].measured for quantity in QUANTITIES]
+    largest = [dominating(budget) for budget in found]
+    lines = ["", f"Budget of {stage.name}: standard uncertainties in % of the figure, * the largest"]
+    lines.append(f"{'source':<17}{'':<14}{'f0':>9}{'Q':>10}{'gain':>10}")
+    for i, first in enumerate(found[0].rows):
+        rows = [budget.rows[i] for budget in found]
+        told = next((row for row in rows if row.contribution), None)
+        if told is None:
+            lines += _told(f"{first.name:<17}", first.reason)
+            continue
+        cells = [
+            f"{100.0 * row.contribution / value:9.4f}{'*' if row is most else ' '}"
+            for row, value, most in zip(rows, values, largest, strict=True)
+        ]
+        lines.append(f"{first.name:<17}{told.type + ' ' + told.distribution:<14}{''.join(cells)}".rstrip())
+        lines += _told(" " * 17, told.reason)
+    for name, size in (("u, combined", "u"), ("U, 95.45 %", "expanded")):
+        cells = [f"{100.0 * getattr(budget, size) / value:9.4f} " for budget, value in zip(found, values, strict=True)]
+        lines.append(f"{name:<31}{''.join(cells)}".rstrip())
+    factors = "".join(f"{budget.coverage_factor:9.2f} " for budget in found)
+    return [*lines, f"{'coverage factor U / u':<31}{factors}".rstrip()]
+
+
+def _told(head: str, reason: str) -> list[str]:
+    return textwrap.wrap(reason, 80, initial_indent=head, subsequent_indent=" " * 17, break_long_words=False)
 
 
 def figure_lines(measured: Mapping[Quantity, float], budgets: "Mapping[Quantity, Combined]") -> list[str]:

@@ -12,18 +12,21 @@ __all__ = ["command"]
 @click.command("fit")
 @click.argument("run_paths", metavar="RUN...", nargs=-1, required=True, type=click.Path(path_type=Path))
 @click.option("--json", "as_json", is_flag=True, help="Print the result object and nothing else; for one RUN.")
-def command(run_paths: tuple[Path, ...], as_json: bool) -> int:
+@click.option("--budget", "with_budget", is_flag=True, help="Print every source of uncertainty of every figure, too.")
+def command(run_paths: tuple[Path, ...], as_json: bool, with_budget: bool) -> int:
     """Fit stored runs again; nothing that was measured is changed, the new result is a file beside the run.
 
     \b
     Example:
       bandproof fit runs/TB-0001/1/run.h5
+      bandproof fit runs/TB-0001/1/run.h5 --budget
     """
     from bandproof.bench.evaluate import evaluate
     from bandproof.bench.finish import Outcome
     from bandproof.bench.refits import keep_refit
     from bandproof.bench.result import result_object
     from bandproof.bench.runfile import read_run
+    from bandproof.bench.summary import budget_lines
     from bandproof.bench.verbs.run import show, wall, worst_code
 
     if as_json and len(run_paths) > 1:
@@ -37,5 +40,7 @@ def command(run_paths: tuple[Path, ...], as_json: bool) -> int:
         refit = keep_refit(path, result)
         outcome = Outcome(run, stages, result, path.parent)
         codes.append(show(outcome, wall() - begin, as_json))
+        for line in [line for stage in stages for line in budget_lines(stage)] if with_budget else ():
+            click.echo(line, err=as_json)
         click.echo(f"  refit    {refit}", err=as_json)
     return worst_code(codes)

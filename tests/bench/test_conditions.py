@@ -92,10 +92,10 @@ def rehearsed(one_band_text, tmp_path_factory):
 
 
 def row(kept):
-    """Return the row "board temperature" of each figure's budget."""
+    """Return the row "temperature" of each figure's budget."""
     (stage,) = evaluate(kept)
     return {
-        name: next(row for row in budget.rows if row.name == "board temperature")
+        name: next(row for row in budget.rows if row.name == "temperature")
         for name, budget in stage.budgets.items()
     }
 

@@ -183,7 +183,7 @@ def _all(case: Case, benches: int, processes: int) -> list[One]:
 
 HEAD = (
     "| bench | f0 held / % | Q held / % | gain held / % | together / % "
-    "| f0 held or said / % | Q | gain | something said / % | median U over the half-width of 95 % of the errors, f0 / Q / gain |\n"
+    "| f0 held or said / % | Q | gain | something said / % | median U over the errors' 95 %: f0 / Q / gain |\n"
     + "| --- " * 10
     + "|"
 )
