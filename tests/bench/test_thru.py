@@ -8,6 +8,7 @@ import zlib
 from contextlib import closing
 from dataclasses import replace
 from datetime import datetime, timedelta
+from pathlib import Path
 
 import h5py
 import numpy as np
@@ -23,7 +24,7 @@ from bandproof.bench.job import Job
 from bandproof.bench.journal import JOURNAL, Journal
 from bandproof.bench.operator import Absent
 from bandproof.bench.plain import to_json
-from bandproof.bench.rehearsal import rehearsal_bench
+from bandproof.bench.rehearsal import DEMO_BOARD, demo_text, rehearsal_bench
 from bandproof.bench.resumption import EARLIER
 from bandproof.bench.runfile import read_result, read_run
 from bandproof.bench.stop import Stop
@@ -107,13 +108,13 @@ def made(one_band_text, tmp_path, monkeypatch):
     """Return a maker of benches in virtual time; `by_hand`: hands at the terminal instead of a switch."""
     servers = []
 
-    def make(*, by_hand=True, **sizes):
-        board_path = tmp_path / "one.board.toml"
-        board_path.write_text(one_band_text)
-        board = parse_board(one_band_text, "one")
+    def make(text=one_band_text, *, by_hand=True, seed=SEED, **sizes):
+        board_path = tmp_path / "my.board.toml"
+        board_path.write_text(text)
+        board = parse_board(text, "one")
         bench = rehearsal_bench(board)
         create_clock_file(tmp_path / "bench.time")
-        world = world_of(board, bench, draw_parts(board, SEED), SEED, 1, **sizes)
+        world = world_of(board, bench, draw_parts(board, seed), seed, 1, **sizes)
         server = start(replace(world, clock=str(tmp_path / "bench.time")))
         servers.append(server)
         text = bench.text.replace("\nmains ", '\nsimulated_clock = "bench.time"\nmains ')
@@ -280,6 +281,21 @@ def test_the_verb_names_what_to_look_at_when_the_path_is_not_smooth(made, consol
     code, out, _ = bench.measure(console)
     assert code == 0
     assert re.search(r"note: on 2 V, 10 V it is not a smooth path \(chi-square .* look at probes", out)
+
+
+def test_the_verb_prints_what_readme_shows(made, console, monkeypatch):
+    readme = (Path(__file__).parent.parent.parent / "README.md").read_text()
+    (shown,) = re.findall(r"^```text\n(The generator is off.*?)^```$", readme, re.MULTILINE | re.DOTALL)
+    bench = made(demo_text(DEMO_BOARD), seed=1)
+    monkeypatch.chdir(bench.folder)
+    options = ("--board", "my.board.toml", "--ambient", "23 °C", "--operator", "Ann")
+    code, out, _ = console("thru", "my.bench.toml", *options)
+    assert code == 0
+    first, _, rest = shown.partition("to stop]")
+    assert " ".join(f"{first}to stop]".split()) == bench.asked[0].strip()
+    told = out.partition("\n")[2]  # the first line names the bench file
+    assert re.sub(r"\n  +(?=\S)", " ", rest).strip() == told.strip()  # folded lines joined, as in `out`
+    assert max(map(len, shown.splitlines())) <= 80
 
 
 # --- used ---
