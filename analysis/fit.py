@@ -15,6 +15,7 @@ from bandproof.analysis.models import (
     refer_delay_jacobian,
 )
 from bandproof.analysis.types import BoolArray, ComplexArray, FloatArray
+from bandproof.analysis.uncertainty import propagated
 from bandproof.analysis.weighting import WeightedBands
 
 __all__ = ["BandFit", "fit_bands"]
@@ -129,7 +130,7 @@ def fit_bands(
     back = refer_delay_jacobian(theta, -centre)[:, free][:, :, free]
     theta = refer_delay(theta, -centre)
     residual = response - band_response(theta, frequency)
-    return _summary(theta, free, back @ found.covariance @ back.swapaxes(1, 2), found, dof, residual)
+    return _summary(theta, free, propagated(back, found.covariance), found, dof, residual)
 
 
 def _summary(
@@ -157,7 +158,7 @@ def _summary(
         leakage=theta[:, 5] + 1j * theta[:, 6],
         u_f0=f0 * u[:, 0],
         u_q=q * u[:, 1],
-        u_gain=np.sqrt(np.einsum("sp,spq,sq->s", along, covariance[:, 2:4, 2:4], along)),
+        u_gain=np.sqrt(propagated(along[:, None], covariance[:, 2:4, 2:4])[:, 0, 0]),
         u_delay=u[:, free.index(4)] if 4 in free else np.zeros_like(f0),
         chi_square=chi_square,
         dof=dof,

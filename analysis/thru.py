@@ -13,6 +13,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from bandproof.analysis.types import ComplexArray, FloatArray
+from bandproof.analysis.uncertainty import propagated
 
 __all__ = ["ThruFit", "fit_thru"]
 
@@ -130,8 +131,7 @@ def _of_logarithm(ratio: ComplexArray, covariance: FloatArray) -> FloatArray:
     """Return the covariance (N, 2, 2) of ln ratio from that of the ratio."""
     inverse = 1 / ratio
     turn = np.array([[inverse.real, -inverse.imag], [inverse.imag, inverse.real]]).transpose(2, 0, 1)
-    turned: FloatArray = turn @ covariance @ turn.transpose(0, 2, 1)
-    return turned
+    return propagated(turn, covariance)
 
 
 def _whitened(white: FloatArray, values: ComplexArray) -> FloatArray:

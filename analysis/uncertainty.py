@@ -1,7 +1,8 @@
 """Uncertainty budgets.
 
-Source: JCGM 100:2008, 5.1 (independent inputs) and annex G.4 (effective degrees of freedom, Welch-Satterthwaite); the
-interval by propagation of distributions (JCGM 101:2008), here by folding them on a grid instead of by drawing.
+Source: JCGM 100:2008, 4.2 (repeated observations), 5.1 and 5.2 (independent and correlated inputs) and annex G.4
+(effective degrees of freedom, Welch-Satterthwaite); the interval by propagation of distributions (JCGM 101:2008), here
+by folding them on a grid instead of by drawing.
 """
 
 from __future__ import annotations
@@ -15,11 +16,22 @@ import numpy as np
 
 from bandproof.analysis.types import FloatArray
 
-__all__ = ["COVERAGE", "Combined", "Distribution", "Row", "combine", "coverage_factor", "half_width", "share"]
+__all__ = [
+    "COVERAGE",
+    "Combined",
+    "Distribution",
+    "Row",
+    "combine",
+    "coverage_factor",
+    "half_width",
+    "mean_and_covariance",
+    "propagated",
+    "share",
+]
 
 Distribution: TypeAlias = Literal["normal", "uniform", "triangular", "arcsine", "t"]
 COVERAGE = 0.9545  # of every U: that of two standard uncertainties of a normal distribution
-_WIDEST = 12.0  # standard uncertainties the grid reaches to; no folded tail of a budget is heavier
+_WIDEST = 12.0  # standard uncertainties the grid reaches to, or twice the widest row's coverage factor
 _CELLS = 4096
 
 
@@ -125,6 +137,43 @@ def coverage_factor(dof: float, *, coverage: float = COVERAGE) -> float:
     return float(ndtri(upper)) if dof > 1e9 else float(stdtrit(max(1, int(dof)), upper))
 
 
+def mean_and_covariance(observations: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Return the means (N,) of repeated observations (n, N) made together, and the covariance (N, N) of these means.
+
+    Source: JCGM 100:2008, 4.2 and 5.2.3, type A evaluation with n - 1 degrees of freedom.
+
+    Raises
+    ------
+    ValueError
+        Fewer than two observations, or not an (n, N) array.
+
+    Examples
+    --------
+    >>> mean, covariance = mean_and_covariance(np.array([[1.0, 5.0], [2.0, 7.0], [3.0, 9.0]]))
+    >>> mean.tolist(), (3 * covariance).tolist()
+    ([2.0, 7.0], [[1.0, 2.0], [2.0, 4.0]])
+    """
+    if observations.ndim != 2 or len(observations) < 2:
+        raise ValueError(f"observations must be (n, N) with n of 2 or more, found {observations.shape}")
+    mean = observations.mean(axis=0)
+    away = observations - mean
+    return mean, away.T @ away / (len(away) * (len(away) - 1))
+
+
+def propagated(sensitivity: FloatArray, covariance: FloatArray) -> FloatArray:
+    """Return the covariance (..., M, M) of results from that of their correlated inputs (..., N, N).
+
+    ``sensitivity`` (..., M, N) has the derivatives of each result by each input. Source: JCGM 100:2008, 5.2.2.
+
+    Examples
+    --------
+    >>> propagated(np.array([[1.0, 1.0]]), np.array([[1.0, -0.5], [-0.5, 1.0]])).tolist()
+    [[1.0]]
+    """
+    covariance_of_results: FloatArray = sensitivity @ covariance @ np.swapaxes(sensitivity, -1, -2)
+    return covariance_of_results
+
+
 def half_width(rows: Sequence[Row], *, coverage: float = COVERAGE) -> float:
     """Return the half-width of the interval round 0 that holds the sum of independent rows with a probability.
 
@@ -145,7 +194,8 @@ def half_width(rows: Sequence[Row], *, coverage: float = COVERAGE) -> float:
     if len(others) == 1 and not together and others[0].distribution in ("normal", "t"):
         return coverage_factor(others[0].dof, coverage=coverage) * others[0].contribution
     u = sqrt(together**2 + sum(row.contribution**2 for row in others))
-    edge = np.linspace(-_WIDEST * u, _WIDEST * u, _CELLS + 1)
+    widest = max(_WIDEST, *(2.0 * coverage_factor(row.dof, coverage=coverage) for row in others))
+    edge = np.linspace(-widest * u, widest * u, _CELLS + 1)
     parts = [np.diff(_distribution(row.distribution, row.dof, edge / row.contribution)) for row in others]
     if together:
         parts.append(np.diff(_distribution("normal", inf, edge / together)))
@@ -189,5 +239,5 @@ def _quantile(cells: FloatArray, width: float, coverage: float) -> float:
     """Return how far from the middle the cells hold the wanted probability."""
     half = _CELLS // 2
     both = cells[half:] + cells[:half][::-1]
-    held = np.concatenate([[0.0], np.cumsum(both) / both.sum()])
+    held = np.concatenate([[0.0], np.cumsum(both)])  # what lies beyond the grid is held by no interval
     return float(np.interp(coverage, held, width * np.arange(half + 1)))

@@ -12,6 +12,7 @@ from scipy.special import chdtrc
 
 from bandproof.analysis.thru import FEWEST, ThruFit, fit_thru
 from bandproof.analysis.types import ComplexArray, FloatArray
+from bandproof.analysis.uncertainty import propagated
 from bandproof.bench.types import Bench, Board, Point, Stage
 
 __all__ = ["THRU", "Asked", "Path", "Ranges", "corrected", "paths", "thru_stage"]
@@ -100,7 +101,7 @@ def corrected(
         [1.0 if path is None else path.fit.at(frequency[[i]])[0] for i, path in enumerate(used)], dtype=np.complex128
     )
     turn = np.array([[(1 / ratio).real, -(1 / ratio).imag], [(1 / ratio).imag, (1 / ratio).real]]).transpose(2, 0, 1)
-    return response / ratio, turn @ covariance @ turn.transpose(0, 2, 1), used
+    return response / ratio, propagated(turn, covariance), used
 
 
 def _path_of(point: Point, known: Mapping[Ranges, Path]) -> Path | None:
