@@ -15,13 +15,13 @@ from bandproof.bench.budget import budgets
 from bandproof.bench.circuit import predict
 from bandproof.bench.comparison import compared, outside_by_design
 from bandproof.bench.linear import level_alarms
-from bandproof.bench.misfit import StageFit, arrays, look_for_misfit
+from bandproof.bench.misfit import Misfit, StageFit, arrays, look_for_misfit
 from bandproof.bench.picture import StageView
-from bandproof.bench.sources import Measured, sources, systematic
+from bandproof.bench.sources import Measured, Source, sources, systematic
 from bandproof.bench.thru import Path, Ranges, corrected, paths
 from bandproof.bench.types import QUANTITIES, Bench, Board, Point, Run, Stage, StageResult
 
-__all__ = ["StageFit", "evaluate", "evaluate_stage", "fit_points", "known_paths", "usable", "views"]
+__all__ = ["StageFit", "described", "evaluate", "evaluate_stage", "fit_points", "known_paths", "usable", "views"]
 
 LEAST_LSB = 20.0  # peak; below, quantization is not white and costs 2.5 to 5 times the fit's own variance
 MODEL = "band+delay"
@@ -109,13 +109,8 @@ def evaluate_stage(
     """Return what is concluded about one stage from its points and the path known, in a room at ``ambient`` °C."""
     found = fit_points(points, known)
     prediction = predict(board, stage)
-    seen = _measured(board, bench, stage, points, found, ambient)
-    listed = sources(seen) if seen else []
-    misfit = look_for_misfit(board, bench, points, found, systematic(listed, len(found.points)))
+    seen, listed, misfit, doubt = _look(board, bench, stage, points, found, ambient)
     rows = budgets(seen, listed) if seen else {}
-    doubt = found.reason or misfit.doubt({name: budget.expanded for name, budget in rows.items()})
-    if seen and misfit.shifts and not doubt:
-        rows = budgets(seen, sources(replace(seen, shifts=misfit.shifts)))
     figures = {name: compared(stage, name, prediction, found.fit, rows.get(name), doubt) for name in QUANTITIES}
     fit = found.fit
     alarms = [doubt] if doubt else []
@@ -137,6 +132,29 @@ def evaluate_stage(
         budgets=rows,
         alarms=tuple(f"{stage.name}: {alarm}" for alarm in alarms),
     )
+
+
+def described(run: Run, name: str) -> tuple[Measured, list[Source]] | None:
+    """Return a stage of a run as measured, and every source of its budget but noise; None without a fit."""
+    stage, points = run.board.stage(name), [point for point in run.points if point.stage == name]
+    found = fit_points(points, known_paths(run))
+    seen, listed, *_ = _look(run.board, run.bench, stage, points, found, run.ambient)
+    return (seen, listed) if seen else None
+
+
+def _look(
+    board: Board, bench: Bench, stage: Stage, points: Sequence[Point], found: StageFit, ambient: float | None
+) -> tuple[Measured | None, list[Source], Misfit, str]:
+    """Return a stage as measured, its sources of uncertainty, what speaks against its fit, and the doubt in words."""
+    seen = _measured(board, bench, stage, points, found, ambient)
+    listed = sources(seen) if seen else []
+    misfit = look_for_misfit(board, bench, points, found, systematic(listed, len(found.points)))
+    expanded = {name: budget.expanded for name, budget in budgets(seen, listed).items()} if seen else {}
+    doubt = found.reason or misfit.doubt(expanded)
+    if seen and misfit.shifts and not doubt:
+        seen = replace(seen, shifts=misfit.shifts)
+        listed = sources(seen)
+    return seen, listed, misfit, doubt
 
 
 def _measured(

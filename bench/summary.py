@@ -2,7 +2,7 @@
 
 import textwrap
 from collections.abc import Iterable, Iterator, Mapping, Sequence
-from math import isfinite, log10
+from math import isfinite, log10, sqrt
 from typing import TYPE_CHECKING
 
 from bandproof.analysis.uncertainty import share
@@ -12,8 +12,9 @@ from bandproof.bench.types import QUANTITIES, UNITS, Comparison, Quantity, Stage
 
 if TYPE_CHECKING:
     from bandproof.analysis.uncertainty import Combined
+    from bandproof.bench.drawing import Drawn
 
-__all__ = ["budget_lines", "dB", "dominating_lines", "figure_lines", "summary_lines"]
+__all__ = ["budget_lines", "dB", "dominating_lines", "drawn_lines", "figure_lines", "summary_lines"]
 
 _TITLES: dict[Quantity, str] = {
     "centre": "Centre frequency f0",
@@ -82,6 +83,20 @@ def budget_lines(stage: StageResult) -> list[str]:
         lines.append(f"{name:<31}{''.join(cells)}".rstrip())
     factors = "".join(f"{budget.coverage_factor:9.2f} " for budget in found)
     return [*lines, f"{'coverage factor U / u':<31}{factors}".rstrip()]
+
+
+def drawn_lines(stage: StageResult, found: "Mapping[Quantity, Drawn]") -> list[str]:
+    """Return what a budget says beside what draws of all its sources say, in % of each figure."""
+    draws = next(iter(found.values())).draws
+    head = f"Budget of {stage.name} beside {draws} draws of all its sources (JCGM 101), in % of the figure"
+    lines = ["", *textwrap.wrap(head, 80)]
+    lines.append(f"{'':<8}{'u, budget':>12}{'u, draws':>12}{'U, budget':>12}{'U, draws':>12}{'mean - fit':>14}")
+    for (quantity, drawn), name in zip(found.items(), ("f0", "Q", "gain"), strict=True):
+        budget, value = stage.budgets[quantity], stage.figures[quantity].measured
+        cells = [100.0 * size / value for size in (budget.u, drawn.u, budget.expanded, drawn.half_width)]
+        shift = 100.0 * (drawn.mean / value - 1.0)
+        lines.append(f"{name:<8}{''.join(f'{cell:12.4f}' for cell in cells)}{shift:+14.4f}")
+    return [*lines, f"(draws alone scatter their u by {100.0 / sqrt(2.0 * draws):.2g} % of it)"]
 
 
 def _told(head: str, reason: str) -> list[str]:
