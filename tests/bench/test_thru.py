@@ -292,7 +292,7 @@ def test_the_verb_prints_what_readme_shows(made, console, monkeypatch):
     code, out, _ = console("thru", "my.bench.toml", *options)
     assert code == 0
     first, _, rest = shown.partition("to stop]")
-    assert " ".join(f"{first}to stop]".split()) == bench.asked[0].strip()
+    assert " ".join(f"{first}to stop]".split()) == " ".join(bench.asked[0].split())
     told = out.partition("\n")[2]  # the first line names the bench file
     assert re.sub(r"\n  +(?=\S)", " ", rest).strip() == told.strip()  # folded lines joined, as in `out`
     assert max(map(len, shown.splitlines())) <= 80
@@ -544,6 +544,13 @@ def test_a_run_with_a_stored_thru_is_resumed_to_the_same_run(switched, unbroken,
     assert mine.keys() == theirs.keys() >= {"texts/thru"}
     assert [name for name in mine if mine[name] != theirs[name]] in ([], ["history"])
     assert not [point for point in read_run(tmp_path / "run.h5").points if point.purpose == "thru"]
+
+
+def test_a_thru_that_the_run_measured_itself_comes_beside_the_stored_one(unbroken):
+    kept = read_run(unbroken / "run.h5")
+    own = [replace(point, stage="thru", ranges=(2.0, 20.0), time=9.0) for point in kept.thru.points]
+    found = known_paths(replace(kept, points=(*kept.points, *own)))
+    assert {ranges: path.time > 0.0 for ranges, path in found.items()} == {(2.0, 10.0): False, (2.0, 20.0): True}
 
 
 def test_a_journal_and_a_run_file_without_ambient_and_thru_are_read(switched, unbroken, tmp_path, monkeypatch):
