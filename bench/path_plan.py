@@ -8,7 +8,8 @@ import numpy as np
 from bandproof.analysis.planning import plan_record, shift_from_mains
 from bandproof.bench.bench_file import BY_HAND
 from bandproof.bench.errors import BadInput
-from bandproof.bench.plan import HEADROOM, LONGEST, LOW_LEVEL, thru_steps
+from bandproof.bench.level import HEADROOM
+from bandproof.bench.plan import LONGEST, LOW_LEVEL, thru_steps
 from bandproof.bench.thru import THRU, Asked, thru_stage
 from bandproof.bench.types import Bench, Board, OpAmpData, Point, Stage, Step, TestPoint, Tone, Wire
 

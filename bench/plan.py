@@ -11,14 +11,13 @@ from bandproof.analysis.types import FloatArray
 from bandproof.bench.circuit import Prediction, predict, predicted_response, stage_network, taps
 from bandproof.bench.errors import BadInput
 from bandproof.bench.evaluate import fit_points, usable
-from bandproof.bench.level import greatest_level
+from bandproof.bench.level import HEADROOM, greatest_level, well_ranged
 from bandproof.bench.record import HUM_BELOW, hum_frequencies
 from bandproof.bench.thru import THRU, Asked, Ranges, thru_stage
 from bandproof.bench.types import Bench, Board, Point, Purpose, Stage, Step, Tone
 
-__all__ = ["HEADROOM", "LOW_LEVEL", "Planner", "greatest_level", "thru_steps"]
+__all__ = ["LOW_LEVEL", "Planner", "thru_steps"]
 
-HEADROOM = 1.2  # ranges hold the expected peak + 20 %
 LOW_LEVEL = 0.1  # of the sweep's level: proves wiring and level before the board is driven
 LONGEST = 1.0  # s, of a record
 _QUIET_SAMPLES = 2048
@@ -47,7 +46,7 @@ class Planner:
         _refuse_series(board)
         self._board, self._bench, self._known = board, bench, set(known)
         self._predictions = {stage.name: _predicted(board, stage) for stage in board.stages}
-        self._levels = {s.name: greatest_level(board, bench, s, self._predictions[s.name]) for s in board.stages}
+        self._levels = {stage.name: self._level(stage) for stage in board.stages}
         self._costs: dict[str, list[float]] = {}
         self._finished: dict[str, int] = {}  # points after which a stage needed no more, so that it is not fitted again
         self._dwells: dict[tuple[str, float, float | None, float], float] = {}
@@ -69,6 +68,11 @@ class Planner:
                 return steps
             self._finished[stage.name] = len(had)
         return self._thru(points)
+
+    def _level(self, stage: Stage) -> float:
+        """Return the level a stage is swept at."""
+        prediction = self._predictions[stage.name]
+        return well_ranged(greatest_level(self._board, self._bench, stage, prediction), prediction.gain)
 
     def _without_signal(self, points: Sequence[Point]) -> tuple[Step, ...]:
         """Return a record without signal for each stage that was not looked at yet and needs no hands to be wired."""

@@ -11,7 +11,8 @@ from bandproof.bench.board_file import parse_board
 from bandproof.bench.circuit import board_network, draw_parts, predict, predicted_response, taps
 from bandproof.bench.errors import BadInput
 from bandproof.bench.evaluate import fit_points
-from bandproof.bench.plan import HEADROOM, Planner, greatest_level
+from bandproof.bench.level import HEADROOM, greatest_level, well_ranged
+from bandproof.bench.plan import Planner
 from bandproof.bench.rehearsal import demo_board, rehearsal_bench
 from bandproof.bench.types import OpAmpData, Wire
 
@@ -253,6 +254,33 @@ def test_no_tone_below_1_khz_is_nearer_to_hum_than_its_record_resolves(healthy, 
             distance = np.abs(step.frequency - mains * np.arange(1, 6)).min()
             assert distance * step.duration >= 1.0 - 1e-9, step
         assert step.frequency * step.duration >= 3.0 - 1e-9
+
+
+@pytest.mark.parametrize(
+    ("level", "gain", "expected"), [(1.4, 3.16, 1.2), (0.7, 0.1, 0.7), (2.0, 1.0, 1.5), (1.6, 5.0, 1.5)]
+)
+def test_a_level_just_above_a_range_is_lowered_to_use_it(level, gain, expected):
+    """By hand: 1.2 x 1.06 x 1.4 V x 3.16 = 5.63 V needs the 10 V range, 1.2 V the one of 5 V (steps of 1-2-5)."""
+    assert well_ranged(level, gain) == expected
+
+
+def test_no_other_level_leaves_less_noise_on_ranges_of_1_2_5():
+    """Exhaustive search as witness: every level of two digits between 0.6 times and the greatest one."""
+    rng, steps = np.random.default_rng(5), np.outer(10.0 ** np.arange(-6.0, 4.0), [1.0, 2.0, 5.0]).ravel()
+
+    def noise(level, gain):
+        peaks = 1.2 * 1.06 * level * np.array([1.0, gain])
+        return sum((steps[steps >= peak * (1 - 1e-9)][0] / peak) ** 2 for peak in peaks)
+
+    for _ in range(200):
+        greatest, gain = np.round(10.0 ** rng.uniform(-2.0, 1.0), 3), 10.0 ** rng.uniform(-1.0, 1.5)
+        greatest = float(f"{greatest:.2g}")
+        unit = 10.0 ** (np.floor(np.log10(greatest)) - 2)
+        levels = np.arange(np.ceil(0.6 * greatest / unit), np.round(greatest / unit) + 1) * unit
+        found = well_ranged(greatest, gain)
+        assert found <= greatest
+        # Two digits cost at most a tenth of the level, thus a fifth of the noise's square.
+        assert noise(found, gain) <= 1.25 * min(noise(level, gain) for level in levels)
 
 
 def test_ranges_hold_the_predicted_peak_and_its_headroom(healthy):
