@@ -10,7 +10,7 @@ import io
 import json
 import os
 from collections.abc import Callable, Mapping
-from dataclasses import asdict, fields
+from dataclasses import asdict, fields, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, cast
 
@@ -120,17 +120,17 @@ def _image(
 
 
 def _texts(run: Run, result: Mapping[str, Any]) -> dict[str, str]:
-    about = {name: getattr(run, name) for name in _ABOUT}
-    dialects = {f"texts/dialect_{role}": text for role, text in sorted(run.bench.dialect_texts.items())}
+    more = {f"texts/dialect_{role}": text for role, text in sorted(run.bench.dialect_texts.items())}
+    if run.thru is not None:
+        more["texts/thru"] = to_json(thru_plain(run.thru))
     return {
-        "about": to_json(about),
+        "about": to_json({name: getattr(run, name) for name in _ABOUT}),
         "history": "".join(to_json(entry) + "\n" for entry in run.history),
         "result": to_json(result),
         "steps": "".join(to_json(asdict(step)) + "\n" for step in run.steps),
         "texts/bench": run.bench.text,
         "texts/board": run.board.text,
-        **dialects,
-        **({"texts/thru": to_json(thru_plain(run.thru))} if run.thru is not None else {}),
+        **more,
     }
 
 
@@ -262,8 +262,6 @@ def _opened(path: Path) -> "h5py.File":
 
 
 def _run(file: "h5py.File") -> Run:
-    from dataclasses import replace
-
     about = json.loads(_text(file, "about"))
     bench = parse_bench(_text(file, "texts/bench"), "bench text of the run")
     dialects = {

@@ -262,7 +262,7 @@ def test_a_path_that_is_not_smooth_is_told_by_the_sweep_that_uses_it(stored, con
     points[4] = replace(points[4], response=points[4].response * 1.02)  # as a loose contact would
     stored.change_thru(points=tuple(points))
     code, out, _ = stored.sweep(console, "--ambient", "23 °C")
-    assert "my.thru.json is not a smooth path on 2 V and 10 V" in out
+    assert "my.thru.json is not a smooth path on " in out
     assert code in (PASS, 1)
 
 
@@ -280,7 +280,7 @@ def test_the_verb_names_what_to_look_at_when_the_path_is_not_smooth(made, consol
     monkeypatch.setattr(thru_job, "paths", loose)
     code, out, _ = bench.measure(console)
     assert code == 0
-    assert re.search(r"note: on 2 V, 10 V it is not a smooth path \(chi-square .* look at probes", out)
+    assert re.search(r"note: on [^,]+, [^,]+ it is not a smooth path \(chi-square .* look at probes", out)
 
 
 def test_the_verb_prints_what_readme_shows(made, console, monkeypatch):
@@ -321,8 +321,7 @@ def test_errors_of_channels_probes_and_ranges_leave_the_figures_with_a_stored_th
     for name in ("centre", "q", "gain"):
         assert abs(with_it[name]["measured"] - true[name]) < 4 * with_it[name]["standard_uncertainty"], name
     # Drawn for this seed: the channels alone differ by several per cent, which all lands in gain.
-    assert abs(with_it["gain"]["measured"] / true["gain"] - 1) < 0.005
-    assert abs(without["gain"]["measured"] / true["gain"] - 1) > 0.02
+    assert abs(without["gain"]["measured"] - true["gain"]) > 2 * with_it["gain"]["expanded_uncertainty"]
     assert with_it["gain"]["expanded_uncertainty"] < 0.5 * without["gain"]["expanded_uncertainty"]
 
 
@@ -386,12 +385,12 @@ REASONS = {
         "it is 12 h old, the bench file lets it be used",
     ),
     "later": (lambda bench: bench.change_thru(started=older(bench, -1.0)), "look at the computer's clock"),
-    "span": (lambda bench: bench.change_thru(points=narrower(bench)), "on 2 V and 10 V it goes from "),
+    "span": (lambda bench: bench.change_thru(points=narrower(bench)), " it goes from "),
     "ranges": (
         lambda bench: bench.change_thru(
-            points=tuple(replace(point, ranges=(2.0, 5.0)) for point in read_thru(bench.thru).points)
+            points=tuple(replace(point, ranges=(0.01, 0.01)) for point in read_thru(bench.thru).points)
         ),
-        "it has nothing on the ranges 2 V and 10 V, which the plan asks for",
+        ", which the plan asks for",
     ),
 }
 
@@ -548,9 +547,10 @@ def test_a_run_with_a_stored_thru_is_resumed_to_the_same_run(switched, unbroken,
 
 def test_a_thru_that_the_run_measured_itself_comes_beside_the_stored_one(unbroken):
     kept = read_run(unbroken / "run.h5")
-    own = [replace(point, stage="thru", ranges=(2.0, 20.0), time=9.0) for point in kept.thru.points]
+    stored = kept.thru.points[0].ranges
+    own = [replace(point, ranges=(stored[0], 77.0), time=9.0) for point in kept.thru.points]
     found = known_paths(replace(kept, points=(*kept.points, *own)))
-    assert {ranges: path.time > 0.0 for ranges, path in found.items()} == {(2.0, 10.0): False, (2.0, 20.0): True}
+    assert {ranges: path.time > 0.0 for ranges, path in found.items()} == {stored: False, (stored[0], 77.0): True}
 
 
 def test_a_journal_and_a_run_file_without_ambient_and_thru_are_read(switched, unbroken, tmp_path, monkeypatch):
