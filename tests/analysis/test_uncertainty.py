@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from math import cos, inf, pi, sin, sqrt
+from fractions import Fraction
+from math import comb, cos, factorial, floor, inf, pi, sin, sqrt
 
 import GTC
 import numpy as np
@@ -216,10 +217,11 @@ def test_a_bounded_row_and_a_normal_one_hold_what_an_integral_says(bounded, size
 
 
 # At 1 and 2 degrees of freedom the tails reach far beyond any multiple of u; as of two and three readings.
+@pytest.mark.parametrize("size", [0.2, 1.0])
 @pytest.mark.parametrize("dof", [1.0, 2.0, 5.0])
-def test_a_uniform_row_and_few_observations_hold_what_an_integral_says(dof):
-    found = half_width([_row(1.0, distribution="uniform"), _row(1.0, dof, "t")])
-    assert found == pytest.approx(_exact("uniform", 1.0, lambda x: stdtr(dof, x), COVERAGE), rel=1e-3)
+def test_a_uniform_row_and_few_observations_hold_what_an_integral_says(dof, size):
+    found = half_width([_row(size, distribution="uniform"), _row(1.0, dof, "t")])
+    assert found == pytest.approx(_exact("uniform", size, lambda x: stdtr(dof, x), COVERAGE), rel=1e-3)
 
 
 def test_two_uniform_rows_of_one_size_are_a_triangle():
@@ -246,6 +248,19 @@ def test_four_uniform_rows_hold_what_the_supplement_says():
     assert found == pytest.approx(2 * sqrt(3) * (2 - 0.6**0.25), rel=1e-4)
     budget = combine(rows, coverage=0.95)
     assert coverage_factor(budget.dof, coverage=0.95) * budget.u == pytest.approx(3.92, abs=5e-3)
+
+
+def test_as_many_rows_as_a_budget_has_are_folded_without_a_shift():
+    # Source: P. S. de Laplace's formula for the sum of n uniform variables (Irwin-Hall), in whole numbers
+    n = 20
+
+    def held(h):
+        x = Fraction(h / (2 * sqrt(3))) + Fraction(n, 2)
+        terms = ((-1) ** k * comb(n, k) * (x - k) ** n for k in range(floor(x) + 1))
+        return 2.0 * float(sum(terms) / factorial(n)) - 1.0
+
+    found = half_width([_row(1.0, distribution="uniform")] * n)
+    assert found == pytest.approx(brentq(lambda h: held(h) - COVERAGE, 0.0, 3 * sqrt(n)), rel=2e-4)
 
 
 def test_a_single_arcsine_row_holds_a_sine():
