@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import lmfit
 import numpy as np
 import pytest
 from hypothesis import given, settings
@@ -211,3 +212,32 @@ def test_bad_points_are_named():
     f = band_frequencies(1e3, 2.0)
     with pytest.raises(ValueError, match="sweep 0, point 0 is not positive definite"):
         fit_bands(f, np.ones_like(f) + 0j, np.zeros((1, 11, 2, 2)))
+
+
+def test_another_library_gives_the_same_fit_with_the_same_covariance():
+    # Witness: lmfit's Levenberg-Marquardt with its covariance, not scaled; delay in microseconds, for its steps
+    f = band_frequencies([1e3], [1.7])
+    rng = np.random.default_rng(31)
+    roots = 2e-3 * rng.uniform(0.5, 2.0, (11, 1, 1)) * np.array([[1.0, 0.0], [0.6, 0.8]])
+    noise = np.einsum("nij,nj->ni", roots, rng.normal(size=(11, 2)))
+    h = band_response(np.array([[np.log(1e3), np.log(1.7), -2.9, 0.8, 3e-6, 0.0, 0.0]]), f)
+    h = h + noise[:, 0] + 1j * noise[:, 1]
+    fit = fit_bands(f, h, (roots @ roots.transpose(0, 2, 1))[None])
+
+    def residual(values):
+        f0, q, real, imag, delay = values.valuesdict().values()
+        model = (real + 1j * imag) / (1 + 1j * q * (f[0] / f0 - f0 / f[0])) * np.exp(-2e-6j * np.pi * f[0] * delay)
+        left = h[0] - model
+        return np.linalg.solve(roots, np.stack([left.real, left.imag], axis=-1)[..., None]).ravel()
+
+    names = {"f0": 990.0, "q": 1.6, "re": -3.0, "im": 0.7, "delay": 2.0}
+    start = lmfit.create_params(**names)
+    theirs = lmfit.minimize(residual, start, scale_covar=False, xtol=1e-14, ftol=1e-14, epsfcn=1e-12)
+    f0, q = fit.f0[0], fit.q[0]
+    ours = [f0, q, fit.gain[0].real, fit.gain[0].imag, 1e6 * fit.delay[0]]
+    units = np.array([f0, q, 1.0, 1.0, 1e6])  # from ln f0, ln q, and s
+    u = np.sqrt(np.diag(theirs.covar))
+    assert (np.abs(np.array(list(theirs.params.valuesdict().values())) - ours) < 1e-4 * u).all()
+    covariance = fit.covariance[0] * np.outer(units, units)
+    np.testing.assert_allclose(covariance / np.outer(u, u), theirs.covar / np.outer(u, u), atol=1e-4)
+    assert [fit.u_f0[0], fit.u_q[0]] == pytest.approx(u[:2], rel=1e-4)
