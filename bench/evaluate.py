@@ -116,6 +116,10 @@ def evaluate_stage(
     alarms = [doubt] if doubt else []
     expanded_gain = rows["gain"].expanded if rows else nan
     alarms += [*misfit.alarms, *level_alarms(bench, points, found, known or {}, expanded_gain)]
+    if any(path is not None and not path.is_smooth for path in found.paths):
+        alarms.append(
+            "the path itself is not smooth in frequency: look at probes, cables and contacts, U may be too small"
+        )
     alarms += outside_by_design(stage, prediction)
     return StageResult(
         name=stage.name,

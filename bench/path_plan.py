@@ -8,7 +8,7 @@ import numpy as np
 from bandproof.analysis.planning import plan_record, shift_from_mains
 from bandproof.bench.bench_file import BY_HAND
 from bandproof.bench.errors import BadInput
-from bandproof.bench.level import HEADROOM
+from bandproof.bench.level import HEADROOM, well_ranged
 from bandproof.bench.plan import LONGEST, LOW_LEVEL, thru_steps
 from bandproof.bench.thru import THRU, Asked, thru_stage
 from bandproof.bench.types import Bench, Board, OpAmpData, Point, Stage, Step, TestPoint, Tone, Wire
@@ -53,8 +53,8 @@ class PathPlanner:
 
 def usual_asked(bench: Bench) -> tuple[Asked, ...]:
     """Return what stages of usual gains ask of the path at the bench's ceiling, over the audio band."""
-    reach = HEADROOM * bench.ceiling
-    return tuple(Asked((reach, reach * gain), bench.ceiling, _USUAL_SPAN) for gain in _USUAL_GAINS)
+    levels = [(gain, well_ranged(bench.ceiling, gain)) for gain in _USUAL_GAINS]
+    return tuple(Asked((HEADROOM * level, HEADROOM * level * gain), level, _USUAL_SPAN) for gain, level in levels)
 
 
 def bare_board(bench: Bench) -> Board:
