@@ -74,12 +74,30 @@ def test_the_derivatives_are_those_of_the_model():
         np.testing.assert_allclose(fit.basis(F)[i], slope, atol=1e-6 * np.abs(slope).max())
 
 
+def test_the_covariance_is_that_of_a_weighted_fit_by_differences():
+    # Source: JCGM 100, 5.2.2 for a weighted least-squares fit: inverse of J' W J; J of the ratio, not of its logarithm
+    roots = 1e-4 * np.array([[1.0, 0.0], [-0.6, 0.8]])
+    fit = fit_thru(F, 0.4 * _divider(F, 0.03)[0], np.broadcast_to(roots @ roots.T, (len(F), 2, 2)))
+
+    def whitened(theta):
+        x = 1j * F / np.exp(theta[3])
+        ratio = np.exp(theta[0] - 2j * np.pi * F * theta[1] + theta[2] * x / (1 + x))
+        return np.linalg.solve(roots, np.stack([ratio.real, ratio.imag])).T.ravel()
+
+    steps = np.diag([1e-6, 1e-12, 1e-6, 1e-5])
+    j = np.stack([(whitened(fit.theta + s) - whitened(fit.theta - s)) / (2 * s.sum()) for s in steps], axis=1)
+    size = np.linalg.norm(j, axis=0)
+    expected = np.linalg.inv((j / size).T @ (j / size)) / np.outer(size, size)
+    u = np.sqrt(np.diag(expected))
+    np.testing.assert_allclose(fit.covariance / np.outer(u, u), expected / np.outer(u, u), atol=1e-3)
+
+
 @pytest.fixture(scope="module")
 def repeated():
     """Fits of 400 noisy thrus of one probe, with unequal and correlated noise; and the true ratio."""
     rng, count = np.random.default_rng(12), 400
-    roots = 2e-5 * rng.uniform(0.5, 2.0, (len(F), 1, 1)) * np.array([[1.0, 0.0], [-0.6, 0.8]])
-    true = 1.01 * _divider(F, 0.03)[0]
+    roots = 0.8e-5 * rng.uniform(0.5, 2.0, (len(F), 1, 1)) * np.array([[1.0, 0.0], [-0.6, 0.8]])
+    true = 0.4 * _divider(F, 0.03)[0]
     noise = np.einsum("nij,cnj->cni", roots, rng.normal(size=(count, len(F), 2)))
     covariance = roots @ roots.transpose(0, 2, 1)
     return [fit_thru(F, true + one[:, 0] + 1j * one[:, 1], covariance) for one in noise], true
@@ -87,7 +105,7 @@ def repeated():
 
 def test_the_path_scatters_as_its_covariance_says(repeated):
     fits, true = repeated
-    # noise 2e-5 and D**3 / 24 = 1e-6, so that what the model leaves out is below a tenth of it
+    # noise 2e-5 of the ratio and D**3 / 24 = 1e-6, so that what the model leaves out is below a tenth of it
     errors = np.array([np.log(fit.at(F) / true) for fit in fits])
     u = np.array([[_u(fit.covariance, fit.basis(F)[:, i]) for i in range(len(F))] for fit in fits])
     scores = np.stack([errors.real, errors.imag]) / u.transpose(2, 0, 1)
