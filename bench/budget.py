@@ -41,9 +41,10 @@ ROWS = (
     "definition",
 )
 _NOTHING = 1e-9  # relative change of a figure per unit that is only rounding
+_ZERO = "0, because "
 _ELSEWHERE = {
-    False: "0, because what is common to all points lands wholly in gain",
-    True: "0, because it moves f0 alone",
+    False: f"{_ZERO}what is common to all points lands wholly in gain",
+    True: f"{_ZERO}it moves f0 alone",
 }
 
 
@@ -77,6 +78,8 @@ def _row(source: Source, quantity: Quantity, moved: FloatArray, value: float) ->
     row = Row(source.name, source.type, distribution, source.u, value * effect, source.dof, source.reason)
     if source.u and abs(effect) < _NOTHING:
         return replace(row, sensitivity=0.0, reason=_ELSEWHERE[source.direct is not None])
+    if not source.u and not source.reason.startswith(_ZERO):
+        return replace(row, reason=f"{_ZERO}its size is 0, {source.reason}")
     return row
 
 

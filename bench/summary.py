@@ -64,7 +64,8 @@ def budget_lines(stage: StageResult) -> list[str]:
     found = [stage.budgets[quantity] for quantity in QUANTITIES]
     values = [stage.figures[quantity].measured for quantity in QUANTITIES]
     largest = [dominating(budget) for budget in found]
-    lines = ["", f"Budget of {stage.name}: standard uncertainties in % of the figure, * the largest"]
+    head = f"Budget of {stage.name}: standard uncertainties in % of the figure, * the largest"
+    lines = ["", *textwrap.wrap(head, 80)]
     lines.append(f"{'source':<17}{'':<14}{'f0':>9}{'Q':>10}{'gain':>10}")
     for i, first in enumerate(found[0].rows):
         rows = [budget.rows[i] for budget in found]
