@@ -40,7 +40,7 @@ class BandFit:
     f0, q, gain, delay, leakage : (S,)
         Hz, f0 over the -3 dB bandwidth, complex ratio at f0 without delay and leakage, s, complex ratio.
     u_f0, u_q, u_gain, u_delay : (S,)
-        Standard uncertainties; u_gain is that of |gain|.
+        Standard uncertainties; u_gain is that of |gain|. May be nan where the status is not "converged".
     chi_square : (S,)
         Reduced: divided by the degrees of freedom (nan where there are none).
     dof : (S,)
@@ -144,8 +144,10 @@ def _summary(
     f0, q = np.exp(theta[:, 0]), np.exp(theta[:, 1])
     gain = theta[:, 2] + 1j * theta[:, 3]
     along = np.stack([gain.real, gain.imag], axis=-1) / np.abs(gain)[:, None]
-    u = np.sqrt(np.einsum("spp->sp", covariance))
     with np.errstate(invalid="ignore", divide="ignore"):
+        # Where a fit got lost, rounding leaves a variance below 0: such an uncertainty is nan.
+        u = np.sqrt(np.einsum("spp->sp", covariance))
+        u_gain = np.sqrt(propagated(along[:, None], covariance[:, 2:4, 2:4]))
         chi_square = np.where(dof > 0, found.squares / dof, np.nan)
     return BandFit(
         theta=theta,
@@ -158,7 +160,7 @@ def _summary(
         leakage=theta[:, 5] + 1j * theta[:, 6],
         u_f0=f0 * u[:, 0],
         u_q=q * u[:, 1],
-        u_gain=np.sqrt(propagated(along[:, None], covariance[:, 2:4, 2:4])[:, 0, 0]),
+        u_gain=u_gain[:, 0, 0],
         u_delay=u[:, free.index(4)] if 4 in free else np.zeros_like(f0),
         chi_square=chi_square,
         dof=dof,

@@ -241,3 +241,13 @@ def test_another_library_gives_the_same_fit_with_the_same_covariance():
     covariance = fit.covariance[0] * np.outer(units, units)
     np.testing.assert_allclose(covariance / np.outer(u, u), theirs.covar / np.outer(u, u), atol=1e-4)
     assert [fit.u_f0[0], fit.u_q[0]] == pytest.approx(u[:2], rel=1e-4)
+
+
+def test_a_fit_that_got_lost_says_so_without_a_warning():
+    f = band_frequencies([1e3], [1.7])
+    rng = np.random.default_rng(6)
+    h = 300.0 * (rng.normal(size=(200, 11)) + 1j * rng.normal(size=(200, 11)))
+    fit = fit_bands(np.broadcast_to(f, h.shape), h, _white(h.shape, 1e-3))
+    assert not set(fit.status) <= {"converged", "no progress"}
+    sound = np.array(fit.status) == "converged"
+    assert np.isfinite(fit.u_q[sound]).all()

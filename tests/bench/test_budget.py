@@ -9,6 +9,7 @@ import h5py
 import numpy as np
 import pytest
 
+from bandproof.analysis.fit import fit_bands
 from bandproof.analysis.uncertainty import share
 from bandproof.bench.bench_file import parse_bench
 from bandproof.bench.budget import budget_plain, budgets, dominating
@@ -27,7 +28,8 @@ EVERY_ROW = [
     *("tap loading", "coupling corners", "channel skew", "linearity in", "linearity out", "hum", "settling"),
     *("generator", "temperature", "controls", "misfit", "channel gain", "source level", "definition"),
 ]
-LOW, HIGH = 0, 4  # stages of the demo board: 160 Hz, where hum is fitted with every record; 6.3 kHz, where it is not
+# Stages of the demo board: 160 Hz, where hum is fitted with every record; 1 kHz, half and half; 6.3 kHz, without
+LOW, MIDDLE, HIGH = 0, 2, 4
 # JCGM 100, 4.3.7: a uniform error of half-width a has u = a/sqrt(3), so the difference of two of them a sqrt(2/3)
 ONE, TWO = 1 / sqrt(3), sqrt(2 / 3)
 FLAT = {"channel gain", "range to range"}  # rows that are common to all points
@@ -180,6 +182,23 @@ def test_the_thrus_own_noise_is_a_row(high):
     assert high.but(known=dict(zip(high.known, louder, strict=True))).row("thru")[1] == pytest.approx(2 * size)
 
 
+def test_the_thrus_noise_counts_as_drawn_thrus_make_the_figures_scatter(high):
+    (path,) = set(fit_points(high.of_stage, high.known).paths)
+    found, count = fit_points(high.of_stage, high.known), 1000
+    unit = np.sqrt(np.diag(path.fit.covariance))
+    scaled = path.fit.covariance / np.outer(unit, unit)
+    drawn = unit * np.random.default_rng(3).multivariate_normal(np.zeros(4), scaled, count)
+    response = found.response / np.exp(drawn @ path.fit.basis(found.frequency))
+    fits = fit_bands(
+        np.broadcast_to(found.frequency, response.shape),
+        response,
+        np.broadcast_to(found.covariance, (count, *found.covariance.shape)),
+    )
+    for quantity, values in (("centre", fits.f0), ("q", fits.q), ("gain", np.abs(fits.gain))):
+        row, _ = high.row("thru", quantity)
+        assert row.contribution == pytest.approx(values.std(), rel=4 / sqrt(2 * count))
+
+
 def test_a_contact_made_anew_counts_once_or_twice_and_a_fixed_one_never(low):
     for wired in (low, low.by(None, by_hand=True)):
         row, size = wired.but(reseating=0.01).row("reseating")
@@ -211,6 +230,14 @@ def test_hum_counts_where_it_is_not_fitted(low, high):
     assert "shows none" in with_hum(0.5 * quiet.lsb[1])[0].reason
     (_, once), (_, twice) = with_hum(0.1), with_hum(0.2)
     assert twice == pytest.approx(2 * once, rel=0.1)
+    middle = Case(MIDDLE)
+    quiet = next(point for point in middle.of_stage if point.purpose == "no-signal")
+    loud = [replace(quiet, residuals=(0.1, 0.1)), *(point for point in middle.of_stage if point is not quiet)]
+    seen, listed = middle.but(of_stage=loud).told()
+    (hum,) = [source for source in listed if source.name == "hum"]
+    counted = [bool(hum.shapes[:, i].any()) for i in range(len(seen.points))]
+    assert counted == [point.frequency >= 1e3 for point in seen.points]
+    assert set(counted) == {True, False}
 
 
 def test_the_row_for_hum_is_as_large_as_what_hum_does_to_sine_fits(high):
