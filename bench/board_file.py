@@ -5,6 +5,7 @@ from typing import Literal, cast
 
 from bandproof.bench.quantities import Kind, QuantityError, read_quantity
 from bandproof.bench.reading import Mistakes, Table, nearest, parse_toml, read_text
+from bandproof.bench.rules import priors, rules
 from bandproof.bench.types import Board, Limit, OpAmpData, Part, Power, Quantity, Stage, Temperature, TestPoint
 
 __all__ = ["STAGE_PARTS", "parse_board", "parse_defect", "read_board"]
@@ -146,16 +147,16 @@ def _stage(name: str, table: Table, default: dict[str, float]) -> Stage:
 
 def _limits(table: Table) -> dict[Quantity, Limit]:
     design, tolerance = table.table("design"), table.table("tolerance")
-    rule = table.choice("rule", ["simple"], "simple")
+    decided = rules(table)
     designed: dict[Quantity, float] = {
         "centre": design.quantity("centre", "frequency"),
         "q": design.quantity("q", "number"),
         "gain": design.quantity("gain", "gain"),
     }
-    limits = {}
+    known, limits = priors(table, designed), {}
     for quantity, value in designed.items():
         lower, upper = tolerance.tolerance(quantity)
-        limits[quantity] = Limit(value, value * lower, value * upper, rule)
+        limits[quantity] = Limit(value, value * lower, value * upper, *decided[quantity], known.get(quantity))
     design.close()
     tolerance.close()
     return limits

@@ -30,7 +30,16 @@ def compared(
     """Return a figure of a stage compared with its limits; ``doubt`` says why no verdict can be given, or nothing."""
     limit = stage.limits[quantity]
     value, repeatability = figure(fit, quantity)
-    decision = decide(value, budget.u if budget else 0.0, low=limit.lower, high=limit.upper, doubt=doubt)
+    decision = decide(
+        value,
+        budget.u if budget else 0.0,
+        low=limit.lower,
+        high=limit.upper,
+        rule=limit.decides,
+        expanded=budget.expanded if budget else 0.0,
+        prior=limit.prior,
+        doubt=doubt,
+    )
     return Comparison(
         quantity=quantity,
         unit=UNITS[quantity],
@@ -46,6 +55,7 @@ def compared(
         upper_limit=limit.upper,
         verdict=decision.verdict,
         conformance_probability=decision.probability,
+        prior=limit.prior,
     )
 
 

@@ -15,6 +15,7 @@ from bandproof.analysis.decision import worst
 from bandproof.analysis.uncertainty import Combined, Row, combine
 from bandproof.bench.circuit import predict
 from bandproof.bench.comparison import compared, figure, outside_by_design
+from bandproof.bench.conformance import board_probability
 from bandproof.bench.model_choice import Choice, choose
 from bandproof.bench.response_file import Response
 from bandproof.bench.result import RESULT_SCHEMA, bare_parameter, stage_object
@@ -111,6 +112,7 @@ def imported_object(found: Imported) -> dict[str, Any]:
     return {
         "schema": RESULT_SCHEMA,
         "verdict": found.stage.verdict,
+        "conformance_probability": board_probability([found.stage]),
         "ended": "complete",
         "serial": None,
         "run_id": None,

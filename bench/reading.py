@@ -152,6 +152,11 @@ class Table:
         """Return a value as it stands, or None, without counting as asked for."""
         return self._content.get(key)
 
+    def anything(self, key: str) -> Any:
+        """Return a value as it stands, or None; it counts as asked for."""
+        self._known.append(key)
+        return self._content.get(key)
+
     def names(self) -> Iterator[str]:
         """Yield every key of a table whose keys are names of the user's choosing."""
         for name in self._content:

@@ -5,6 +5,7 @@ from math import isfinite
 from typing import Any
 
 from bandproof.analysis.uncertainty import Combined
+from bandproof.bench.conformance import board_probability
 from bandproof.bench.types import Comparison, Run, StageResult, Verdict
 
 __all__ = ["RESULT_SCHEMA", "bare_parameter", "board_verdict", "result_object", "stage_object"]
@@ -26,6 +27,7 @@ def result_object(run: Run, stages: Sequence[StageResult], files: Mapping[str, s
     return {
         "schema": RESULT_SCHEMA,
         "verdict": board_verdict(run, stages),
+        "conformance_probability": board_probability(stages) if run.ended == "complete" else None,
         "ended": run.ended,
         "serial": run.serial,
         "run_id": run.run_id,
@@ -71,6 +73,7 @@ def bare_parameter(unit: str, measured: float, budget: Combined) -> dict[str, An
         "upper_limit": None,
         "verdict": None,
         "conformance_probability": None,
+        "conformance_prior": None,
     }
 
 
@@ -89,6 +92,7 @@ def _parameter(figure: Comparison) -> dict[str, Any]:
         "upper_limit": _number(figure.upper_limit),
         "verdict": figure.verdict,
         "conformance_probability": _number(figure.conformance_probability),
+        "conformance_prior": "flat" if figure.prior is None else "process spread",
     }
 
 

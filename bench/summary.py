@@ -8,13 +8,23 @@ from typing import TYPE_CHECKING
 from bandproof.analysis.uncertainty import share
 from bandproof.bench.budget import dominating
 from bandproof.bench.quantities import decimals, engineering, with_uncertainty
+from bandproof.bench.rules import SIMPLE_TEXT
 from bandproof.bench.types import QUANTITIES, UNITS, Comparison, Quantity, StageResult, Verdict
 
 if TYPE_CHECKING:
     from bandproof.analysis.uncertainty import Combined
     from bandproof.bench.drawing import Drawn
 
-__all__ = ["budget_lines", "dB", "dominating_lines", "drawn_lines", "figure_lines", "summary_lines"]
+__all__ = [
+    "budget_lines",
+    "dB",
+    "dominating_lines",
+    "drawn_lines",
+    "figure_lines",
+    "rule_lines",
+    "summary_lines",
+    "verdict_counts",
+]
 
 _TITLES: dict[Quantity, str] = {
     "centre": "Centre frequency f0",
@@ -37,6 +47,25 @@ def summary_lines(stages: Sequence[StageResult]) -> list[str]:
     for quantity in QUANTITIES if stages else ():
         lines += ["", _TITLES[quantity], *_row(_HEADINGS), *_rows(quantity, stages)]
     return lines
+
+
+def rule_lines(stages: Sequence[StageResult], probability: float | None) -> list[str]:
+    """Return what decided where limits did not as they are, and how probable it is that all figures conform."""
+    figures = [figure for stage in stages for figure in stage.figures.values()]
+    lines = []
+    for rule in dict.fromkeys(figure.rule for figure in figures if figure.rule != SIMPLE_TEXT):
+        lines.append(f"rule {rule}: {verdict_counts([figure for figure in figures if figure.rule == rule])}")
+    if probability is not None:
+        spread = sum(figure.prior is not None for figure in figures)
+        prior = f" (process spread known of {spread} of {len(figures)} figures)" if spread else ""
+        lines.append(f"probability that the whole board conforms: {probability:.3f}{prior}")
+    return lines
+
+
+def verdict_counts(figures: Sequence[Comparison]) -> str:
+    """Return how many figures have which verdict, in words."""
+    verdicts = [figure.verdict for figure in figures]
+    return ", ".join(f"{verdicts.count(word)} {word}" for word in dict.fromkeys(sorted(verdicts)))
 
 
 def dominating_lines(stages: Sequence[StageResult]) -> list[str]:

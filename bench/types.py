@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING, Any, Literal
 if TYPE_CHECKING:
     from bandproof.analysis.uncertainty import Combined
 
+from bandproof.analysis.decision import SIMPLE, Prior, Rule
 from bandproof.drivers.serial_line import Serial
 
 __all__ = [
@@ -57,12 +58,17 @@ class Part:
 
 @dataclass(frozen=True, slots=True)
 class Limit:
-    """What a figure was designed to be and the limits it must keep."""
+    """What a figure was designed to be and the limits it must keep.
+
+    ``rule`` as written, ``decides`` as meant; ``prior`` is the spread of the process, None where it is not known.
+    """
 
     designed: float
     lower: float
     upper: float
     rule: str = "simple"
+    decides: Rule = SIMPLE
+    prior: Prior | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -292,7 +298,7 @@ class Thru:
 
 @dataclass(frozen=True, slots=True)
 class Comparison:
-    """One figure of one stage, measured against designed."""
+    """One figure of one stage, measured against designed; ``prior`` is None where nothing was known beforehand."""
 
     quantity: Quantity
     unit: str
@@ -308,6 +314,7 @@ class Comparison:
     upper_limit: float
     verdict: Verdict
     conformance_probability: float
+    prior: Prior | None = None
 
     @property
     def deviation(self) -> float:

@@ -80,7 +80,7 @@ def _board(path: Path | None, stage: str | None) -> "Board | None":
 
 def _show(found: "Imported", path: Path, board: "Board | None") -> None:
     from bandproof.bench.quantities import engineering
-    from bandproof.bench.summary import figure_lines, summary_lines
+    from bandproof.bench.summary import figure_lines, rule_lines, summary_lines
 
     choice, frequency = found.choice, found.response.frequency
     low, high = (engineering(float(end), "Hz", 7) for end in (frequency[0], frequency[-1]))
@@ -100,6 +100,8 @@ def _show(found: "Imported", path: Path, board: "Board | None") -> None:
     click.echo(_wrapped(_ONLY_NOISE, ""))
     if found.stage.verdict is not None:
         click.echo(f"Stage {found.stage.name}: {found.stage.verdict.upper()}")
+        for line in rule_lines([found.stage], None):
+            click.echo(line)
 
 
 def _noise(scatter: "Scatter") -> str:

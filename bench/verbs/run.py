@@ -58,7 +58,7 @@ def _duration(seconds: float) -> str:
 
 def show(outcome: "Outcome", wall_seconds: float, as_json: bool) -> int:
     """Print a job's outcome and return the exit code."""
-    from bandproof.bench.summary import dominating_lines, summary_lines
+    from bandproof.bench.summary import dominating_lines, rule_lines, summary_lines, verdict_counts
 
     if as_json:
         files = {kind: str(outcome.folder / name) if name else None for kind, name in outcome.result["files"].items()}
@@ -76,7 +76,10 @@ def show(outcome: "Outcome", wall_seconds: float, as_json: bool) -> int:
         click.echo(wrapped(f"CUT SHORT: {run.reason}"))
         click.echo(f"No verdict. What was measured is kept; to go on:  bandproof resume {outcome.folder}")
     else:
-        click.echo(f"Board: {str(result['verdict']).upper()}   {_counts(outcome)}")
+        figures = [figure for stage in outcome.stages for figure in stage.figures.values()]
+        click.echo(f"Board: {str(result['verdict']).upper()}   {verdict_counts(figures)}")
+        for line in rule_lines(outcome.stages, result["conformance_probability"]):
+            click.echo(line)
     click.echo(
         f"{result['points']} points in {run.bench_seconds:.1f} s of bench time ({wall_seconds:.1f} s by the wall)"
     )
@@ -91,11 +94,6 @@ def show(outcome: "Outcome", wall_seconds: float, as_json: bool) -> int:
 def wrapped(text: str) -> str:
     """Return a text on lines of 80 columns, all but the first indented."""
     return textwrap.fill(text, 80, subsequent_indent="  ", break_long_words=False, break_on_hyphens=False)
-
-
-def _counts(outcome: "Outcome") -> str:
-    verdicts = [figure.verdict for stage in outcome.stages for figure in stage.figures.values()]
-    return ", ".join(f"{verdicts.count(word)} {word}" for word in dict.fromkeys(sorted(verdicts)))
 
 
 def exit_code(outcome: "Outcome") -> int:

@@ -29,6 +29,7 @@ PARAMETER = {
     "upper_limit": NUMBER,
     "verdict": TEXT,
     "conformance_probability": NUMBER,
+    "conformance_prior": TEXT,
 }
 STAGE = {
     "name": TEXT,
@@ -42,6 +43,7 @@ STAGE = {
 RESULT = {
     "schema": TEXT,
     "verdict": TEXT,
+    "conformance_probability": NUMBER,
     "ended": TEXT,
     "serial": TEXT,
     "run_id": TEXT,
