@@ -29,3 +29,10 @@ def test_start_up_prints_both_ratios(capsys):
 
     assert isinstance(start_up.main(rounds=1), bool)
     assert capsys.readouterr().out.count("ratio") == 2
+
+
+def test_a_twentieth_of_the_risk_table_is_within_its_statistical_error(capsys):
+    from tests.benchmarks import risk_table
+
+    assert risk_table.main(boards=risk_table.BOARDS // 20, out=risk_table.OUT // 20)
+    assert len(capsys.readouterr().out.splitlines()) == 13
