@@ -7,9 +7,10 @@ the irregular values listed below.
 from __future__ import annotations
 
 from functools import cache
+from itertools import pairwise
 from math import floor, log10
 
-__all__ = ["E_SERIES", "e_series", "nearest_preferred"]
+__all__ = ["E_SERIES", "e_series", "nearest_preferred", "preferred_values", "widest_step"]
 
 E_SERIES = {"E3": 3, "E6": 6, "E12": 12, "E24": 24, "E48": 48, "E96": 96, "E192": 192}
 
@@ -54,3 +55,30 @@ def nearest_preferred(value: float, name: str) -> float:
     mantissas = [*e_series(name), 10.0]
     best = min(mantissas, key=lambda mantissa: abs(log10(mantissa) + decade - log10(value)))
     return float(f"{best:.2f}e{decade}")  # by text: 31600, not 31600.000000000004
+
+
+def preferred_values(name: str, low: float, high: float) -> tuple[float, ...]:
+    """Return every preferred value from low to high, both included, ascending.
+
+    Examples
+    --------
+    >>> preferred_values("E3", 1e-10, 1e-9)
+    (1e-10, 2.2e-10, 4.7e-10, 1e-09)
+    """
+    if not 0 < low <= high:
+        raise ValueError(f"low must be positive and not above high, found {low!r} and {high!r}")
+    decades = range(floor(log10(low)), floor(log10(high)) + 1)
+    values = (float(f"{mantissa:.2f}e{decade}") for decade in decades for mantissa in e_series(name))
+    return tuple(value for value in values if low <= value <= high)
+
+
+def widest_step(name: str) -> float:
+    """Return the greatest ratio between neighbours of a series.
+
+    Examples
+    --------
+    >>> round(widest_step("E24"), 3)
+    1.154
+    """
+    values = (*e_series(name), 10.0)
+    return max(above / below for below, above in pairwise(values))
