@@ -15,7 +15,7 @@ import numpy as np
 from bandproof.analysis.network import Network, response
 from bandproof.analysis.types import BoolArray, ComplexArray, FloatArray
 
-__all__ = ["Curve", "CurveFigures", "curve_figures", "network_figures", "stage_response"]
+__all__ = ["Curve", "CurveFigures", "curve_figures", "figure_slopes", "network_figures", "stage_response"]
 
 Curve: TypeAlias = Callable[[FloatArray], ComplexArray]  # (S, N) Hz to (S, N) ratio
 
@@ -126,6 +126,49 @@ def network_figures(
         return stage_response(network, frequency, node_in=node_in, node_out=node_out, values=table)
 
     return curve_figures(curve, low, high, count=count)
+
+
+def figure_slopes(
+    network: Network, figures: FloatArray, *, node_in: str, node_out: str, values: Mapping[str, FloatArray]
+) -> FloatArray:
+    """Return how ln f0, ln Q and ln gain of a stage change with the ln of each part's value, around known figures.
+
+    The peak and the edges are where a condition on ln |H| holds, so they move as an implicit function does. The edges
+    are those that Q gives a second-order band.
+
+    Parameters
+    ----------
+    figures : (K, 3) float array
+        ln f0, ln Q, ln gain with the values; NaN gives NaN.
+    values : mapping of P names to (K,) float arrays
+        Values of the parts that the slopes are wanted for.
+
+    Returns
+    -------
+    (K, 3, P) float array
+    """
+    names, known = list(values), np.nan_to_num(figures)
+    half = np.arcsinh(0.5 * np.exp(-known[:, 1]))  # ln of an edge over f0: sinh(half) = 1 / (2 Q)
+    near = 0.02 * half
+    x = known[:, :1] + np.outer(near, [0, -1, 1] * 3) + np.outer(half, [0] * 3 + [-1] * 3 + [1] * 3)
+    step, rows = 1e-3, 2 * len(names) + 1
+    table = {name: np.repeat(np.asarray(column, dtype=float), rows) for name, column in values.items()}
+    for i, name in enumerate(names):
+        table[name][2 * i + 1 :: rows] *= np.exp(step)
+        table[name][2 * i + 2 :: rows] *= np.exp(-step)
+    h = stage_response(network, np.repeat(np.exp(x), rows, axis=0), node_in=node_in, node_out=node_out, values=table)
+    level = np.log(np.abs(h)).reshape(len(known), rows, -1)
+    by_part = (level[:, 1::2] - level[:, 2::2]) / (2.0 * step)  # (K, P, 9)
+    at, near = level[:, :1], near[:, None]
+    peak = (
+        -(by_part[..., 2] - by_part[..., 1]) / (2.0 * near) / ((at[..., 2] - 2.0 * at[..., 0] + at[..., 1]) / near**2)
+    )
+    edges = [-(by_part[..., i] - by_part[..., 0]) / ((at[..., i + 2] - at[..., i + 1]) / (2.0 * near)) for i in (3, 6)]
+    low, high = np.exp(-half)[:, None], np.exp(half)[:, None]
+    q = peak - (high * edges[1] - low * edges[0]) / (high - low)
+    slopes = np.stack([peak, q, by_part[..., 0]], axis=1)
+    result: FloatArray = np.where(np.isfinite(figures)[:, :, None], slopes, np.nan)
+    return result
 
 
 def _rough_peak(level: _Level, x: FloatArray) -> tuple[FloatArray, FloatArray]:

@@ -18,6 +18,7 @@ from bandproof.bench.linear import level_alarms
 from bandproof.bench.misfit import Misfit, StageFit, arrays, look_for_misfit
 from bandproof.bench.picture import StageView
 from bandproof.bench.sources import Measured, Source, sources, systematic
+from bandproof.bench.suspects import suspected
 from bandproof.bench.thru import Path, Ranges, corrected, paths
 from bandproof.bench.types import QUANTITIES, Bench, Board, Point, Run, Stage, StageResult
 
@@ -82,11 +83,13 @@ def evaluate(run: Run) -> tuple[StageResult, ...]:
     """Return what is concluded about every stage that was driven; one without a fit is undecided, and why."""
     measured, known = {point.stage for point in run.points if point.purpose != "no-signal"}, known_paths(run)
     board, bench = run.board, run.bench
-    return tuple(
+    results = [
         evaluate_stage(board, bench, stage, [p for p in run.points if p.stage == stage.name], known, run.ambient)
         for stage in board.stages
         if stage.name in measured
-    )
+    ]
+    suspects = suspected(board, results)
+    return tuple(replace(result, suspects=suspects.get(result.name, ())) for result in results)
 
 
 def known_paths(run: Run) -> dict[Ranges, Path]:

@@ -6,7 +6,7 @@ from typing import Any
 
 from bandproof.analysis.uncertainty import Combined
 from bandproof.bench.conformance import board_probability
-from bandproof.bench.types import Comparison, Run, StageResult, Verdict
+from bandproof.bench.types import Comparison, Run, StageResult, Suspect, Verdict
 
 __all__ = ["RESULT_SCHEMA", "bare_parameter", "board_verdict", "result_object", "stage_object"]
 
@@ -53,7 +53,17 @@ def stage_object(stage: StageResult) -> dict[str, Any]:
             "points": stage.points,
             "lack_of_fit": stage.lack_of_fit,
         },
-        "suspects": [],
+        "suspects": [_suspect(suspect) for suspect in stage.suspects],
+    }
+
+
+def _suspect(suspect: Suspect) -> dict[str, Any]:
+    return {
+        "text": suspect.text,
+        "kind": suspect.kind,
+        "parts": list(suspect.parts),
+        "estimate": suspect.estimate,
+        "delta_chi_square": _number(suspect.delta_chi_square),
     }
 
 

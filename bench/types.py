@@ -28,6 +28,7 @@ __all__ = [
     "Stage",
     "StageResult",
     "Step",
+    "Suspect",
     "Temperature",
     "TestPoint",
     "Thru",
@@ -323,6 +324,22 @@ class Comparison:
 
 
 @dataclass(frozen=True, slots=True)
+class Suspect:
+    """What is suspected: in words, its kind, the parts concerned.
+
+    ``kind`` is "part", "missing", "bridged", "swapped", "common factor", "bench", "not distinguishable" or
+    "unexplained"; ``estimate`` a part's value in SI or a factor, None where there is none; ``delta_chi_square`` the
+    distance to the runner-up.
+    """
+
+    text: str
+    kind: str
+    parts: tuple[str, ...]
+    estimate: float | None
+    delta_chi_square: float
+
+
+@dataclass(frozen=True, slots=True)
 class StageResult:
     """What is concluded about a stage: its fit and its figures."""
 
@@ -339,6 +356,7 @@ class StageResult:
     status: str
     alarms: tuple[str, ...]
     budgets: "Mapping[Quantity, Combined]"
+    suspects: tuple[Suspect, ...] = ()
 
 
 @dataclass(frozen=True, slots=True)

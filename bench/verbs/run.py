@@ -72,6 +72,8 @@ def show(outcome: "Outcome", wall_seconds: float, as_json: bool) -> int:
     click.echo("")
     for alarm in result["alarms"]:
         click.echo(wrapped(f"note: {alarm}"))
+    for suspect in [suspect for stage in outcome.stages for suspect in stage.suspects]:
+        click.echo(wrapped(f"suspect: {suspect.text}"))
     if run.ended == "cut_short":
         click.echo(wrapped(f"CUT SHORT: {run.reason}"))
         click.echo(f"No verdict. What was measured is kept; to go on:  bandproof resume {outcome.folder}")

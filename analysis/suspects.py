@@ -1,0 +1,265 @@
+"""Which part is off, asked only when the figures lie outside what tolerances and measurement allow.
+
+Figures are ln f0, ln Q and ln gain of every stage. A board is *outside* when no values of its parts within their
+tolerances give what was measured: the squared Mahalanobis distance, by the measurement's covariance, to the nearest
+figures that such parts can give. Nothing is assumed of how parts lie within their tolerance, so a healthy board is
+accused at most as often as the test's level says, also with all parts of one reel on one side. Hypotheses are then
+compared by generalized least squares, the tolerances of all other parts (uniform: variance t²/3) in the covariance.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+from itertools import combinations
+from typing import Literal, TypeAlias
+
+import numpy as np
+
+from bandproof.analysis.tolerances import Circuit, Seen, outside, spread
+from bandproof.analysis.types import BoolArray, FloatArray
+
+__all__ = ["DISTINGUISHABLE", "Hypothesis", "Judgement", "judged"]
+
+Kind: TypeAlias = Literal["part", "swapped", "common", "probe", "channels", "tap"]
+
+DISTINGUISHABLE = 4.0  # of chi-square to the runner-up
+SATURATED = 4.0  # an end of the scan that fits as well as this means open or bridged
+_UNEXPLAINED = 1e-4  # probability below which the best hypothesis is no explanation; arbitrary
+_REEL = 3.0**0.5  # standard deviation of a common factor, in tolerances: three times that of one part; arbitrary
+_REFINED, _STEPS = 3, 6  # minima of a scan that are followed, and steps taken
+
+
+@dataclass(frozen=True, slots=True)
+class Hypothesis:
+    """What would explain the figures.
+
+    Attributes
+    ----------
+    kind : str
+        "part": one part has another value; "swapped": two parts of a stage exchanged; "common": one factor on all
+        parts of a kind; "probe": gains off by ten from a stage on; "channels": gains inverted; "tap": the figures of
+        another stage.
+    stages : tuple of int
+        Where it strikes.
+    names : tuple of str
+        Parts, or the kind of part.
+    chi_square : float
+        Of the stages it strikes (one stage) or of all (board).
+    log_factor, u : float
+        Natural logarithm of the factor and its standard uncertainty (NaN where nothing was estimated).
+    ends : str
+        "open" or "bridged" where any factor from the estimate on to the end of the scan fits as well.
+    """
+
+    kind: Kind
+    stages: tuple[int, ...]
+    names: tuple[str, ...]
+    chi_square: float
+    log_factor: float = np.nan
+    u: float = np.nan
+    ends: Literal["", "open", "bridged"] = ""
+
+
+@dataclass(frozen=True, slots=True)
+class Judgement:
+    """What is suspected: the best hypothesis first, then all that cannot be told from it, and the next one's distance.
+
+    ``explained`` is false where even the best does not give the figures.
+    """
+
+    candidates: tuple[Hypothesis, ...]
+    delta_chi_square: float
+    explained: bool
+
+
+def judged(circuits: Sequence[Circuit], seen: Sequence[Seen]) -> list[Judgement]:
+    """Return what is suspected of a board, nothing when it can be healthy.
+
+    Parameters
+    ----------
+    circuits, seen
+        One of each for every stage that was measured, in the order they were.
+
+    Returns
+    -------
+    list of Judgement
+        One about the board where that is best, else one for every stage outside.
+    """
+    healthy = [_distance(c, s.figures - c.nominal, s, c.slopes) for c, s in zip(circuits, seen, strict=True)]
+    by_stage = {i: _ranked(_of_stage(i, circuits, seen)) for i in outside(circuits, seen)}
+    guilty = [i for i, ranked in by_stage.items() if healthy[i] - ranked[0].chi_square >= DISTINGUISHABLE]
+    if not guilty:
+        return []
+    whole = _ranked(_of_board(circuits, seen))
+    best = [by_stage[i][0].chi_square if i in guilty else healthy[i] for i in range(len(circuits))]
+    apart = sum(best)  # each stage by itself
+    if whole and whole[0].chi_square < apart:
+        alone = [replace(by_stage[i][0], chi_square=apart) for i in guilty]
+        return [_judgement(_ranked([*whole, *alone]), 3 * len(circuits))]
+    together = {i: [replace(h, chi_square=h.chi_square - apart + best[i]) for h in whole] for i in guilty}
+    return [_judgement(_ranked([*by_stage[i], *together[i]]), 2) for i in guilty]
+
+
+def _ranked(found: Sequence[Hypothesis]) -> list[Hypothesis]:
+    return sorted(found, key=lambda hypothesis: hypothesis.chi_square)
+
+
+def _judgement(ranked: Sequence[Hypothesis], dof: int) -> Judgement:
+    from scipy.special import chdtrc
+
+    best = ranked[0].chi_square
+    beside = tuple(h for h in ranked if h.chi_square - best < DISTINGUISHABLE)
+    following = min((h.chi_square for h in ranked[1:]), default=np.inf)
+    return Judgement(beside, following - best, bool(chdtrc(dof, best) > _UNEXPLAINED))
+
+
+def _of_stage(i: int, circuits: Sequence[Circuit], seen: Sequence[Seen]) -> list[Hypothesis]:
+    """Return every hypothesis about one stage."""
+    circuit = circuits[i]
+    return [
+        *_single_parts(i, circuit, seen[i]),
+        *_swapped(i, circuit, seen[i]),
+        *(_tap(i, j, circuits[j], seen[i]) for j in range(len(circuits)) if j != i),
+    ]
+
+
+def _of_board(circuits: Sequence[Circuit], seen: Sequence[Seen]) -> list[Hypothesis]:
+    """Return every hypothesis about all stages together, none for a board of one stage."""
+    pairs = list(zip(circuits, seen, strict=True))
+    if len(pairs) < 2:
+        return []
+    found = [_common(kind, circuits, seen) for kind in dict.fromkeys(k for c in circuits for k in c.kinds)]
+    away = np.array([s.figures - c.nominal for c, s in pairs])
+    for first in range(len(pairs) - 1):
+        for sign in (1.0, -1.0):
+            moved = away.copy()
+            moved[first:, 2] -= sign * np.log(10.0)
+            at = tuple(range(first, len(pairs)))
+            found.append(Hypothesis("probe", at, (), _total(pairs, moved), sign * float(np.log(10.0)), 0.0))
+    inverted = away.copy()
+    inverted[:, 2] += 2.0 * np.array([c.nominal[2] for c in circuits])
+    found.append(Hypothesis("channels", tuple(range(len(pairs))), (), _total(pairs, inverted)))
+    return found
+
+
+def _total(pairs: Sequence[tuple[Circuit, Seen]], away: FloatArray) -> float:
+    return float(sum(_distance(c, d, s, c.slopes) for (c, s), d in zip(pairs, away, strict=True)))
+
+
+def _distance(circuit: Circuit, away: FloatArray, seen: Seen, slopes: FloatArray, but: int | None = None) -> float:
+    """Return the squared Mahalanobis distance of figures (3,) with the tolerances of all parts but one."""
+    return float(away @ np.linalg.solve(spread(circuit, slopes, seen, but), away))
+
+
+def _single_parts(i: int, circuit: Circuit, seen: Seen) -> list[Hypothesis]:
+    """Return, for every part of a stage, the factor that fits best."""
+    starts: list[tuple[int, float]] = []
+    scans = [_scanned(circuit, seen, part) for part in range(len(circuit.parts))]
+    for part, chi in enumerate(scans):
+        around = np.concatenate([[np.inf], chi, [np.inf]])
+        minima = np.flatnonzero(np.isfinite(chi) & (chi <= around[:-2]) & (chi <= around[2:]))
+        deepest = minima[np.argsort(chi[minima])][:_REFINED]
+        starts += [(part, float(circuit.scan(part).log_factors[k])) for k in deepest]
+    refined = _refined(circuit, seen, starts)
+    found = []
+    for part, name in enumerate(circuit.parts):
+        mine = [entry for entry, start in zip(refined, starts, strict=True) if start[0] == part]
+        if not mine:
+            continue
+        best, at, u = min(mine)
+        if abs(at) < np.log1p(circuit.tolerances[part]):
+            best = np.inf  # a part within its tolerance is not off
+        found.append(Hypothesis("part", (i,), (name,), best, at, u, _ends(scans[part], best, at)))
+    return found
+
+
+def _scanned(circuit: Circuit, seen: Seen, part: int) -> FloatArray:
+    """Return chi-square (K,) along the scan of a part, infinite where there is no band."""
+    scan = circuit.scan(part)
+    away = np.where(np.isfinite(scan.figures), seen.figures - scan.figures, 0.0)
+    covariance = spread(circuit, np.nan_to_num(scan.slopes), seen, part)
+    chi = np.einsum("ki,ki->k", away, np.linalg.solve(covariance, away[..., None])[..., 0])
+    result: FloatArray = np.where(np.isfinite(scan.slopes).all(axis=(1, 2)), chi, np.inf)
+    return result
+
+
+def _ends(chi: FloatArray, best: float, at: float) -> Literal["", "open", "bridged"]:
+    if at > 1.0 and chi[-1] - best < SATURATED:
+        return "open"
+    return "bridged" if at < -1.0 and chi[0] - best < SATURATED else ""
+
+
+def _refined(circuit: Circuit, seen: Seen, starts: Sequence[tuple[int, float]]) -> list[tuple[float, float, float]]:
+    """Return chi-square, log factor and its standard uncertainty from each start, by steps of Gauss and Newton."""
+    parts, rows = np.array([part for part, _ in starts]), np.arange(len(starts))
+    at = np.array([start for _, start in starts])
+    best = np.full((len(starts), 3), np.inf)
+    for _ in range(_STEPS):
+        values = np.tile(circuit.values, (len(starts), 1))
+        values[rows, parts] *= np.exp(at)
+        figures = circuit.figures(values)
+        slopes = circuit.sensitivities(values, figures)
+        usable = np.isfinite(slopes).all(axis=(1, 2))
+        away, slopes = np.where(usable[:, None], seen.figures - figures, 0.0), np.nan_to_num(slopes)
+        weight = np.linalg.inv(np.stack([spread(circuit, s, seen, p) for s, p in zip(slopes, parts, strict=True)]))
+        along = slopes[rows, :, parts]
+        chi = np.where(usable, np.einsum("ki,kij,kj->k", away, weight, away), np.inf)
+        steepness = np.einsum("ki,kij,kj->k", along, weight, along)
+        u = 1.0 / np.sqrt(np.maximum(steepness, 1e-12))
+        better: BoolArray = np.less(chi, best[:, 0])
+        best = np.where(better[:, None], np.stack([chi, at, u], axis=1), best)
+        step = np.einsum("ki,kij,kj->k", along, weight, away) / np.maximum(steepness, 1e-12)
+        at = at + np.clip(step, -0.5, 0.5)
+        if np.all(np.abs(step) < 0.05 * u):
+            break
+    return [(float(chi), float(x), float(u)) for chi, x, u in best]
+
+
+def _swapped(i: int, circuit: Circuit, seen: Seen) -> list[Hypothesis]:
+    """Return, for every two parts of a kind and of different values, what they give exchanged."""
+    found = []
+    for a, b in combinations(range(len(circuit.parts)), 2):
+        if circuit.kinds[a] != circuit.kinds[b] or circuit.values[a] == circuit.values[b]:
+            continue
+        values = circuit.values.copy()
+        values[[a, b]] = values[[b, a]]
+        figures = circuit.figures(values[None])
+        slopes = circuit.sensitivities(values[None], figures)[0]
+        if np.isfinite(slopes).all():
+            chi = _distance(circuit, seen.figures - figures[0], seen, slopes)
+            found.append(Hypothesis("swapped", (i,), (circuit.parts[a], circuit.parts[b]), chi))
+    return found
+
+
+def _tap(i: int, j: int, other: Circuit, seen: Seen) -> Hypothesis:
+    """Return that stage i was measured at the tap of stage j."""
+    return Hypothesis("tap", (i, j), (), _distance(other, seen.figures - other.nominal, seen, other.slopes))
+
+
+def _common(kind: str, circuits: Sequence[Circuit], seen: Sequence[Seen]) -> Hypothesis:
+    """Return the factor on all parts of a kind that fits best, held to its tolerance by what reels can be."""
+    pairs = list(zip(circuits, seen, strict=True))
+    members = [np.array([k == kind for k in circuit.kinds]) for circuit in circuits]
+    tolerance = max(float(c.tolerances[m].max()) for c, m in zip(circuits, members, strict=True) if m.any())
+    price = (_REEL * tolerance) ** -2
+    at, best = 0.0, (np.inf, 0.0, np.nan)
+    for _ in range(_STEPS):
+        chi, pull, steepness = price * at**2, -price * at, price
+        for (circuit, one), member in zip(pairs, members, strict=True):
+            values = (circuit.values * np.exp(at * member))[None]
+            figures = circuit.figures(values) if at else circuit.nominal[None]
+            slopes = circuit.sensitivities(values, figures)[0] if at else circuit.slopes
+            if not np.isfinite(slopes).all():
+                return Hypothesis("common", tuple(range(len(pairs))), (kind,), *best)
+            away, along = one.figures - figures[0], slopes @ member
+            weighted = np.linalg.solve(spread(circuit, slopes, one), np.stack([away, along], axis=1))
+            chi += float(away @ weighted[:, 0])
+            pull += float(along @ weighted[:, 0])
+            steepness += float(along @ weighted[:, 1])
+        best = min(best, (chi, at, steepness**-0.5))
+        step = pull / steepness
+        if abs(step) < 0.05 * steepness**-0.5:
+            break
+        at += float(np.clip(step, -1.0, 1.0))
+    return Hypothesis("common", tuple(range(len(pairs))), (kind,), *best)
