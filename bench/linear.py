@@ -1,7 +1,8 @@
 """What the level says: a linear stage on straight converters has the same gain at every level."""
 
 from collections.abc import Mapping, Sequence
-from math import sqrt
+from itertools import product
+from math import inf, sqrt
 
 import numpy as np
 
@@ -76,11 +77,13 @@ def _converters(bench: Bench, points: Sequence[Point], found: StageFit, known: M
 
 def _distance_to_box(sizes: FloatArray, covariance: FloatArray, bound: float) -> float:
     """Return the least squared distance, in standard uncertainties, from sizes (K,) to a point within the bounds."""
-    values, vectors = np.linalg.eigh(covariance)
-    weight = (vectors / np.maximum(values, 1e-12 * values.max())) @ vectors.T
-    inside = np.clip(sizes, -bound, bound)
-    for _ in range(100):  # one size after the other: convex, so that it ends at the nearest point
-        for k in range(len(sizes)):
-            others = weight[k] @ (inside - sizes) - weight[k, k] * (inside[k] - sizes[k])
-            inside[k] = np.clip(sizes[k] - others / weight[k, k], -bound, bound)
-    return float((inside - sizes) @ weight @ (inside - sizes))
+    u, least = np.sqrt(np.diag(covariance)), inf
+    correlation, at, ends = covariance / np.outer(u, u), sizes / u, bound / u
+    for face in product((0, -1, 1), repeat=len(sizes)):  # the nearest point lies on one of them, at its foot
+        held = np.flatnonzero(face)
+        away = np.array(face)[held] * ends[held] - at[held]
+        pull = np.linalg.pinv(correlation[np.ix_(held, held)], rcond=1e-12, hermitian=True) @ away
+        foot = at + correlation[:, held] @ pull
+        if (np.abs(foot) <= ends + 1e-9 * (ends + np.abs(at))).all():
+            least = min(least, float(away @ pull))
+    return least
