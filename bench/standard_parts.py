@@ -22,6 +22,7 @@ __all__ = ["PartsRequest", "described", "in_decibels", "parts_lines", "parts_obj
 
 _FIGURES = ("centre", "q", "gain")
 _LABELS = ("f0", "Q", "gain")
+_TIED = "\u00a0"  # a space where no line is to end
 
 
 @dataclass(frozen=True, slots=True)
@@ -61,12 +62,13 @@ def parts_lines(request: PartsRequest, choices: tuple[Choice, ...]) -> Iterator[
     yield f"capacitors  C_1 = C_2 {f'of {series}' if request.capacitors else '= ' + _value('C_1', choices[0])}"
     yield f"op-amp      {_op_amp(request)}"
     yield ""
-    yield "       C_1 = C_2      R_in   R_shunt  R_feedback      f0       Q    gain   worst"
+    yield "     C_1 = C_2      R_in   R_shunt  R_feedback      f0       Q    gain   worst"
     yield from (_row(number, choice) for number, choice in enumerate(choices, 1))
     yield ""
     yield "Errors of f0, Q and gain are relative; worst is the largest of the three."
     for text in _breaches(request, choices[0]):
-        yield from textwrap.wrap(text, 80, subsequent_indent="  ", break_on_hyphens=False)
+        for line in textwrap.wrap(text, 80, subsequent_indent="  ", break_on_hyphens=False):
+            yield line.replace(_TIED, " ")
     yield from _first_lines(request, choices[0])
 
 
@@ -112,7 +114,7 @@ def _row(number: int, choice: Choice) -> str:
     c, r_in, r_shunt, r_feedback = (_value(name, choice) for name in ("C_1", "R_in", "R_shunt", "R_feedback"))
     errors = "".join(f"{_percent(error):>8}" for error in choice.errors)
     mark = " !" if choice.breaches else ""
-    return f"{number:>3}{c:>13}{r_in:>10}{r_shunt:>10}{r_feedback:>12}{errors}{100 * choice.error:>7.2f}%{mark}"
+    return f"{number:>3}{c:>11}{r_in:>10}{r_shunt:>10}{r_feedback:>12}{errors}{100 * choice.error:>7.2f}%{mark}"
 
 
 def _breaches(request: PartsRequest, first: Choice) -> Iterator[str]:
@@ -141,7 +143,7 @@ def _breach(name: str, choice: Choice) -> str:
     low, high = usual_range(name)
     is_low = getattr(choice.parts, name) < low
     end = engineering(low if is_low else high, "F" if name.startswith("C") else "Ω")
-    return f"{name} {_value(name, choice)} ({'below' if is_low else 'above'} {end})"
+    return f"{name} {_value(name, choice)} ({'below' if is_low else 'above'} {end})".replace(" ", _TIED)
 
 
 def _first_lines(request: PartsRequest, choice: Choice) -> Iterator[str]:
