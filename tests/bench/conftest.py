@@ -19,6 +19,7 @@ from bandproof.bench.sweep import Sweep
 from bandproof.bench.types import Bench, Board
 from bandproof.bench.verbs.rehearse import simulated, world_of
 from bandproof.simulated_instruments.bench import World
+from bandproof.simulated_instruments.imperfections import Imperfections
 
 
 @dataclass
@@ -75,6 +76,15 @@ def swept() -> Callable[..., Swept]:
     return make
 
 
+QUIET = Imperfections(output_resistance=50.0, adc_bits=8, noise=0.5)
+
+
+@pytest.fixture(scope="session")
+def quiet() -> Callable[[World], World]:
+    """A change of a world: its bench has noise and a converter of 8 bits, nothing else is wrong with it."""
+    return lambda world: replace(world, imperfections=QUIET)
+
+
 @pytest.fixture(scope="session")
 def one_band() -> Board:
     """The demo board's lowest stage alone."""
@@ -115,7 +125,7 @@ def outcome(tmp_path_factory: pytest.TempPathFactory) -> Outcome:
     """What a whole job on a board of two bands left; its files are in `outcome.folder`."""
     board = parse_board(band_text(2), "two bands")
     bench = rehearsal_bench(board)
-    world = world_of(board, bench, draw_parts(board, 11), 11, 1)
+    world = replace(world_of(board, bench, draw_parts(board, 11), 11, 1), imperfections=QUIET)
     with simulated(world, bench) as (reachable, clock):
         return Job(
             board=board,

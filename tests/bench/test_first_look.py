@@ -7,6 +7,7 @@ import pytest
 
 from bandproof.analysis.network import Resistor
 from bandproof.bench.errors import BenchFault
+from bandproof.bench.first_look import check_quiet
 from bandproof.bench.instruments import opened
 from bandproof.bench.operator import Absent
 from bandproof.bench.rehearsal import rehearsal_bench
@@ -121,10 +122,11 @@ def test_a_resume_does_not_go_past_a_direct_voltage_that_is_still_there(swept, t
 def test_a_direct_voltage_beyond_half_the_swing_is_refused_though_the_range_would_hold_it(swept, one_band):
     """The sweep may use the other half of the swing (DEVELOPERS.md), so an output there would clip."""
     board = replace(one_band, op_amp=replace(one_band.op_amp, swing=4.0))
-    found = swept(1, board=board, change=stuck_at(2.2), raises=BenchFault)
-    (point,) = found.journal.points
-    assert 2.0 < abs(point.offsets[1]) < 0.5 * point.ranges[1]
-    assert re.match(r"low_out \(channel 2\) .* more than half of the 4 V an op-amp gives", str(found.problem))
+    quiet = next(point for point in swept(1, board=one_band).journal.points if point.purpose == "no-signal")
+    bench, stage = rehearsal_bench(board), board.stages[0]
+    check_quiet(board, bench, stage, replace(quiet, offsets=(0.0, 1.9), ranges=(2.0, 5.0)))
+    with pytest.raises(BenchFault, match=r"^low_out \(channel 2\) .* more than half of the 4 V an op-amp gives"):
+        check_quiet(board, bench, stage, replace(quiet, offsets=(0.0, 2.2), ranges=(2.0, 5.0)))
 
 
 def test_hum_without_signal_is_told(swept, one_band):

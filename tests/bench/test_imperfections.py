@@ -29,7 +29,7 @@ def worst_error(board):
 
 def test_a_decimated_record_is_taken_for_what_it_is(swept, one_band):
     board = swept(1, board=one_band, change=other(decimation=2))
-    assert {point.samples for point in board.journal.points} == {1024}
+    assert {point.samples for point in board.journal.points if point.purpose != "thru"} == {1024}
     assert worst_error(board) < 4.0
 
 
@@ -44,7 +44,7 @@ def test_entries_the_dialect_calls_harmless_cost_nothing(swept, one_band):
         return replace(bench, dialect_texts={"scope": text})
 
     board = swept(1, board=one_band, change=other(rounded_entries=1), rewire=forgiving)
-    assert len(board.journal.points) == 14
+    assert [point.purpose for point in board.journal.points].count("closing") == 1
     assert worst_error(board) < 4.0
     assert not board.journal.alarms
 

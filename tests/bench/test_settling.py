@@ -14,10 +14,13 @@ from bandproof.bench.evaluate import fit_points
 from bandproof.drivers.dialect import source
 from bandproof.drivers.visa import VisaPort
 from bandproof.simulated_instruments.device import Timing
+from bandproof.simulated_instruments.imperfections import Imperfections
 
 
 def at_once(world):
-    return replace(world, timing=Timing(message=1e-4, setting=1e-4, arming=0.0))
+    """Noise and a converter of 8 bits are all that is wrong with this bench: u is that of the records."""
+    quiet = Imperfections(output_resistance=50.0, adc_bits=8, noise=0.5)
+    return replace(world, timing=Timing(message=1e-4, setting=1e-4, arming=0.0), imperfections=quiet)
 
 
 def worst_error(swept_board, healthy=None):

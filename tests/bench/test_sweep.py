@@ -126,7 +126,8 @@ def test_each_stage_is_driven_low_before_it_is_driven_in_full(healthy):
 def test_no_level_is_above_the_ceiling_and_the_sweep_uses_it(healthy):
     """Offset is 0 and stays 0: |offset| + peak is the level."""
     _, messages = healthy
-    assert max(levels(messages)) == CEILING  # the board alone would allow twice as much
+    # The board alone would allow twice as much; a little is given up to use a range of the scope well.
+    assert 0.6 * CEILING <= max(levels(messages)) <= CEILING
     offsets = [m.text for m in messages if m.text.startswith("VOLTage:OFFSet ")]
     assert {float(text.split()[-1]) for text in offsets} <= {0.0}
 

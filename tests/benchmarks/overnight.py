@@ -22,16 +22,15 @@ from bandproof.bench.types import QUANTITIES, Bench, Board, StageResult
 from bandproof.bench.verbs.rehearse import Rehearsal, simulated
 from bandproof.drivers.clock import VirtualClock
 from bandproof.drivers.errors import InstrumentProblem
-from bandproof.simulated_instruments.bench import World
 from bandproof.simulated_instruments.faults import CONDITIONS, NAMES, PLACES, Fault
 
 __all__ = ["Night", "measured"]
 
 HOUR = 3600.0  # s of bench time
 ODDS = 1 / 50  # of a fault at a step
-COMPLETE, FURTHEST = 0.95, 5.0  # share of boards; |error| over the uncertainty from the records' noise
-STEPS = 84  # numbered steps a board's faults are drawn for: two stages of three batches; most take 28
-WIRING_STEPS = (0, 14)  # where the switch is spoken to, if no batch is repeated
+COMPLETE, FURTHEST = 0.95, 5.0  # share of boards; |error| over u
+STEPS = 84  # numbered steps a board's faults are drawn for: two stages of three batches; most take 28 and a thru
+WIRING_STEPS = (0, 1, 2, 15, 28)  # where the switch is spoken to, if no batch is repeated
 PATIENCE = 0.25  # s by the wall a simulated instrument has for a reply
 TRANSIENT = tuple(name for name in NAMES if name not in CONDITIONS)
 
@@ -93,7 +92,7 @@ def measured(*, hours: float, most_boards: int, seed: int, folder: Path, bands: 
             night.cut_short.append(f"TB-{number:04d}: not begun: {outcome}")
             continue
         night.drawn += sum(fault.step < len(outcome.run.points) for fault in faults)
-        _account(night, board, outcome, world, Rehearsal(1000 * seed + number).drawn(board))
+        _account(night, board, outcome, Rehearsal(1000 * seed + number).drawn(board))
     return night
 
 
@@ -152,7 +151,7 @@ class _Silent:
         pass
 
 
-def _account(night: Night, board: Board, outcome: Outcome, world: World, drawn: dict[str, dict[str, float]]) -> None:
+def _account(night: Night, board: Board, outcome: Outcome, drawn: dict[str, dict[str, float]]) -> None:
     run = outcome.run
     night.boards += 1
     night.complete += run.ended == "complete"
@@ -167,7 +166,7 @@ def _account(night: Night, board: Board, outcome: Outcome, world: World, drawn: 
     if failures and run.ended == "complete" and not outcome.result["alarms"]:
         night.dishonest.append(f"{run.serial}: recovered without a word in its alarms")
     for stage in outcome.stages:
-        _compare(night, run.serial, board, stage, world, drawn)
+        _compare(night, run.serial, board, stage, drawn)
 
 
 def _kind(words: str) -> str:
@@ -178,19 +177,13 @@ def _kind(words: str) -> str:
 
 
 def _compare(
-    night: Night, serial: str, board: Board, stage: StageResult, world: World, drawn: dict[str, dict[str, float]]
+    night: Night, serial: str, board: Board, stage: StageResult, drawn: dict[str, dict[str, float]]
 ) -> None:
-    """Compare a stage's figures with what its drawn parts truly give, seen through the channels' true gains."""
+    """Compare a stage's figures with what its drawn parts truly give."""
     true = predict(board, board.stage(stage.name), drawn[stage.name])
-    gains = world.imperfections.channel_gain
-    for quantity in QUANTITIES:
+    for quantity in QUANTITIES if stage.theta else ():
         figure = stage.figures[quantity]
-        if not stage.theta:
-            continue
-        factor = (1 + gains[1]) / (1 + gains[0]) if quantity == "gain" else 1.0
-        if quantity == "centre":
-            factor = 1 / (1 + world.imperfections.frequency_error)
-        error = abs(figure.measured - true[quantity] * factor) / figure.repeatability
+        error = abs(figure.measured - true[quantity]) / figure.standard_uncertainty
         night.figures += 1
         night.worst = max(night.worst, error)
         if error > FURTHEST:
