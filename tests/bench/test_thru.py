@@ -190,7 +190,7 @@ def test_the_stored_points_are_those_of_two_probe_dividers(made, console):
     quiet = {"nonlinearity": 0.0, "reseating": 0.0, "drift": 0.0, "range_gain": 0.0}
     bench = made(**(GROSS | quiet))
     assert console("thru", bench.file)[0] == 0
-    points = [point for point in read_thru(bench.thru).points if point.ranges == (5.0, 5.0)]
+    points = [point for point in read_thru(bench.thru).points if point.ranges == (2.0, 2.0)]
     f = np.array([point.frequency for point in points])
     real = bench.world.imperfections
 
@@ -220,8 +220,8 @@ def test_without_a_board_the_ranges_are_those_of_the_ceiling_over_the_audio_band
     code, out, _ = console("thru", bench.file, "--json")
     assert code == 0
     result = json.loads(out)
-    # 1.2 x 2 V x (1, 0.32, 3.2, 10), rounded up to the scope's 1-2-5 steps
-    assert {tuple(path["ranges"]) for path in result["paths"]} == {(5.0, 5.0), (5.0, 1.0), (5.0, 10.0), (5.0, 50.0)}
+    # Levels below 2 V that just fill a range of 1-2-5 at gains of 1, 0.32, 3.2 and 10, and these ranges.
+    assert {tuple(path["ranges"]) for path in result["paths"]} == {(2.0, 2.0), (2.0, 0.5), (2.0, 5.0), (2.0, 20.0)}
     assert all(path["span"] == pytest.approx([20.0, 20e3], rel=1e-3) for path in result["paths"])
     assert result["conditions"]["ambient"] is None
     assert result["files"] == {"thru": str(bench.thru), "earlier": None}
