@@ -8,7 +8,7 @@ from bandproof.analysis.uncertainty import Combined
 from bandproof.bench.circuit import Prediction
 from bandproof.bench.types import UNITS, Comparison, Quantity, Stage
 
-__all__ = ["compared", "figure", "outside_by_design"]
+__all__ = ["compared", "figure", "judged", "outside_by_design"]
 
 
 def figure(fit: BandFit | None, quantity: Quantity) -> tuple[float, float]:
@@ -28,8 +28,21 @@ def compared(
     stage: Stage, quantity: Quantity, prediction: Prediction, fit: BandFit | None, budget: Combined | None, doubt: str
 ) -> Comparison:
     """Return a figure of a stage compared with its limits; ``doubt`` says why no verdict can be given, or nothing."""
-    limit = stage.limits[quantity]
     value, repeatability = figure(fit, quantity)
+    return judged(stage, quantity, prediction[quantity], value, repeatability, budget, doubt)
+
+
+def judged(
+    stage: Stage,
+    quantity: Quantity,
+    predicted: float,
+    value: float,
+    repeatability: float,
+    budget: Combined | None,
+    doubt: str,
+) -> Comparison:
+    """Return a measured value of a figure compared with the limits of its stage, as `compared` does."""
+    limit = stage.limits[quantity]
     decision = decide(
         value,
         budget.u if budget else 0.0,
@@ -44,7 +57,7 @@ def compared(
         quantity=quantity,
         unit=UNITS[quantity],
         designed=limit.designed,
-        predicted=prediction[quantity],
+        predicted=predicted,
         measured=value,
         repeatability=repeatability,
         standard_uncertainty=budget.u if budget else nan,

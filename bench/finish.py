@@ -4,6 +4,7 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
+from bandproof.bench.attempts import with_earlier
 from bandproof.bench.bench_file import parse_bench
 from bandproof.bench.board_file import parse_board
 from bandproof.bench.budget import budget_plain
@@ -48,16 +49,24 @@ def finish(journal: Journal, folder: Path, problem: Exception | None, words: str
     path = folder / RUN if problem is None else _free(folder)
     if path.exists():
         run, result = read_run(path), read_result(path)
-        stages = evaluate(run)
+        stages, _ = _with_earlier(run, journal, folder)
     else:
-        stages = evaluate(run)
+        stages, attempts = _with_earlier(run, journal, folder)
         result = result_object(run, stages, {"run": path.name, "picture": PICTURE, "report": None})
+        result["attempts"] = attempts
         write_run(
             path, run, result, raw=journal.volts, budget={stage.name: budget_plain(stage.budgets) for stage in stages}
         )
     _draw(run, stages, folder / PICTURE)
     journal.ended(run.ended, path.name, digest_of(path))
     return Outcome(run, stages, result, folder)
+
+
+def _with_earlier(
+    run: Run, journal: Journal, folder: Path
+) -> tuple[tuple[StageResult, ...], list[dict[str, Any]] | None]:
+    head = journal.head
+    return with_earlier(run, evaluate(run), folder.parent, head["earlier"], head["retest"])
 
 
 def run_of(journal: Journal, problem: Exception | None, words: str) -> Run:

@@ -22,7 +22,7 @@ _HEAD: dict[str, Any] = {
     "dialects": dict[str, str],
     "keep_raw": bool,
 }
-_SINCE: dict[str, Any] = {"ambient": None, "thru": None}  # what journals of earlier versions lack
+_SINCE: dict[str, Any] = {"ambient": None, "thru": None, "earlier": [], "retest": ""}  # what journals of earlier versions lack
 _REHEARSAL: dict[str, Any] = {
     "seed": int,
     "defects": list[str],
@@ -50,4 +50,6 @@ def checked_head(entry: dict[str, Any]) -> dict[str, Any]:
         whole(entry, ambient=float)
     if entry["thru"] is not None:
         thru_from(entry["thru"])
-    return whole(entry, **_HEAD)
+    for attempt in entry["earlier"]:
+        whole(attempt, attempt=int, digest=str, verdict=str, pooled=bool)
+    return whole(entry, retest=str, **_HEAD)

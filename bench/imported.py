@@ -122,4 +122,5 @@ def imported_object(found: Imported) -> dict[str, Any]:
         "alarms": list(found.stage.alarms),
         "stages": [stage],
         "files": {"run": None, "picture": None, "report": None},
+        "attempts": None,
     }

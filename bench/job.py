@@ -1,13 +1,13 @@
 """The whole job on one board: open, sweep, fit, compare, keep; begun or resumed, on a real bench or in a rehearsal."""
 
-import re
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from contextlib import closing
 from dataclasses import dataclass
 from importlib.metadata import version
 from pathlib import Path
 from typing import Any, Protocol
 
+from bandproof.bench.attempts import Attempt, numbers, place_of
 from bandproof.bench.errors import BadInput, BenchFault, BenchProblem
 from bandproof.bench.finish import Outcome, finish
 from bandproof.bench.instruments import Devices, occupied, with_dialect_texts
@@ -28,7 +28,6 @@ from bandproof.drivers.errors import InstrumentProblem
 __all__ = ["Job", "Progress", "new_attempt"]
 
 LOG = "exchange.log"
-_SERIAL = re.compile(r"[A-Za-z0-9._-]{1,64}")
 
 
 class Progress(Protocol):
@@ -47,7 +46,8 @@ class Job:
 
     ``rehearsal`` is what a rehearsal was asked for (seed, defects, faults): a resume starts the same simulated bench
     again. ``thru`` is one stored in a file, used by a new run if all its conditions hold; a resumed run uses that of
-    its journal. ``begin_journal`` makes the journal of a new run in its folder.
+    its journal. ``earlier`` are the complete attempts on the serial number that the verdict is pooled with, ``retest``
+    why it is asked again. ``begin_journal`` makes the journal of a new run in its folder.
     """
 
     board: Board
@@ -67,6 +67,8 @@ class Job:
     thru_path: str = ""
     keep_raw: bool = False
     rehearsal: Mapping[str, Any] | None = None
+    earlier: Sequence[Attempt] = ()
+    retest: str = ""
     bench_path: str = ""
     begin_journal: Callable[[Path, dict[str, Any]], Journal] = Journal.begin
 
@@ -183,6 +185,8 @@ class Job:
             "bench_path": self.bench_path,
             "dialects": dict(bench.dialect_texts),
             "keep_raw": self.keep_raw,
+            "earlier": [entry.plain() for entry in self.earlier],
+            "retest": self.retest,
             "rehearsal": dict(self.rehearsal) if self.rehearsal is not None else None,
         }
 
@@ -209,12 +213,10 @@ def new_attempt(folder: Path, serial: str) -> tuple[Path, int]:
     OSError
         The folder cannot be made.
     """
-    if not _SERIAL.fullmatch(serial) or serial in (".", ".."):
-        raise BadInput(f"{serial!r} cannot be a serial number: letters, digits and . _ - only, at most 64")
-    place = folder / serial
+    place = place_of(folder, serial)
     place.mkdir(parents=True, exist_ok=True)
-    taken = [int(entry.name) for entry in place.iterdir() if entry.name.isdigit()]
-    for attempt in range(max(taken, default=0) + 1, max(taken, default=0) + 1000):
+    last = max(numbers(place), default=0)
+    for attempt in range(last + 1, last + 1000):
         try:
             (place / str(attempt)).mkdir()
         except FileExistsError:

@@ -23,7 +23,10 @@ def board_verdict(run: Run, stages: Sequence[StageResult]) -> Verdict | None:
 
 
 def result_object(run: Run, stages: Sequence[StageResult], files: Mapping[str, str | None]) -> dict[str, Any]:
-    """Return the result of a run; ``wall_seconds`` is null here, a command that prints it puts it in."""
+    """Return the result of a run; ``wall_seconds`` is null here, a command that prints it puts it in.
+
+    So is ``attempts``: what is pooled with earlier attempts on the serial number names them (`attempts.with_earlier`).
+    """
     return {
         "schema": RESULT_SCHEMA,
         "verdict": board_verdict(run, stages),
@@ -37,6 +40,7 @@ def result_object(run: Run, stages: Sequence[StageResult], files: Mapping[str, s
         "alarms": [*run.alarms, *(alarm for stage in stages for alarm in stage.alarms)],
         "stages": [stage_object(stage) for stage in stages],
         "files": dict(files),
+        "attempts": None,
     }
 
 

@@ -14,6 +14,9 @@ from bandproof.bench.types import Bench
 from bandproof.bench.verbs.conditions import person, stated
 
 if TYPE_CHECKING:
+    from datetime import datetime
+
+    from bandproof.bench.attempts import Attempt
     from bandproof.bench.finish import Outcome
     from bandproof.bench.job import Job
     from bandproof.bench.journal import Journal
@@ -67,6 +70,9 @@ def show(outcome: "Outcome", wall_seconds: float, as_json: bool) -> int:
     run, result = outcome.run, outcome.result
     click.echo(run.board.title)
     click.echo(f"serial {run.serial}, attempt {run.attempt}, {run.started[:16].replace('T', ' ')} UTC")
+    together = [str(entry["attempt"]) for entry in result["attempts"] or () if entry["pooled"]]
+    if len(together) > 1:
+        click.echo(f"The figures are means of attempts {', '.join(together)}.")
     for line in [*summary_lines(outcome.stages), *dominating_lines(outcome.stages)]:
         click.echo(line)
     click.echo("")
@@ -124,6 +130,8 @@ def worst_code(codes: Sequence[int]) -> int:
 @click.option("--operator", "name", default="", help="Who does this; kept in the run file.")
 @click.option("--ambient", help='Temperature of the room, such as "23 °C"; kept in the run file.')
 @click.option("--note", default="", help="A remark; kept in the run file.")
+@click.option("--retest", default="", metavar="REASON", help="Why a board that has a verdict is measured once more.")
+@click.option("--repair", default="", metavar="TEXT", help="What was repaired since; kept in the serial number's log.")
 @click.option("--without-thru", is_flag=True, help="Leave out the thru that is stored beside the bench file.")
 @click.option("--raw", is_flag=True, help="Keep every record in the run file.")
 @click.option("--json", "as_json", is_flag=True, help="Print the result object and nothing else.")
@@ -135,13 +143,17 @@ def command(
     name: str,
     ambient: str | None,
     note: str,
+    retest: str,
+    repair: str,
     without_thru: bool,
     raw: bool,
     as_json: bool,
 ) -> int:
     """Sweep BOARD on a real bench: every stage, fit, compare with the design, decide, keep the record.
 
-    A thru that `bandproof thru` stored beside the bench file is used while all its conditions hold.
+    A thru that `bandproof thru` stored beside the bench file is used while all its conditions hold. A board that has a
+    verdict is measured once more only with --retest; the verdict is then of both attempts together. After --repair
+    counting begins anew.
 
     \b
     Example:
@@ -158,6 +170,8 @@ def command(
     click.echo(f"bench: {path} ({why})", err=as_json)
     thru = None if without_thru else read_thru(thru_path(path))
     operator, room = stated(name, ambient)
+    clock = clock_of(bench)
+    known = _may_begin(folder, serial, retest, repair, operator=operator, utc=clock.utc())
     place, attempt = new_attempt(folder, serial)
     job = job_of(
         board=board,
@@ -166,7 +180,9 @@ def command(
         attempt=attempt,
         run_id=secrets.token_hex(8),
         folder=place,
-        clock=clock_of(bench),
+        clock=clock,
+        earlier=known,
+        retest=retest,
         operator_name=operator,
         note=note,
         ambient=room,
@@ -176,6 +192,22 @@ def command(
         bench_path=str(path.resolve()),
     )
     return carried_out(job, as_json=as_json)
+
+
+def _may_begin(
+    folder: Path, serial: str, retest: str, repair: str, *, operator: str, utc: "datetime"
+) -> "list[Attempt]":
+    """Return the complete attempts there are, a repair logged first (BadInput when another one may not begin)."""
+    from bandproof.bench.attempts import earlier, log_repair, place_of, refusal
+    from bandproof.bench.errors import BadInput
+
+    place = place_of(folder, serial)
+    if repair:
+        log_repair(place, repair, operator=operator, utc=utc)
+    known = earlier(place)
+    if why := refusal([attempt.verdict for attempt in known if attempt.counts], retest):
+        raise BadInput(f"{serial}: {why}")
+    return known
 
 
 def job_of(**facts: Any) -> "Job":

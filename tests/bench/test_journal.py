@@ -28,6 +28,8 @@ HEAD = {
     "note": 'two\nlines, \u2028 and "quotes"',
     "ambient": 23.5,
     "thru": None,
+    "earlier": [{"attempt": 1, "digest": "d", "verdict": "fail", "pooled": True}],
+    "retest": "why Ω",
     "identities": {"scope": "X"},
     "board": "b",
     "bench": "b",

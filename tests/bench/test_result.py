@@ -53,6 +53,7 @@ RESULT = {
     "alarms": [TEXT],
     "stages": [STAGE],
     "files": {"run": TEXT, "picture": TEXT, "report": MAYBE},
+    "attempts": (list, type(None)),
 }
 
 

@@ -17,7 +17,7 @@ import pytest
 from bandproof.bench.board_file import parse_board
 from bandproof.bench.circuit import draw_parts
 from bandproof.bench.rehearsal import rehearsal_bench
-from bandproof.bench.runfile import read_result
+from bandproof.bench.runfile import digest_of, read_result
 from bandproof.bench.verbs.console import run
 from bandproof.bench.verbs.rehearse import world_of
 from bandproof.bench.verbs.table import VERBS
@@ -326,8 +326,33 @@ def test_a_sweep_of_a_served_bench_passes_and_leaves_it_off(console, served):
     assert "named on the command line" in out
     assert bench.ask_generator(b"OUTP?") == b"0\n"
     assert {path.name for path in (bench.folder / "TB-1" / "1").iterdir()} >= {"run.h5", "picture.svg", "exchange.log"}
-    assert bench.sweep(console)[0] == PASS  # the next attempt, on the bench as it was left
+    assert bench.sweep(console, "--retest", "seen")[0] == PASS  # the next attempt, on the bench as it was left
     assert (bench.folder / "TB-1" / "2" / "run.h5").exists()
+
+
+def test_a_verdict_is_asked_again_once_and_anew_after_a_repair(console, served):
+    bench = served()
+    assert bench.sweep(console)[0] == PASS
+    code, _, err = bench.sweep(console)
+    assert code == BAD_INPUT
+    assert 'its verdict is pass. To ask once more, say why: --retest "REASON"' in " ".join(err.split())
+    assert not (bench.folder / "TB-1" / "2").exists()
+    code, out, _ = bench.sweep(console, "--retest", "for the customer", "--json")
+    assert code == PASS
+    first, second = json.loads(out)["attempts"]
+    assert (first["attempt"], first["pooled"], second["attempt"]) == (1, True, 2)
+    assert first["digest"] == digest_of(bench.folder / "TB-1" / "1" / "run.h5")
+    assert second["reason"] == "for the customer"
+    code, _, err = bench.sweep(console, "--retest", "once more")
+    assert code == BAD_INPUT
+    assert "measured twice" in err
+    assert not (bench.folder / "TB-1" / "3").exists()
+    code, out, _ = bench.sweep(console, "--repair", "C_2 replaced", "--operator", "Ann")
+    assert code == PASS
+    assert "means of attempts" not in out
+    assert re.fullmatch(r"\S+\tafter attempt 2\tAnn\tC_2 replaced\n", (bench.folder / "TB-1/repairs.txt").read_text())
+    code, out, _ = bench.sweep(console, "--retest", "seen")
+    assert (code, "The figures are means of attempts 3, 4." in out) == (PASS, True)
 
 
 def test_the_bench_verb_names_every_instrument_and_leaves_the_generator_off(console, served):

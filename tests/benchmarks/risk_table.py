@@ -3,7 +3,7 @@
 A centred process of Cp 1.33 (3.99 standard deviations from middle to limit), 30 figures a board, each measured with U
 (k = 2) of a half, a quarter, a tenth of the tolerance's half-width. Boards accepted: all figures pass, drawn as boards.
 Escapes: figures that are out and pass, whatever else is on their board, per million boards made. They are too rare to
-wait for, so figures that are out are drawn alone and weighted with how often they occur. Every verdict is the program's.
+wait for, so figures that are out are drawn alone and weighted with how often they occur. Verdicts are the program's.
 Beside each: its statistical error (one standard deviation), the same by integrals, and the table as it was computed
 apart from this program, before it.
 """

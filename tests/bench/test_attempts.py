@@ -1,0 +1,200 @@
+"""Attempts on one serial number: which may begin, what a repair changes, and the verdict of several together."""
+
+import json
+import re
+from dataclasses import replace
+from datetime import UTC, datetime
+from math import sqrt
+
+import numpy as np
+import pytest
+from scipy.stats import multivariate_normal
+
+from bandproof.analysis.decision import SIMPLE, Rule, outcomes
+from bandproof.analysis.uncertainty import combine
+from bandproof.bench.attempts import earlier, log_repair, pooled, refusal, with_earlier
+from bandproof.bench.errors import BadInput
+from bandproof.bench.evaluate import evaluate
+from bandproof.bench.runfile import digest_of, read_result, write_run
+from bandproof.bench.types import QUANTITIES
+
+NOON = datetime(2026, 1, 1, 12, tzinfo=UTC)
+
+
+# --- which may begin ---
+
+
+@pytest.mark.parametrize(
+    ("verdicts", "retest", "words"),
+    [
+        ([], "", None),
+        (["undecided"], "", None),  # earns one more
+        (["fail"], "a clip had come off", None),
+        (["pass"], "audit", None),
+        (["fail"], "", r"its verdict is fail. To ask once more, say why: --retest"),
+        (["pass"], "", r"its verdict is pass\."),
+        (["undecided", "undecided"], "once more", r"measured twice .* undecided .* now a person decides"),
+        (["fail", "fail"], "", r"measured twice .*--repair"),
+        ([], "why", r"nothing to retest"),
+    ],
+)
+def test_a_verdict_is_asked_again_once_with_a_reason(verdicts, retest, words):
+    found = refusal(verdicts, retest)
+    assert (re.search(words, found) is not None) if words else found == ""
+
+
+def stored(folder, outcome, number, verdict):
+    """Keep the outcome's run as an attempt of a verdict."""
+    (folder / str(number)).mkdir(parents=True)
+    run = replace(outcome.run, attempt=number, serial=folder.name)
+    write_run(folder / str(number) / "run.h5", run, {**outcome.result, "verdict": verdict}, raw=lambda step: None)
+
+
+def test_attempts_count_when_complete_and_since_the_last_repair(outcome, tmp_path):
+    place = tmp_path / "TB-1"
+    assert earlier(place) == []
+    stored(place, outcome, 1, "fail")
+    (place / "2").mkdir()  # interrupted: no run file
+    stored(place, outcome, 10, "pass")
+    assert [(a.number, a.verdict, a.counts) for a in earlier(place)] == [(1, "fail", True), (10, "pass", True)]
+    log_repair(place, " C_2 was\n a wrong\tvalue ", operator="Ann\tB", utc=NOON)
+    stored(place, outcome, 11, "undecided")
+    assert [a.counts for a in earlier(place)] == [False, False, True]
+    assert earlier(place)[0].digest == digest_of(place / "1" / "run.h5")
+    log = (place / "repairs.txt").read_text()
+    assert log == "2026-01-01T12:00:00+00:00\tafter attempt 10\tAnn B\tC_2 was a wrong value\n"
+    log_repair(place, "again", operator="", utc=NOON)
+    assert not any(a.counts for a in earlier(place))
+    assert (place / "repairs.txt").read_text().startswith(log)  # nothing that was logged is lost
+
+
+def test_a_repair_says_something_and_its_log_is_read_strictly(tmp_path):
+    with pytest.raises(BadInput, match="says nothing"):
+        log_repair(tmp_path, " \n", operator="Ann", utc=NOON)
+    (tmp_path / "repairs.txt").write_text("changed a part\n")
+    with pytest.raises(BadInput, match=r"repairs\.txt: 'changed a part' is no entry"):
+        earlier(tmp_path)
+
+
+# --- the verdict of several ---
+
+
+def noise_alone(stage):
+    """Return a stage whose budgets have the records' noise alone."""
+    budgets = {
+        name: combine(
+            [row if row.name == "repeatability" else replace(row, standard_uncertainty=0.0) for row in b.rows]
+        )
+        for name, b in stage.budgets.items()
+    }
+    return replace(stage, budgets=budgets)
+
+
+def moved(stage, **figures):
+    """Return a stage that measured so many times each figure."""
+    changed = {name: replace(f, measured=figures.get(name, 1.0) * f.measured) for name, f in stage.figures.items()}
+    return replace(stage, figures=changed)
+
+
+def test_figures_of_two_attempts_are_averaged_and_type_a_alone_is_lowered(outcome):
+    first = tuple(moved(stage, centre=1.01) for stage in outcome.stages)
+    found = pooled([outcome.run, outcome.run], [first, outcome.stages])
+    for stage, own in zip(found, outcome.stages, strict=True):
+        assert stage.figures["centre"].measured == pytest.approx(1.005 * own.figures["centre"].measured, rel=1e-12)
+        assert stage.figures["q"].measured == own.figures["q"].measured
+        for name in QUANTITIES:
+            was, now = own.budgets[name], stage.budgets[name]
+            assert now.u_type_a == pytest.approx(was.u_type_a / sqrt(2.0), rel=1e-12)
+            kept = sqrt(was.u**2 - was.u_type_a**2)
+            assert now.u == pytest.approx(sqrt(kept**2 + was.u_type_a**2 / 2.0), rel=1e-12)
+            assert stage.figures[name].expanded_uncertainty == now.expanded
+            assert stage.figures[name].repeatability == pytest.approx(own.figures[name].repeatability / sqrt(2.0))
+
+
+def test_a_stored_thru_that_both_attempts_used_is_not_lowered(outcome):
+    run = replace(outcome.run, thru=type("Stored", (), {"started": "2026-01-01T00:00:00+00:00"})())
+    other = replace(outcome.run, thru=type("Stored", (), {"started": "2026-01-02T00:00:00+00:00"})())
+    own = {row.name: row for row in outcome.stages[0].budgets["gain"].rows}["thru"].contribution
+    assert own > 0.0
+    for runs, factor in (([run, run], 1.0), ([run, other], sqrt(0.5))):
+        rows = pooled(runs, [outcome.stages, outcome.stages])[0].budgets["gain"].rows
+        assert {row.name: row for row in rows}["thru"].contribution == pytest.approx(factor * own, rel=1e-12)
+
+
+def test_the_verdict_of_both_is_that_of_their_mean(outcome):
+    """A gain above its limit by a quarter in one attempt and well inside in the other."""
+    limit = outcome.run.board.stages[0].limits["gain"]
+    own = outcome.stages[0].figures["gain"].measured
+    out, inside = (moved(outcome.stages[0], gain=factor * limit.upper / own) for factor in (1.02, 0.99))
+    (stage,) = pooled([outcome.run] * 2, [[out], [inside]])
+    assert (stage.figures["gain"].verdict, stage.verdict) == ("fail", "fail")
+    (stage,) = pooled([outcome.run] * 2, [[inside], [moved(inside, gain=1.001)]])
+    assert stage.figures["gain"].verdict == "pass"
+
+
+def test_a_stage_in_doubt_is_left_out_before_and_stays_undecided_now(outcome):
+    doubted = replace(
+        outcome.stages[0],
+        verdict="undecided",
+        figures={n: replace(f, conformance_probability=float("nan")) for n, f in outcome.stages[0].figures.items()},
+    )
+    assert pooled([outcome.run] * 2, [[doubted], outcome.stages[:1]]) == (outcome.stages[0],)
+    assert pooled([outcome.run] * 2, [outcome.stages[:1], [doubted]]) == (doubted,)
+
+
+def test_a_run_names_its_earlier_attempts_and_says_when_one_has_changed(outcome, tmp_path):
+    place = tmp_path / "TB-1"
+    stored(place, outcome, 1, "pass")
+    known = [attempt.plain() for attempt in earlier(place)]
+    run, stages = replace(outcome.run, attempt=2), evaluate(outcome.run)
+    found, named = with_earlier(run, stages, place, known, "audit")
+    assert [entry["attempt"] for entry in named] == [1, 2]
+    assert named[0]["digest"] == digest_of(place / "1" / "run.h5")
+    assert (named[1]["digest"], named[1]["reason"], named[1]["pooled"]) == (None, "audit", True)
+    assert found[0].budgets["q"].u_type_a == pytest.approx(stages[0].budgets["q"].u_type_a / sqrt(2.0))
+    known[0]["digest"] = "0" * 64
+    found, _ = with_earlier(run, stages, place, known, "audit")
+    assert {stage.verdict for stage in found} == {"undecided"}
+    assert all("attempt 1 cannot be pooled" in stage.alarms[-1] for stage in found)
+    assert with_earlier(run, stages, place, [], "") == (stages, None)
+    cut = replace(run, ended="cut_short")
+    assert with_earlier(cut, stages, place, known, "")[0] is stages
+
+
+# --- what the rule lets through ---
+
+# A board exactly on its limit: passing at once, or by the mean of two independent attempts (correlation sqrt(1/2) with
+# the first), z = -2 for a guard band of U = 2 u. Within three tries that each count alone: 1 - (1 - p)^3.
+TRIES = {"guarded 1": (Rule("guarded", 1.0), -2.0, 0.067), "simple": (SIMPLE, 0.0, 0.88)}
+
+
+@pytest.mark.parametrize(("rule", "z", "three_tries"), TRIES.values(), ids=TRIES)
+def test_a_board_on_its_limit_passes_no_more_often_than_two_attempts_allow(outcome, rule, z, three_tries):
+    """Somebody who wants a pass retests whatever did not; only noise differs, so pooling helps as much as it can."""
+    one = noise_alone(outcome.stages[0])
+    (both,) = pooled([outcome.run] * 2, [[one], [one]])
+    value, boards = one.figures["gain"].measured, 40_000
+    u, expanded = ([getattr(stage.budgets["gain"], size) for stage in (one, both)] for size in ("u", "expanded"))
+    words = ("pass", "undecided", "fail")
+    tried = value + u[0] * np.random.default_rng(5).normal(size=(3, boards))
+    means = [tried[0], tried[:2].mean(axis=0)]
+    first, second = (
+        outcomes(mean, u[i], high=value, rule=rule, expanded=expanded[i]).tolist() for i, mean in enumerate(means)
+    )
+    passed = 0
+    for codes in zip(first, second, strict=True):
+        verdicts = []
+        while not refusal(verdicts, "please" if verdicts else "") and "pass" not in verdicts:
+            verdicts.append(words[codes[len(verdicts)]])  # an attempt more than two would be an IndexError
+        passed += verdicts[-1] == "pass"
+    expected = 1.0 - multivariate_normal([0.0, 0.0], [[1.0, sqrt(0.5)], [sqrt(0.5), 1.0]]).cdf([-z, -z])
+    assert passed / boards == pytest.approx(expected, abs=4.0 * sqrt(expected * (1.0 - expected) / boards))
+    assert passed / boards < three_tries  # 3.9 % and 62.5 %
+    alone = (outcomes(tried, u[0], high=value, rule=rule, expanded=expanded[0]) == 0).any(axis=0).mean()
+    assert alone == pytest.approx(three_tries, abs=0.01)  # what three tries that each count alone would give
+
+
+def test_what_the_rule_keeps_is_in_the_run_file(outcome, tmp_path):
+    stored(tmp_path / "TB-1", outcome, 1, "fail")
+    assert read_result(tmp_path / "TB-1" / "1" / "run.h5")["attempts"] is None
+    json.dumps([attempt.plain() for attempt in earlier(tmp_path / "TB-1")])
