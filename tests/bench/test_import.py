@@ -288,7 +288,10 @@ def test_the_result_has_the_shape_of_a_run_s(result, low, with_design, outcome):
         assert set(found["files"].values()) == {None}
     entry = result(f, h)["stages"][0]["parameters"]["q"]
     nothing = {"designed", "predicted", "rule", "deviation", "lower_limit", "upper_limit", "verdict"}
-    assert {key for key, value in entry.items() if value is None} == nothing | {"conformance_probability", "conformance_prior"}
+    assert {key for key, value in entry.items() if value is None} == nothing | {
+        "conformance_probability",
+        "conformance_prior",
+    }
 
 
 def test_a_band_outside_its_limits_fails(result, low, with_design):
