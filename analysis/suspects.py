@@ -28,6 +28,8 @@ SATURATED = 4.0  # an end of the scan that fits as well as this means open or br
 _UNEXPLAINED = 1e-4  # probability below which the best hypothesis is no explanation; arbitrary
 _REEL = 3.0**0.5  # standard deviation of a common factor, in tolerances: three times that of one part; arbitrary
 _REFINED, _STEPS = 3, 6  # minima of a scan that are followed, and steps taken
+_CLOSE = 0.1  # standard uncertainties: a last step changes chi-square by the square of it
+_HOPELESS = 100.0  # of chi-square behind the best, by a straight line: not looked at more closely
 
 
 @dataclass(frozen=True, slots=True)
@@ -88,12 +90,12 @@ def judged(circuits: Sequence[Circuit], seen: Sequence[Seen]) -> list[Judgement]
     """
     healthy = [_distance(c, s.figures - c.nominal, s, c.slopes) for c, s in zip(circuits, seen, strict=True)]
     by_stage = {i: _ranked(_of_stage(i, circuits, seen)) for i in outside(circuits, seen)}
-    guilty = [i for i, ranked in by_stage.items() if healthy[i] - ranked[0].chi_square >= DISTINGUISHABLE]
+    guilty = [i for i, named in by_stage.items() if named and healthy[i] - named[0].chi_square >= DISTINGUISHABLE]
     if not guilty:
         return []
-    whole = _ranked(_of_board(circuits, seen))
     best = [by_stage[i][0].chi_square if i in guilty else healthy[i] for i in range(len(circuits))]
     apart = sum(best)  # each stage by itself
+    whole = _ranked(_of_board(circuits, seen, apart))
     if whole and whole[0].chi_square < apart:
         alone = [replace(by_stage[i][0], chi_square=apart) for i in guilty]
         return [_judgement(_ranked([*whole, *alone]), 3 * len(circuits))]
@@ -124,12 +126,17 @@ def _of_stage(i: int, circuits: Sequence[Circuit], seen: Sequence[Seen]) -> list
     ]
 
 
-def _of_board(circuits: Sequence[Circuit], seen: Sequence[Seen]) -> list[Hypothesis]:
-    """Return every hypothesis about all stages together, none for a board of one stage."""
+def _of_board(circuits: Sequence[Circuit], seen: Sequence[Seen], apart: float) -> list[Hypothesis]:
+    """Return every hypothesis about all stages together, none for a board of one stage.
+
+    ``apart`` is chi-square with each stage explained by itself.
+    """
     pairs = list(zip(circuits, seen, strict=True))
     if len(pairs) < 2:
         return []
-    found = [_common(kind, circuits, seen) for kind in dict.fromkeys(k for c in circuits for k in c.kinds)]
+    found = [
+        _common(kind, circuits, seen, apart + _HOPELESS) for kind in dict.fromkeys(k for c in circuits for k in c.kinds)
+    ]
     away = np.array([s.figures - c.nominal for c, s in pairs])
     for first in range(len(pairs) - 1):
         for sign in (1.0, -1.0):
@@ -153,35 +160,39 @@ def _distance(circuit: Circuit, away: FloatArray, seen: Seen, slopes: FloatArray
 
 
 def _single_parts(i: int, circuit: Circuit, seen: Seen) -> list[Hypothesis]:
-    """Return, for every part of a stage, the factor that fits best."""
-    starts: list[tuple[int, float]] = []
+    """Return, for every part of a stage that comes near, the factor that fits best."""
     scans = [_scanned(circuit, seen, part) for part in range(len(circuit.parts))]
-    for part, chi in enumerate(scans):
+    hope = min(float(within.min()) for _, within in scans) + _HOPELESS
+    starts: list[tuple[int, float]] = []
+    for part, (chi, within) in enumerate(scans):
         around = np.concatenate([[np.inf], chi, [np.inf]])
-        minima = np.flatnonzero(np.isfinite(chi) & (chi <= around[:-2]) & (chi <= around[2:]))
+        minima = np.flatnonzero((chi <= around[:-2]) & (chi <= around[2:]) & (within < hope))
         deepest = minima[np.argsort(chi[minima])][:_REFINED]
         starts += [(part, float(circuit.scan(part).log_factors[k])) for k in deepest]
-    refined = _refined(circuit, seen, starts)
+    refined = _refined(circuit, seen, starts) if starts else []
     found = []
     for part, name in enumerate(circuit.parts):
         mine = [entry for entry, start in zip(refined, starts, strict=True) if start[0] == part]
-        if not mine:
-            continue
-        best, at, u = min(mine)
-        if abs(at) < np.log1p(circuit.tolerances[part]):
-            best = np.inf  # a part within its tolerance is not off
-        found.append(Hypothesis("part", (i,), (name,), best, at, u, _ends(scans[part], best, at)))
+        # a part within its tolerance is not off
+        mine = [entry for entry in mine if abs(entry[1]) >= np.log1p(circuit.tolerances[part])]
+        if mine:
+            best, at, u = min(mine)
+            found.append(Hypothesis("part", (i,), (name,), best, at, u, _ends(scans[part][0], best, at)))
     return found
 
 
-def _scanned(circuit: Circuit, seen: Seen, part: int) -> FloatArray:
-    """Return chi-square (K,) along the scan of a part, infinite where there is no band."""
+def _scanned(circuit: Circuit, seen: Seen, part: int) -> tuple[FloatArray, FloatArray]:
+    """Return chi-square (K,) along the scan of a part, infinite where there is no band; and what a step would leave."""
     scan = circuit.scan(part)
-    away = np.where(np.isfinite(scan.figures), seen.figures - scan.figures, 0.0)
-    covariance = spread(circuit, np.nan_to_num(scan.slopes), seen, part)
-    chi = np.einsum("ki,ki->k", away, np.linalg.solve(covariance, away[..., None])[..., 0])
-    result: FloatArray = np.where(np.isfinite(scan.slopes).all(axis=(1, 2)), chi, np.inf)
-    return result
+    usable: BoolArray = np.isfinite(scan.figures[:, 0])
+    slopes = np.nan_to_num(scan.slopes)
+    away = np.where(usable[:, None], seen.figures - scan.figures, 0.0)
+    weight = np.linalg.inv(spread(circuit, slopes, seen, part))
+    along = slopes[:, :, part]
+    chi = np.einsum("ki,kij,kj->k", away, weight, away)
+    pull, steepness = (np.einsum("ki,kij,kj->k", along, weight, x) for x in (away, along))
+    left = chi - pull**2 / np.maximum(steepness, 1e-12)
+    return np.where(usable, chi, np.inf), np.where(usable, left, np.inf)
 
 
 def _ends(chi: FloatArray, best: float, at: float) -> Literal["", "open", "bridged"]:
@@ -200,18 +211,17 @@ def _refined(circuit: Circuit, seen: Seen, starts: Sequence[tuple[int, float]]) 
         values[rows, parts] *= np.exp(at)
         figures = circuit.figures(values)
         slopes = circuit.sensitivities(values, figures)
-        usable = np.isfinite(slopes).all(axis=(1, 2))
+        usable: BoolArray = np.isfinite(figures[:, 0])
         away, slopes = np.where(usable[:, None], seen.figures - figures, 0.0), np.nan_to_num(slopes)
-        weight = np.linalg.inv(np.stack([spread(circuit, s, seen, p) for s, p in zip(slopes, parts, strict=True)]))
+        weight = np.linalg.inv([spread(circuit, s, seen, p) for s, p in zip(slopes, parts, strict=True)])
         along = slopes[rows, :, parts]
         chi = np.where(usable, np.einsum("ki,kij,kj->k", away, weight, away), np.inf)
         steepness = np.einsum("ki,kij,kj->k", along, weight, along)
         u = 1.0 / np.sqrt(np.maximum(steepness, 1e-12))
-        better: BoolArray = np.less(chi, best[:, 0])
-        best = np.where(better[:, None], np.stack([chi, at, u], axis=1), best)
+        best = np.where(np.less(chi, best[:, 0])[:, None], np.stack([chi, at, u], axis=1), best)
         step = np.einsum("ki,kij,kj->k", along, weight, away) / np.maximum(steepness, 1e-12)
         at = at + np.clip(step, -0.5, 0.5)
-        if np.all(np.abs(step) < 0.05 * u):
+        if np.all(np.abs(step) < _CLOSE * u):
             break
     return [(float(chi), float(x), float(u)) for chi, x, u in best]
 
@@ -222,12 +232,9 @@ def _swapped(i: int, circuit: Circuit, seen: Seen) -> list[Hypothesis]:
     for a, b in combinations(range(len(circuit.parts)), 2):
         if circuit.kinds[a] != circuit.kinds[b] or circuit.values[a] == circuit.values[b]:
             continue
-        values = circuit.values.copy()
-        values[[a, b]] = values[[b, a]]
-        figures = circuit.figures(values[None])
-        slopes = circuit.sensitivities(values[None], figures)[0]
-        if np.isfinite(slopes).all():
-            chi = _distance(circuit, seen.figures - figures[0], seen, slopes)
+        given = circuit.swapped(a, b)
+        if np.isfinite(given.slopes).all():
+            chi = _distance(circuit, seen.figures - given.figures[0], seen, given.slopes[0])
             found.append(Hypothesis("swapped", (i,), (circuit.parts[a], circuit.parts[b]), chi))
     return found
 
@@ -237,29 +244,40 @@ def _tap(i: int, j: int, other: Circuit, seen: Seen) -> Hypothesis:
     return Hypothesis("tap", (i, j), (), _distance(other, seen.figures - other.nominal, seen, other.slopes))
 
 
-def _common(kind: str, circuits: Sequence[Circuit], seen: Sequence[Seen]) -> Hypothesis:
-    """Return the factor on all parts of a kind that fits best, held to its tolerance by what reels can be."""
-    pairs = list(zip(circuits, seen, strict=True))
+def _common(kind: str, circuits: Sequence[Circuit], seen: Sequence[Seen], hope: float) -> Hypothesis:
+    """Return the factor on all parts of a kind that fits best, held to its tolerance by what reels can be.
+
+    A straight line tells how well it can fit; where that is above ``hope``, the line it is.
+    """
+    where = tuple(range(len(circuits)))
     members = [np.array([k == kind for k in circuit.kinds]) for circuit in circuits]
     tolerance = max(float(c.tolerances[m].max()) for c, m in zip(circuits, members, strict=True) if m.any())
-    price = (_REEL * tolerance) ** -2
     at, best = 0.0, (np.inf, 0.0, np.nan)
     for _ in range(_STEPS):
-        chi, pull, steepness = price * at**2, -price * at, price
-        for (circuit, one), member in zip(pairs, members, strict=True):
-            values = (circuit.values * np.exp(at * member))[None]
-            figures = circuit.figures(values) if at else circuit.nominal[None]
-            slopes = circuit.sensitivities(values, figures)[0] if at else circuit.slopes
-            if not np.isfinite(slopes).all():
-                return Hypothesis("common", tuple(range(len(pairs))), (kind,), *best)
-            away, along = one.figures - figures[0], slopes @ member
-            weighted = np.linalg.solve(spread(circuit, slopes, one), np.stack([away, along], axis=1))
-            chi += float(away @ weighted[:, 0])
-            pull += float(along @ weighted[:, 0])
-            steepness += float(along @ weighted[:, 1])
-        best = min(best, (chi, at, steepness**-0.5))
-        step = pull / steepness
-        if abs(step) < 0.05 * steepness**-0.5:
+        chi, step, u = _along_common(at, (_REEL * tolerance) ** -2, circuits, seen, members)
+        best = min(best, (chi, at, u))
+        if chi - (step / u) ** 2 > hope:
+            return Hypothesis("common", where, (kind,), chi - (step / u) ** 2, at + step, u)
+        if not np.isfinite(chi) or abs(step) < _CLOSE * u:
             break
         at += float(np.clip(step, -1.0, 1.0))
-    return Hypothesis("common", tuple(range(len(pairs))), (kind,), *best)
+    return Hypothesis("common", where, (kind,), *best)
+
+
+def _along_common(
+    at: float, price: float, circuits: Sequence[Circuit], seen: Sequence[Seen], members: Sequence[BoolArray]
+) -> tuple[float, float, float]:
+    """Return chi-square with a common ln factor, the step to where a straight line is least, and its uncertainty."""
+    chi, pull, steepness = price * at**2, -price * at, price
+    for circuit, one, member in zip(circuits, seen, members, strict=True):
+        values = (circuit.values * np.exp(at * member))[None]
+        figures = circuit.figures(values) if at else circuit.nominal[None]
+        slopes = circuit.sensitivities(values, figures)[0] if at else circuit.slopes
+        if not np.isfinite(slopes).all():
+            return np.inf, 0.0, 1.0
+        away, along = one.figures - figures[0], slopes @ member
+        weighted = np.linalg.solve(spread(circuit, slopes, one), np.stack([away, along], axis=1))
+        chi += float(away @ weighted[:, 0])
+        pull += float(along @ weighted[:, 0])
+        steepness += float(along @ weighted[:, 1])
+    return chi, pull / steepness, steepness**-0.5

@@ -57,6 +57,7 @@ class Circuit:
     figures: Callable[[FloatArray], FloatArray]
     sensitivities: Callable[[FloatArray, FloatArray], FloatArray]
     _scans: dict[int, Scan] = field(default_factory=dict)
+    _swaps: dict[tuple[int, int], Scan] = field(default_factory=dict)
 
     def scan(self, part: int) -> Scan:
         """Return what the stage gives with one part at factors from a thousandth to a thousand; kept."""
@@ -66,6 +67,15 @@ class Circuit:
             figures = self.figures(values)
             self._scans[part] = Scan(_LOG_FACTORS, figures, self.sensitivities(values, figures))
         return self._scans[part]
+
+    def swapped(self, a: int, b: int) -> Scan:
+        """Return what the stage gives with two parts exchanged, K = 1; kept."""
+        if (a, b) not in self._swaps:
+            values = self.values[None].copy()
+            values[:, [a, b]] = values[:, [b, a]]
+            figures = self.figures(values)
+            self._swaps[a, b] = Scan(np.zeros(1), figures, self.sensitivities(values, figures))
+        return self._swaps[a, b]
 
 
 @dataclass(frozen=True, slots=True, eq=False)
