@@ -17,7 +17,7 @@ from bandproof.analysis.types import FloatArray
 from bandproof.analysis.uncertainty import Row, propagated
 from bandproof.bench.types import QUANTITIES, StageResult
 
-__all__ = ["COMMON", "board_probability"]
+__all__ = ["COMMON", "board_errors", "board_probability"]
 
 # One size for the whole board: what is drawn once moves every stage.
 _EVERYWHERE = "drift, compensation, tap loading, linearity in, linearity out, generator, temperature, channel gain"
@@ -35,41 +35,41 @@ def board_probability(stages: Sequence[StageResult]) -> float | None:
         return None
     measured = np.array([figure.measured for figure in figures])
     rng = np.random.default_rng(SEED)
-    errors = _errors(stages, rng)
+    errors = board_errors(stages, rng, DRAWS)
     believed = _updated(measured, errors, [figure.prior for figure in figures], rng)
     low = np.array([figure.lower_limit for figure in figures])
     high = np.array([figure.upper_limit for figure in figures])
     return float(((low <= believed) & (believed <= high)).all(axis=1).mean())
 
 
-def _errors(stages: Sequence[StageResult], rng: Generator) -> FloatArray:
-    """Return draws (D, F) of the errors of all figures of the board."""
+def board_errors(stages: Sequence[StageResult], rng: Generator, count: int) -> FloatArray:
+    """Return so many draws (D, F) of the errors of all figures of the board: f0, Q, gain of each stage in turn."""
     common: dict[str, FloatArray] = {}
     found = []
     for stage in stages:
         rows = [list(stage.budgets[quantity].rows) for quantity in QUANTITIES]
-        errors = np.zeros((DRAWS, len(QUANTITIES)))
+        errors = np.zeros((count, len(QUANTITIES)))
         apart = np.zeros(len(QUANTITIES))
         for together in zip(*rows, strict=True):
             first, sizes = together[0], np.array([row.sensitivity * row.standard_uncertainty for row in together])
             if not sizes.any():
                 continue
             if first.name == "repeatability":
-                errors += _noise(stage, first, sizes, rng)
+                errors += _noise(stage, first, sizes, rng, count)
             elif first.name in COMMON:
                 shape = next(row for row in together if row.contribution)
                 if first.name not in common:
-                    common[first.name] = _draws(shape, rng)
+                    common[first.name] = _draws(shape, rng, count)
                 errors += common[first.name][:, None] * sizes
             elif first.name in _TOGETHER:
-                errors += _draws(next(row for row in together if row.contribution), rng)[:, None] * sizes
+                errors += _draws(next(row for row in together if row.contribution), rng, count)[:, None] * sizes
             else:
                 apart += sizes**2
         found.append(errors + rng.normal(size=errors.shape) * np.sqrt(apart))
     return np.concatenate(found, axis=1)
 
 
-def _noise(stage: StageResult, row: Row, sizes: FloatArray, rng: Generator) -> FloatArray:
+def _noise(stage: StageResult, row: Row, sizes: FloatArray, rng: Generator, count: int) -> FloatArray:
     """Return draws (D, 3) of what the records' noise does to f0, Q and gain: sizes of the budget, correlated as fitted.
 
     A covariance that was estimated from few points makes them Student's t.
@@ -82,25 +82,25 @@ def _noise(stage: StageResult, row: Row, sizes: FloatArray, rng: Generator) -> F
     spread = propagated(along, covariance)
     u = np.sqrt(np.diag(spread))
     values, vectors = np.linalg.eigh(spread / np.outer(u, u))
-    draws = rng.normal(size=(DRAWS, 3)) @ (vectors * np.sqrt(np.maximum(values, 0.0))).T * sizes
-    tails = np.sqrt(rng.chisquare(row.dof, DRAWS) / row.dof) if isfinite(row.dof) else np.ones(DRAWS)
+    draws = rng.normal(size=(count, 3)) @ (vectors * np.sqrt(np.maximum(values, 0.0))).T * sizes
+    tails = np.sqrt(rng.chisquare(row.dof, count) / row.dof) if isfinite(row.dof) else np.ones(count)
     noise: FloatArray = draws / tails[:, None]
     return noise
 
 
-def _draws(row: Row, rng: Generator) -> FloatArray:
+def _draws(row: Row, rng: Generator, count: int) -> FloatArray:
     """Return draws (D,) of a source of standard uncertainty 1, distributed as its row says."""
     match row.distribution:
         case "uniform":
-            return rng.uniform(-sqrt(3.0), sqrt(3.0), DRAWS)
+            return rng.uniform(-sqrt(3.0), sqrt(3.0), count)
         case "triangular":
-            return rng.triangular(-sqrt(6.0), 0.0, sqrt(6.0), DRAWS)
+            return rng.triangular(-sqrt(6.0), 0.0, sqrt(6.0), count)
         case "arcsine":
-            return sqrt(2.0) * np.sin(np.pi * rng.uniform(-0.5, 0.5, DRAWS))
+            return sqrt(2.0) * np.sin(np.pi * rng.uniform(-0.5, 0.5, count))
         case "t" if isfinite(row.dof):
-            return rng.standard_t(row.dof, DRAWS)
+            return rng.standard_t(row.dof, count)
         case "normal" | "t":
-            return rng.normal(size=DRAWS)
+            return rng.normal(size=count)
 
 
 def _updated(measured: FloatArray, errors: FloatArray, priors: Sequence[Prior | None], rng: Generator) -> FloatArray:

@@ -16,6 +16,7 @@ if TYPE_CHECKING:
     from bandproof.bench.drawing import Drawn
 
 __all__ = [
+    "TITLES",
     "budget_lines",
     "dB",
     "dominating_lines",
@@ -26,7 +27,7 @@ __all__ = [
     "verdict_counts",
 ]
 
-_TITLES: dict[Quantity, str] = {
+TITLES: dict[Quantity, str] = {
     "centre": "Centre frequency f0",
     "q": "Q = f0 / (-3 dB bandwidth)",
     "gain": "Gain at f0",
@@ -45,7 +46,7 @@ def summary_lines(stages: Sequence[StageResult]) -> list[str]:
     """Return the lines of the table: per figure, one line per band; none without bands."""
     lines: list[str] = []
     for quantity in QUANTITIES if stages else ():
-        lines += ["", _TITLES[quantity], *_row(_HEADINGS), *_rows(quantity, stages)]
+        lines += ["", TITLES[quantity], *_row(_HEADINGS), *_rows(quantity, stages)]
     return lines
 
 
@@ -139,7 +140,7 @@ def figure_lines(measured: Mapping[Quantity, float], budgets: "Mapping[Quantity,
     for quantity, budget in budgets.items():
         value, expanded = measured[quantity], budget.expanded
         text = _gain(value, expanded) if quantity == "gain" else with_uncertainty(value, expanded, UNITS[quantity])
-        lines.append(f"{_TITLES[quantity]:<28}{text:>32}{budget.coverage_factor:>8.2f}")
+        lines.append(f"{TITLES[quantity]:<28}{text:>32}{budget.coverage_factor:>8.2f}")
     return lines
 
 

@@ -20,6 +20,7 @@ class Verb:
 VERBS = (
     Verb("begin", "begin", "write board, bench and dialect files to start one's own from"),
     Verb("parts", "parts", "standard-value parts for a wanted band"),
+    Verb("predict", "predict", "what boards will be and a bench will say of them, before the first"),
     Verb("rehearse", "rehearse", "the whole job on simulated instruments"),
     Verb("bench", "contact", "walk the dialects of a bench on its instruments, leave it safe"),
     Verb("thru", "thru", "measure the path itself, both probes on one node, for later sweeps"),

@@ -1,0 +1,284 @@
+"""A prediction as people and programs read it: lines of 80 columns, and one plain object."""
+
+import textwrap
+from collections.abc import Iterator, Sequence
+from typing import Any
+
+from bandproof.analysis.spread import Fraction
+from bandproof.bench.expectation import LEAST_RATIO, Expectation, ExpectedFigure, Verdicts
+from bandproof.bench.prediction import PredictedBoards, PredictedFigure, PredictedStage
+from bandproof.bench.quantities import engineering
+from bandproof.bench.summary import TITLES, dB
+from bandproof.bench.types import QUANTITIES, UNITS, Bench, Board, Quantity
+
+__all__ = ["SCHEMA", "prediction_lines", "prediction_object", "warnings"]
+
+SCHEMA = "bandproof-prediction/1"
+_LABELS: dict[Quantity, str] = {"centre": "f0", "q": "Q", "gain": "gain"}
+_BAND = 12  # columns of a band's name; a longer one has a line of its own
+_TOLD = 0.8  # of a figure's variance that the parts named make together, at least; arbitrary
+_THRU = "a thru: both probes on one node, a wire named thru in the bench file's [wiring]"
+_STRAIGHTER = "a scope whose converter is straighter or has more bits, declared as linearity in the bench file"
+_HELP = {
+    "repeatability": "a scope with more bits or less noise, or a higher level (the bench's ceiling, input_maximum)",
+    "reseating": "contacts that repeat better, declared as reseating in the bench file",
+    "reproducibility": "a bench that repeats better from check to check",
+    "thru": "a scope with more bits or less noise",
+    "drift": "a warm scope whose drift is smaller and declared, or a thru nearer in time",
+    "range to range": _THRU,
+    "compensation": _THRU,
+    "channel gain": _THRU,
+    "tap loading": "probes that load less, their resistance and capacitance declared",
+    "linearity in": _STRAIGHTER,
+    "linearity out": _STRAIGHTER,
+    "generator": "a generator of better frequency accuracy, declared in the bench file",
+    "temperature": "the room's temperature stated and near the board's reference",
+}
+
+
+def prediction_object(
+    board: Board, boards: PredictedBoards, bench: Bench | None, found: Expectation | None
+) -> dict[str, Any]:
+    """Return what ``--json`` prints: plain values, SI, ratios."""
+    return {
+        "schema": SCHEMA,
+        "board": {"title": board.title, "drawing": board.drawing, "revision": board.revision},
+        "draws": len(boards.true),
+        "seed": boards.seed,
+        "yield": _plain(boards.conforming),
+        "stages": [_plain_stage(stage, found) for stage in boards.stages],
+        "bench": None
+        if bench is None or found is None
+        else {
+            "title": bench.title,
+            "converter_bits": found.bits,
+            "thru": found.thru,
+            "board": _plain_verdicts(found.board),
+            "least_ratio": LEAST_RATIO,
+            "warnings": warnings(found),
+            "notes": list(found.notes),
+        },
+    }
+
+
+def _plain(found: Fraction) -> dict[str, float]:
+    return {"value": found.value, "standard_error": found.error}
+
+
+def _plain_verdicts(found: Verdicts) -> dict[str, Any]:
+    return {
+        "pass": _plain(found.passed),
+        "undecided": _plain(found.undecided),
+        "fail": _plain(found.failed),
+        "consumer_risk": _plain(found.consumer),
+        "producer_risk": _plain(found.producer),
+    }
+
+
+def _plain_stage(stage: PredictedStage, found: Expectation | None) -> dict[str, Any]:
+    expected = found.stages[stage.name] if found else {}
+    parameters = {
+        quantity: {**_plain_figure(quantity, figure), "bench": _plain_expected(expected.get(quantity))}
+        for quantity, figure in stage.figures.items()
+    }
+    facts = {"name": stage.name, "kind": "band", "yield": _plain(stage.conforming)}
+    return {**facts, "parameters": parameters, "notes": list(stage.notes)}
+
+
+def _plain_figure(quantity: Quantity, figure: PredictedFigure) -> dict[str, Any]:
+    spread = figure.spread
+    return {
+        "unit": UNITS[quantity],
+        "designed": figure.limit.designed,
+        "lower_limit": figure.limit.lower,
+        "upper_limit": figure.limit.upper,
+        "textbook": figure.textbook,
+        "predicted": figure.nodal,
+        "mean": spread.mean,
+        "standard_deviation": {"value": spread.sd, "standard_error": spread.sd_error},
+        "range_95": [spread.low, spread.high],
+        "relative_standard_deviation_first_order": figure.first_order,
+        "variance_shares": dict(figure.shares),
+        "yield": _plain(figure.conforming),
+    }
+
+
+def _plain_expected(found: ExpectedFigure | None) -> dict[str, Any] | None:
+    if found is None:
+        return None
+    return {
+        "expanded_uncertainty": found.expanded,
+        "coverage_factor": found.coverage_factor,
+        "tolerance_to_uncertainty": found.ratio,
+        "largest_source": found.largest,
+        "largest_share": found.largest_share,
+        "rule": found.rule,
+        **_plain_verdicts(found.verdicts),
+    }
+
+
+def prediction_lines(
+    board: Board, boards: PredictedBoards, bench: Bench | None, found: Expectation | None
+) -> Iterator[str]:
+    """Yield the lines a person reads, at most 80 columns."""
+    yield from _wrapped(board.title)
+    drawn = "parts uniform within tolerance, independent; spread: one standard deviation"
+    yield from _wrapped(f"{len(boards.true)} boards drawn: {drawn} (seed {boards.seed})")
+    for quantity in QUANTITIES:
+        yield from _figure_lines(quantity, boards.stages)
+    yield from _yield_lines(boards)
+    yield from _spread_lines(boards.stages)
+    for stage in boards.stages:
+        for note in stage.notes:
+            yield from _wrapped(f"note: {note}")
+    if bench is not None and found is not None:
+        yield from _bench_lines(bench, found, len(boards.true))
+
+
+def _row(name: str, cells: Sequence[str], widths: Sequence[int]) -> Iterator[str]:
+    if len(name) >= _BAND:
+        yield from textwrap.wrap(name, 80)
+        name = ""
+    line = f"{name:<{_BAND}}" + "".join(f"{cell:>{width}}" for cell, width in zip(cells, widths, strict=True))
+    yield line.rstrip()
+
+
+def _figure_lines(quantity: Quantity, stages: Sequence[PredictedStage]) -> Iterator[str]:
+    widths = (11, 11, 11, 11, 24)
+    yield ""
+    yield TITLES[quantity]
+    yield from _row("band", ("designed", "textbook", "nodal", "spread", "95 % of the boards"), widths)
+    for stage in stages:
+        figure = stage.figures[quantity]
+        textbook = "-" if figure.textbook is None else _shown(quantity, figure.textbook)
+        cells = (_shown(quantity, figure.limit.designed), textbook, _shown(quantity, figure.nodal))
+        yield from _row(stage.name, (*cells, *_spread_cells(quantity, figure)), widths)
+
+
+def _spread_cells(quantity: Quantity, figure: PredictedFigure) -> tuple[str, str]:
+    spread = figure.spread
+    if not spread.sd:
+        return "-", "-"
+    if quantity == "gain":
+        size = f"{dB(1.0 + spread.sd / spread.mean):.2g} dB"
+        return size, f"{dB(spread.low):.2f} to {dB(spread.high):.2f} dB"
+    ends = f"{_shown(quantity, spread.low)} to {_shown(quantity, spread.high)}"
+    return f"{100.0 * spread.sd / spread.mean:.2g} %", ends
+
+
+def _shown(quantity: Quantity, value: float) -> str:
+    match quantity:
+        case "centre":
+            return engineering(value, "Hz")
+        case "q":
+            return f"{value:.4g}"
+        case "gain":
+            return f"{dB(value):.4g} dB"
+
+
+def _yield_lines(boards: PredictedBoards) -> Iterator[str]:
+    widths = (17, 17, 17, 17)
+    yield ""
+    yield "Boards within limits in %, ± one standard error of so many draws"
+    yield from _row("band", ("f0", "Q", "gain", "band"), widths)
+    for stage in boards.stages:
+        each = [stage.figures[quantity].conforming for quantity in QUANTITIES]
+        yield from _row(stage.name, [_percent(one) for one in (*each, stage.conforming)], widths)
+    yield from _row("whole board", ["", "", "", _percent(boards.conforming)], widths)
+
+
+def _percent(found: Fraction) -> str:
+    places = 1 if found.error >= 1e-3 else 2
+    return f"{100.0 * found.value:.{places}f} ± {100.0 * found.error:.{places}f}"
+
+
+def _spread_lines(stages: Sequence[PredictedStage]) -> Iterator[str]:
+    """Yield which parts make most of each figure's variance, bands with the same parts together."""
+    yield ""
+    yield "Which parts' tolerances cost most (share of the variance, to first order)"
+    for quantity in QUANTITIES:
+        groups: dict[tuple[str, ...], list[tuple[str, float]]] = {}
+        for stage in stages:
+            named, share = _most(stage.figures[quantity])
+            groups.setdefault(named, []).append((stage.name, share))
+        for named, members in groups.items():
+            yield from _wrapped(_cost(quantity, named, members, everywhere=len(members) == len(stages)))
+
+
+def _most(figure: PredictedFigure) -> tuple[tuple[str, ...], float]:
+    """Return the fewest parts that make most of a figure's variance, largest first, and their share."""
+    ordered = sorted(figure.shares.items(), key=lambda item: (-round(item[1], 3), item[0]))
+    named, total = list[str](), 0.0
+    for name, share in ordered:
+        if total >= _TOLD or not share:
+            break
+        named.append(name)
+        total += share
+    return tuple(sorted(named)), total
+
+
+def _cost(quantity: Quantity, named: Sequence[str], members: Sequence[tuple[str, float]], *, everywhere: bool) -> str:
+    where = "every band" if everywhere else ", ".join(name for name, _ in members)
+    if not named:
+        return f"  {_LABELS[quantity]}: nothing, no parts with a tolerance are stated ({where})"
+    shares = sorted(round(100.0 * share) for _, share in members)
+    size = f"{shares[0]}" if shares[0] == shares[-1] else f"{shares[0]} to {shares[-1]}"
+    together = " together" if len(named) > 1 else ""
+    return f"  {_joined(named)}{together} {size} % of {_LABELS[quantity]}'s spread ({where})"
+
+
+def _joined(names: Sequence[str]) -> str:
+    return " and ".join([", ".join(names[:-1]), names[-1]]) if len(names) > 1 else names[0]
+
+
+def _bench_lines(bench: Bench, found: Expectation, draws: int) -> Iterator[str]:
+    widths = (6, 10, 8, 9, 11, 8, 8, 8)
+    yield ""
+    yield from _wrapped(f"Measured on {bench.title or 'this bench'} ({found.bits:.3g} bits; thru: {found.thru})")
+    yield "Boards in %; out: truly out of limits and passed; in: truly within, not passed"
+    yield from _row("band", ("", "U", "tol./U", "pass", "undecided", "fail", "out", "in"), widths)
+    for name, figures in found.stages.items():
+        for i, (quantity, figure) in enumerate(figures.items()):
+            size = dB(1.0 + figure.relative) if quantity == "gain" else 100.0 * figure.relative
+            u = f"{size:.2g} {'dB' if quantity == 'gain' else '%'}"
+            cells = [_LABELS[quantity], u, f"{figure.ratio:.3g}", *_verdict_cells(figure.verdicts, draws)]
+            yield from _row("" if i else name, cells, widths)
+    yield from _row("whole board", ["", "", "", *_verdict_cells(found.board, draws)], widths)
+    board = found.board
+    yield from _wrapped(
+        f"Boards: {_percent(board.passed)} % pass, {_percent(board.undecided)} % undecided, {_percent(board.failed)} % "
+        f"fail; consumer's risk (passed though out) {_percent(board.consumer)} %, producer's risk (not passed though "
+        f"within) {_percent(board.producer)} %"
+    )
+    for text in (*(f"warning: {warning}" for warning in warnings(found)), *(f"note: {note}" for note in found.notes)):
+        yield from _wrapped(text)
+
+
+def _verdict_cells(found: Verdicts, draws: int) -> list[str]:
+    every = (found.passed, found.undecided, found.failed, found.consumer, found.producer)
+    none = f"<{300.0 / draws:.2g}"  # 95 % sure when no draw of so many hit (the rule of three)
+    return [f"{100.0 * one.value:.2f}" if one.value else none for one in every]
+
+
+def warnings(found: Expectation) -> list[str]:
+    """Return, in sentences, figures whose tolerance is too narrow for the bench, and what would help."""
+    groups: dict[tuple[Quantity, str], list[tuple[str, float]]] = {}
+    for name, figures in found.stages.items():
+        for quantity, figure in figures.items():
+            if figure.ratio < LEAST_RATIO:
+                groups.setdefault((quantity, figure.largest), []).append((name, figure.ratio))
+    told = []
+    for (quantity, source), members in groups.items():
+        ratios = sorted({f"{ratio:.2g}" for _, ratio in members}, key=float)
+        size = ratios[0] if len(ratios) == 1 else f"{ratios[0]} to {ratios[-1]}"
+        told.append(
+            f"{_LABELS[quantity]} of {_joined([name for name, _ in members])}: its tolerance is only {size} times U, "
+            f"less than {LEAST_RATIO:g}; most of U is {source}. What would help: "
+            f"{_HELP.get(source, f'less of {source}')}; or a wider tolerance"
+        )
+    return told
+
+
+def _wrapped(text: str) -> list[str]:
+    indent = "    " if text.startswith("  ") else "  "
+    return textwrap.wrap(text, 80, subsequent_indent=indent, break_on_hyphens=False)
