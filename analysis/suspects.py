@@ -21,7 +21,7 @@ from bandproof.analysis.types import BoolArray, FloatArray
 
 __all__ = ["DISTINGUISHABLE", "Hypothesis", "Judgement", "judged"]
 
-Kind: TypeAlias = Literal["part", "swapped", "common", "probe", "channels", "tap"]
+Kind: TypeAlias = Literal["part", "swapped", "common", "probe", "channels", "tap", "nothing"]
 
 DISTINGUISHABLE = 4.0  # of chi-square to the runner-up
 SATURATED = 4.0  # an end of the scan that fits as well as this means open or bridged
@@ -41,7 +41,7 @@ class Hypothesis:
     kind : str
         "part": one part has another value; "swapped": two parts of a stage exchanged; "common": one factor on all
         parts of a kind; "probe": gains off by ten from a stage on; "channels": gains inverted; "tap": the figures of
-        another stage.
+        another stage; "nothing": parts as tolerances let them be, however unlikely.
     stages : tuple of int
         Where it strikes.
     names : tuple of str
@@ -89,18 +89,19 @@ def judged(circuits: Sequence[Circuit], seen: Sequence[Seen]) -> list[Judgement]
         One about the board where that is best, else one for every stage outside.
     """
     healthy = [_distance(c, s.figures - c.nominal, s, c.slopes) for c, s in zip(circuits, seen, strict=True)]
-    by_stage = {i: _ranked(_of_stage(i, circuits, seen)) for i in outside(circuits, seen)}
-    guilty = [i for i, named in by_stage.items() if named and healthy[i] - named[0].chi_square >= DISTINGUISHABLE]
-    if not guilty:
+    by_stage = {i: _ranked(_of_stage(i, circuits, seen, healthy[i])) for i in outside(circuits, seen)}
+    if not by_stage:
         return []
-    best = [by_stage[i][0].chi_square if i in guilty else healthy[i] for i in range(len(circuits))]
+    best = [by_stage[i][0].chi_square if i in by_stage else healthy[i] for i in range(len(circuits))]
     apart = sum(best)  # each stage by itself
     whole = _ranked(_of_board(circuits, seen, apart))
     if whole and whole[0].chi_square < apart:
-        alone = [replace(by_stage[i][0], chi_square=apart) for i in guilty]
-        return [_judgement(_ranked([*whole, *alone]), 3 * len(circuits))]
-    together = {i: [replace(h, chi_square=h.chi_square - apart + best[i]) for h in whole] for i in guilty}
-    return [_judgement(_ranked([*by_stage[i], *together[i]]), 2) for i in guilty]
+        alone = [replace(ranked[0], chi_square=apart) for ranked in by_stage.values()]
+        found = [_judgement(_ranked([*whole, *alone]), 3 * len(circuits))]
+    else:
+        together = {i: [replace(h, chi_square=h.chi_square - apart + best[i]) for h in whole] for i in by_stage}
+        found = [_judgement(_ranked([*ranked, *together[i]]), 2) for i, ranked in by_stage.items()]
+    return [one for one in found if not (one.explained and "nothing" in [h.kind for h in one.candidates])]
 
 
 def _ranked(found: Sequence[Hypothesis]) -> list[Hypothesis]:
@@ -116,10 +117,11 @@ def _judgement(ranked: Sequence[Hypothesis], dof: int) -> Judgement:
     return Judgement(beside, following - best, bool(chdtrc(dof, best) > _UNEXPLAINED))
 
 
-def _of_stage(i: int, circuits: Sequence[Circuit], seen: Sequence[Seen]) -> list[Hypothesis]:
-    """Return every hypothesis about one stage."""
+def _of_stage(i: int, circuits: Sequence[Circuit], seen: Sequence[Seen], healthy: float) -> list[Hypothesis]:
+    """Return every hypothesis about one stage, also that nothing is wrong with it."""
     circuit = circuits[i]
     return [
+        Hypothesis("nothing", (i,), (), healthy),
         *_single_parts(i, circuit, seen[i]),
         *_swapped(i, circuit, seen[i]),
         *(_tap(i, j, circuits[j], seen[i]) for j in range(len(circuits)) if j != i),

@@ -38,9 +38,9 @@ def _suspect(judgement: Judgement, circuits: Sequence[Circuit], names: Sequence[
     if not judgement.explained:
         text = (
             "outside what tolerances and U allow, and no single part, swap, common factor or bench fault gives these "
-            f"figures (nearest: {_told(first, circuits, names)})"
+            "figures: more than one part?"
         )
-        return Suspect(_at(first, names) + text, "unexplained", parts, None, delta)
+        return Suspect(_at(first, names) + text, "unexplained", (), None, delta)
     if others:
         alternatives = "; ".join(_short(h, circuits, names) for h in judgement.candidates)
         return Suspect(
@@ -53,7 +53,7 @@ def _suspect(judgement: Judgement, circuits: Sequence[Circuit], names: Sequence[
 
 def _at(hypothesis: Hypothesis, names: Sequence[str]) -> str:
     """Return the stage as it begins a sentence, nothing where the board is meant."""
-    return f"{names[hypothesis.stages[0]]}: " if hypothesis.kind in ("part", "swapped", "tap") else ""
+    return f"{names[hypothesis.stages[0]]}: " if hypothesis.kind in ("part", "swapped", "tap", "nothing") else ""
 
 
 def _kind(hypothesis: Hypothesis) -> str:
@@ -67,6 +67,8 @@ def _kind(hypothesis: Hypothesis) -> str:
             return "swapped"
         case "probe" | "channels" | "tap":
             return "bench"
+        case "nothing":
+            return "unexplained"
 
 
 def _parts(hypothesis: Hypothesis, circuits: Sequence[Circuit]) -> tuple[str, ...]:
@@ -115,6 +117,8 @@ def _told(hypothesis: Hypothesis, circuits: Sequence[Circuit], names: Sequence[s
             return "all gains read upside down: are the two channels swapped?"
         case "tap":
             return f"reads like {names[hypothesis.stages[1]]}: is the probe on another test point?"
+        case "nothing":
+            return "nothing, by an unlikely chance"
 
 
 def _part_told(hypothesis: Hypothesis, circuits: Sequence[Circuit]) -> str:

@@ -181,6 +181,11 @@ def share(total: Counter[str], what: str) -> float:
     return float(parts.get(what, total[what]) / total.total())
 
 
+def listed(total: Counter[str]) -> str:
+    """Return verdicts and how many boards got each, the most frequent first."""
+    return ", ".join(f"{count} {said}" for said, count in total.most_common())
+
+
 def judge(case: str, total: Counter[str]) -> bool:
     """Print a case's shares beside their bounds; return whether they are kept."""
     good = True
@@ -197,10 +202,10 @@ def drawn_boards(healthy: int = HEALTHY, wrong: int = WRONG) -> bool:
     good = True
     for case in CASES:
         total, by_part = counted(case, healthy if case == "healthy" else wrong)
-        print(f"{case}: {total.total()} boards: " + ", ".join(f"{n} {said}" for said, n in total.most_common()))
+        print(f"{case}: {total.total()} boards: {listed(total)}", flush=True)
         good = judge(case, total) and good
         for part, some in sorted(by_part.items()) if len(by_part) > 1 else ():
-            print(f"    {part:<12} " + ", ".join(f"{n} {said}" for said, n in some.most_common()))
+            print(f"    {part:<12} {listed(some)}")
     return good
 
 
@@ -215,7 +220,7 @@ def swept_boards(count: int = SWEPT) -> bool:
             said = suspected(demo_board(), swept(seed, drawn), circuits())
             found.setdefault(case, Counter())[_of_swept(said, truth)] += 1
     for case, total in found.items():
-        print(f"swept, {case}: " + ", ".join(f"{n} {said}" for said, n in total.most_common()))
+        print(f"swept, {case}: {listed(total)}", flush=True)
     return found["healthy"]["silent"] == found["healthy"].total()
 
 
