@@ -66,7 +66,10 @@ class Choice:
 
 
 class TooSlow(ValueError):
-    """No parts give the wanted figures with an op-amp of this gain-bandwidth product; least would do (1-2-5 steps)."""
+    """No parts were found for the wanted figures with an op-amp of this gain-bandwidth product.
+
+    least is one that would do, in steps of 1, 2, 5.
+    """
 
     def __init__(self, gbw: float, least: float) -> None:
         super().__init__(gbw, least)

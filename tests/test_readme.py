@@ -44,6 +44,12 @@ def test_defect_prints_what_readme_shows(printed):
     assert [line for line in shown if line not in out.splitlines()] == []
 
 
+def test_parts_print_what_readme_shows(printed):
+    code, out = printed("parts", "--centre", "1 kHz", "--q", "1.5", "--gain", "10 dB", "--gbw", "4 MHz")
+    assert code == 0
+    assert out.strip() in [block.strip() for block in blocks("text")]
+
+
 def test_dialect_of_readme_is_a_dialect():
     text = next(block for block in blocks("toml") if 'kind = "generator"' in block)
     dialect = parse(text, "README.md")

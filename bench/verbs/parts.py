@@ -65,7 +65,7 @@ def command(count: int, as_json: bool, **options: Any) -> int:
         choices = standard_parts(request.wanted, request.capacitances, resistors=request.resistors, gbw=request.gbw)
     except TooSlow as slow:
         raise BadInput(
-            f"--gbw: with {engineering(slow.gbw, 'Hz')} no parts give {described(request.wanted)}; "
+            f"--gbw: with {engineering(slow.gbw, 'Hz')} no parts were found for {described(request.wanted)}; "
             f"an op-amp of {engineering(slow.least, 'Hz')} would do, or a band of lower centre or gain"
         ) from None
     if as_json:

@@ -210,7 +210,7 @@ def test_unrealizable_band_is_explained_with_numbers(parts):
 def test_op_amp_that_is_too_slow_is_refused_and_the_one_named_does(parts):
     code, out, err = parts(*BAND, "--gbw", "6 kHz")
     assert (code, out) == (BAD_INPUT, "")
-    assert "--gbw: with 6 kHz no parts give 1 kHz, Q 1.5, gain 10 dB; an op-amp of 10 kHz would do" in err
+    assert "--gbw: with 6 kHz no parts were found for 1 kHz, Q 1.5, gain 10 dB; an op-amp of 10 kHz would do" in err
     assert parts(*BAND, "--gbw", "10 kHz")[0] == DONE
 
 
