@@ -37,7 +37,7 @@ class CurveFigures:
     f_high: FloatArray
 
 
-def curve_figures(curve: Curve, low: float, high: float, *, count: int = 1) -> CurveFigures:
+def curve_figures(curve: Curve, low: float, high: float, *, count: int = 1, precision: float = 0.0) -> CurveFigures:
     """Return the figures of `count` curves whose highest point lies between two frequencies.
 
     Parameters
@@ -46,11 +46,13 @@ def curve_figures(curve: Curve, low: float, high: float, *, count: int = 1) -> C
         Takes (S, N) frequencies in Hz and returns (S, N) complex ratios, S = count.
     low, high : float
         Hz; the peak and both edges are looked for between them.
+    precision : float
+        How near to 0 the slope at the peak, and to half power the edges, must be in ln |H|.
 
     Returns
     -------
     CurveFigures
-        Solved to about 1e-11 of the width of the band.
+        Solved to about 1e-11 of the width of the band, with a precision of 0.
 
     Raises
     ------
@@ -81,7 +83,7 @@ def curve_figures(curve: Curve, low: float, high: float, *, count: int = 1) -> C
         result: FloatArray = level(around) @ _DERIVATIVE
         return result
 
-    peak = _root(slope, rough - step, rough + step)
+    peak = _root(slope, rough - step, rough + step, precision)
     top = level(peak[:, None])[:, 0]
 
     def over_half(at: FloatArray) -> FloatArray:
@@ -89,7 +91,7 @@ def curve_figures(curve: Curve, low: float, high: float, *, count: int = 1) -> C
         return height
 
     edges = [np.stack(pair, axis=1) for pair in zip(left, right, strict=True)]
-    f_low, f_high = np.exp(_root(over_half, *edges)).T
+    f_low, f_high = np.exp(_root(over_half, edges[0], edges[1], precision)).T
     f0 = np.exp(peak)
     return CurveFigures(f0=f0, q=f0 / (f_high - f_low), gain=np.exp(top), f_low=f_low, f_high=f_high)
 
@@ -116,6 +118,7 @@ def network_figures(
     low: float,
     high: float,
     values: Mapping[str, FloatArray] | None = None,
+    precision: float = 0.0,
 ) -> CurveFigures:
     """Return the figures of a stage between two taps, for K values of some parts at once (without values K = 1)."""
     some = next(iter(network.parts.items()))
@@ -125,7 +128,7 @@ def network_figures(
     def curve(frequency: FloatArray) -> ComplexArray:
         return stage_response(network, frequency, node_in=node_in, node_out=node_out, values=table)
 
-    return curve_figures(curve, low, high, count=count)
+    return curve_figures(curve, low, high, count=count, precision=precision)
 
 
 def figure_slopes(
@@ -199,7 +202,9 @@ def _refuse(bad: BoolArray, what: str) -> None:
         raise ValueError(f"curve {int(bad.argmax())} {what}: widen it or look at the response")
 
 
-def _root(function: Callable[[FloatArray], FloatArray], low: FloatArray, high: FloatArray) -> FloatArray:
+def _root(
+    function: Callable[[FloatArray], FloatArray], low: FloatArray, high: FloatArray, precision: float
+) -> FloatArray:
     """Return where each function changes sign between low and high, by bisection quickened with false position."""
     f_low, f_high = function(low), function(high)
     for i in range(200):
@@ -212,6 +217,6 @@ def _root(function: Callable[[FloatArray], FloatArray], low: FloatArray, high: F
         # Illinois: an end that stays twice has its value halved, else false position creeps
         f_high, f_low = np.where(same, 0.5 * f_high, f), np.where(same, f, np.where(f == 0, f_low, 0.5 * f_low))
         low, high = np.where(same, x, low), np.where(same, high, x)
-        if (high - low).max() <= 4e-15 * max(1.0, np.abs(high).max()) or not f.any():
+        if (high - low).max() <= 4e-15 * max(1.0, np.abs(high).max()) or np.abs(f).max() <= precision:
             break
     return x

@@ -18,6 +18,8 @@ __all__ = ["circuit_of", "seen_of", "suspected"]
 
 _SEARCHED = 1e4  # times and by the designed centre: where the peak of a wrong part is looked for
 
+_PRECISION = 1e-7  # of ln |H|: far below any U
+
 
 def suspected(
     board: Board, results: Sequence[StageResult], circuits: Mapping[str, Circuit] | None = None
@@ -106,6 +108,7 @@ def _figures(board: Board, stage: Stage, values: FloatArray) -> FloatArray:
             low=centre / _SEARCHED,
             high=centre * _SEARCHED,
             values=_table(stage, values),
+            precision=_PRECISION,
         )
     except ValueError:  # one of them has no band: look at each half
         if len(values) == 1:

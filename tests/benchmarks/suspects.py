@@ -26,7 +26,7 @@ from bandproof.bench.types import QUANTITIES, StageResult, Suspect
 from bandproof.bench.verbs.rehearse import world_of
 from tests.benchmarks._direct import measured, with_designs_kept
 
-HEALTHY, WRONG, SWEPT = 1000, 400, 50
+HEALTHY, WRONG, SWEPT = 1000, 300, 50
 Drawn = dict[str, dict[str, float]]
 Truth = tuple[str, str]  # stage and part; for a common factor "" and the kind
 
@@ -130,12 +130,13 @@ def drawn_board(case: str, seed: int) -> tuple[Drawn, Truth, np.random.Generator
     return drawn, CASES[case](drawn, rng), rng
 
 
-def drawn_figures(drawn: Drawn, rng: np.random.Generator) -> list[Seen]:
-    """Return what would be measured of a board: its nodal figures and errors as the budget has them."""
-    found = []
+def drawn_figures(boards: list[tuple[Drawn, Truth, np.random.Generator]]) -> list[list[Seen]]:
+    """Return what would be measured of boards: their nodal figures and errors as the budget has them."""
+    found: list[list[Seen]] = [[] for _ in boards]
     for (name, circuit), covariance in zip(circuits().items(), covariances(), strict=True):
-        figures = circuit.figures(np.array([[drawn[name][part] for part in circuit.parts]]))[0]
-        found.append(Seen(figures + rng.multivariate_normal(np.zeros(3), covariance), covariance))
+        figures = circuit.figures(np.array([[drawn[name][part] for part in circuit.parts] for drawn, *_ in boards]))
+        for one, true, (_, _, rng) in zip(found, figures, boards, strict=True):
+            one.append(Seen(true + rng.multivariate_normal(np.zeros(3), covariance), covariance))
     return found
 
 
@@ -165,9 +166,8 @@ def counted(case: str, count: int) -> tuple[Counter[str], dict[str, Counter[str]
     """Return how many boards got which verdict, all and by part."""
     total: Counter[str] = Counter()
     by_part: dict[str, Counter[str]] = {}
-    for seed in range(count):
-        drawn, truth, rng = drawn_board(case, seed)
-        seen = drawn_figures(drawn, rng)
+    boards = [drawn_board(case, seed) for seed in range(count)]
+    for (_, truth, _), seen in zip(boards, drawn_figures(boards), strict=True):
         whole = all(np.isfinite(one.figures).all() for one in seen)
         said = verdict(judged(list(circuits().values()), seen), truth) if whole else "no band"
         total[said] += 1
