@@ -50,6 +50,14 @@ def test_parts_print_what_readme_shows(printed):
     assert out.strip() in [block.strip() for block in blocks("text")]
 
 
+def test_prediction_prints_what_readme_shows(printed):
+    printed("begin", "my-board")
+    code, out = printed("predict", "my-board/talkback.board.toml", "--bench", "my-board/simulated.bench.toml")
+    assert code == 0
+    shown = next(block for block in blocks("text") if "boards drawn" in block).splitlines()
+    assert [line for line in shown if line != "..." and line not in out.splitlines()] == []
+
+
 def test_dialect_of_readme_is_a_dialect():
     text = next(block for block in blocks("toml") if 'kind = "generator"' in block)
     dialect = parse(text, "README.md")
