@@ -73,7 +73,7 @@ def spread_of(figure: FloatArray) -> Spread:
     count = figure.size
     if count < 2:
         raise ValueError(f"a spread needs two boards at least, found {count}")
-    mean = float(figure.mean())
+    mean = float(figure[0] + (figure - figure[0]).mean())  # so that equal values have no spread at all
     squares = (figure - mean) ** 2
     sd = sqrt(float(squares.sum()) / (count - 1))
     error = float(squares.std()) / (2.0 * sd * sqrt(count)) if sd else 0.0

@@ -196,11 +196,14 @@ def _spread_lines(stages: Sequence[PredictedStage]) -> Iterator[str]:
     """Yield which parts make most of each figure's variance, bands with the same parts together."""
     yield ""
     yield "Which parts' tolerances cost most (share of the variance, to first order)"
+    if not any(figure.first_order for stage in stages for figure in stage.figures.values()):
+        yield "  none: no parts with a tolerance are stated"
     for quantity in QUANTITIES:
         groups: dict[tuple[str, ...], list[tuple[str, float]]] = {}
         for stage in stages:
             named, share = _most(stage.figures[quantity])
-            groups.setdefault(named, []).append((stage.name, share))
+            if named:
+                groups.setdefault(named, []).append((stage.name, share))
         for named, members in groups.items():
             yield from _wrapped(_cost(quantity, named, members, everywhere=len(members) == len(stages)))
 
@@ -219,8 +222,6 @@ def _most(figure: PredictedFigure) -> tuple[tuple[str, ...], float]:
 
 def _cost(quantity: Quantity, named: Sequence[str], members: Sequence[tuple[str, float]], *, everywhere: bool) -> str:
     where = "every band" if everywhere else ", ".join(name for name, _ in members)
-    if not named:
-        return f"  {_LABELS[quantity]}: nothing, no parts with a tolerance are stated ({where})"
     shares = sorted(round(100.0 * share) for _, share in members)
     size = f"{shares[0]}" if shares[0] == shares[-1] else f"{shares[0]} to {shares[-1]}"
     together = " together" if len(named) > 1 else ""

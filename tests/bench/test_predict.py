@@ -17,6 +17,7 @@ from bandproof.bench.circuit import draw_parts, stage_network, taps
 from bandproof.bench.evaluate import evaluate_stage
 from bandproof.bench.expectation import expected, predicted_results, verdicts_of
 from bandproof.bench.prediction import predicted_boards
+from bandproof.bench.prediction_text import prediction_lines
 from bandproof.bench.rehearsal import DEMO_BENCH, demo_board, demo_text, rehearsal_bench
 from bandproof.bench.thru import THRU, paths
 from bandproof.bench.types import QUANTITIES, Limit
@@ -354,6 +355,15 @@ def test_text_fits_80_columns(predict, one_band_text, bench_path, name):
     assert code == DONE
     assert name in out
     assert max(map(len, out.splitlines())) <= 80, max(out.splitlines(), key=len)
+
+
+def test_parts_without_tolerances_spread_nothing_and_cost_nothing(one_band):
+    board = with_tolerances(one_band, {})
+    lines = list(prediction_lines(board, predicted_boards(board, draws=100), None, None))
+    rows = [line.split() for line in lines if line.startswith("low")]
+    assert [row[-2:] for row in rows[:3]] == [["-", "-"]] * 3
+    assert "  none: no parts with a tolerance are stated" in lines
+    assert "spread (" not in "".join(lines)
 
 
 def test_drawing_outside_its_own_limits_is_noted(predict, one_band_text):
