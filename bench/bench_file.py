@@ -9,7 +9,7 @@ from typing import Any, Literal, cast, get_args
 from bandproof.bench.errors import FileMistakes
 from bandproof.bench.quantities import Kind
 from bandproof.bench.reading import Mistakes, Table, nearest, parse_toml, read_text
-from bandproof.bench.types import Accuracy, Bench, Board, Instrument, Wire
+from bandproof.bench.types import Accuracy, Bench, Board, CheckPlan, Instrument, Wire
 from bandproof.drivers.dialect import load
 from bandproof.drivers.schema import DialectMistakes
 from bandproof.drivers.serial_line import Flow, Parity, Serial
@@ -131,10 +131,18 @@ def _bench(top: Table, text: str, folder: Path) -> Bench:
         probe_factors=_probes(probes),
         accuracy=accuracy,
         thru_valid=top.quantity("thru_valid", "time", 12.0 * 3600.0),
+        check=_check(top.table("check"), folder) if "check" in top else None,
         visa_library=visa_library,
         clock=str(folder / clock) if clock else None,
         text=text,
     )
+
+
+def _check(table: Table, folder: Path) -> CheckPlan:
+    board, every = table.text("board"), table.whole("every", 1, 100_000, 20)
+    plan = CheckPlan(str(folder / board), every, table.quantity("longest_age", "time", 12.0 * 3600.0))
+    table.close()
+    return plan
 
 
 def _accuracy(generator: Table, scope: Table, probes: Table) -> Accuracy:

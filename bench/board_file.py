@@ -1,12 +1,13 @@
 """The board file: what was designed, read with every mistake reported at once."""
 
+from math import inf
 from pathlib import Path
 from typing import Literal, cast
 
 from bandproof.bench.quantities import Kind, QuantityError, read_quantity
 from bandproof.bench.reading import Mistakes, Table, nearest, parse_toml, read_text
 from bandproof.bench.rules import priors, rules
-from bandproof.bench.types import Board, Limit, OpAmpData, Part, Power, Quantity, Stage, Temperature, TestPoint
+from bandproof.bench.types import PASSIVE, Board, Limit, OpAmpData, Part, Power, Quantity, Stage, Temperature, TestPoint
 
 __all__ = ["STAGE_PARTS", "parse_board", "parse_defect", "read_board"]
 
@@ -19,6 +20,7 @@ STAGE_PARTS: dict[str, dict[str, Kind]] = {
         "C_1": "capacitance",
         "C_2": "capacitance",
     },
+    PASSIVE: {},
 }
 _NAME_RULE = "a name has letters, digits, - and _, at most 40"
 
@@ -38,17 +40,18 @@ def parse_board(text: str, path: str) -> Board:
     """Return the board a text describes; ``path`` is the name its mistakes are reported under (FileMistakes)."""
     mistakes = Mistakes(path)
     top = Table(parse_toml(text, path), "", mistakes)
+    stages = _stages(top)
     board = Board(
         title=top.text("title"),
         drawing=top.text("drawing", ""),
         revision=top.text("revision", ""),
         frequencies=cast(Literal["nominal", "exact"], top.choice("frequencies", ["nominal", "exact"], "nominal")),
         input_maximum=_input_maximum(top.table("limits")),
-        op_amp=_op_amp(top.table("op_amp")),
+        op_amp=_op_amp(top, stages),
         power=_power(top.table("supply")) if "supply" in top else None,
         temperature=_temperature(top.table("temperature")) if "temperature" in top else None,
         points=_points(top.table("points")),
-        stages=_stages(top),
+        stages=stages,
         text=text,
     )
     top.close()
@@ -63,7 +66,11 @@ def _input_maximum(limits: Table) -> float:
     return value
 
 
-def _op_amp(table: Table) -> OpAmpData:
+def _op_amp(top: Table, stages: tuple[Stage, ...]) -> OpAmpData:
+    """Return the board's op-amp; one without limits where every stage is passive."""
+    if "op_amp" not in top and stages and all(stage.circuit == PASSIVE for stage in stages):
+        return OpAmpData(inf, inf, inf)
+    table = top.table("op_amp")
     data = OpAmpData(
         gbw=table.quantity("gbw", "frequency"),
         slew=table.quantity("slew", "slew"),
@@ -139,7 +146,7 @@ def _stage(name: str, table: Table, default: dict[str, float]) -> Stage:
         tap_out=table.text("to"),
         limits=_limits(table),
         circuit=circuit,
-        parts=_parts(table.table("parts"), STAGE_PARTS[circuit], default),
+        parts=_parts(table.table("parts"), STAGE_PARTS[circuit], default) if STAGE_PARTS[circuit] else (),
     )
     table.close()
     return stage
@@ -204,11 +211,10 @@ def parse_defect(text: str, board: Board) -> tuple[str, str, float]:
     stage_name, dot, part_name = name.strip().partition(".")
     parts = {(stage.name, part.name): stage for stage in board.stages for part in stage.parts}
     if not (equals and dot) or (stage_name, part_name) not in parts:
-        first = board.stages[0]
-        known = ", ".join(f"{s.name}.{p.name}" for s in board.stages for p in s.parts)
-        raise ValueError(
-            f"{text!r} names no part of this board; write e.g. {first.name}.{first.parts[0].name}=6k8 (parts: {known})"
-        )
+        known = ", ".join(f"{s}.{p}" for s, p in parts)
+        if not parts:
+            raise ValueError(f"{text!r}: this board's file states no parts that could be wrong")
+        raise ValueError(f"{text!r} names no part of this board; write e.g. {known.split(',')[0]}=6k8 (parts: {known})")
     kind = STAGE_PARTS[parts[stage_name, part_name].circuit][part_name]
     try:
         quantity = read_quantity(value.strip(), kind)

@@ -20,7 +20,7 @@ from bandproof.bench.picture import StageView
 from bandproof.bench.sources import Measured, Source, sources, systematic
 from bandproof.bench.suspects import suspected
 from bandproof.bench.thru import Path, Ranges, corrected, paths
-from bandproof.bench.types import QUANTITIES, Bench, Board, Point, Run, Stage, StageResult
+from bandproof.bench.types import PASSIVE, QUANTITIES, Bench, Board, CheckHistory, Point, Run, Stage, StageResult
 
 __all__ = ["StageFit", "described", "evaluate", "evaluate_stage", "fit_points", "known_paths", "usable", "views"]
 
@@ -84,7 +84,9 @@ def evaluate(run: Run) -> tuple[StageResult, ...]:
     measured, known = {point.stage for point in run.points if point.purpose != "no-signal"}, known_paths(run)
     board, bench = run.board, run.bench
     results = [
-        evaluate_stage(board, bench, stage, [p for p in run.points if p.stage == stage.name], known, run.ambient)
+        evaluate_stage(
+            board, bench, stage, [p for p in run.points if p.stage == stage.name], known, run.ambient, run.checks
+        )
         for stage in board.stages
         if stage.name in measured
     ]
@@ -108,11 +110,15 @@ def evaluate_stage(
     points: Sequence[Point],
     known: Mapping[Ranges, Path] | None = None,
     ambient: float | None = None,
+    checks: CheckHistory | None = None,
 ) -> StageResult:
-    """Return what is concluded about one stage from its points and the path known, in a room at ``ambient`` °C."""
+    """Return what is concluded about one stage from its points and the path known, in a room at ``ambient`` °C.
+
+    ``checks`` are those of the bench on its check standard.
+    """
     found = fit_points(points, known)
     prediction = predict(board, stage)
-    seen, listed, misfit, doubt = _look(board, bench, stage, points, found, ambient)
+    seen, listed, misfit, doubt = _look(board, bench, stage, points, found, ambient, checks)
     rows = budgets(seen, listed) if seen else {}
     figures = {name: compared(stage, name, prediction, found.fit, rows.get(name), doubt) for name in QUANTITIES}
     fit = found.fit
@@ -145,15 +151,21 @@ def described(run: Run, name: str) -> tuple[Measured, list[Source]] | None:
     """Return a stage of a run as measured, and every source of its budget but noise; None without a fit."""
     stage, points = run.board.stage(name), [point for point in run.points if point.stage == name]
     found = fit_points(points, known_paths(run))
-    seen, listed, *_ = _look(run.board, run.bench, stage, points, found, run.ambient)
+    seen, listed, *_ = _look(run.board, run.bench, stage, points, found, run.ambient, run.checks)
     return (seen, listed) if seen else None
 
 
 def _look(
-    board: Board, bench: Bench, stage: Stage, points: Sequence[Point], found: StageFit, ambient: float | None
+    board: Board,
+    bench: Bench,
+    stage: Stage,
+    points: Sequence[Point],
+    found: StageFit,
+    ambient: float | None,
+    checks: CheckHistory | None,
 ) -> tuple[Measured | None, list[Source], Misfit, str]:
     """Return a stage as measured, its sources of uncertainty, what speaks against its fit, and the doubt in words."""
-    seen = _measured(board, bench, stage, points, found, ambient)
+    seen = _measured(board, bench, stage, points, found, ambient, checks)
     listed = sources(seen) if seen else []
     misfit = look_for_misfit(board, bench, points, found, systematic(listed, len(found.points)))
     expanded = {name: budget.expanded for name, budget in budgets(seen, listed).items()} if seen else {}
@@ -165,13 +177,20 @@ def _look(
 
 
 def _measured(
-    board: Board, bench: Bench, stage: Stage, points: Sequence[Point], found: StageFit, ambient: float | None
+    board: Board,
+    bench: Bench,
+    stage: Stage,
+    points: Sequence[Point],
+    found: StageFit,
+    ambient: float | None,
+    checks: CheckHistory | None,
 ) -> Measured | None:
     """Return a stage as measured, None without a fit."""
     if found.fit is None:
         return None
     quiet = next((point for point in points if point.purpose == "no-signal"), None)
-    return Measured(board, bench, stage, found.points, found.covariance, found.paths, found.fit, quiet, {}, ambient)
+    kept = found.points, found.covariance, found.paths, found.fit
+    return Measured(board, bench, stage, *kept, quiet, {}, ambient, checks)
 
 
 def views(run: Run, stages: Sequence[StageResult]) -> list[StageView]:
@@ -184,13 +203,15 @@ def views(run: Run, stages: Sequence[StageResult]) -> list[StageView]:
     fits = [fit_points([point for point in run.points if point.stage == stage.name], known) for stage in fitted]
     measured = [frequency for fit in fits for frequency in fit.frequency.tolist()]
     grid = np.geomspace(min(*centres, *measured) / 1.5, max(*centres, *measured) * 1.5, 400)
-    return [_view(stage, fit, grid) for stage, fit in zip(fitted, fits, strict=True)]
+    passive = {stage.name for stage in run.board.stages if stage.circuit == PASSIVE}
+    return [_view(stage, fit, grid, inverts=stage.name not in passive) for stage, fit in zip(fitted, fits, strict=True)]
 
 
-def _view(stage: StageResult, found: StageFit, grid: FloatArray) -> StageView:
+def _view(stage: StageResult, found: StageFit, grid: FloatArray, *, inverts: bool) -> StageView:
     frequency, response, covariance = found.frequency, found.response, found.covariance
     designed = [stage.figures[quantity].designed for quantity in QUANTITIES]
-    target = np.array([[np.log(designed[0]), np.log(designed[1]), -designed[2], 0.0, 0.0, 0.0, 0.0]])
+    gain = -designed[2] if inverts else designed[2]
+    target = np.array([[np.log(designed[0]), np.log(designed[1]), gain, 0.0, 0.0, 0.0, 0.0]])
     along = response / np.abs(response)
     variance = (
         covariance[:, 0, 0] * along.real**2

@@ -11,7 +11,7 @@ from bandproof.bench.budget import budget_plain
 from bandproof.bench.errors import BadInput, Stopped
 from bandproof.bench.evaluate import evaluate, views
 from bandproof.bench.journal import Journal
-from bandproof.bench.plain import thru_from
+from bandproof.bench.plain import checks_from, thru_from
 from bandproof.bench.result import result_object
 from bandproof.bench.runfile import digest_of, read_result, read_run, write_run
 from bandproof.bench.thru import THRU
@@ -79,6 +79,7 @@ def run_of(journal: Journal, problem: Exception | None, words: str) -> Run:
         board=board,
         bench=bench,
         thru=None if head["thru"] is None else thru_from(head["thru"]),
+        checks=None if head["checks"] is None else checks_from(head["checks"]),
         ended="complete" if problem is None else "cut_short",
         reason=words,
         stopped=isinstance(problem, Stopped),

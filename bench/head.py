@@ -2,7 +2,7 @@
 
 from typing import Any
 
-from bandproof.bench.plain import fits, thru_from
+from bandproof.bench.plain import checks_from, fits, thru_from
 
 __all__ = ["checked_head", "whole"]
 
@@ -22,7 +22,13 @@ _HEAD: dict[str, Any] = {
     "dialects": dict[str, str],
     "keep_raw": bool,
 }
-_SINCE: dict[str, Any] = {"ambient": None, "thru": None, "earlier": [], "retest": ""}  # what journals of earlier versions lack
+_SINCE: dict[str, Any] = {
+    "ambient": None,
+    "thru": None,
+    "checks": None,
+    "earlier": [],
+    "retest": "",
+}  # what journals of earlier versions lack
 _REHEARSAL: dict[str, Any] = {
     "seed": int,
     "defects": list[str],
@@ -50,6 +56,8 @@ def checked_head(entry: dict[str, Any]) -> dict[str, Any]:
         whole(entry, ambient=float)
     if entry["thru"] is not None:
         thru_from(entry["thru"])
+    if entry["checks"] is not None:
+        checks_from(entry["checks"])
     for attempt in entry["earlier"]:
         whole(attempt, attempt=int, digest=str, verdict=str, pooled=bool)
     return whole(entry, retest=str, **_HEAD)

@@ -13,7 +13,7 @@ from bandproof.bench.finish import Outcome, finish
 from bandproof.bench.instruments import Devices, occupied, with_dialect_texts
 from bandproof.bench.journal import Journal
 from bandproof.bench.operator import Operator
-from bandproof.bench.plain import thru_from, thru_plain
+from bandproof.bench.plain import checks_plain, thru_from, thru_plain
 from bandproof.bench.plan import Planner
 from bandproof.bench.recovery import plainly
 from bandproof.bench.resumption import ResumeRefused, check_again, check_identities
@@ -21,7 +21,7 @@ from bandproof.bench.stop import Stop
 from bandproof.bench.sweep import Sweep
 from bandproof.bench.thru import paths
 from bandproof.bench.thru_use import Now, asked_of_scope, thru_for
-from bandproof.bench.types import Bench, Board, Thru
+from bandproof.bench.types import Bench, Board, CheckHistory, Thru
 from bandproof.drivers.clock import Clock
 from bandproof.drivers.errors import InstrumentProblem
 
@@ -47,7 +47,8 @@ class Job:
     ``rehearsal`` is what a rehearsal was asked for (seed, defects, faults): a resume starts the same simulated bench
     again. ``thru`` is one stored in a file, used by a new run if all its conditions hold; a resumed run uses that of
     its journal. ``earlier`` are the complete attempts on the serial number that the verdict is pooled with, ``retest``
-    why it is asked again. ``begin_journal`` makes the journal of a new run in its folder.
+    why it is asked again. ``checks`` are those of the bench on its check standard, ``notes`` what is to be told of a
+    new run from its beginning. ``begin_journal`` makes the journal of a new run in its folder.
     """
 
     board: Board
@@ -69,6 +70,8 @@ class Job:
     rehearsal: Mapping[str, Any] | None = None
     earlier: Sequence[Attempt] = ()
     retest: str = ""
+    checks: CheckHistory | None = None
+    notes: Sequence[str] = ()
     bench_path: str = ""
     begin_journal: Callable[[Path, dict[str, Any]], Journal] = Journal.begin
 
@@ -105,8 +108,8 @@ class Job:
                 if journal is None:
                     thru, told = self._usable_thru(devices, bench, identities)
                     journal = self.begin_journal(self.folder, self._head(bench, identities, thru))
-                    if told:
-                        journal.alarm(told)
+                    for text in (*self.notes, *((told,) if told else ())):
+                        journal.alarm(text)
                     self._sweep(devices, bench, journal).run()
                 else:
                     check_identities(journal, identities)
@@ -179,6 +182,7 @@ class Job:
             "note": self.note,
             "ambient": self.ambient,
             "thru": None if thru is None else thru_plain(thru),
+            "checks": None if self.checks is None else checks_plain(self.checks),
             "identities": dict(identities),
             "board": self.board.text,
             "bench": bench.text,

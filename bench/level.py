@@ -8,7 +8,7 @@ from bandproof.analysis.network import response
 from bandproof.analysis.types import FloatArray
 from bandproof.bench.circuit import Prediction, stage_network, taps
 from bandproof.bench.errors import BadInput
-from bandproof.bench.types import Bench, Board, Stage
+from bandproof.bench.types import PASSIVE, Bench, Board, Stage
 
 __all__ = ["HEADROOM", "greatest_level", "well_ranged"]
 
@@ -23,13 +23,15 @@ def greatest_level(board: Board, bench: Bench, stage: Stage, prediction: Predict
     """Return the level in V peak a stage is swept at, two digits, rounded down.
 
     Never above the bench's ceiling and the board's input maximum; with the parts anywhere in their tolerances the
-    op-amp's output stays below half its swing and a quarter of its slew rate.
+    op-amp's output stays below half its swing and a quarter of its slew rate. A passive network has none.
 
     Raises
     ------
     BadInput
         No level above 1 mV is safe.
     """
+    if stage.circuit == PASSIVE:
+        return _two_digits(min(bench.ceiling, board.input_maximum))
     # Two octaves each way, so dense that no peak is missed by more than 0.1 %: (Q ln 16 / points)**2 / 2.
     near = prediction.centre * np.geomspace(0.25, 4.0, max(121, ceil(62.0 * prediction.q)))
     gain = _greatest(board, stage, near, np.ones_like(near))

@@ -7,9 +7,19 @@ from datetime import datetime
 from functools import cache
 from typing import Any, Literal, get_args, get_origin, get_type_hints
 
-from bandproof.bench.types import Point, Step, Thru, Tone
+from bandproof.bench.types import QUANTITIES, Check, CheckHistory, Point, Step, Thru, Tone
 
-__all__ = ["fits", "point_from", "point_plain", "step_from", "thru_from", "thru_plain", "to_json"]
+__all__ = [
+    "checks_from",
+    "checks_plain",
+    "fits",
+    "point_from",
+    "point_plain",
+    "step_from",
+    "thru_from",
+    "thru_plain",
+    "to_json",
+]
 
 
 def to_json(value: object) -> str:
@@ -103,3 +113,38 @@ def thru_from(plain: dict[str, Any]) -> Thru:
     if datetime.fromisoformat(started).tzinfo is None:
         raise ValueError(f"started of a thru has no time zone: {started!r:.40}")
     return Thru(started, conditions, tuple(point_from(point) for point in plain["points"]))
+
+
+def checks_plain(history: CheckHistory) -> dict[str, Any]:
+    """Return a history of checks as plain values."""
+    checks = [
+        {
+            "started": check.started,
+            "figures": {
+                stage: {quantity: list(found) for quantity, found in figures.items()}
+                for stage, figures in check.figures.items()
+            },
+        }
+        for check in history.checks
+    ]
+    return {"standard": history.standard, "checks": checks}
+
+
+def checks_from(plain: dict[str, Any]) -> CheckHistory:
+    """Return what `checks_plain` gave, before or after JSON (KeyError, TypeError, ValueError: it is none)."""
+    if not fits(plain["standard"], str):
+        raise ValueError(f"standard of a history of checks is {plain['standard']!r:.40}")
+    return CheckHistory(plain["standard"], tuple(_check_from(check) for check in plain["checks"]))
+
+
+def _check_from(plain: dict[str, Any]) -> Check:
+    if datetime.fromisoformat(plain["started"]).tzinfo is None:
+        raise ValueError(f"started of a check has no time zone: {plain['started']!r:.40}")
+    figures = {
+        stage: {quantity: tuple(found[quantity]) for quantity in QUANTITIES}
+        for stage, found in plain["figures"].items()
+    }
+    for value in (value for found in figures.values() for value in found.values()):
+        if not fits(value, tuple[float, float]):
+            raise ValueError(f"a figure of a check is {value!r:.40}")
+    return Check(plain["started"], figures)

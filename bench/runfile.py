@@ -18,7 +18,7 @@ from bandproof.analysis.types import FloatArray
 from bandproof.bench.bench_file import parse_bench
 from bandproof.bench.board_file import parse_board
 from bandproof.bench.errors import RunFileDamaged
-from bandproof.bench.plain import step_from, thru_from, thru_plain, to_json
+from bandproof.bench.plain import checks_from, checks_plain, step_from, thru_from, thru_plain, to_json
 from bandproof.bench.system import sync_folder
 from bandproof.bench.types import Point, Run
 
@@ -123,6 +123,8 @@ def _texts(run: Run, result: Mapping[str, Any]) -> dict[str, str]:
     more = {f"texts/dialect_{role}": text for role, text in sorted(run.bench.dialect_texts.items())}
     if run.thru is not None:
         more["texts/thru"] = to_json(thru_plain(run.thru))
+    if run.checks is not None:
+        more["texts/checks"] = to_json(checks_plain(run.checks))
     return {
         "about": to_json({name: getattr(run, name) for name in _ABOUT}),
         "history": "".join(to_json(entry) + "\n" for entry in run.history),
@@ -277,6 +279,7 @@ def _run(file: "h5py.File") -> Run:
         steps=tuple(step_from(json.loads(line)) for line in _text(file, "steps").splitlines()),
         points=tuple(sorted(points, key=lambda point: point.step)),
         thru=thru_from(json.loads(_text(file, "texts/thru"))) if "thru" in file["texts"] else None,
+        checks=checks_from(json.loads(_text(file, "texts/checks"))) if "checks" in file["texts"] else None,
         history=tuple(json.loads(line) for line in _text(file, "history").splitlines()),
     )
 

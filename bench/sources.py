@@ -14,9 +14,10 @@ import numpy as np
 from bandproof.analysis.fit import BandFit
 from bandproof.analysis.types import ComplexArray, FloatArray
 from bandproof.analysis.uncertainty import Distribution
+from bandproof.bench.check_chart import reproducibility
 from bandproof.bench.record import HUM_BELOW
 from bandproof.bench.thru import Path
-from bandproof.bench.types import Bench, Board, Point, Quantity, Stage
+from bandproof.bench.types import Bench, Board, CheckHistory, Point, Quantity, Stage
 
 __all__ = ["Measured", "Source", "departures", "sources", "systematic"]
 
@@ -33,7 +34,8 @@ class Measured:
     """A stage as measured: the points that were fitted (with the path divided out), their fit, their paths.
 
     ``no_signal`` is its record without signal, if there is one; ``shifts`` how far a larger model moves each figure;
-    ``ambient`` is the temperature of the room in °C, None when nobody stated it.
+    ``ambient`` is the temperature of the room in °C, None when nobody stated it; ``checks`` are those of the bench on
+    its check standard, None where there are none.
     """
 
     board: Board
@@ -46,6 +48,7 @@ class Measured:
     no_signal: Point | None
     shifts: Mapping[Quantity, float]
     ambient: float | None = None
+    checks: CheckHistory | None = None
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -71,7 +74,7 @@ def sources(measured: Measured) -> list[Source]:
     """Return every source but the records' noise, in the order of `ROWS`."""
     return [
         _reseating(measured),
-        Source("reproducibility", "0, because this bench has no history of a check standard: U does not hold it"),
+        _reproducibility(measured.checks),
         _thru(measured),
         _drift(measured),
         _ranges(measured),
@@ -118,6 +121,11 @@ def _reseating(measured: Measured) -> Source:
     u, distribution = (_TWO * size, "triangular") if made == 2 else (_ONE * size, "uniform")
     reason = f"{_stated(measured, 'reseating')}: {made} contact{'s' if made > 1 else ''} made anew"
     return Source(name, reason, u, distribution, shapes=_ones(measured))  # type: ignore[arg-type]
+
+
+def _reproducibility(history: CheckHistory | None) -> Source:
+    reason, spreads, dof = reproducibility(history)
+    return Source("reproducibility", reason, 1.0 if spreads else 0.0, "t", "A", direct=spreads, dof=dof)
 
 
 def _thru(measured: Measured) -> Source:

@@ -17,6 +17,9 @@ __all__ = [
     "Accuracy",
     "Bench",
     "Board",
+    "Check",
+    "CheckHistory",
+    "CheckPlan",
     "Comparison",
     "Instrument",
     "Limit",
@@ -43,6 +46,7 @@ Quantity = Literal["centre", "q", "gain"]
 
 QUANTITIES: tuple[Quantity, ...] = ("centre", "q", "gain")
 UNITS: Mapping[Quantity, str] = {"centre": "Hz", "q": "", "gain": "V/V"}
+PASSIVE = "passive"  # the circuit of a stage without op-amps whose parts are not stated: nothing is predicted
 
 
 # --- asked ---
@@ -115,7 +119,10 @@ class TestPoint:
 
 @dataclass(frozen=True, slots=True)
 class Stage:
-    """One band of a board: taps, limits per figure, circuit and parts; or the path itself (``thru``), without any."""
+    """One band of a board: taps, limits per figure, circuit and parts; or the path itself (``thru``), without any.
+
+    A `PASSIVE` circuit has no parts.
+    """
 
     name: str
     kind: Literal["band", "thru"]
@@ -194,10 +201,20 @@ class Accuracy:
 
 
 @dataclass(frozen=True, slots=True)
+class CheckPlan:
+    """How a bench is checked: the board file of its check standard, after how many boards and s a check is too old."""
+
+    board: str
+    every: int
+    longest_age: float
+
+
+@dataclass(frozen=True, slots=True)
 class Bench:
     """A bench: instruments, wiring, ceilings and what is declared about its accuracy.
 
     ``rails`` are the supply's channels of the positive and the negative rail; a thru is valid for ``thru_valid`` s.
+    ``check`` is None where nothing is said about a check standard.
     """
 
     title: str
@@ -212,6 +229,7 @@ class Bench:
     text: str
     rails: tuple[int, int] = (1, 2)
     thru_valid: float = 12.0 * 3600.0
+    check: CheckPlan | None = None
     dialect_texts: Mapping[str, str] = field(default_factory=dict)
 
 
@@ -294,6 +312,22 @@ class Thru:
     points: tuple[Point, ...]
 
 
+@dataclass(frozen=True, slots=True)
+class Check:
+    """What one check of a bench gave: when (UTC), and each figure of its standard by stage, value and noise of it."""
+
+    started: str
+    figures: Mapping[str, Mapping[Quantity, tuple[float, float]]]
+
+
+@dataclass(frozen=True, slots=True)
+class CheckHistory:
+    """The checks of a bench on one standard that are in order, oldest first."""
+
+    standard: str
+    checks: tuple[Check, ...]
+
+
 # --- concluded ---
 
 
@@ -364,7 +398,7 @@ class Run:
     """A whole run: who, what, with what, every point, how it ended (``stopped``: cut short because somebody asked).
 
     ``ambient`` in °C, None when nobody stated it; ``thru`` is a stored one that was used, None where the run measured
-    its own or had none.
+    its own or had none; ``checks`` are those of the bench on its check standard before, None where there are none.
     """
 
     run_id: str
@@ -387,3 +421,4 @@ class Run:
     history: tuple[Mapping[str, Any], ...]
     ambient: float | None = None
     thru: Thru | None = None
+    checks: CheckHistory | None = None

@@ -96,6 +96,9 @@ def show(outcome: "Outcome", wall_seconds: float, as_json: bool) -> int:
             click.echo(f"  {kind:<8} {outcome.folder / name}")
     if run.thru is not None:
         click.echo(f"  thru     a stored one, of {run.thru.started[:16].replace('T', ' ')} UTC")
+    if run.checks is not None:
+        last = run.checks.checks[-1].started[:16].replace("T", " ")
+        click.echo(f"  checks   {len(run.checks.checks)} of the bench, the last of {last} UTC")
     return exit_code(outcome)
 
 
@@ -133,6 +136,7 @@ def worst_code(codes: Sequence[int]) -> int:
 @click.option("--retest", default="", metavar="REASON", help="Why a board that has a verdict is measured once more.")
 @click.option("--repair", default="", metavar="TEXT", help="What was repaired since; kept in the serial number's log.")
 @click.option("--without-thru", is_flag=True, help="Leave out the thru that is stored beside the bench file.")
+@click.option("--without-check", default="", metavar="REASON", help="Why to sweep on a bench that wants a check first.")
 @click.option("--raw", is_flag=True, help="Keep every record in the run file.")
 @click.option("--json", "as_json", is_flag=True, help="Print the result object and nothing else.")
 def command(
@@ -146,6 +150,7 @@ def command(
     retest: str,
     repair: str,
     without_thru: bool,
+    without_check: str,
     raw: bool,
     as_json: bool,
 ) -> int:
@@ -153,7 +158,7 @@ def command(
 
     A thru that `bandproof thru` stored beside the bench file is used while all its conditions hold. A board that has a
     verdict is measured once more only with --retest; the verdict is then of both attempts together. After --repair
-    counting begins anew.
+    counting begins anew. A bench file with a [check] table wants the last `bandproof check` in order and not too old.
 
     \b
     Example:
@@ -161,6 +166,7 @@ def command(
     """
     from bandproof.bench.bench_file import check_wiring, find_bench, read_bench
     from bandproof.bench.board_file import read_board
+    from bandproof.bench.check_use import checks_for
     from bandproof.bench.job import new_attempt
     from bandproof.bench.thru_file import read_thru, thru_path
 
@@ -171,6 +177,7 @@ def command(
     thru = None if without_thru else read_thru(thru_path(path))
     operator, room = stated(name, ambient)
     clock = clock_of(bench)
+    checks, notes = checks_for(bench, path, clock.utc(), without_check)
     known = _may_begin(folder, serial, retest, repair, operator=operator, utc=clock.utc())
     place, attempt = new_attempt(folder, serial)
     job = job_of(
@@ -183,6 +190,8 @@ def command(
         clock=clock,
         earlier=known,
         retest=retest,
+        checks=checks,
+        notes=notes,
         operator_name=operator,
         note=note,
         ambient=room,

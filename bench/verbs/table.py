@@ -24,6 +24,7 @@ VERBS = (
     Verb("rehearse", "rehearse", "the whole job on simulated instruments"),
     Verb("bench", "contact", "walk the dialects of a bench on its instruments, leave it safe"),
     Verb("thru", "thru", "measure the path itself, both probes on one node, for later sweeps"),
+    Verb("check", "standard", "measure the bench's check standard, keep its control chart"),
     Verb("sweep", "run", "sweep a board on a real bench, fit, compare, record"),
     Verb("resume", "resume", "go on where a run stopped"),
     Verb("fit", "refit", "fit stored runs again, changing nothing that was measured"),

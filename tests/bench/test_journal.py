@@ -28,6 +28,7 @@ HEAD = {
     "note": 'two\nlines, \u2028 and "quotes"',
     "ambient": 23.5,
     "thru": None,
+    "checks": {"standard": "CS-1 Ω", "checks": []},
     "earlier": [{"attempt": 1, "digest": "d", "verdict": "fail", "pooled": True}],
     "retest": "why Ω",
     "identities": {"scope": "X"},
