@@ -15,7 +15,7 @@ from bandproof.analysis.uncertainty import Combined, Row, combine
 from bandproof.bench.sources import Measured, Source
 from bandproof.bench.types import QUANTITIES, Quantity
 
-__all__ = ["ROWS", "budget_plain", "budgets", "dominating"]
+__all__ = ["MEANINGS", "ROWS", "budget_plain", "budgets", "dominating"]
 
 ROWS = (
     "repeatability",
@@ -40,6 +40,24 @@ ROWS = (
     "source level",
     "definition",
 )
+MEANINGS = {
+    "repeatability": "noise of the records, seen through the fit",
+    "reseating": "contacts made anew",
+    "reproducibility": "the check standard from day to day",
+    "thru": "how well the path itself was measured",
+    "drift": "the channels' gain since the thru",
+    "range to range": "gain of another range of the scope",
+    "compensation": "probes above their corner",
+    "tap loading": "the probe's load on the test point",
+    "linearity in": "the scope's converter at the stage's input is not straight",
+    "linearity out": "the scope's converter at the stage's output is not straight",
+    "hum": "mains above 1 kHz, where it is not fitted",
+    "settling": "what every dwell leaves",
+    "generator": "accuracy of its frequency",
+    "temperature": "the room against the board's own",
+    "misfit": "what a leakage would move",
+    "channel gain": "the scope's channels, without a thru",
+}
 _NOTHING = 1e-9  # relative change of a figure per unit that is only rounding
 _ZERO = "0, because "
 _ELSEWHERE = {

@@ -6,7 +6,7 @@ from math import isfinite, log10, sqrt
 from typing import TYPE_CHECKING
 
 from bandproof.analysis.uncertainty import share
-from bandproof.bench.budget import dominating
+from bandproof.bench.budget import MEANINGS, dominating
 from bandproof.bench.quantities import decimals, engineering, with_uncertainty
 from bandproof.bench.rules import SIMPLE_TEXT
 from bandproof.bench.types import QUANTITIES, UNITS, Comparison, Quantity, StageResult, Verdict
@@ -32,7 +32,7 @@ TITLES: dict[Quantity, str] = {
     "q": "Q = f0 / (-3 dB bandwidth)",
     "gain": "Gain at f0",
 }
-_HEADINGS = ("band", "designed", "predicted", "measured ± U", "deviation", "verdict")
+_HEADINGS = ("band", "designed", "predicted", "measured ± U (95 %)", "deviation", "verdict")
 _WORDS: dict[Verdict, str] = {"pass": "pass", "fail": "FAIL", "undecided": "undecided"}
 _WIDTHS = (12, 10, 10, 24, 10, 9)  # band, designed, predicted, measured ± U, deviation, verdict
 
@@ -84,7 +84,9 @@ def dominating_lines(stages: Sequence[StageResult]) -> list[str]:
         name = [stage.name] if len(stage.name) >= _WIDTHS[0] else []
         text = "".join(f"{cell:<{width}}" for cell, width in zip(cells, widths, strict=True))
         lines += [*name, f"{'' if name else stage.name:<12}{text}".rstrip()]
-    return lines
+    named = dict.fromkeys(dominating(stage.budgets[q]).name for stage in shown for q in QUANTITIES)
+    told = "; ".join(f"{name}: {MEANINGS[name]}" for name in named if name in MEANINGS)
+    return [*lines, *textwrap.wrap(told, 80, break_on_hyphens=False)]
 
 
 def budget_lines(stage: StageResult) -> list[str]:

@@ -7,7 +7,7 @@ import pytest
 
 from tests.benchmarks import coverage, efficiency
 
-BENCHES, SWEEPS = 100, 500
+BENCHES, SWEEPS = 50, 300
 
 
 def four(p, count):
