@@ -343,6 +343,17 @@ def test_same_seed_gives_the_same_words_and_another_others(predict, one_band_tex
     assert predict(one_band_text, *arguments, "--seed", "2")[1] != first[1]
 
 
+def test_every_kind_of_draw_follows_the_seed(noisy):
+    board, bench = noisy
+    one, same, other = (predicted_boards(board, draws=300, seed=seed) for seed in (1, 1, 2))
+    assert (one.true == same.true).all()
+    assert not (one.true == other.true).any()
+    # of one set of boards with another seed: other errors, other verdicts near a limit
+    verdicts = [expected(board, bench, replace(one, seed=seed)).codes[:, 1] for seed in (1, 1, 2)]
+    assert (verdicts[0] == verdicts[1]).all()
+    assert (verdicts[0] != verdicts[2]).any()
+
+
 def test_parts_that_cost_most_are_said_in_words(predict, one_band_text):
     out = predict(one_band_text)[1]
     assert "C_1 and C_2 together 97 % of f0's spread (every band)" in out
