@@ -7,7 +7,7 @@ from contextlib import closing
 from dataclasses import replace
 from datetime import datetime, timedelta
 from itertools import pairwise
-from math import pi, sqrt
+from math import inf, pi, sqrt
 from pathlib import Path
 
 import numpy as np
@@ -16,7 +16,9 @@ import pytest
 from bandproof.analysis.circuits import join
 from bandproof.analysis.curve import network_figures
 from bandproof.analysis.network import GROUND, Capacitor, Network, Resistor
-from bandproof.bench.bench_file import read_bench
+from bandproof.analysis.uncertainty import Row
+from bandproof.bench.attempts import _row
+from bandproof.bench.bench_file import parse_bench, read_bench
 from bandproof.bench.board_file import parse_board
 from bandproof.bench.check_chart import reproducibility, used
 from bandproof.bench.check_file import Entry, append, read_history
@@ -331,6 +333,39 @@ def test_table_and_charts_fit_80_columns_and_mark_what_is_out(station, console, 
     top, *below = marks["gain"]  # the last check lies above the upper limit
     assert top == " " * 8 + "x"
     assert "x" not in "".join(below)
+
+
+def test_the_verb_prints_what_readme_shows(station, capsys, monkeypatch):
+    readme = (Path(__file__).parent.parent.parent / "README.md").read_text(encoding="utf-8")
+    (shown,) = re.findall(r"^```text\n(check, UTC.*?)^```$", readme, re.MULTILINE | re.DOTALL)
+    known(station)
+    station.serve(gain=(0.0, 0.01))
+    monkeypatch.chdir(station.folder)
+    assert run(["check", "my.bench.toml"]) == FAIL
+    out = capsys.readouterr().out
+    parts = [part.strip("\n") for part in shown.split("...\n")]
+    assert parts[0].splitlines()[0] in out
+    for part in [*parts[0].splitlines(), *parts[1:]]:
+        assert part in out
+    assert max(map(len, shown.splitlines())) <= 80
+
+
+def test_the_files_of_readme_are_read():
+    readme = (Path(__file__).parent.parent.parent / "README.md").read_text(encoding="utf-8")
+    (stage,) = re.findall(r"^```toml\n(\[stages.bridge\].*?)^```$", readme, re.MULTILINE | re.DOTALL)
+    board = parse_board(STANDARD.partition("[stages")[0] + stage, "README.md")
+    assert board.stages == parse_board(STANDARD, "standard").stages
+    (table,) = re.findall(r"^```toml\n(\[check\].*?)^```$", readme, re.MULTILINE | re.DOTALL)
+    plan = parse_bench(rehearsal_bench(board).text + table, "there/my.bench.toml").check
+    assert (plan.board, plan.every, plan.longest_age) == (str(Path("there/check.board.toml")), 20, 12 * HOUR)
+
+
+def test_two_attempts_do_not_lower_what_is_of_the_bench():
+    common = ("t", 1.0, 0.5, 7, "scatter of checks")
+    rows = [Row("reproducibility", "A", *common), Row("repeatability", "A", "normal", 1.0, 0.5, inf, "noise")]
+    together = [_row([row, row], common=False) for row in rows]
+    assert [row.contribution for row in together] == pytest.approx([0.5, 0.5 / sqrt(2)])
+    assert together[0].dof == 7
 
 
 # --- the bench is asked before a sweep ---
