@@ -1,8 +1,9 @@
 """The end of a run: its journal becomes a run, is evaluated, and is kept as run file and picture."""
 
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from bandproof.bench.attempts import with_earlier
 from bandproof.bench.bench_file import parse_bench
@@ -17,9 +18,12 @@ from bandproof.bench.runfile import digest_of, read_result, read_run, write_run
 from bandproof.bench.thru import THRU
 from bandproof.bench.types import Bench, Board, Run, StageResult
 
-__all__ = ["CUT_SHORT", "PICTURE", "RUN", "Outcome", "board_and_bench", "finish", "run_of"]
+if TYPE_CHECKING:
+    from bandproof.bench.picture import StageView
 
-RUN, CUT_SHORT, PICTURE = "run.h5", "run.cut_short-{}.h5", "picture.svg"
+__all__ = ["CUT_SHORT", "PICTURE", "REPORT", "RUN", "Outcome", "board_and_bench", "finish", "run_of"]
+
+RUN, CUT_SHORT, PICTURE, REPORT = "run.h5", "run.cut_short-{}.h5", "picture.svg", "report.pdf"
 
 
 @dataclass(frozen=True, slots=True)
@@ -52,14 +56,16 @@ def finish(journal: Journal, folder: Path, problem: Exception | None, words: str
         stages, _ = _with_earlier(run, journal, folder)
     else:
         stages, attempts = _with_earlier(run, journal, folder)
-        result = result_object(run, stages, {"run": path.name, "picture": PICTURE, "report": None})
+        result = result_object(run, stages, {"run": path.name, "picture": PICTURE, "report": REPORT})
         result["attempts"] = attempts
         write_run(
             path, run, result, raw=journal.volts, budget={stage.name: budget_plain(stage.budgets) for stage in stages}
         )
-    _draw(run, stages, folder / PICTURE)
-    journal.ended(run.ended, path.name, digest_of(path))
-    return Outcome(run, stages, result, folder)
+    drawn = views(run, stages)
+    _draw(run, drawn, folder / PICTURE)
+    digest = digest_of(path)
+    journal.ended(run.ended, path.name, digest)
+    return Outcome(run, stages, _reported(run, stages, result, digest, drawn, folder), folder)
 
 
 def _with_earlier(
@@ -109,8 +115,27 @@ def _free(folder: Path) -> Path:
     return folder / CUT_SHORT.format(number)
 
 
-def _draw(run: Run, stages: tuple[StageResult, ...], path: Path) -> None:
-    drawn = views(run, stages)
+def _reported(
+    run: Run,
+    stages: tuple[StageResult, ...],
+    result: dict[str, Any],
+    digest: str,
+    drawn: "Sequence[StageView]",
+    folder: Path,
+) -> dict[str, Any]:
+    """Write the report; return the result, without its name and with a note where it could not be written."""
+    try:
+        from bandproof.bench.documents.report import write_report
+
+        write_report(folder / REPORT, run, stages, result, digest, drawn)
+    except Exception as problem:  # whatever it is: the run is kept and decides alone
+        alarm = f"there is no {REPORT} ({type(problem).__name__}: {problem}); try: bandproof report {folder / RUN}"
+        files = {**result["files"], "report": None}
+        return {**result, "files": files, "alarms": [*result["alarms"], alarm]}
+    return result
+
+
+def _draw(run: Run, drawn: "Sequence[StageView]", path: Path) -> None:
     if drawn:
         from bandproof.bench.picture import draw, save
 

@@ -3,6 +3,7 @@
 Drawn with the Figure API (no pyplot), readable in black and white, the same bytes for the same run.
 """
 
+import io
 from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -18,7 +19,7 @@ if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
 
-__all__ = ["StageView", "draw", "save"]
+__all__ = ["StageView", "as_svg", "draw", "save", "ticks"]
 
 _MARKS = "osD^vP*X<>hp"  # one shape a band, repeated after twelve
 _SYMBOLS = {"centre": "f0", "q": "Q", "gain": "gain"}
@@ -50,7 +51,19 @@ def save(figure: "Figure", path: Path) -> None:
         figure.savefig(path, metadata=metadata)
 
 
-def draw(views: Sequence[StageView], title: str) -> "Figure":
+def as_svg(figure: "Figure") -> str:
+    """Return the picture as the text of an SVG file, the same that `save` writes."""
+    import matplotlib
+
+    memory = io.StringIO()
+    with matplotlib.rc_context({"svg.hashsalt": "bandproof", "svg.fonttype": "path"}):
+        figure.savefig(memory, format="svg", metadata={"Date": None})
+    return memory.getvalue()
+
+
+def draw(
+    views: Sequence[StageView], title: str, *, size: tuple[float, float] = (11.0, 7.6), beside: bool = True
+) -> "Figure":
     """Return the figure of a run's stages.
 
     Parameters
@@ -58,12 +71,18 @@ def draw(views: Sequence[StageView], title: str) -> "Figure":
     views : sequence of StageView
         In board order, at least one.
     title : str
-        One line above the picture.
+        One line above the picture; "" for none.
+    size : tuple of float
+        Width and height in inches.
+    beside : bool
+        Whether the figures are drawn beside the curves, against their limits.
     """
     from matplotlib.figure import Figure
 
-    figure = Figure(figsize=(11.0, 7.6), layout="constrained")
-    grid = figure.add_gridspec(3, 2, width_ratios=(3.0, 1.25), height_ratios=(3.0, 2.0, 1.2))
+    figure = Figure(figsize=size, layout="constrained")
+    is_small = size[0] < 9.0
+    widths = (2.4 if is_small else 3.0, 1.25) if beside else (1.0,)
+    grid = figure.add_gridspec(3, len(widths), width_ratios=widths, height_ratios=(3.0, 2.0, 1.2))
     magnitude = figure.add_subplot(grid[0, 0])
     phase = figure.add_subplot(grid[1, 0], sharex=magnitude)
     residual = figure.add_subplot(grid[2, 0], sharex=magnitude)
@@ -72,9 +91,11 @@ def draw(views: Sequence[StageView], title: str) -> "Figure":
         _draw_magnitude(magnitude, view, mark)
         _draw_phase(phase, view, mark)
         _draw_residual(residual, view, mark)
-    _dress(magnitude, phase, residual, views)
-    _draw_figures(figure.add_subplot(grid[:, 1]), views)
-    figure.suptitle(title, fontsize=11, x=0.01, ha="left")
+    _dress(magnitude, phase, residual, views, letters=7.5 if is_small else 9.0)
+    if beside:
+        _draw_figures(figure.add_subplot(grid[:, 1]), views, letters=7.0 if is_small else 8.0)
+    if title:
+        figure.suptitle(title, fontsize=11, x=0.01, ha="left")
     return figure
 
 
@@ -124,7 +145,7 @@ def _draw_residual(axes: "Axes", view: StageView, mark: str) -> None:
     )
 
 
-def _dress(magnitude: "Axes", phase: "Axes", residual: "Axes", views: Sequence[StageView]) -> None:
+def _dress(magnitude: "Axes", phase: "Axes", residual: "Axes", views: Sequence[StageView], *, letters: float) -> None:
     magnitude.set_xscale("log")
     lowest = min(float(view.frequency[0]) for view in views)
     highest = max(float(view.frequency[-1]) for view in views)
@@ -142,18 +163,23 @@ def _dress(magnitude: "Axes", phase: "Axes", residual: "Axes", views: Sequence[S
     residual.set_ylabel("measured − fit\n/ % of gain")
     residual.axhline(0.0, color="0.45", linewidth=0.8)
     residual.set_xlabel("frequency / Hz   (bars: ± 2 standard uncertainties)")
-    ticks = [mantissa * 10.0**decade for decade in range(-3, 12) for mantissa in (1.0, 2.0, 5.0)]
-    shown = [tick for tick in ticks if lowest <= tick <= highest]
-    residual.set_xticks(shown, labels=[engineering(tick, "") for tick in shown])
-    residual.minorticks_off()
+    ticks(residual, lowest, highest)
     for axes in (magnitude, phase, residual):
         axes.grid(True, color="0.9", linewidth=0.6)
         axes.tick_params(labelsize=8, labelbottom=axes is residual)
-        axes.yaxis.label.set_fontsize(9)
-    residual.xaxis.label.set_fontsize(9)
+        axes.yaxis.label.set_fontsize(letters)
+    residual.xaxis.label.set_fontsize(letters)
 
 
-def _draw_figures(axes: "Axes", views: Sequence[StageView]) -> None:
+def ticks(axes: "Axes", lowest: float, highest: float) -> None:
+    """Put ticks at 1, 2 and 5 of every decade between two frequencies, in Hz, k and M."""
+    steps = [mantissa * 10.0**decade for decade in range(-3, 12) for mantissa in (1.0, 2.0, 5.0)]
+    shown = [step for step in steps if lowest <= step <= highest]
+    axes.set_xticks(shown, labels=[engineering(step, "") for step in shown])
+    axes.minorticks_off()
+
+
+def _draw_figures(axes: "Axes", views: Sequence[StageView], *, letters: float) -> None:
     """Deviation of each figure in units of its own tolerance: between the two lines is inside the limits."""
     rows = [(view.result, quantity) for view in views for quantity in QUANTITIES]
     for row, (result, quantity) in enumerate(rows):
@@ -180,5 +206,5 @@ def _draw_figures(axes: "Axes", views: Sequence[StageView]) -> None:
     axes.set_ylim(len(rows) - 0.5, -0.5)
     axes.set_xlim(-2.1, 2.1)
     axes.set_xticks([-1, 0, 1], labels=["lower\nlimit", "design", "upper\nlimit"])
-    axes.tick_params(labelsize=7 if len(rows) > 45 else 8)
-    axes.set_title("figures against limits (± U; filled: fails)", fontsize=8, pad=4)
+    axes.tick_params(labelsize=7 if len(rows) > 45 else letters)
+    axes.set_title("figures against limits (± U; filled: fails)", fontsize=letters, pad=4)

@@ -28,6 +28,7 @@ VERBS = (
     Verb("sweep", "run", "sweep a board on a real bench, fit, compare, record"),
     Verb("resume", "resume", "go on where a run stopped"),
     Verb("fit", "refit", "fit stored runs again, changing nothing that was measured"),
+    Verb("report", "report", "write a stored run as a PDF document"),
     Verb("import", "elsewhere", "fit a response measured elsewhere (CSV); with a board compare it"),
     Verb("verify", "integrity", "check that a run file is as it was written"),
 )

@@ -72,7 +72,7 @@ def check_tree(found, expected, where="result"):
         assert expected is bool or not isinstance(found, bool), where
 
 
-FILES = {"run": "run.h5", "picture": "picture.svg", "report": None}
+FILES = {"run": "run.h5", "picture": "picture.svg", "report": "report.pdf"}
 
 
 def concluded(outcome):

@@ -1,0 +1,163 @@
+"""What the report says of a run, as plain values for the template: page one, and how the board was decided."""
+
+from collections.abc import Mapping, Sequence
+from math import isfinite
+from typing import Any
+
+from bandproof.bench.documents import cells
+from bandproof.bench.documents.bench_content import bench_content
+from bandproof.bench.documents.stage_content import alarms_of, stage_content
+from bandproof.bench.picture import StageView, as_svg, draw
+from bandproof.bench.result import board_verdict
+from bandproof.bench.summary import verdict_counts
+from bandproof.bench.types import Comparison, Run, StageResult
+
+__all__ = ["content", "worst_figure"]
+
+_WIDTH = 6.85  # inches of text on A4
+_BESIDE = 6  # bands whose figures fit beside the curves
+_WORDS = {"pass": "PASS", "fail": "FAIL", "undecided": "UNDECIDED", None: "NO VERDICT"}
+_TERMS = (
+    ("f0", "the frequency of greatest |H|; H is the complex ratio of the voltages at the two test points of a band"),
+    ("Q", "f0 divided by the distance of the two half-power points of |H|"),
+    ("gain", "|H| at f0, here in decibels"),
+    ("± U", "the true value is within measured ± U with a probability of 95.45 % (JCGM 100; U = k u)"),
+    ("deviation", "measured against designed"),
+    ("u", "standard uncertainty; type A: from observations, type B: from anything else (JCGM 100)"),
+    ("undecided", "the rule permits neither pass nor fail, or something speaks against the measurement itself"),
+    ("suspect", "the part whose change would explain what was measured; a hint for the search, not a verdict"),
+)
+
+
+def content(
+    run: Run, stages: Sequence[StageResult], result: Mapping[str, Any], digest: str, views: Sequence[StageView]
+) -> dict[str, Any]:
+    """Return all the report says.
+
+    Parameters
+    ----------
+    run : Run
+    stages : sequence of StageResult
+        What was concluded, as the table shows it.
+    result : mapping
+        The result object stored in the run file.
+    digest : str
+        That of the run file.
+    views : sequence of StageView
+        What is drawn, of the stages that have a fit.
+    """
+    drawn = {view.result.name: view for view in views}
+    verdict = board_verdict(run, stages)
+    return {
+        "head": _head(run, result, digest),
+        "verdict": _WORDS[verdict],
+        "sentence": _sentence(run, stages),
+        "worst": _worst_line(stages),
+        "cautions": _cautions(run, stages, result),
+        "suspects": [suspect.text for stage in stages for suspect in stage.suspects],
+        "rows": [_row(stage.name, figure) for stage in stages for figure in stage.figures.values()],
+        "picture": _picture(views),
+        "stages": [stage_content(run, stage, drawn.get(stage.name)) for stage in stages],
+        "bench": bench_content(run),
+        "rules": [[rule, cells.rule_meaning(rule)] for rule in _rules(stages)],
+        "terms": [list(term) for term in _TERMS],
+        "attempts": [_attempt(entry) for entry in result["attempts"] or ()],
+    }
+
+
+def _head(run: Run, result: Mapping[str, Any], digest: str) -> dict[str, Any]:
+    return {
+        "title": run.board.title,
+        "drawing": run.board.drawing,
+        "revision": run.board.revision,
+        "serial": run.serial,
+        "attempt": run.attempt,
+        "operator": run.operator or "not stated",
+        "started": cells.utc(run.started),
+        "date": run.started[:19],
+        "where": run.bench.title or "not stated",
+        "ambient": "not stated" if run.ambient is None else f"{run.ambient:.4g} °C",
+        "note": run.note,
+        "run_id": run.run_id,
+        "version": run.version,
+        "digest": digest,
+        "points": result["points"],
+        "bench_seconds": f"{run.bench_seconds:.1f} s",
+    }
+
+
+def _sentence(run: Run, stages: Sequence[StageResult]) -> str:
+    if run.ended == "cut_short":
+        return f"The run was cut short: {run.reason}"
+    figures = [figure for stage in stages for figure in stage.figures.values()]
+    return f"{len(figures)} figures of {len(stages)} band{'' if len(stages) == 1 else 's'}: {verdict_counts(figures)}."
+
+
+def worst_figure(stages: Sequence[StageResult]) -> tuple[str, Comparison] | None:
+    """Return the band and the figure that uses most of its tolerance, of those that were found."""
+    found = [(stage.name, figure) for stage in stages for figure in stage.figures.values() if isfinite(figure.measured)]
+    return max(found, key=lambda named: cells.of_tolerance(named[1]), default=None)
+
+
+def _worst_line(stages: Sequence[StageResult]) -> str:
+    """Return the worst figure in words; those that were not found come first, nothing is worse."""
+    lost = [
+        f"{stage.name} {cells.SYMBOLS[figure.quantity]}"
+        for stage in stages
+        for figure in stage.figures.values()
+        if not isfinite(figure.measured)
+    ]
+    told = [f"Not found: {', '.join(lost)}."] if lost else []
+    if worst := worst_figure(stages):
+        band, figure = worst
+        told.append(
+            f"Worst figure: {band} {cells.SYMBOLS[figure.quantity]}, {cells.measured(figure)}, uses "
+            f"{100.0 * cells.of_tolerance(figure):.0f} % of its tolerance (limits {cells.limits(figure)})."
+        )
+    return " ".join(told)
+
+
+def _cautions(run: Run, stages: Sequence[StageResult], result: Mapping[str, Any]) -> list[str]:
+    found = [*run.alarms, *alarms_of(stages)]
+    together = [str(entry["attempt"]) for entry in result["attempts"] or () if entry["pooled"]]
+    if len(together) > 1:
+        found.insert(
+            0, f"The figures are means of attempts {', '.join(together)}; points and pictures are of this one."
+        )
+    if result["verdict"] != board_verdict(run, stages):
+        found.insert(0, f"The run file says {result['verdict']}; evaluated again here the board comes out otherwise.")
+    return found
+
+
+def _row(band: str, figure: Comparison) -> dict[str, Any]:
+    return {
+        "band": band,
+        "figure": cells.SYMBOLS[figure.quantity],
+        "designed": cells.designed(figure),
+        "measured": cells.measured(figure),
+        "deviation": cells.deviation(figure),
+        "limits": cells.limits(figure),
+        "rule": figure.rule,
+        "verdict": cells.WORDS[figure.verdict],
+    }
+
+
+def _picture(views: Sequence[StageView]) -> str | None:
+    if not views:
+        return None
+    beside = len(views) <= _BESIDE
+    return as_svg(draw(views, "", size=(_WIDTH, 4.9 if beside else 3.9), beside=beside))
+
+
+def _rules(stages: Sequence[StageResult]) -> list[str]:
+    return list(dict.fromkeys(figure.rule for stage in stages for figure in stage.figures.values()))
+
+
+def _attempt(entry: Mapping[str, Any]) -> dict[str, Any]:
+    return {
+        "attempt": entry["attempt"],
+        "verdict": cells.WORDS[entry["verdict"]],
+        "pooled": "yes" if entry["pooled"] else "no",
+        "digest": entry["digest"] or "this run",
+        "reason": entry.get("reason", ""),
+    }

@@ -1,0 +1,307 @@
+"""The report: what a reader must find is in the text of its pages, as written, and the same run gives the same bytes.
+
+The text is read back by an independent reader of PDF (pypdf).
+"""
+
+import builtins
+import io
+import json
+import math
+import re
+from dataclasses import replace
+from importlib import resources
+
+import numpy as np
+import pypdf
+import pytest
+
+from bandproof.bench.documents import cells
+from bandproof.bench.documents.content import content, worst_figure
+from bandproof.bench.documents.report import NoReport, report_bytes
+from bandproof.bench.documents.stored import read_stored
+from bandproof.bench.evaluate import views
+from bandproof.bench.runfile import digest_of
+from bandproof.bench.types import Suspect
+from bandproof.bench.verbs import console
+
+EVIL = '#[evil] $x$ "quoted" \\ *bold* _it_ -- <label> @ref // ~ `raw` #sys.version'
+
+
+@pytest.fixture(scope="module")
+def stored(outcome):
+    return read_stored(outcome.folder / "run.h5")
+
+
+def document(stored, *, run=None, stages=None, result=None, drawn=None):
+    run, stages = run or stored.run, stored.stages if stages is None else stages
+    drawn = views(stored.run, stored.stages) if drawn is None else drawn
+    return report_bytes(run, stages, result or stored.result, stored.digest, drawn)
+
+
+def pages(pdf):
+    """Return the text of every page, words apart by one space."""
+    reader = pypdf.PdfReader(io.BytesIO(pdf))
+    return [" ".join(page.extract_text().replace("\u200b", "").split()) for page in reader.pages]
+
+
+@pytest.fixture(scope="module")
+def text(stored):
+    return pages(document(stored))
+
+
+def test_page_one_says_what_the_hurried_need(text, stored):
+    first, run = text[0], stored.run
+    assert "PASS" in first
+    for wanted in (run.board.title, run.board.drawing, f"revision {run.board.revision}", run.serial, run.bench.title):
+        assert wanted in first
+    assert "attempt 1" in first
+    assert "2026-01-01 00:00:00 UTC" in first  # the fixed epoch of a rehearsal
+    assert "ambient temperature not stated" in first
+    assert "'quoted' \"twice\"" in first
+
+
+def test_page_one_has_every_figure_with_its_limits_and_rule(text, stored):
+    for stage in stored.stages:
+        for figure in stage.figures.values():
+            wanted = [cells.measured(figure), cells.deviation(figure), cells.limits(figure), figure.rule, "pass"]
+            assert " ".join(wanted) in text[0]
+
+
+def test_worst_figure_and_its_uncertainty_are_told(text, stored):
+    # Recomputed here from the definition: the share of the room between design and limit that the deviation uses.
+    def share(figure):
+        edge = figure.upper_limit if figure.measured > figure.designed else figure.lower_limit
+        return (figure.measured - figure.designed) / (edge - figure.designed)
+
+    named = [(share(f), stage.name, f) for stage in stored.stages for f in stage.figures.values()]
+    most, band, figure = max(named, key=lambda entry: entry[0])
+    assert worst_figure(stored.stages) == (band, figure)
+    assert f"Worst figure: {band} {cells.SYMBOLS[figure.quantity]}, {cells.measured(figure)}" in text[0]
+    assert f"uses {100 * most:.0f} % of its tolerance" in text[0]
+
+
+def test_a_page_for_each_band_with_its_whole_budget(text, stored):
+    for stage, page in zip(stored.stages, text[1:], strict=False):
+        assert f"Band {stage.name}: pass" in page
+        for row in stage.budgets["q"].rows:
+            assert row.name in page
+        assert f"{100 * stage.budgets['q'].expanded / stage.figures['q'].measured:.4f}" in page
+
+
+def test_budget_begins_with_what_dominates(stored):
+    told = content(stored.run, stored.stages, stored.result, stored.digest, stored.views)
+    for stage, said in zip(stored.stages, told["stages"], strict=True):
+        shares = {
+            row["name"]: max(
+                next(r.contribution for r in budget.rows if r.name == row["name"]) / budget.u
+                for budget in stage.budgets.values()
+            )
+            for row in said["budget"]["rows"]
+        }
+        assert list(shares.values()) == sorted(shares.values(), reverse=True)
+        assert len(shares) == len(stage.budgets["q"].rows)
+
+
+def test_last_page_has_instruments_digest_and_words(text, stored):
+    last = text[-1]
+    for role, identity in stored.run.identities.items():
+        assert identity in last
+        assert stored.run.bench.instruments[role].dialect in last
+    assert digest_of(stored.path) in last
+    assert f"bandproof {stored.run.version}" in last
+    assert "measured in this run" in last
+    assert "95.45 %" in last
+    assert cells.rule_meaning("simple") in last
+    assert "20 ppm declared" in last  # simulated.bench.toml: frequency_accuracy
+
+
+def test_every_page_is_numbered_and_names_the_serial(text, stored):
+    for number, page in enumerate(text, 1):
+        assert f"serial {stored.run.serial}" in page
+        assert f"page {number} of {len(text)}" in page
+
+
+def test_what_a_person_wrote_comes_out_as_written(stored):
+    run = stored.run
+    board = replace(run.board, title=EVIL, drawing=EVIL)
+    said = pages(document(stored, run=replace(run, board=board, note=EVIL, operator=EVIL, alarms=(EVIL,))))
+    assert said[0].count(EVIL) == 5  # title, drawing, operator, note, caution
+
+
+def test_a_long_word_stays_on_the_page(stored):
+    word = "W" * 300
+    said = document(stored, run=replace(stored.run, note=word))
+    page = pypdf.PdfReader(io.BytesIO(said)).pages[0]
+    places = []
+    page.extract_text(visitor_text=lambda text, *rest: places.append((text, rest[1][4])))
+    lines = [line for text, _ in places for line in text.splitlines() if "WWW" in line]
+    assert len(lines) > 1
+    assert "".join(line for line in lines).replace("\u200b", "").count("W") == 300
+
+
+def test_same_run_same_bytes_and_from_the_file_too(stored, outcome):
+    first = document(stored)
+    assert document(stored) == first
+    assert (outcome.folder / "report.pdf").read_bytes() == first
+
+
+def test_dates_inside_are_the_run_s_own(stored):
+    about = pypdf.PdfReader(io.BytesIO(document(stored))).metadata
+    assert about.creation_date.isoformat() == stored.run.started
+    assert about.modification_date.isoformat() == stored.run.started
+
+
+def test_only_fonts_that_come_along_and_all_embedded(stored):
+    reader = pypdf.PdfReader(io.BytesIO(document(stored)))
+    names = set()
+    for page in reader.pages:
+        for font in page["/Resources"]["/Font"].values():
+            inner = font.get_object()["/DescendantFonts"][0].get_object()
+            assert set(inner["/FontDescriptor"].get_object()) & {"/FontFile2", "/FontFile3"}
+            names.add(re.sub(r"^/[A-Z]{6}\+|-.*", "", inner["/BaseFont"]))
+    assert names <= {"LibertinusSerif", "DejaVuSansMono"}
+
+
+def test_no_letter_is_smaller_than_seven_points(stored):
+    """ISO 32000-1, 9.3: the size of a letter is that of its font times the text matrix's scale."""
+    template = (resources.files("bandproof.bench.documents") / "report.typ").read_text()
+    sizes = [float(size) for size in re.findall(r"(?:size:|small =|body =|table-size =) ?([\d.]+)pt", template)]
+    assert min(sizes) >= 7.0
+    found = []
+    for page in pypdf.PdfReader(io.BytesIO(document(stored))).pages:
+        page.extract_text(
+            visitor_text=lambda text, _, matrix, font, size: (
+                found.append(size * abs(matrix[3])) if text.strip() else None
+            )
+        )
+    assert min(found) >= 7.0
+
+
+def test_a_letter_that_no_font_has_is_no_obstacle(stored):
+    said = pages(document(stored, run=replace(stored.run, note="雷 after")))
+    assert "after" in said[0]
+    assert "shown as boxes" in said[0]
+
+
+def test_failing_and_lost_figures_come_out(stored):
+    low, other = stored.stages
+    figures = {name: replace(figure, measured=math.nan) for name, figure in other.figures.items()}
+    lost = replace(other, figures=figures, verdict="undecided", theta=(), budgets={}, status="only 1 usable points")
+    wrong = {**low.figures, "q": replace(low.figures["q"], measured=3.0, verdict="fail")}
+    hint = Suspect("low: R_shunt reads like 3.4 kΩ", "part", ("R_shunt",), 3.4e3, 20.0)
+    failed = replace(low, figures=wrong, verdict="fail", suspects=(hint,))
+    said = pages(document(stored, stages=[failed, lost], drawn=stored.views[:1]))
+    assert said[0].count("FAIL") == 2  # the board's word and the figure's
+    assert f"Not found: {lost.name} f0, {lost.name} Q, {lost.name} gain." in said[0]
+    assert hint.text in said[0]
+    assert hint.text in said[1]
+    assert "No fit: only 1 usable points" in said[2]
+    assert "The run file says pass" in said[0]
+
+
+def test_a_run_that_was_cut_short_has_no_verdict(stored):
+    said = pages(document(stored, run=replace(stored.run, ended="cut_short", reason="the scope fell silent")))
+    assert "NO VERDICT" in said[0]
+    assert "PASS" not in said[0]
+    assert "cut short: the scope fell silent" in said[0]
+
+
+def many(stored, count):
+    """Return a run of a board of many bands, an octave's tenth apart, made of the first one."""
+    first, view, board = stored.stages[0], stored.views[0], stored.run.board
+    asked, stages, drawn = [], [], []
+    for number in range(count):
+        factor, name = 1.07**number, f"a band with a long name, number {number}"
+        figures = dict(first.figures)
+        names = ("designed", "predicted", "measured", "lower_limit", "upper_limit", "expanded_uncertainty")
+        figures["centre"] = replace(
+            figures["centre"], **{key: factor * getattr(figures["centre"], key) for key in names}
+        )
+        theta = (first.theta[0] + math.log(factor), *first.theta[1:])
+        stages.append(replace(first, name=name, figures=figures, theta=theta))
+        drawn.append(replace(view, result=stages[-1], frequency=view.frequency * factor, at=view.at * factor))
+        asked.append(replace(board.stages[0], name=name))
+    return replace(stored.run, board=replace(board, stages=tuple(asked))), stages, drawn
+
+
+def test_a_board_of_twelve_bands(stored):
+    run, stages, drawn = many(stored, 12)
+    said = pages(document(stored, run=run, stages=stages, drawn=drawn))
+    assert sum(" ".join(f"Band {stage.name}: pass".split()) in page for stage in stages for page in said) == 12
+    table = " ".join(said)
+    for stage in stages:
+        assert cells.measured(stage.figures["centre"]) in table
+    heads = [page for page in said if "band figure designed measured ± U deviation limits rule verdict" in page]
+    assert len(heads) >= 13  # the table of all and that of each band
+
+
+def test_typst_missing_is_told_and_the_run_is_kept(stored, monkeypatch, tmp_path, capsys):
+    known = builtins.__import__
+
+    def without(name, *rest, **more):
+        if name == "typst":
+            raise ImportError("no typst here")
+        return known(name, *rest, **more)
+
+    monkeypatch.setattr(builtins, "__import__", without)
+    with pytest.raises(NoReport, match="pip install typst"):
+        document(stored)
+    assert console.run(["report", str(stored.path), "--out", str(tmp_path / "r.pdf")]) == 2
+    assert "no report was written" in capsys.readouterr().err
+    assert not list(tmp_path.iterdir())
+
+
+@pytest.fixture(scope="module")
+def two_bands(two_band_path):
+    return str(two_band_path)
+
+
+def test_rehearse_without_typst_keeps_run_and_exit_code(two_bands, monkeypatch, tmp_path, capsys):
+    known = builtins.__import__
+
+    def without(name, *rest, **more):
+        if name == "typst":
+            raise ImportError("no typst here")
+        return known(name, *rest, **more)
+
+    monkeypatch.setattr(builtins, "__import__", without)
+    assert console.run(["rehearse", two_bands, "--folder", str(tmp_path), "--json"]) == 0
+    result = json.loads(capsys.readouterr().out)
+    assert result["files"]["report"] is None
+    assert any("no report.pdf" in alarm and "pip install typst" in alarm for alarm in result["alarms"])
+    assert read_stored(tmp_path / "rehearsal-1" / "1" / "run.h5").run.ended == "complete"
+
+
+def test_the_verb_writes_what_the_job_wrote(stored, outcome, tmp_path, capsys):
+    path = tmp_path / "other.pdf"
+    assert console.run(["report", str(stored.path), "--out", str(path)]) == 0
+    assert str(path) in capsys.readouterr().out
+    assert path.read_bytes() == (outcome.folder / "report.pdf").read_bytes()
+
+
+def test_a_damaged_run_has_no_report(stored, tmp_path, capsys):
+    content = bytearray(stored.path.read_bytes())
+    content[-1] ^= 1
+    (tmp_path / "run.h5").write_bytes(content)
+    assert console.run(["report", str(tmp_path / "run.h5")]) == 2
+    assert "damaged" in capsys.readouterr().err
+    assert not (tmp_path / "report.pdf").exists()
+
+
+@pytest.mark.parametrize(
+    ("rule", "words"),
+    [
+        ("guarded 0.5", "drawn in by 0.5 U"),
+        ("risk 2 %", "outside the limits is 2 % at most"),
+        ("simple", "U does not shift the limits"),
+    ],
+)
+def test_a_rule_is_explained(rule, words):
+    assert words in cells.rule_meaning(rule)
+
+
+def test_gain_is_in_decibels(stored):
+    # 20 lg by definition (IEC 60027-3); the numbers by hand: 20 lg 3.1623 = 10.000, 20 lg 1.01 = 0.0864
+    gain = replace(stored.stages[0].figures["gain"], measured=3.16228, expanded_uncertainty=0.0316228)
+    assert cells.measured(gain) == "10.000 ± 0.087 dB"
+    assert np.isclose(cells.of_tolerance(replace(gain, measured=gain.upper_limit)), 1.0)
