@@ -94,7 +94,7 @@ def judged(circuits: Sequence[Circuit], seen: Sequence[Seen]) -> list[Judgement]
         return []
     best = [by_stage[i][0].chi_square if i in by_stage else healthy[i] for i in range(len(circuits))]
     apart = sum(best)  # each stage by itself
-    whole = _ranked(_of_board(circuits, seen, apart))
+    whole = [h for h in _ranked(_of_board(circuits, seen, apart)) if _explains(h.chi_square, 3 * len(circuits))]
     if whole and whole[0].chi_square < apart:
         alone = [replace(ranked[0], chi_square=apart) for ranked in by_stage.values()]
         found = [_judgement(_ranked([*whole, *alone]), 3 * len(circuits))]
@@ -109,12 +109,16 @@ def _ranked(found: Sequence[Hypothesis]) -> list[Hypothesis]:
 
 
 def _judgement(ranked: Sequence[Hypothesis], dof: int) -> Judgement:
-    from scipy.special import chdtrc
-
     best = ranked[0].chi_square
     beside = tuple(h for h in ranked if h.chi_square - best < DISTINGUISHABLE)
     following = min((h.chi_square for h in ranked[1:]), default=np.inf)
-    return Judgement(beside, following - best, bool(chdtrc(dof, best) > _UNEXPLAINED))
+    return Judgement(beside, following - best, _explains(best, dof))
+
+
+def _explains(chi_square: float, dof: int) -> bool:
+    from scipy.special import chdtrc
+
+    return bool(chdtrc(dof, chi_square) > _UNEXPLAINED)
 
 
 def _of_stage(i: int, circuits: Sequence[Circuit], seen: Sequence[Seen], healthy: float) -> list[Hypothesis]:
