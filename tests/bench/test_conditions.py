@@ -95,8 +95,7 @@ def row(kept):
     """Return the row "temperature" of each figure's budget."""
     (stage,) = evaluate(kept)
     return {
-        name: next(row for row in budget.rows if row.name == "temperature")
-        for name, budget in stage.budgets.items()
+        name: next(row for row in budget.rows if row.name == "temperature") for name, budget in stage.budgets.items()
     }
 
 
