@@ -176,9 +176,7 @@ def _kind(words: str) -> str:
     return words
 
 
-def _compare(
-    night: Night, serial: str, board: Board, stage: StageResult, drawn: dict[str, dict[str, float]]
-) -> None:
+def _compare(night: Night, serial: str, board: Board, stage: StageResult, drawn: dict[str, dict[str, float]]) -> None:
     """Compare a stage's figures with what its drawn parts truly give."""
     true = predict(board, board.stage(stage.name), drawn[stage.name])
     for quantity in QUANTITIES if stage.theta else ():
