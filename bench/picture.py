@@ -22,6 +22,7 @@ if TYPE_CHECKING:
 __all__ = ["StageView", "as_svg", "draw", "save", "ticks"]
 
 _MARKS = "osD^vP*X<>hp"  # one shape a band, repeated after twelve
+_MOST_LETTERS = 90  # of all names together above the curves, without overlap; arbitrary
 _SYMBOLS = {"centre": "f0", "q": "Q", "gain": "gain"}
 
 
@@ -86,9 +87,10 @@ def draw(
     magnitude = figure.add_subplot(grid[0, 0])
     phase = figure.add_subplot(grid[1, 0], sharex=magnitude)
     residual = figure.add_subplot(grid[2, 0], sharex=magnitude)
+    named = sum(len(view.result.name) + 1 for view in views) <= _MOST_LETTERS
     for number, view in enumerate(views):
         mark = _MARKS[number % len(_MARKS)]
-        _draw_magnitude(magnitude, view, mark)
+        _draw_magnitude(magnitude, view, mark, named=named)
         _draw_phase(phase, view, mark)
         _draw_residual(residual, view, mark)
     _dress(magnitude, phase, residual, views, letters=7.5 if is_small else 9.0)
@@ -103,16 +105,17 @@ def _dB(ratio: ComplexArray | FloatArray | float) -> Any:
     return 20.0 * np.log10(np.abs(ratio))
 
 
-def _draw_magnitude(axes: "Axes", view: StageView, mark: str) -> None:
+def _draw_magnitude(axes: "Axes", view: StageView, mark: str, *, named: bool) -> None:
     axes.plot(view.frequency, _dB(view.designed), color="0.45", linewidth=1.0)
     axes.plot(view.at, _dB(view.measured), mark, **_open_mark())
     centre, gain = (view.result.figures[name] for name in ("centre", "gain"))
     low, high = _dB(gain.lower_limit), _dB(gain.upper_limit)
     left, right = centre.lower_limit, centre.upper_limit
     axes.plot([left, right, right, left, left], [low, low, high, high, low], color="black", linewidth=0.9)
-    axes.annotate(
-        view.result.name, (centre.designed, high), (0, 4), textcoords="offset points", ha="center", fontsize=8
-    )
+    if named:
+        axes.annotate(
+            view.result.name, (centre.designed, high), (0, 4), textcoords="offset points", ha="center", fontsize=8
+        )
 
 
 def _open_mark() -> dict[str, Any]:
@@ -172,8 +175,9 @@ def _dress(magnitude: "Axes", phase: "Axes", residual: "Axes", views: Sequence[S
 
 
 def ticks(axes: "Axes", lowest: float, highest: float) -> None:
-    """Put ticks at 1, 2 and 5 of every decade between two frequencies, in Hz, k and M."""
-    steps = [mantissa * 10.0**decade for decade in range(-3, 12) for mantissa in (1.0, 2.0, 5.0)]
+    """Put ticks at 1, 2 and 5 of every decade between two frequencies, more where few would do, in Hz, k and M."""
+    mantissas = (1.0, 2.0, 5.0) if highest > 10.0 * lowest else (1.0, 1.5, 2.0, 3.0, 4.0, 6.0, 8.0)
+    steps = [mantissa * 10.0**decade for decade in range(-3, 12) for mantissa in mantissas]
     shown = [step for step in steps if lowest <= step <= highest]
     axes.set_xticks(shown, labels=[engineering(step, "") for step in shown])
     axes.minorticks_off()

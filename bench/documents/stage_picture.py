@@ -35,20 +35,27 @@ def draw_stage(view: StageView) -> "Figure":
     )
     upper, lower = figure.add_subplot(grid[0, 0]), figure.add_subplot(grid[1, 0])
     size, turn = figure.add_subplot(grid[0, 1]), figure.add_subplot(grid[1, 1])
-    _draw_curves(upper, lower, view)
+    span = _span(view)
+    _draw_curves(upper, lower, view, span)
     _draw_residuals(size, turn, view)
-    span = (float(np.min(view.at)) / 1.25, float(np.max(view.at)) * 1.25)
     for axes in (upper, lower, size, turn):
         _dress(axes, span, labelled=axes in (lower, turn))
     return figure
+
+
+def _span(view: StageView) -> tuple[float, float]:
+    """Return what is shown, Hz: all points, and the limits wherever the band was found."""
+    centre = view.result.figures["centre"]
+    ends = [*view.at.tolist(), centre.lower_limit, centre.upper_limit]
+    return min(ends) / 1.25, max(ends) * 1.25
 
 
 def _dB(ratio: ComplexArray | FloatArray | float) -> Any:
     return 20.0 * np.log10(np.abs(ratio))
 
 
-def _draw_curves(upper: "Axes", lower: "Axes", view: StageView) -> None:
-    frequency = np.geomspace(np.min(view.at) / 1.25, np.max(view.at) * 1.25, 160)
+def _draw_curves(upper: "Axes", lower: "Axes", view: StageView, span: tuple[float, float]) -> None:
+    frequency = np.geomspace(*span, 160)
     turned = -1.0 if view.designed[np.argmax(np.abs(view.designed))].real < 0.0 else 1.0
     as_designed, fitted = _curve(_wanted(view, turned), frequency), _curve(view.result.theta, frequency)
     for curve, color, width in ((as_designed, "0.55", 1.6), (fitted, "black", 0.8)):
