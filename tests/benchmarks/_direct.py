@@ -125,7 +125,7 @@ def _devices(bench: Bench, world: World) -> Iterator[tuple[Devices, VirtualClock
         path = Path(folder) / "bench.time"
         create_clock_file(str(path), 0.0)
         timebase, clock = open_timebase(path), VirtualClock(str(path))
-        plan = FaultPlan((), timebase)
+        plan = FaultPlan(world.faults, timebase)
         served = instruments(world, timebase, plan)
         ports = {role: _Port(device, timebase, plan) for role, device in served.items()}
         dialects = load_dialects(bench)
