@@ -36,3 +36,10 @@ def test_a_twentieth_of_the_risk_table_is_within_its_statistical_error(capsys):
 
     assert risk_table.main(boards=risk_table.BOARDS // 20, out=risk_table.OUT // 20)
     assert len(capsys.readouterr().out.splitlines()) == 13
+
+
+def test_a_twentieth_of_the_boards_has_the_right_suspects():
+    """The bounds of the benchmark, on its first boards."""
+    from tests.benchmarks import suspects
+
+    assert suspects.drawn_boards(suspects.HEALTHY // 20, suspects.WRONG // 20)

@@ -130,14 +130,26 @@ def test_least_distance_is_what_a_general_minimizer_finds(part, factor):
     assert found == pytest.approx(least, rel=1e-3)  # covariances are kept regular by 1e-6, a hundredth of f0's u
 
 
-@pytest.mark.parametrize("errors", range(5))
-def test_healthy_parts_that_all_lie_to_one_side_are_not_accused(errors):
-    """All of one reel at an end of its tolerance: no independent draw would do that, and yet nothing is wrong."""
+# Every part near an end of its tolerance: factors of the parts, in tolerances.
+UNLIKELY = {
+    "one reel": (-0.9, -0.9, -0.9, 0.98, 0.98),
+    "all for a low gain and Q": (0.98, 0.98, -0.98, 0.98, -0.98),
+    "all for a high f0": (-0.98, -0.98, -0.98, -0.98, -0.98),
+}
+
+
+@pytest.mark.parametrize("corner", UNLIKELY.values(), ids=UNLIKELY)
+@pytest.mark.parametrize("errors", range(3))
+def test_parts_within_tolerance_are_not_accused_however_unlikely(corner, errors):
+    """Independent draws would hardly do that on all stages, and yet nothing is wrong."""
     rng = np.random.default_rng([7, errors])
     circuits = board()
-    given = seen(circuits, {("all", "capacitor"): 1.049, ("all", "resistor"): 0.991})
-    found = [Seen(one.figures + 0.7 * U * rng.standard_normal(3), one.covariance) for one in given]
-    assert judged(circuits, found) == []
+    factors = {("all", part): 1.0 + t * c for part, t, c in zip(PARTS, TOLERANCES, corner, strict=True)}
+    given = [Seen(one.figures + 0.7 * U * rng.standard_normal(3), one.covariance) for one in seen(circuits, factors)]
+    away = [one.figures - c.nominal for c, one in zip(circuits, given, strict=True)]
+    far = sum(d @ np.linalg.solve(spread(c, c.slopes, s), d) for c, s, d in zip(circuits, given, away, strict=True))
+    assert corner == UNLIKELY["one reel"] or far > chi2.ppf(0.99, 9)  # so a distance with their spread would accuse
+    assert judged(circuits, given) == []
 
 
 # --- hypotheses ---
