@@ -7,8 +7,8 @@ from bandproof.drivers import find
 from bandproof.drivers.clock import RealClock
 
 
-def answering(words: bytes | None) -> tuple[str, list[bytes]]:
-    """Return the address of a server for one client, and what it will have heard; None closes without a word."""
+def answering(words: bytes | None) -> tuple[str, list[bytes], threading.Thread]:
+    """Return the address of a server for one client, what it hears until its thread ends; None closes without a word."""
     server = socket.create_server(("127.0.0.1", 0))
     heard: list[bytes] = []
 
@@ -19,18 +19,20 @@ def answering(words: bytes | None) -> tuple[str, list[bytes]]:
                 connection.sendall(words)
                 heard.append(connection.recv(1000))
 
-    threading.Thread(target=serve, daemon=True).start()
-    return f"TCPIP::127.0.0.1::{server.getsockname()[1]}::SOCKET", heard
+    serving = threading.Thread(target=serve, daemon=True)
+    serving.start()
+    return f"TCPIP::127.0.0.1::{server.getsockname()[1]}::SOCKET", heard, serving
 
 
 def test_every_listed_address_is_asked_for_its_identity_and_nothing_else(monkeypatch):
-    good, heard = answering(b"SOMEBODY,SOMETHING,0,0\n")
-    mute, _ = answering(None)
+    good, heard, serving = answering(b"SOMEBODY,SOMETHING,0,0\n")
+    mute, _, _ = answering(None)
     monkeypatch.setattr(find, "listed", lambda library: (good, mute))
     found = dict(find.find_instruments(RealClock(margin=0.5)))
     assert found[good] == "SOMEBODY,SOMETHING,0,0"
     assert "no identity" in found[mute]
     assert mute in found[mute]
+    serving.join(10.0)  # the end of the connection reaches the server a moment after it reached the client
     assert heard == [b"*IDN?\n", b""]
 
 
