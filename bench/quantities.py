@@ -9,7 +9,16 @@ import math
 import re
 from typing import Literal
 
-__all__ = ["Kind", "QuantityError", "engineering", "read_quantity", "read_tolerance", "shown", "with_uncertainty"]
+__all__ = [
+    "Kind",
+    "QuantityError",
+    "engineering",
+    "read_quantity",
+    "read_tolerance",
+    "shown",
+    "tolerance_text",
+    "with_uncertainty",
+]
 
 Kind = Literal[
     "frequency",
@@ -190,6 +199,19 @@ def read_tolerance(text: str | float) -> tuple[float, float]:
     elif 0.0 < width < 1.0:
         return 1.0 - width, 1.0 + width
     raise QuantityError(shown(text), "tolerance", f"{shown(text)} is not a usable width")
+
+
+def tolerance_text(lower: float, upper: float) -> str:
+    """Return the tolerance that allows these factors on a designed value, as people write it (see `read_tolerance`).
+
+    Examples
+    --------
+    >>> tolerance_text(*read_tolerance("6 %")), tolerance_text(*read_tolerance("1 dB"))
+    ('±6 %', '±1 dB')
+    """
+    if abs(lower * upper - 1.0) < 1e-9:
+        return f"±{20.0 * math.log10(upper):.4g} dB"
+    return f"±{100.0 * (upper - 1.0):.4g} %"
 
 
 _PREFIXES = {-12: "p", -9: "n", -6: "µ", -3: "m", 0: "", 3: "k", 6: "M", 9: "G"}

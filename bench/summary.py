@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING
 
 from bandproof.analysis.uncertainty import share
 from bandproof.bench.budget import MEANINGS, dominating
-from bandproof.bench.quantities import decimals, engineering, with_uncertainty
+from bandproof.bench.quantities import decimals, engineering, tolerance_text, with_uncertainty
 from bandproof.bench.rules import SIMPLE_TEXT
 from bandproof.bench.types import QUANTITIES, UNITS, Comparison, Quantity, StageResult, Verdict
 
@@ -32,9 +32,9 @@ TITLES: dict[Quantity, str] = {
     "q": "Q = f0 / (-3 dB bandwidth)",
     "gain": "Gain at f0",
 }
-_HEADINGS = ("band", "designed", "predicted", "measured ± U (95 %)", "deviation", "verdict")
+_HEADINGS = ("band", "designed", "predicted", "measured ± U (95 %)", "deviation", "limits", "verdict")
 _WORDS: dict[Verdict, str] = {"pass": "pass", "fail": "FAIL", "undecided": "undecided"}
-_WIDTHS = (12, 10, 10, 24, 10, 9)  # band, designed, predicted, measured ± U, deviation, verdict
+_WIDTHS = (9, 10, 10, 23, 10, 8, 10)  # of the columns above; 80 together
 
 
 def dB(ratio: float) -> float:
@@ -46,7 +46,8 @@ def summary_lines(stages: Sequence[StageResult]) -> list[str]:
     """Return the lines of the table: per figure, one line per band; none without bands."""
     lines: list[str] = []
     for quantity in QUANTITIES if stages else ():
-        lines += ["", TITLES[quantity], *_row(_HEADINGS), *_rows(quantity, stages)]
+        told = "" if lines else " (deviation and limits: from the designed value)"
+        lines += ["", TITLES[quantity] + told, *_row(_HEADINGS), *_rows(quantity, stages)]
     return lines
 
 
@@ -77,13 +78,13 @@ def dominating_lines(stages: Sequence[StageResult]) -> list[str]:
     widths = (22, 22, 22)
     headings = "".join(f"{'  ' + name:<{width}}" for name, width in zip(("f0", "Q", "gain"), widths, strict=True))
     lines = ["", "Largest part of each U (share of u²; all parts: bandproof fit RUN --budget)"]
-    lines.append(f"{'band':<12}{headings}".rstrip())
+    lines.append(f"{'band':<{_WIDTHS[0]}}{headings}".rstrip())
     for stage in shown:
         rows = [(dominating(stage.budgets[quantity]), stage.budgets[quantity]) for quantity in QUANTITIES]
         cells = [f"  {row.name} {100.0 * share(row, budget):.0f} %" for row, budget in rows]
         name = [stage.name] if len(stage.name) >= _WIDTHS[0] else []
         text = "".join(f"{cell:<{width}}" for cell, width in zip(cells, widths, strict=True))
-        lines += [*name, f"{'' if name else stage.name:<12}{text}".rstrip()]
+        lines += [*name, f"{'' if name else stage.name:<{_WIDTHS[0]}}{text}".rstrip()]
     named = dict.fromkeys(dominating(stage.budgets[q]).name for stage in shown for q in QUANTITIES)
     told = "; ".join(f"{name}: {MEANINGS[name]}" for name in named if name in MEANINGS)
     return [*lines, *textwrap.wrap(told, 80, break_on_hyphens=False)]
@@ -168,8 +169,13 @@ def _cells(figure: Comparison) -> list[str]:
         engineering(figure.predicted, figure.unit),
         with_uncertainty(figure.measured, figure.expanded_uncertainty, figure.unit),
         deviation,
+        _limits(figure),
         _WORDS[figure.verdict],
     ]
+
+
+def _limits(figure: Comparison) -> str:
+    return tolerance_text(figure.lower_limit / figure.designed, figure.upper_limit / figure.designed)
 
 
 def _gain_cells(figure: Comparison) -> list[str]:
@@ -179,6 +185,7 @@ def _gain_cells(figure: Comparison) -> list[str]:
         f"{dB(figure.predicted):.4g} dB",
         _gain(figure.measured, figure.expanded_uncertainty) if found else "not found",
         f"{dB(figure.measured / figure.designed):+.2f} dB" if found else "-",
+        _limits(figure),
     ]
 
 

@@ -59,8 +59,8 @@ def _duration(seconds: float) -> str:
     return f"{seconds:.0f} s" if seconds < 100.0 else f"{seconds / 60.0:.0f} min"
 
 
-def show(outcome: "Outcome", wall_seconds: float, as_json: bool) -> int:
-    """Print a job's outcome and return the exit code."""
+def show(outcome: "Outcome", wall_seconds: float, as_json: bool, *, simulated: bool = False) -> int:
+    """Print a job's outcome, on simulated instruments if so, and return the exit code."""
     from bandproof.bench.summary import dominating_lines, rule_lines, summary_lines, verdict_counts
 
     if as_json:
@@ -69,7 +69,8 @@ def show(outcome: "Outcome", wall_seconds: float, as_json: bool) -> int:
         return exit_code(outcome)
     run, result = outcome.run, outcome.result
     click.echo(run.board.title)
-    click.echo(f"serial {run.serial}, attempt {run.attempt}, {run.started[:16].replace('T', ' ')} UTC")
+    bench = ", simulated instruments" if simulated else ""
+    click.echo(f"serial {run.serial}, attempt {run.attempt}, {run.started[:16].replace('T', ' ')} UTC{bench}")
     together = [str(entry["attempt"]) for entry in result["attempts"] or () if entry["pooled"]]
     if len(together) > 1:
         click.echo(f"The figures are means of attempts {', '.join(together)}.")
@@ -245,7 +246,7 @@ def carried_out(job: "Job", *, as_json: bool, journal: "Journal | None" = None) 
             outcome = job.carry_out() if journal is None else job.go_on(journal)
     finally:
         job.progress.close()
-    return show(outcome, wall() - begin, as_json)
+    return show(outcome, wall() - begin, as_json, simulated=job.rehearsal is not None)
 
 
 def wall() -> float:
