@@ -19,49 +19,17 @@ from bandproof.bench.bench_file import parse_bench
 from bandproof.bench.board_file import parse_board
 from bandproof.bench.errors import RunFileDamaged
 from bandproof.bench.plain import checks_from, checks_plain, step_from, thru_from, thru_plain, to_json
+from bandproof.bench.run_schema import ABOUT, COLUMNS, RAW, READABLE, SCHEMA, USER_BLOCK
 from bandproof.bench.system import sync_folder
 from bandproof.bench.types import Point, Run
 
 if TYPE_CHECKING:
     import h5py
 
-__all__ = ["SCHEMA", "digest_of", "read_result", "read_run", "write_run"]
+__all__ = ["SCHEMA", "digest_of", "read_columns", "read_result", "read_run", "write_run"]
 
-SCHEMA = "bandproof-run/1"
-_USER_BLOCK = 512
 _LARGEST = 4_000_000_000  # bytes read for a digest; arbitrary
 _PURPOSE = "S12"
-
-# name in the file: (field of Point, index within a tuple field or None, units)
-_COLUMNS: dict[str, tuple[str, int | None, str]] = {
-    "step": ("step", None, ""),
-    "purpose": ("purpose", None, ""),
-    "attempt": ("attempt", None, ""),
-    "time": ("time", None, "s"),
-    "frequency": ("frequency", None, "Hz"),
-    "amplitude": ("amplitude", None, "V"),
-    "response_real": ("response", 0, "V/V"),
-    "response_imag": ("response", 1, "V/V"),
-    "variance_real": ("covariance", 0, "1"),
-    "covariance_real_imag": ("covariance", 1, "1"),
-    "variance_imag": ("covariance", 2, "1"),
-    "level_in": ("levels", 0, "V"),
-    "level_out": ("levels", 1, "V"),
-    "offset_in": ("offsets", 0, "V"),
-    "offset_out": ("offsets", 1, "V"),
-    "residual_rms_in": ("residuals", 0, "V"),
-    "residual_rms_out": ("residuals", 1, "V"),
-    "lsb_in": ("lsb", 0, "V"),
-    "lsb_out": ("lsb", 1, "V"),
-    "range_in": ("ranges", 0, "V"),
-    "range_out": ("ranges", 1, "V"),
-    "sample_interval": ("sample_interval", None, "s"),
-    "samples": ("samples", None, ""),
-    "distortion": ("distortion", None, "V/V"),
-    "settling": ("settling", None, ""),
-    "flags": ("flags", None, ""),
-}
-
 
 def write_run(
     path: Path,
@@ -98,7 +66,7 @@ def write_run(
 
 
 def _user_block(digest: str) -> bytes:
-    return f"{SCHEMA} sha256={digest}\n".encode("ascii").ljust(_USER_BLOCK, b"\0")
+    return f"{SCHEMA} sha256={digest}\n".encode("ascii").ljust(USER_BLOCK, b"\0")
 
 
 def _image(
@@ -107,7 +75,7 @@ def _image(
     import h5py
 
     memory = io.BytesIO()
-    with h5py.File(memory, "w", libver=("v110", "v110"), userblock_size=_USER_BLOCK) as file:
+    with h5py.File(memory, "w", libver=("v110", "v110"), userblock_size=USER_BLOCK) as file:
         file.attrs["schema"] = _fixed(SCHEMA)
         for name, text in {**_texts(run, result), "budget": to_json(budget)}.items():
             _write_text(file, name, text)
@@ -116,7 +84,7 @@ def _image(
         for index, point in enumerate(run.points):
             if (volts := raw(index)) is not None:
                 _write_raw(file.create_group(f"raw/{point.step:06d}"), volts)
-    return memory.getvalue()[_USER_BLOCK:]
+    return memory.getvalue()[USER_BLOCK:]
 
 
 def _texts(run: Run, result: Mapping[str, Any]) -> dict[str, str]:
@@ -126,7 +94,7 @@ def _texts(run: Run, result: Mapping[str, Any]) -> dict[str, str]:
     if run.checks is not None:
         more["texts/checks"] = to_json(checks_plain(run.checks))
     return {
-        "about": to_json({name: getattr(run, name) for name in _ABOUT}),
+        "about": to_json({name: getattr(run, name) for name in ABOUT}),
         "history": "".join(to_json(entry) + "\n" for entry in run.history),
         "result": to_json(result),
         "steps": "".join(to_json(asdict(step)) + "\n" for step in run.steps),
@@ -134,24 +102,6 @@ def _texts(run: Run, result: Mapping[str, Any]) -> dict[str, str]:
         "texts/board": run.board.text,
         **more,
     }
-
-
-_ABOUT = [
-    "run_id",
-    "serial",
-    "attempt",
-    "identities",
-    "version",
-    "started",
-    "ended",
-    "reason",
-    "stopped",
-    "bench_seconds",
-    "operator",
-    "note",
-    "ambient",
-    "alarms",
-]  # fields of Run kept as they are
 
 
 def _fixed(text: str) -> Any:
@@ -171,16 +121,16 @@ def _write_text(file: "h5py.Group", name: str, text: str) -> None:
 def _write_points(group: "h5py.Group", points: list[Point]) -> None:
     import numpy as np
 
-    for name, (field, part, units) in _COLUMNS.items():
-        column: Any = [_cell(getattr(point, field), part) for point in points]
+    for name, one in COLUMNS.items():
+        column: Any = [_cell(getattr(point, one.field), one.part) for point in points]
         if isinstance(column[0], str):
             column = np.array([text.encode("ascii") for text in column])
         dataset = group.create_dataset(name, data=np.asarray(column), track_times=False)
-        dataset.attrs["units"] = _fixed(units)
+        dataset.attrs["units"] = _fixed(one.unit)
 
 
 def _write_raw(group: "h5py.Group", volts: FloatArray) -> None:
-    for name, channel in zip(("volts_in", "volts_out"), volts, strict=True):
+    for name, channel in zip(RAW, volts, strict=True):
         dataset = group.create_dataset(name, data=channel.astype("<f4"), track_times=False)
         dataset.attrs["units"] = _fixed("V")
 
@@ -214,7 +164,7 @@ def _checked(path: Path) -> tuple[str, bytes]:
         content = path.read_bytes()
     except OSError as problem:
         raise RunFileDamaged(str(path), f"cannot be read: {problem.strerror or problem}") from problem
-    head, image = content[:_USER_BLOCK], content[_USER_BLOCK:]
+    head, image = content[:USER_BLOCK], content[USER_BLOCK:]
     digest = hashlib.sha256(image).hexdigest()
     if head != _user_block(digest):
         raise RunFileDamaged(str(path), _what_is_wrong(head, len(content)))
@@ -236,6 +186,24 @@ def read_result(path: Path) -> dict[str, Any]:
             return cast(dict[str, Any], json.loads(_text(file, "result")))
         except (KeyError, ValueError, TypeError) as problem:
             raise RunFileDamaged(str(path), f"lacks what a run file has ({problem})") from problem
+
+
+def read_columns(path: Path) -> dict[str, dict[str, tuple[str, list[Any]]]]:
+    """Return the points as stored, by stage and by column: its unit and its values (RunFileDamaged as digest_of)."""
+    with _opened(path) as file:
+        try:
+            return {stage: _columns(group) for stage, group in file.get("points", {}).items()}
+        except (KeyError, ValueError, TypeError) as problem:
+            raise RunFileDamaged(str(path), f"lacks what a run file has ({problem})") from problem
+
+
+def _columns(group: "h5py.Group") -> dict[str, tuple[str, list[Any]]]:
+    found = {}
+    for name in _COLUMNS:
+        values = group[name][()].tolist()
+        texts = [value.decode("ascii") if isinstance(value, bytes) else value for value in values]
+        found[name] = (group[name].attrs["units"].decode("utf-8"), texts)
+    return found
 
 
 def read_run(path: Path) -> Run:
@@ -289,7 +257,7 @@ def _text(file: "h5py.Group", name: str) -> str:
 
 
 def _read_points(group: "h5py.Group", stage: str) -> list[Point]:
-    columns = {name: group[name][()].tolist() for name in _COLUMNS}
+    columns = {name: group[name][()].tolist() for name in COLUMNS}
     return [
         _point(stage, {name: column[row] for name, column in columns.items()}) for row in range(len(columns["step"]))
     ]
@@ -297,9 +265,9 @@ def _read_points(group: "h5py.Group", stage: str) -> list[Point]:
 
 def _point(stage: str, row: dict[str, Any]) -> Point:
     values: dict[str, Any] = {"stage": stage}
-    for name, (field, part, _) in _COLUMNS.items():
+    for name, one in COLUMNS.items():
         value = row[name].decode("ascii") if isinstance(row[name], bytes) else row[name]
-        values[field] = value if part is None else (*values.get(field, ()), value)
+        values[one.field] = value if one.part is None else (*values.get(one.field, ()), value)
     values["response"] = complex(*values["response"])
     values["flags"] = tuple(values["flags"].split())
     return Point(**{field.name: values[field.name] for field in fields(Point)})
