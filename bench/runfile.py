@@ -199,7 +199,7 @@ def read_columns(path: Path) -> dict[str, dict[str, tuple[str, list[Any]]]]:
 
 def _columns(group: "h5py.Group") -> dict[str, tuple[str, list[Any]]]:
     found = {}
-    for name in _COLUMNS:
+    for name in COLUMNS:
         values = group[name][()].tolist()
         texts = [value.decode("ascii") if isinstance(value, bytes) else value for value in values]
         found[name] = (group[name].attrs["units"].decode("utf-8"), texts)
