@@ -9,15 +9,17 @@ import hashlib
 import io
 import json
 import os
+import re
+import struct
 from collections.abc import Callable, Mapping
 from dataclasses import asdict, fields, replace
 from pathlib import Path
-from typing import TYPE_CHECKING, Any, cast
+from typing import TYPE_CHECKING, Any, TypeVar, cast
 
 from bandproof.analysis.types import FloatArray
 from bandproof.bench.bench_file import parse_bench
 from bandproof.bench.board_file import parse_board
-from bandproof.bench.errors import RunFileDamaged
+from bandproof.bench.errors import FileMistakes, RunFileDamaged
 from bandproof.bench.plain import checks_from, checks_plain, step_from, thru_from, thru_plain, to_json
 from bandproof.bench.run_schema import ABOUT, COLUMNS, RAW, READABLE, SCHEMA, USER_BLOCK
 from bandproof.bench.system import sync_folder
@@ -28,8 +30,14 @@ if TYPE_CHECKING:
 
 __all__ = ["SCHEMA", "digest_of", "read_columns", "read_result", "read_run", "write_run"]
 
+_T = TypeVar("_T")
 _LARGEST = 4_000_000_000  # bytes read for a digest; arbitrary
-_PURPOSE = "S12"
+_NAME = b"bandproof-run/"
+_VERSION = re.compile(rb"bandproof-run/(\d{1,9}) sha256=")
+_HDF5 = b"\x89HDF\r\n\x1a\n"  # its signature, at 0, 512 or twice the place before (HDF5 file format, II.A)
+_HDF5_PLACES = [512 << power for power in range(12)]
+_SUPERBLOCK = struct.Struct("<20s8xQ")  # of version 2 and 3 (II.A): the last one here is where the file ends
+
 
 def write_run(
     path: Path,
@@ -65,8 +73,8 @@ def write_run(
     return digest
 
 
-def _user_block(digest: str) -> bytes:
-    return f"{SCHEMA} sha256={digest}\n".encode("ascii").ljust(USER_BLOCK, b"\0")
+def _user_block(digest: str, version: int = READABLE[-1]) -> bytes:
+    return f"bandproof-run/{version} sha256={digest}\n".encode("ascii").ljust(USER_BLOCK, b"\0")
 
 
 def _image(
@@ -166,35 +174,44 @@ def _checked(path: Path) -> tuple[str, bytes]:
         raise RunFileDamaged(str(path), f"cannot be read: {problem.strerror or problem}") from problem
     head, image = content[:USER_BLOCK], content[USER_BLOCK:]
     digest = hashlib.sha256(image).hexdigest()
-    if head != _user_block(digest):
-        raise RunFileDamaged(str(path), _what_is_wrong(head, len(content)))
+    if head not in [_user_block(digest, version) for version in READABLE]:
+        raise RunFileDamaged(str(path), _what_is_wrong(content))
     return digest, content
 
 
-def _what_is_wrong(head: bytes, size: int) -> str:
-    if not head.startswith(b"bandproof-run/"):
-        return "is not a run file of this program" if size else "is empty"
-    if not head.startswith(SCHEMA.encode("ascii") + b" "):
-        return f"has a schema this version does not read ({head[:24]!r})"
+def _what_is_wrong(content: bytes) -> str:
+    """Return what a file is that is no sound run file, and what to do."""
+    if not content:
+        return "is empty: nothing of a run is in it, use a copy"
+    if not content.startswith(_NAME):
+        if _NAME.startswith(content):
+            return _truncated(len(content))
+        foreign = content.startswith(_HDF5) or _HDF5 in (content[offset : offset + 8] for offset in _HDF5_PLACES)
+        return f"is {'HDF5, but ' if foreign else ''}not a run file of this program"
+    named = _VERSION.match(content)
+    if named and int(named[1]) not in READABLE:
+        age = "newer" if int(named[1]) > READABLE[-1] else "older"
+        return (
+            f"has schema version {int(named[1])}, {age} than this bandproof reads ({READABLE[0]} to {READABLE[-1]}): "
+            f"use {'a later' if age == 'newer' else 'an earlier'} version of it"
+        )
+    if len(content) < USER_BLOCK + _SUPERBLOCK.size or len(content) < _SUPERBLOCK.unpack_from(content, USER_BLOCK)[1]:
+        return _truncated(len(content))
     return "is damaged: its content does not match its digest; use a copy, the figures in it cannot be trusted"
+
+
+def _truncated(size: int) -> str:
+    return f"is damaged: its end is missing, there are {size} bytes; use a copy, the figures in it cannot be trusted"
 
 
 def read_result(path: Path) -> dict[str, Any]:
     """Return the result object stored in a run file (RunFileDamaged as digest_of)."""
-    with _opened(path) as file:
-        try:
-            return cast(dict[str, Any], json.loads(_text(file, "result")))
-        except (KeyError, ValueError, TypeError) as problem:
-            raise RunFileDamaged(str(path), f"lacks what a run file has ({problem})") from problem
+    return _read(path, lambda file: cast(dict[str, Any], json.loads(_text(file, "result"))))
 
 
 def read_columns(path: Path) -> dict[str, dict[str, tuple[str, list[Any]]]]:
     """Return the points as stored, by stage and by column: its unit and its values (RunFileDamaged as digest_of)."""
-    with _opened(path) as file:
-        try:
-            return {stage: _columns(group) for stage, group in file.get("points", {}).items()}
-        except (KeyError, ValueError, TypeError) as problem:
-            raise RunFileDamaged(str(path), f"lacks what a run file has ({problem})") from problem
+    return _read(path, lambda file: {stage: _columns(group) for stage, group in file.get("points", {}).items()})
 
 
 def _columns(group: "h5py.Group") -> dict[str, tuple[str, list[Any]]]:
@@ -214,21 +231,22 @@ def read_run(path: Path) -> Run:
     RunFileDamaged
         The file is no run file, is damaged, or lacks what a run file has.
     """
-    with _opened(path) as file:
-        try:
-            return _run(file)
-        except (KeyError, ValueError, TypeError) as problem:
-            raise RunFileDamaged(str(path), f"lacks what a run file has ({problem})") from problem
+    return _read(path, _run)
 
 
-def _opened(path: Path) -> "h5py.File":
+def _read(path: Path, what: Callable[["h5py.File"], _T]) -> _T:
     import h5py
 
     _, content = _checked(path)
     try:
-        return h5py.File(io.BytesIO(content), "r")
+        file = h5py.File(io.BytesIO(content), "r")
     except OSError as problem:
         raise RunFileDamaged(str(path), f"is not HDF5 behind its user block ({problem})") from problem
+    with file:
+        try:
+            return what(file)
+        except (KeyError, ValueError, TypeError, FileMistakes) as problem:
+            raise RunFileDamaged(str(path), f"lacks what a run file has ({problem})") from problem
 
 
 def _run(file: "h5py.File") -> Run:

@@ -141,8 +141,8 @@ def test_one_flipped_bit_anywhere_is_noticed(written, number):
             read(written)
 
 
-def foreign(path):
-    with h5py.File(path, "w") as file:
+def foreign(path, block=0):
+    with h5py.File(path, "w", userblock_size=block) as file:
         file["points"] = [1.0]
 
 
@@ -162,12 +162,15 @@ DAMAGED = {
     "directory": (lambda path: (path.unlink(), path.mkdir()), "cannot be read: Is a directory"),
     "empty": (lambda path: path.write_bytes(b""), "is empty"),
     "text": (lambda path: path.write_text("frequency_Hz,gain_dB\n" * 99), "is not a run file"),
-    "other HDF5": (lambda path: (path.unlink(), foreign(path)), "is not a run file"),
-    "half": (lambda path: path.write_bytes(path.read_bytes()[: path.stat().st_size // 2]), "damaged: its content"),
-    "last byte lost": (lambda path: path.write_bytes(path.read_bytes()[:-1]), "damaged: its content"),
+    "other HDF5": (lambda path: (path.unlink(), foreign(path)), "is HDF5, but not a run file"),
+    "other HDF5 with a user block": (lambda path: (path.unlink(), foreign(path, 2048)), "is HDF5, but not a run file"),
+    "half": (lambda path: path.write_bytes(path.read_bytes()[: path.stat().st_size // 2]), "damaged: its end is"),
+    "last byte lost": (lambda path: path.write_bytes(path.read_bytes()[:-1]), "damaged: its end is missing"),
+    "five bytes": (lambda path: path.write_bytes(path.read_bytes()[:5]), "damaged: its end is missing, there are 5 by"),
     "one byte more": (lambda path: path.write_bytes(path.read_bytes() + b"\0"), "damaged: its content"),
-    "user block only": (lambda path: path.write_bytes(path.read_bytes()[:512]), "damaged: its content"),
-    "later schema": (lambda path: path.write_bytes(b"bandproof-run/9" + path.read_bytes()[15:]), "schema this version"),
+    "user block only": (lambda path: path.write_bytes(path.read_bytes()[:512]), "damaged: its end is missing"),
+    "later schema": (lambda path: path.write_bytes(b"bandproof-run/9" + path.read_bytes()[15:]), "version 9, newer"),
+    "earlier schema": (lambda path: path.write_bytes(b"bandproof-run/0" + path.read_bytes()[15:]), "version 0, older"),
     "no HDF5 inside": (lambda path: path.write_bytes(behind_a_good_user_block(b"x" * 999)), "is not HDF5"),
     "nothing inside": (lambda path: path.write_bytes(behind_a_good_user_block(b"")), "is not HDF5"),
     "other HDF5 inside": (lambda path: (path.unlink(), foreign_in_our_block(path)), "lacks what a run file has"),

@@ -562,7 +562,7 @@ def test_a_journal_and_a_run_file_without_ambient_and_thru_are_read(switched, un
     assert (journal.head["ambient"], journal.head["thru"]) == (None, None)
     old = run_of(journal, None, "")
     assert (old.ambient, old.thru) == (None, None)
-    monkeypatch.setattr(runfile, "_ABOUT", [name for name in runfile._ABOUT if name != "ambient"])
+    monkeypatch.setattr(runfile, "ABOUT", [name for name in runfile.ABOUT if name != "ambient"])
     runfile.write_run(tmp_path / "old.h5", old, {})
     assert "texts/thru" not in datasets(tmp_path / "old.h5")
     assert read_run(tmp_path / "old.h5") == replace(old)
