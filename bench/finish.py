@@ -9,6 +9,7 @@ from bandproof.bench.attempts import with_earlier
 from bandproof.bench.bench_file import parse_bench
 from bandproof.bench.board_file import parse_board
 from bandproof.bench.budget import budget_plain
+from bandproof.bench.chain import CHAIN, add_to_chain
 from bandproof.bench.errors import BadInput, Stopped
 from bandproof.bench.evaluate import evaluate, views
 from bandproof.bench.journal import Journal
@@ -50,7 +51,7 @@ def finish(journal: Journal, folder: Path, problem: Exception | None, words: str
         journal.alarm("the run's folder was deleted while it ran and was made again; the journal is lost")
         folder.mkdir(parents=True)
     run = run_of(journal, problem, words)
-    path = folder / RUN if problem is None else _free(folder)
+    path = folder / RUN if problem is None else folder / CUT_SHORT.format(_next_number(folder))
     if path.exists():
         run, result = read_run(path), read_result(path)
         stages, _ = _with_earlier(run, journal, folder)
@@ -64,6 +65,7 @@ def finish(journal: Journal, folder: Path, problem: Exception | None, words: str
     drawn = views(run, stages)
     _draw(run, drawn, folder / PICTURE)
     digest = digest_of(path)
+    result = {**result, "alarms": [*result["alarms"], *_chained(run, folder)]}
     journal.ended(run.ended, path.name, digest)
     return Outcome(run, stages, _reported(run, stages, result, digest, drawn, folder), folder)
 
@@ -108,11 +110,31 @@ def board_and_bench(journal: Journal) -> tuple[Board, Bench]:
     return board, replace(bench, dialect_texts=head["dialects"])
 
 
-def _free(folder: Path) -> Path:
+def _next_number(folder: Path) -> int:
     number = 1
     while (folder / CUT_SHORT.format(number)).exists():
         number += 1
-    return folder / CUT_SHORT.format(number)
+    return number
+
+
+def _chained(run: Run, folder: Path) -> list[str]:
+    """Add the run files of an attempt to the chain of its runs' folder; return what to tell where that cannot be.
+
+    All of them, because a run that was killed before its line was written is resumed and leaves another file.
+    """
+    if (folder.parent.name, folder.name) != (run.serial, str(run.attempt)):
+        return []  # not FOLDER/SERIAL/ATTEMPT: it is in nobody's folder of runs
+    paths = [folder / CUT_SHORT.format(number) for number in range(1, _next_number(folder))]
+    try:
+        runs = [
+            (run.started, f"{run.serial}/{run.attempt}/{path.name}", digest_of(path))
+            for path in (*paths, folder / RUN)
+            if path.exists()
+        ]
+        add_to_chain(folder.parent.parent, runs)
+    except (OSError, BadInput) as problem:  # the run is kept all the same
+        return [f"the run is not in {folder.parent.parent / CHAIN}: {problem}"]
+    return []
 
 
 def _reported(

@@ -1,5 +1,6 @@
-"""``verify``: compare a run file with its digest."""
+"""``verify``: whether a stored run is what it says."""
 
+import json
 from pathlib import Path
 
 import click
@@ -9,19 +10,38 @@ __all__ = ["command"]
 
 @click.command("verify")
 @click.argument("run_path", metavar="RUN", type=click.Path(path_type=Path))
-def command(run_path: Path) -> int:
-    """Compare a run file with the digest it carries, and read it whole.
+@click.option("--json", "as_json", is_flag=True, help="Print one object and nothing else, where RUN can be read.")
+def command(run_path: Path, as_json: bool) -> int:
+    """Compare a run file with the digest it carries, its figures with its points, its digest with its folder's chain.
+
+    \b
+    sound     exit 0
+    damaged   exit 2: the digest is wrong; or no run file, empty, cut off, or of a version that is not read
+    altered   exit 2: the digest is right, but the figures do not follow from the points, or the chain is broken
 
     \b
     Example:
       bandproof verify runs/TB-0001/1/run.h5
     """
-    from bandproof.bench.runfile import digest_of, read_run
+    from bandproof.bench.verbs.run import wrapped
+    from bandproof.bench.verification import RunAltered, verified
 
-    run = read_run(run_path)
-    click.echo(f"{run_path}: as it was written")
+    found = verified(run_path)
+    if as_json:
+        click.echo(json.dumps(found.plain(), indent=1))
+    if found.reasons:
+        raise RunAltered(str(run_path), found.reasons)
+    if as_json:
+        return 0
+    run, told = found.run, "; its figures follow from its points" if found.compared else ""
+    click.echo(f"{run_path}: sound, as it was written{told}")
     click.echo(
         f"  serial {run.serial}, attempt {run.attempt}, run {run.run_id}, {len(run.points)} records, {run.ended}"
     )
-    click.echo(f"  sha256 {digest_of(run_path)}")
+    click.echo(f"  sha256 {found.digest}")
+    if chain := found.chain:
+        for entry in chain.of(run_path):
+            click.echo(f"  link   {entry.link}, line {entry.number} of {len(chain.entries)} in {chain.path}")
+    for note in found.notes:
+        click.echo(wrapped(f"note: {note}"))
     return 0

@@ -1,0 +1,162 @@
+"""Whether a stored run is what it says: its digest, its figures fitted again, its line in the chain of its folder."""
+
+from collections.abc import Iterator, Mapping, Sequence
+from dataclasses import dataclass
+from importlib.metadata import version
+from pathlib import Path
+from typing import Any
+
+from bandproof.bench.chain import Chain, chain_of
+from bandproof.bench.documents.stored import Stored, read_stored
+from bandproof.bench.errors import BadInput, RunFileDamaged
+from bandproof.bench.result import board_verdict, stage_object
+from bandproof.bench.runfile import digest_of, read_result, read_run
+from bandproof.bench.types import Run
+
+__all__ = ["RunAltered", "Verified", "verified"]
+
+# Part of U by which a figure or its U may come out otherwise. A fit ends within 1e-8 of its parameters' own standard
+# uncertainties (analysis/least_squares.py) whichever way rounding leads it there, and U follows from it without steps;
+# a hundred times that is left for the arithmetic of other library versions. What is smaller changes no digit shown.
+_SHARE = 1e-6
+_COMPARED = ("designed", "lower_limit", "upper_limit", "measured", "expanded_uncertainty")
+
+
+class RunAltered(BadInput):
+    """A run file agrees with its digest, and yet something in it or beside it was changed; has every reason."""
+
+    def __init__(self, path: str, reasons: tuple[str, ...]) -> None:
+        super().__init__(path, reasons)
+        self.path, self.reasons = path, reasons
+
+    def __str__(self) -> str:
+        head = f"{self.path}: is altered: its digest is right, but"
+        return "\n".join([head, *(f"  {number}. {reason}" for number, reason in enumerate(self.reasons, 1))])
+
+
+@dataclass(frozen=True)
+class Verified:
+    """A run file whose digest is right, why it is altered nevertheless (no reasons: sound), what could not be seen.
+
+    ``compared``: its figures were held against what comes out of its points now.
+    """
+
+    run: Run
+    digest: str
+    compared: bool
+    reasons: tuple[str, ...]
+    notes: tuple[str, ...]
+    chain: Chain | None
+    path: Path
+
+    def plain(self) -> dict[str, Any]:
+        """Return it as an object for ``--json``."""
+        mine = self.chain.of(self.path) if self.chain else []
+        return {
+            "schema": "bandproof-verification/1",
+            "state": "altered" if self.reasons else "sound",
+            "reasons": list(self.reasons),
+            "notes": list(self.notes),
+            "sha256": self.digest,
+            "figures_compared": self.compared,
+            **{name: getattr(self.run, name) for name in ("serial", "attempt", "run_id", "ended", "version")},
+            "records": len(self.run.points),
+            "chain": {"file": str(self.chain.path), "line": mine[0].number, "link": mine[0].link}
+            if self.chain and mine
+            else None,
+        }
+
+
+def verified(path: Path) -> Verified:
+    """Look at a run file from all sides.
+
+    Raises
+    ------
+    RunFileDamaged
+        It is no run file, or its digest is wrong, or this version does not read it.
+    """
+    run, result, digest = read_run(path), read_result(path), digest_of(path)
+    try:
+        reasons = list(_differences(read_stored(path)))
+    except Exception as problem:  # whatever it is: a file that the program wrote can be evaluated
+        reasons = [f"what it holds cannot be evaluated ({type(problem).__name__}: {problem})"]
+    notes, compared = [], True
+    if reasons and (absent := _absent_attempts(path, result)):
+        reasons, compared = [], False
+        notes.append(
+            f"its figures are means with attempt {', '.join(map(str, absent))}, not to be had as it was then "
+            f"({path.parent.parent}): they were not compared"
+        )
+    if reasons and run.version != version("bandproof"):
+        reasons.append(
+            f"it was evaluated by bandproof {run.version}, this is {version('bandproof')}: before you accuse "
+            "anybody, verify it with that version"
+        )
+    try:
+        chain = chain_of(path)
+    except OSError as problem:
+        chain = None
+        notes.append(f"the chain of its folder cannot be read: {problem}")
+    else:
+        notes += _unchained(chain, path)
+        reasons += _against_chain(chain, path, digest) if chain else []
+    return Verified(run, digest, compared, tuple(reasons), tuple(notes), chain, path)
+
+
+def _differences(stored: Stored) -> Iterator[str]:
+    """Yield how a run's conclusions, drawn again from its points, differ from those stored."""
+    again = [stage_object(stage) for stage in stored.stages]
+    verdict = board_verdict(stored.run, stored.stages)
+    if verdict != stored.result["verdict"]:
+        yield f"its verdict is {stored.result['verdict']}, from its points it comes out {verdict}"
+    if [stage["name"] for stage in again] != [stage["name"] for stage in stored.result["stages"]]:
+        yield "it has conclusions of other stages than points"
+        return
+    for now, then in zip(again, stored.result["stages"], strict=True):
+        if now["verdict"] != then["verdict"]:
+            yield f"{now['name']}: its verdict is {then['verdict']}, from its points it comes out {now['verdict']}"
+        for quantity, figure in now["parameters"].items():
+            yield from _of_figure(f"{now['name']}, {quantity}", figure, then["parameters"][quantity])
+
+
+def _of_figure(name: str, now: Mapping[str, Any], then: Mapping[str, Any]) -> Iterator[str]:
+    tolerance = _SHARE * (now["expanded_uncertainty"] or 0.0)
+    for key in _COMPARED:
+        a, b = now[key], then[key]
+        if (a is None) != (b is None) or (a is not None and not abs(a - b) <= tolerance):
+            yield f"{name}: {key.replace('_', ' ')} is {b}, from its points it comes out {a}"
+    if now["verdict"] != then["verdict"]:
+        yield f"{name}: its verdict is {then['verdict']}, from its points it comes out {now['verdict']}"
+
+
+def _absent_attempts(path: Path, result: Mapping[str, Any]) -> list[int]:
+    """Return the attempts that a run is pooled with and that are not beside it as they were."""
+    return [
+        entry["attempt"]
+        for entry in (result.get("attempts") or ())[:-1]
+        if entry["pooled"] and not _has_digest(path.parent.parent / str(entry["attempt"]) / "run.h5", entry["digest"])
+    ]
+
+
+def _has_digest(path: Path, digest: str) -> bool:
+    try:
+        return digest_of(path) == digest
+    except RunFileDamaged:
+        return False
+
+
+def _unchained(chain: Chain | None, path: Path) -> Sequence[str]:
+    if chain is None:
+        return ["there is no chain.txt two folders above it: whether it is the run that was made there is not known"]
+    if not chain.problem and not chain.of(path):
+        return [f"{chain.path} has no line for it: that it is the run that was made there is not known"]
+    return []
+
+
+def _against_chain(chain: Chain, path: Path, digest: str) -> list[str]:
+    broken = [f"{chain.path} is broken: {chain.problem}"] if chain.problem else []
+    others = [entry for entry in chain.of(path) if entry.digest != digest]
+    return broken + [
+        f"line {entry.number} of {chain.path} has another digest for it: it is not the run that was made there"
+        for entry in others
+    ]
