@@ -3,11 +3,12 @@
 import os
 import re
 from dataclasses import fields, replace
+from datetime import date
 from pathlib import Path
 from typing import Any, Literal, cast, get_args
 
 from bandproof.bench.errors import FileMistakes
-from bandproof.bench.quantities import Kind
+from bandproof.bench.quantities import Kind, shown
 from bandproof.bench.reading import Mistakes, Table, nearest, parse_toml, read_text
 from bandproof.bench.types import Accuracy, Bench, Board, CheckPlan, Instrument, Wire
 from bandproof.drivers.dialect import load
@@ -105,6 +106,7 @@ def _check_dialects(bench: Bench, mistakes: Mistakes) -> None:
 
 def _bench(top: Table, text: str, folder: Path) -> Bench:
     title, mains = top.text("title", "bench"), top.quantity("mains", "frequency")
+    place = top.text("place", "")
     ceiling, visa_library = top.quantity("ceiling", "voltage"), top.text("visa_library", "@py")
     clock = top.text("simulated_clock", "")
     generator, scope = top.table("generator"), top.table("scope")
@@ -124,6 +126,7 @@ def _bench(top: Table, text: str, folder: Path) -> Bench:
     return Bench(
         rails=rails,
         title=title,
+        place=place,
         mains=mains,
         ceiling=ceiling,
         instruments=instruments,
@@ -171,9 +174,21 @@ def _instrument(role: Role, table: Table, folder: Path) -> Instrument:
         table.mistake("address", f"found {address!r}; expected an address as VISA spells it, such as {_EXAMPLE}")
     if dialect.endswith(".toml"):
         dialect = str(folder / dialect)
-    serial = _serial(table, address)
+    serial, calibrated = _serial(table, address), _calibrated(table)
     table.close()
-    return Instrument(role, address, dialect, serial)
+    return Instrument(role, address, dialect, serial, calibrated)
+
+
+def _calibrated(table: Table) -> str:
+    """Return the day an instrument was calibrated last, as TOML or ISO 8601 write it; "" where it is not stated."""
+    found = table.anything("calibrated")
+    if found is None:
+        return ""
+    try:
+        return (found if type(found) is date else date.fromisoformat(found)).isoformat()
+    except (TypeError, ValueError):
+        table.mistake("calibrated", f"found {shown(found)}; expected a date such as 2026-05-01")
+        return ""
 
 
 def _serial(table: Table, address: str) -> Serial | None:

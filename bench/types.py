@@ -159,12 +159,16 @@ class Board:
 
 @dataclass(frozen=True, slots=True)
 class Instrument:
-    """Where an instrument is, which dialect it understands, and how its line is set where it is a serial one."""
+    """Where an instrument is, which dialect it understands, and how its line is set where it is a serial one.
+
+    ``calibrated`` is the day of its last calibration as the bench file states it (ISO 8601), "" where it does not.
+    """
 
     role: Literal["generator", "scope", "switch", "supply"]
     address: str
     dialect: str
     serial: Serial | None = None
+    calibrated: str = ""
 
 
 @dataclass(frozen=True, slots=True)
@@ -214,7 +218,7 @@ class Bench:
     """A bench: instruments, wiring, ceilings and what is declared about its accuracy.
 
     ``rails`` are the supply's channels of the positive and the negative rail; a thru is valid for ``thru_valid`` s.
-    ``check`` is None where nothing is said about a check standard.
+    ``check`` is None where nothing is said about a check standard; ``place`` is where it stands, "" if not stated.
     """
 
     title: str
@@ -230,6 +234,7 @@ class Bench:
     rails: tuple[int, int] = (1, 2)
     thru_valid: float = 12.0 * 3600.0
     check: CheckPlan | None = None
+    place: str = ""
     dialect_texts: Mapping[str, str] = field(default_factory=dict)
 
 

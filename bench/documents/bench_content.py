@@ -39,10 +39,15 @@ def bench_content(run: Run) -> dict[str, Any]:
             ["Probes", factors or "not stated"],
             ["The path itself", _path(run)],
             ["Check standard", _checks(run)],
-            ["Calibration", "not stated in the bench file; the accuracy below is what it declares"],
         ],
         "instruments": [
-            [role, run.identities.get(role) or "does not say", instrument.address, instrument.dialect]
+            [
+                role,
+                run.identities.get(role) or "does not say",
+                instrument.calibrated or "not stated",
+                instrument.address,
+                instrument.dialect,
+            ]
             for role, instrument in bench.instruments.items()
         ],
         "accuracy": [_size(bench.accuracy, *entry) for entry in _SIZES],
