@@ -156,8 +156,11 @@ def _row(cells: Sequence[str]) -> list[str]:
     """Return a row of the table, on two lines where the name is longer than its column."""
     name, *rest = cells
     above, name = ([name], "") if len(name) >= _WIDTHS[0] else ([], name)
-    figures = (f" {cell:>{width - 1}}" for cell, width in zip(rest, _WIDTHS[1:], strict=True))
-    return [*above, f"{name:<{_WIDTHS[0]}}{''.join(figures)}"]
+    line, end = f"{name:<{_WIDTHS[0]}}", _WIDTHS[0]
+    for cell, width in zip(rest, _WIDTHS[1:], strict=True):
+        end += width
+        line += f" {cell:>{end - len(line) - 1}}"  # a cell wider than its column takes the next one's blanks
+    return [*above, line]
 
 
 def _cells(figure: Comparison) -> list[str]:
