@@ -10,9 +10,9 @@ import numpy as np
 from bandproof.analysis.decision import worst
 from bandproof.analysis.fit import fit_bands
 from bandproof.analysis.models import band_response
-from bandproof.analysis.types import FloatArray
+from bandproof.analysis.types import ComplexArray, FloatArray
 from bandproof.bench.budget import budgets
-from bandproof.bench.circuit import predict
+from bandproof.bench.circuit import predict, predicted_response
 from bandproof.bench.comparison import compared, outside_by_design
 from bandproof.bench.linear import level_alarms
 from bandproof.bench.misfit import Misfit, StageFit, arrays, look_for_misfit
@@ -203,27 +203,36 @@ def views(run: Run, stages: Sequence[StageResult]) -> list[StageView]:
     fits = [fit_points([point for point in run.points if point.stage == stage.name], known) for stage in fitted]
     measured = [frequency for fit in fits for frequency in fit.frequency.tolist()]
     grid = np.geomspace(min(*centres, *measured) / 1.5, max(*centres, *measured) * 1.5, 400)
-    passive = {stage.name for stage in run.board.stages if stage.circuit == PASSIVE}
-    return [_view(stage, fit, grid, inverts=stage.name not in passive) for stage, fit in zip(fitted, fits, strict=True)]
+    return [_view(run.board, stage, fit, grid) for stage, fit in zip(fitted, fits, strict=True)]
 
 
-def _view(stage: StageResult, found: StageFit, grid: FloatArray, *, inverts: bool) -> StageView:
-    frequency, response, covariance = found.frequency, found.response, found.covariance
-    designed = [stage.figures[quantity].designed for quantity in QUANTITIES]
-    gain = -designed[2] if inverts else designed[2]
+def _view(board: Board, result: StageResult, found: StageFit, grid: FloatArray) -> StageView:
+    stage, frequency, response = board.stage(result.name), found.frequency, found.response
+    is_passive = stage.circuit == PASSIVE
+    designed = [result.figures[quantity].designed for quantity in QUANTITIES]
+    gain = designed[2] if is_passive else -designed[2]
     target = np.array([[np.log(designed[0]), np.log(designed[1]), gain, 0.0, 0.0, 0.0, 0.0]])
     along = response / np.abs(response)
-    variance = (
-        covariance[:, 0, 0] * along.real**2
-        + 2.0 * covariance[:, 0, 1] * along.real * along.imag
-        + covariance[:, 1, 1] * along.imag**2
-    )
+    centre = result.figures["centre"]
+    ends = [*frequency.tolist(), centre.lower_limit, centre.upper_limit]  # the limits, wherever the band was found
+    near = np.geomspace(min(ends) / 1.25, max(ends) * 1.25, 200)
     return StageView(
-        result=stage,
+        result=result,
         frequency=grid,
         designed=band_response(target, grid[None])[0],
         at=frequency,
         measured=response,
-        fitted=band_response(np.array([stage.theta]), frequency[None])[0],
-        uncertainty=np.sqrt(variance),
+        fitted=band_response(np.array([result.theta]), frequency[None])[0],
+        uncertainty=_spread(found.covariance, along),
+        across=_spread(found.covariance, 1j * along),
+        near=near,
+        predicted=None if is_passive else predicted_response(board, stage, near),
     )
+
+
+def _spread(covariance: FloatArray, direction: ComplexArray) -> FloatArray:
+    """Return the standard uncertainty (N,) of points with covariances (N, 2, 2) in directions (N,) of length 1."""
+    x, y = direction.real, direction.imag
+    variance = covariance[:, 0, 0] * x**2 + 2.0 * covariance[:, 0, 1] * x * y + covariance[:, 1, 1] * y**2
+    spread: FloatArray = np.sqrt(variance)
+    return spread

@@ -19,7 +19,10 @@ if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
 
-__all__ = ["StageView", "as_svg", "draw", "save", "ticks"]
+__all__ = ["MAKER", "StageView", "as_svg", "draw", "image", "save", "ticks"]
+
+MAKER = "bandproof"  # named inside every picture
+_DPI = 200  # of a PNG; arbitrary, letters of 7 pt are 20 pixels high
 
 _MARKS = "osD^vP*X<>hp"  # one shape a band, repeated after twelve
 _MOST_LETTERS = 90  # of all names together above the curves, without overlap; arbitrary
@@ -31,7 +34,9 @@ class StageView:
     """What is drawn of a stage.
 
     ``frequency`` (G,) Hz with ``designed`` (G,) complex; ``at`` (N,) Hz with ``measured`` and ``fitted`` (N,) complex
-    and ``uncertainty`` (N,), the standard uncertainty of each measured point's magnitude (ratio).
+    and ``uncertainty`` (N,), the standard uncertainty of each measured point along its phasor (ratio), ``across`` that
+    across it. ``near`` (P,) Hz spans the stage's own picture, ``predicted`` (P,) complex is the nodal curve of its
+    parts as drawn, None where none are stated.
     """
 
     result: StageResult
@@ -41,25 +46,30 @@ class StageView:
     measured: ComplexArray
     fitted: ComplexArray
     uncertainty: FloatArray
+    across: FloatArray
+    near: FloatArray
+    predicted: ComplexArray | None
 
 
 def save(figure: "Figure", path: Path) -> None:
-    """Write the picture as SVG or PNG by the path's ending, without date or random names inside."""
+    """Write the picture as SVG or PNG by the path's ending."""
+    path.write_bytes(image(figure, path.suffix[1:]))
+
+
+def image(figure: "Figure", kind: str) -> bytes:
+    """Return the picture as a file of a kind, "svg" or "png", without date or random names inside."""
     import matplotlib
 
-    metadata: dict[str, Any] = {"Date": None} if path.suffix == ".svg" else {"Software": None}
+    memory = io.BytesIO()
+    metadata: dict[str, Any] = {"Date": None, "Creator": MAKER} if kind == "svg" else {"Software": MAKER}
     with matplotlib.rc_context({"svg.hashsalt": "bandproof", "svg.fonttype": "path"}):
-        figure.savefig(path, metadata=metadata)
+        figure.savefig(memory, format=kind, metadata=metadata, dpi=_DPI)
+    return memory.getvalue()
 
 
 def as_svg(figure: "Figure") -> str:
-    """Return the picture as the text of an SVG file, the same that `save` writes."""
-    import matplotlib
-
-    memory = io.StringIO()
-    with matplotlib.rc_context({"svg.hashsalt": "bandproof", "svg.fonttype": "path"}):
-        figure.savefig(memory, format="svg", metadata={"Date": None})
-    return memory.getvalue()
+    """Return the picture as the text of an SVG file."""
+    return image(figure, "svg").decode("utf-8")
 
 
 def draw(
@@ -174,12 +184,23 @@ def _dress(magnitude: "Axes", phase: "Axes", residual: "Axes", views: Sequence[S
     residual.xaxis.label.set_fontsize(letters)
 
 
+_MANTISSAS = ((1.0,), (1.0, 2.0, 5.0), (1.0, 1.5, 2.0, 3.0, 4.0, 6.0, 8.0))
+_FEWEST_TICKS = 4
+
+
 def ticks(axes: "Axes", lowest: float, highest: float) -> None:
-    """Put ticks at 1, 2 and 5 of every decade between two frequencies, more where few would do, in Hz, k and M."""
-    mantissas = (1.0, 2.0, 5.0) if highest > 10.0 * lowest else (1.0, 1.5, 2.0, 3.0, 4.0, 6.0, 8.0)
-    steps = [mantissa * 10.0**decade for decade in range(-3, 12) for mantissa in mantissas]
-    shown = [step for step in steps if lowest <= step <= highest]
-    axes.set_xticks(shown, labels=[engineering(step, "") for step in shown])
+    """Put ticks at round frequencies, few enough to be read, labelled in Hz, k and M (1 k, 2.5 k)."""
+    from matplotlib.ticker import MaxNLocator
+
+    for mantissas in _MANTISSAS:
+        steps = [mantissa * 10.0**decade for decade in range(-3, 12) for mantissa in mantissas]
+        shown = [step for step in steps if lowest <= step <= highest]
+        if len(shown) >= _FEWEST_TICKS:
+            break
+    else:  # a narrow band: evenly spaced
+        evenly = MaxNLocator(_FEWEST_TICKS + 1, steps=[1, 2, 2.5, 5, 10]).tick_values(lowest, highest)
+        shown = [float(step) for step in evenly if lowest <= step <= highest]
+    axes.set_xticks(shown, labels=[engineering(step, "", 6) for step in shown])
     axes.minorticks_off()
 
 

@@ -18,7 +18,7 @@ from bandproof.bench.errors import BadInput
 from bandproof.bench.picture import StageView
 from bandproof.bench.types import Run, StageResult
 
-__all__ = ["REPORT", "NoReport", "report_bytes", "write_report"]
+__all__ = ["REPORT", "NoReport", "report_bytes", "write_report", "write_whole"]
 
 REPORT = "report.pdf"
 _TEMPLATE = "report.typ"
@@ -55,10 +55,14 @@ def write_report(
     OSError
         The folder cannot be written.
     """
-    document = report_bytes(run, stages, result, digest, views)
+    write_whole(path, report_bytes(run, stages, result, digest, views))
+
+
+def write_whole(path: Path, content: bytes) -> None:
+    """Write a file whole or not at all, over one that is there (OSError)."""
     part = path.with_name(path.name + ".part")
     try:
-        part.write_bytes(document)
+        part.write_bytes(content)
         os.replace(part, path)
     except OSError:
         part.unlink(missing_ok=True)

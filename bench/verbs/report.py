@@ -1,6 +1,7 @@
-"""``report``: a stored run as a PDF document."""
+"""``report``: a stored run as a PDF document, as data and as pictures."""
 
 from pathlib import Path
+from typing import Literal
 
 import click
 
@@ -9,22 +10,41 @@ __all__ = ["command"]
 
 @click.command("report")
 @click.argument("run_path", metavar="RUN", type=click.Path(path_type=Path))
-@click.option("--out", type=click.Path(path_type=Path), help="Where to write it; report.pdf beside RUN without.")
-def command(run_path: Path, out: Path | None) -> int:
+@click.option("--out", type=click.Path(path_type=Path), help="Where to write the PDF; report.pdf beside RUN without.")
+@click.option(
+    "--data", type=click.Path(path_type=Path), metavar="FOLDER", help="Write points and figures as CSV, result as JSON."
+)
+@click.option("--pictures", type=click.Path(path_type=Path), metavar="FOLDER", help="Write a picture of every stage.")
+@click.option("--format", "kind", type=click.Choice(["svg", "png"]), default="svg", show_default=True)
+def command(
+    run_path: Path, out: Path | None, data: Path | None, pictures: Path | None, kind: Literal["svg", "png"]
+) -> int:
     """Write the report of a stored run as PDF: verdict and all figures on page one, then band by band, then the bench.
 
-    The same run gives the same file, byte for byte. A file that is there is replaced.
+    With --data or --pictures those are written, and the PDF only with --out. The same run gives the same files, byte
+    for byte. A PDF that is there is replaced; data and pictures replace only what they once wrote.
 
     \b
     Example:
       bandproof report runs/TB-0001/1/run.h5
       bandproof report runs/TB-0001/1/run.h5 --out TB-0001.pdf
+      bandproof report runs/TB-0001/1/run.h5 --data data --pictures pictures --format png
     """
     from bandproof.bench.documents.report import write_report
     from bandproof.bench.documents.stored import read_stored
 
     stored = read_stored(run_path)
-    path = out or stored.default_path
-    write_report(path, stored.run, stored.stages, stored.result, stored.digest, stored.views)
-    click.echo(f"  report   {path}")
+    if data or pictures:
+        from bandproof.bench.documents.exports import write_data, write_pictures
+
+        written = [
+            *(write_data(data, stored) if data else ()),
+            *(write_pictures(pictures, stored, kind) if pictures else ()),
+        ]
+        for path in written:
+            click.echo(f"  {path.suffix[1:]:<8} {path}")
+    if out or not (data or pictures):
+        path = out or stored.default_path
+        write_report(path, stored.run, stored.stages, stored.result, stored.digest, stored.views)
+        click.echo(f"  report   {path}")
     return 0
