@@ -22,11 +22,22 @@ from bandproof.bench.result import board_verdict
 from bandproof.bench.runfile import digest_of, read_result, read_run
 from bandproof.bench.types import QUANTITIES, Quantity, Run, Stage, StageResult, Verdict
 
-__all__ = ["Attempt", "earlier", "log_repair", "numbers", "place_of", "pooled", "refusal", "with_earlier"]
+__all__ = [
+    "Attempt",
+    "Repair",
+    "earlier",
+    "log_repair",
+    "numbers",
+    "place_of",
+    "pooled",
+    "refusal",
+    "repairs",
+    "with_earlier",
+]
 
 RUN, REPAIRS = "run.h5", "repairs.txt"
 _SERIAL = re.compile(r"[A-Za-z0-9._-]{1,64}")
-_AFTER = re.compile(r"[^\t]*\tafter attempt ([0-9]{1,9})\t")
+_REPAIRED = re.compile(r"([^\t]*)\tafter attempt ([0-9]{1,9})\t([^\t]*)\t?(.*)")
 _SHARED = "thru"  # type A, but two runs that used one stored thru have it in common
 _OF_BENCH = "reproducibility"  # type A, but of the bench over days: two runs may well be on one
 
@@ -43,6 +54,16 @@ class Attempt:
     def plain(self) -> dict[str, Any]:
         """Return it as the result names it; ``pooled``: it is in the verdict."""
         return {"attempt": self.number, "digest": self.digest, "verdict": self.verdict, "pooled": self.counts}
+
+
+@dataclass(frozen=True, slots=True)
+class Repair:
+    """A logged repair: when, after which attempt, by whom, what was done."""
+
+    utc: str
+    after: int
+    operator: str
+    text: str
 
 
 def place_of(folder: Path, serial: str) -> Path:
@@ -65,7 +86,7 @@ def numbers(place: Path) -> list[int]:
 
 def earlier(place: Path) -> list[Attempt]:
     """Return the complete attempts on a serial number (RunFileDamaged when one cannot be read)."""
-    repaired, found = _last_before_repair(place), []
+    repaired, found = max((repair.after for repair in repairs(place)), default=0), []
     for number in numbers(place):
         path = place / str(number) / RUN
         if path.exists() and (verdict := read_result(path)["verdict"]) is not None:
@@ -119,18 +140,17 @@ def log_repair(place: Path, text: str, *, operator: str, utc: datetime) -> None:
         log.write(f"{stamp}\tafter attempt {last}\t{who or 'not stated'}\t{said}\n")
 
 
-def _last_before_repair(place: Path) -> int:
-    """Return the last attempt before the last repair, 0 where nothing was repaired."""
-    path = place / REPAIRS
+def repairs(place: Path) -> list[Repair]:
+    """Return the logged repairs of a serial number, in the log's order (BadInput for a line that is none)."""
+    path, found = place / REPAIRS, []
     if not path.exists():
-        return 0
-    last = 0
+        return []
     for line in filter(str.strip, path.read_text(encoding="utf-8").splitlines()):
-        if (entry := _AFTER.match(line)) is None:
+        if (entry := _REPAIRED.match(line)) is None:
             told = "is no entry; one is UTC, 'after attempt N', operator and text, tabs between"
             raise BadInput(f"{path}: {line[:60]!r} {told}")
-        last = max(last, int(entry[1]))
-    return last
+        found.append(Repair(entry[1], int(entry[2]), entry[3], entry[4]))
+    return found
 
 
 # --- the verdict of several attempts ---

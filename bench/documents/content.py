@@ -52,7 +52,7 @@ def content(
         "head": _head(run, result, digest),
         "verdict": _WORDS[verdict],
         "sentence": _sentence(run, stages),
-        "worst": _worst_line(stages),
+        "worst": _worst_line(run, stages),
         "cautions": _cautions(run, stages, result),
         "suspects": [suspect.text for stage in stages for suspect in stage.suspects],
         "rows": [_row(stage.name, figure) for stage in stages for figure in stage.figures.values()],
@@ -75,7 +75,7 @@ def _head(run: Run, result: Mapping[str, Any], digest: str) -> dict[str, Any]:
         "operator": run.operator or "not stated",
         "started": cells.utc(run.started),
         "date": run.started[:19],
-        "where": run.bench.title or "not stated",
+        "where": f"{run.bench.place or 'place not stated'}; {run.bench.title or 'bench without a name'}",
         "ambient": "not stated" if run.ambient is None else f"{run.ambient:.4g} °C",
         "note": run.note,
         "run_id": run.run_id,
@@ -99,20 +99,29 @@ def worst_figure(stages: Sequence[StageResult]) -> tuple[str, Comparison] | None
     return max(found, key=lambda named: cells.of_tolerance(named[1]), default=None)
 
 
-def _worst_line(stages: Sequence[StageResult]) -> str:
-    """Return the worst figure in words; those that were not found come first, nothing is worse."""
+def _worst_line(run: Run, stages: Sequence[StageResult]) -> str:
+    """Return the worst figure in words; what was not measured or not found comes first, nothing is worse."""
+    driven = {stage.name for stage in stages}
+    missed = [stage.name for stage in run.board.stages if stage.name not in driven]
     lost = [
         f"{stage.name} {cells.SYMBOLS[figure.quantity]}"
         for stage in stages
         for figure in stage.figures.values()
         if not isfinite(figure.measured)
     ]
-    told = [f"Not found: {', '.join(lost)}."] if lost else []
+    told = [f"Not measured: {', '.join(missed)}."] if missed else []
+    told += [f"Not found: {', '.join(lost)}."] if lost else []
     if worst := worst_figure(stages):
         band, figure = worst
+        used = cells.of_tolerance(figure)
+        how = (
+            f"closest to a limit, uses {100.0 * used:.0f} % of its tolerance"
+            if used <= 1.0
+            else f"farthest outside its limits, {used:.3g} times its tolerance from design"
+        )
         told.append(
-            f"Worst figure: {band} {cells.SYMBOLS[figure.quantity]}, {cells.measured(figure)}, uses "
-            f"{100.0 * cells.of_tolerance(figure):.0f} % of its tolerance (limits {cells.limits(figure)})."
+            f"Worst figure: {band} {cells.SYMBOLS[figure.quantity]}, {cells.measured(figure)}, {how} "
+            f"(limits {cells.limits(figure)}, rule {figure.rule})."
         )
     return " ".join(told)
 

@@ -18,12 +18,14 @@ from bandproof.bench.errors import BadInput
 from bandproof.bench.picture import StageView
 from bandproof.bench.types import Run, StageResult
 
-__all__ = ["REPORT", "NoReport", "report_bytes", "write_report", "write_whole"]
+__all__ = ["REPORT", "NoReport", "report_bytes", "typeset", "write_report", "write_whole"]
 
 REPORT = "report.pdf"
-_TEMPLATE = "report.typ"
+_STYLE, _TEMPLATE = "style.typ", "report.typ"
 _STANDARD = "a-2b"  # PDF/A: readable without anything outside the file
 _LONG = re.compile(r"\S{25,}")  # a word that no column holds; arbitrary
+_JOINT = re.compile(r"(?<=[_/.,:=-])")  # where such a word may break; within a part that is longer than ...
+_WHOLE = 15  # ... so many letters, anywhere; arbitrary
 _BREAK = "\u200b"  # where a line may break, without width
 
 
@@ -73,16 +75,24 @@ def report_bytes(
     run: Run, stages: Sequence[StageResult], result: Mapping[str, Any], digest: str, views: Sequence[StageView]
 ) -> bytes:
     """Return a run's report, a PDF (NoReport when typst is missing or refuses)."""
-    return _set(content(run, stages, result, digest, views), datetime.fromisoformat(run.started))
+    return typeset(_TEMPLATE, content(run, stages, result, digest, views), datetime.fromisoformat(run.started))
 
 
-def _set(said: dict[str, Any], moment: datetime) -> bytes:
+def typeset(name: str, said: dict[str, Any], moment: datetime) -> bytes:
+    """Return a PDF of what is said (with ``head`` and ``cautions``), dated ``moment``, by a template of this folder.
+
+    Raises
+    ------
+    NoReport
+        typst is missing or refuses.
+    """
     try:
         import typst
     except ImportError as missing:
         raise NoReport(f"the package typst is not installed ({missing}); pip install typst") from missing
     fonts = typst.Fonts(include_system_fonts=False, include_embedded_fonts=True)
-    template = (resources.files("bandproof.bench.documents") / _TEMPLATE).read_bytes()
+    folder = resources.files("bandproof.bench.documents")
+    template = (folder / _STYLE).read_bytes() + (folder / name).read_bytes()
 
     def compiled(**standard: Any) -> bytes:
         given = {"content": json.dumps(_breakable(said), ensure_ascii=False)}
@@ -102,7 +112,12 @@ def _set(said: dict[str, Any], moment: datetime) -> bytes:
 def _breakable(value: Any) -> Any:
     """Return plain values with places to break a line in every word longer than a column; pictures as they are."""
     if isinstance(value, str):
-        return value if value.startswith("<?xml") else _LONG.sub(lambda word: _BREAK.join(word[0]), value)
+        return value if value.startswith("<?xml") else _LONG.sub(lambda word: _broken(word[0]), value)
     if isinstance(value, dict):
         return {key: _breakable(entry) for key, entry in value.items()}
     return [_breakable(entry) for entry in value] if isinstance(value, list) else value
+
+
+def _broken(word: str) -> str:
+    parts = _JOINT.split(word)
+    return _BREAK.join(_BREAK.join(part) if len(part) > _WHOLE else part for part in parts)

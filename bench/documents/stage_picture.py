@@ -29,9 +29,9 @@ _MARK: dict[str, Any] = {
     "markeredgecolor": "black",
     "markeredgewidth": 0.8,
 }
-_DESIGNED: dict[str, Any] = {"color": "0.35", "linewidth": 0.9, "linestyle": (0, (5, 2))}
-_PREDICTED: dict[str, Any] = {"color": "black", "linewidth": 1.2, "linestyle": (0, (1, 1.5))}
-_FITTED: dict[str, Any] = {"color": "black", "linewidth": 0.8}
+_DESIGNED: dict[str, Any] = {"color": "0.55", "linewidth": 2.0, "linestyle": (0, (4, 2))}  # wide: seen below the others
+_PREDICTED: dict[str, Any] = {"color": "black", "linewidth": 1.6, "linestyle": (0, (1, 1.5))}
+_FITTED: dict[str, Any] = {"color": "black", "linewidth": 0.6}
 _MASK: dict[str, Any] = {"facecolor": "0.88", "edgecolor": "0.6", "linewidth": 0.5}
 _BAND: dict[str, Any] = {"facecolor": "0.8", "linewidth": 0.0}
 

@@ -5,6 +5,8 @@ from typing import Literal
 
 import click
 
+from bandproof.bench.errors import BadInput
+
 __all__ = ["command"]
 
 
@@ -15,9 +17,21 @@ __all__ = ["command"]
     "--data", type=click.Path(path_type=Path), metavar="FOLDER", help="Write points and figures as CSV, result as JSON."
 )
 @click.option("--pictures", type=click.Path(path_type=Path), metavar="FOLDER", help="Write a picture of every stage.")
+@click.option(
+    "--with",
+    "other",
+    type=click.Path(path_type=Path),
+    metavar="OTHER_RUN",
+    help="Instead: one page about both runs of the same board, figure by figure, such as before and after a repair.",
+)
 @click.option("--format", "kind", type=click.Choice(["svg", "png"]), default="svg", show_default=True)
 def command(
-    run_path: Path, out: Path | None, data: Path | None, pictures: Path | None, kind: Literal["svg", "png"]
+    run_path: Path,
+    out: Path | None,
+    data: Path | None,
+    pictures: Path | None,
+    other: Path | None,
+    kind: Literal["svg", "png"],
 ) -> int:
     """Write the report of a stored run as PDF: verdict and all figures on page one, then band by band, then the bench.
 
@@ -29,10 +43,18 @@ def command(
       bandproof report runs/TB-0001/1/run.h5
       bandproof report runs/TB-0001/1/run.h5 --out TB-0001.pdf
       bandproof report runs/TB-0001/1/run.h5 --data data --pictures pictures --format png
+      bandproof report runs/TB-0001/1/run.h5 --with runs/TB-0001/2/run.h5
     """
     from bandproof.bench.documents.report import write_report
     from bandproof.bench.documents.stored import read_stored
 
+    if other:
+        from bandproof.bench.documents.side_by_side import write_side_by_side
+
+        if data or pictures:
+            raise BadInput("--with makes one page about two runs: leave --data and --pictures out, or name them alone")
+        click.echo(f"  report   {write_side_by_side(run_path, other, out)}")
+        return 0
     stored = read_stored(run_path)
     if data or pictures:
         from bandproof.bench.documents.exports import write_data, write_pictures

@@ -168,7 +168,7 @@ def test_only_fonts_that_come_along_and_all_embedded(stored):
 
 def test_no_letter_is_smaller_than_seven_points(whole):
     """ISO 32000-1, 9.3: the size of a letter is that of its font times the text matrix's scale."""
-    template = (resources.files("bandproof.bench.documents") / "report.typ").read_text()
+    template = (resources.files("bandproof.bench.documents") / "style.typ").read_text()
     sizes = [float(size) for size in re.findall(r"(?:size:|small =|body =|table-size =) ?([\d.]+)pt", template)]
     assert min(sizes) >= 7.0
     found = []
