@@ -43,3 +43,11 @@ def test_a_twentieth_of_the_boards_has_the_right_suspects():
     from tests.benchmarks import suspects
 
     assert suspects.drawn_boards(suspects.HEALTHY // 20, suspects.WRONG // 20)
+
+
+def test_a_twentieth_of_the_changed_bits_is_noticed(capsys):
+    """The bound of the benchmark: none unnoticed, no other error, whatever was cut off."""
+    from tests.benchmarks import bit_flips
+
+    assert bit_flips.main(bit_flips.FLIPS // 20, bit_flips.CUTS // 20)
+    assert "one bit changed: 75" in capsys.readouterr().out
