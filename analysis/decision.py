@@ -12,6 +12,8 @@ from math import inf, isfinite
 from typing import TYPE_CHECKING, Literal, TypeAlias
 
 if TYPE_CHECKING:  # light to import: values that people write carry a rule
+    from collections.abc import Callable
+
     import numpy as np
     from numpy.typing import NDArray
 
@@ -95,6 +97,7 @@ def outcomes(
     rule: Rule = SIMPLE,
     expanded: FloatArray | float | None = None,
     prior: Prior | None = None,
+    below: Callable[[FloatArray], FloatArray] | None = None,
 ) -> NDArray[np.int8]:
     """Return the verdicts on many measured values: 0 pass, 1 undecided, 2 fail.
 
@@ -107,6 +110,9 @@ def outcomes(
     rule : Rule
     prior : Prior, optional
         What is known beforehand; flat without. Only a rule by risk looks at it.
+    below : callable, optional
+        Probability that the error of a value is below its argument; normal with ``u`` without, and where there is a
+        prior. Only a rule by risk looks at it.
 
     Raises
     ------
@@ -127,7 +133,7 @@ def outcomes(
     if not np.all(u >= 0.0):
         raise ValueError("u must not be negative")
     if rule.kind == "risk":
-        conforming = _probability(value, u, low, high, prior)
+        conforming = _probability(value, u, low, high, prior, below)
         passes, fails = 1.0 - conforming <= rule.size, conforming <= rule.size
     else:
         band = rule.size * (2.0 * u if expanded is None else np.asarray(expanded, dtype=np.float64))
@@ -145,6 +151,7 @@ def decide(
     rule: Rule = SIMPLE,
     expanded: float | None = None,
     prior: Prior | None = None,
+    below: Callable[[FloatArray], FloatArray] | None = None,
     doubt: str = "",
 ) -> Decision:
     """Return the verdict on one measured value; parameters as for `outcomes`.
@@ -165,8 +172,8 @@ def decide(
         if not low <= high:
             raise ValueError(f"low must not be above high, found {low!r} and {high!r}")
         return Decision("undecided", float("nan"), doubt or "no value")
-    code = outcomes(np.asarray(value), u, low=low, high=high, rule=rule, expanded=expanded, prior=prior)
-    probability = conformance_probability(value, u, low=low, high=high, prior=prior)
+    code = outcomes(np.asarray(value), u, low=low, high=high, rule=rule, expanded=expanded, prior=prior, below=below)
+    probability = float(_probability(np.asarray(value), np.asarray(u), low, high, prior, below))
     return Decision(_WORDS[int(code)], probability, _reason(value, low, high, _WORDS[int(code)], rule))
 
 
@@ -183,12 +190,21 @@ def _reason(value: float, low: float, high: float, verdict: Verdict, rule: Rule)
     return f"{value:.7g} is {side} the limit {limit:.7g}{by}"
 
 
-def _probability(value: FloatArray, u: FloatArray, low: float, high: float, prior: Prior | None) -> FloatArray:
+def _probability(
+    value: FloatArray,
+    u: FloatArray,
+    low: float,
+    high: float,
+    prior: Prior | None,
+    below: Callable[[FloatArray], FloatArray] | None = None,
+) -> FloatArray:
     import numpy as np
     from scipy.special import ndtr
 
     if not np.all(u >= 0.0):
         raise ValueError(f"u must not be negative, found {u!r}")
+    if prior is None and below is not None:  # the true value is the measured one less its error
+        return below(value - low) - below(value - high)
     if prior is not None:  # the product of two normal densities is one
         known = u**2 / (u**2 + prior.sd**2)
         value, u = value + known * (prior.mean - value), u * np.sqrt(1.0 - known)

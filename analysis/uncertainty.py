@@ -25,6 +25,7 @@ __all__ = [
     "coverage_factor",
     "half_width",
     "mean_and_covariance",
+    "probability_below",
     "propagated",
     "share",
 ]
@@ -186,15 +187,54 @@ def half_width(rows: Sequence[Row], *, coverage: float = COVERAGE) -> float:
     >>> round(half_width([flat], coverage=0.95) / 3**0.5, 3)
     0.95
     """
-    normal = [row for row in rows if row.distribution == "normal" and not isfinite(row.dof)]
-    others = [row for row in rows if row not in normal and row.contribution]
+    plain = _unfolded(rows)
+    if plain is not None:
+        return coverage_factor(plain.dof, coverage=coverage) * plain.contribution
+    edge, cells = _folded_rows(rows)
+    return _quantile(cells, edge[1] - edge[0], coverage)
+
+
+def probability_below(rows: Sequence[Row], x: FloatArray | float) -> FloatArray:
+    """Return the probability (...) that the sum of independent rows, distributed as for `half_width`, is below x (...).
+
+    Examples
+    --------
+    >>> flat = Row("a", "B", "uniform", 1.0, 1.0, inf, "half-width 3**0.5")
+    >>> probability_below([flat], np.array([-2.0, 0.0, 0.5 * 3**0.5, 2.0])).round(4).tolist()
+    [0.0, 0.5, 0.75, 1.0]
+    """
+    plain, x = _unfolded(rows), np.asarray(x, dtype=np.float64)
+    if plain is not None:
+        return _distribution("t", plain.dof, x / plain.contribution)
+    edge, cells = _folded_rows(rows)
+    lost = 0.5 * (1.0 - cells.sum())  # beyond the grid, half on each side
+    below: FloatArray = np.interp(x, edge, lost + np.concatenate([[0.0], np.cumsum(cells)]), left=0.0, right=1.0)
+    return below
+
+
+def _unfolded(rows: Sequence[Row]) -> Row | None:
+    """Return the one normal or t row that the sum of all rows is, where it is one."""
+    normal, others = _parted(rows)
     together = sqrt(sum(row.contribution**2 for row in normal))
     if not others:
-        return coverage_factor(inf, coverage=coverage) * together
+        return Row("normal rows", "B", "normal", together, 1.0, inf, "their root of the sum of squares")
     if len(others) == 1 and not together and others[0].distribution in ("normal", "t"):
-        return coverage_factor(others[0].dof, coverage=coverage) * others[0].contribution
+        return others[0]
+    return None
+
+
+def _parted(rows: Sequence[Row]) -> tuple[list[Row], list[Row]]:
+    """Return the rows that add up to a normal one, and the others that contribute."""
+    normal = [row for row in rows if row.distribution in ("normal", "t") and not isfinite(row.dof)]
+    return normal, [row for row in rows if row not in normal and row.contribution]
+
+
+def _folded_rows(rows: Sequence[Row]) -> tuple[FloatArray, FloatArray]:
+    """Return the edges (n + 1,) of a grid and the probability (n,) that the sum of the rows lies in each cell."""
+    normal, others = _parted(rows)
+    together = sqrt(sum(row.contribution**2 for row in normal))
     u = sqrt(together**2 + sum(row.contribution**2 for row in others))
-    widest = max(_WIDEST, *(2.0 * coverage_factor(row.dof, coverage=coverage) for row in others))
+    widest = max(_WIDEST, *(2.0 * coverage_factor(row.dof) for row in others))
     edge = np.linspace(-widest * u, widest * u, _CELLS + 1)
     parts = [np.diff(_distribution(row.distribution, row.dof, edge / row.contribution)) for row in others]
     if together:
@@ -202,7 +242,7 @@ def half_width(rows: Sequence[Row], *, coverage: float = COVERAGE) -> float:
     folded = parts[0]
     for part in parts[1:]:
         folded = _folded(folded, part)
-    return _quantile(folded, edge[1] - edge[0], coverage)
+    return edge, folded
 
 
 def _distribution(name: Distribution, dof: float, x: FloatArray) -> FloatArray:

@@ -1,10 +1,11 @@
 """A fitted figure beside its design: what it is, how sure, within its limits or not."""
 
+from functools import partial
 from math import nan
 
 from bandproof.analysis.decision import decide
 from bandproof.analysis.fit import BandFit
-from bandproof.analysis.uncertainty import Combined
+from bandproof.analysis.uncertainty import Combined, probability_below
 from bandproof.bench.circuit import Prediction
 from bandproof.bench.types import UNITS, Comparison, Quantity, Stage
 
@@ -51,6 +52,7 @@ def judged(
         rule=limit.decides,
         expanded=budget.expanded if budget else 0.0,
         prior=limit.prior,
+        below=partial(probability_below, budget.rows) if budget and budget.u else None,
         doubt=doubt,
     )
     return Comparison(

@@ -39,7 +39,8 @@ def board_probability(stages: Sequence[StageResult]) -> float | None:
     believed = _updated(measured, errors, [figure.prior for figure in figures], rng)
     low = np.array([figure.lower_limit for figure in figures])
     high = np.array([figure.upper_limit for figure in figures])
-    return float(((low <= believed) & (believed <= high)).all(axis=1).mean())
+    joint = float(((low <= believed) & (believed <= high)).all(axis=1).mean())
+    return min(joint, *(figure.conformance_probability for figure in figures))  # never above one of its own
 
 
 def board_errors(stages: Sequence[StageResult], rng: Generator, count: int) -> FloatArray:

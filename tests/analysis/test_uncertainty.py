@@ -20,6 +20,7 @@ from bandproof.analysis.uncertainty import (
     coverage_factor,
     half_width,
     mean_and_covariance,
+    probability_below,
     propagated,
     share,
 )
@@ -248,6 +249,17 @@ def test_four_uniform_rows_hold_what_the_supplement_says():
     assert found == pytest.approx(2 * sqrt(3) * (2 - 0.6**0.25), rel=1e-4)
     budget = combine(rows, coverage=0.95)
     assert coverage_factor(budget.dof, coverage=0.95) * budget.u == pytest.approx(3.92, abs=5e-3)
+
+
+def test_the_probability_below_a_value_is_that_of_the_sum_of_the_rows():
+    x = np.array([-1.9, -1.0, 0.0, 0.4, 1.7])
+    two = [_row(1.0, distribution="uniform")] * 2  # a triangle of half-width 2 sqrt(3), by its area
+    left = 0.5 * (1.0 - np.abs(x) / (2 * sqrt(3))) ** 2
+    assert probability_below(two, x) == pytest.approx(np.where(x < 0, left, 1 - left), abs=1e-5)
+    normal = [_row(0.6), _row(0.8)]
+    assert probability_below(normal, x) == pytest.approx(ndtr(x), abs=1e-12)
+    assert probability_below([_row(2.0, dof=3.0)], x) == pytest.approx(stdtr(3, x / 2.0), abs=1e-12)
+    assert probability_below(two, np.array([-inf, inf])).tolist() == [0.0, 1.0]
 
 
 def test_as_many_rows_as_a_budget_has_are_folded_without_a_shift():

@@ -12,6 +12,7 @@ from scipy.stats import multivariate_normal
 from bandproof.analysis.decision import SIMPLE, Prior, Rule
 from bandproof.analysis.uncertainty import combine
 from bandproof.bench.board_file import parse_board
+from bandproof.bench.comparison import judged
 from bandproof.bench.conformance import board_probability
 from bandproof.bench.errors import FileMistakes
 from bandproof.bench.evaluate import evaluate
@@ -125,7 +126,6 @@ def test_a_process_known_beforehand_changes_the_probability_and_says_so(outcome)
     # JCGM 106:2012, 7.2 and A.4: prior sd u around a mean u below gives mean -u/2, sd u/sqrt(2)
     known = evaluate(with_limits(outcome, gain={**limit, "prior": Prior(gain.measured - u, u)}))[0].figures["gain"]
     assert (flat.verdict, known.verdict) == ("undecided", "pass")
-    assert flat.conformance_probability == pytest.approx(ndtr(1.0), abs=1e-9)
     assert known.conformance_probability == pytest.approx(ndtr(1.5 * sqrt(2.0)), abs=1e-9)
 
 
@@ -180,6 +180,44 @@ def test_one_figure_at_its_limit_makes_the_board_half_probable(outcome):
     assert board_probability(stages) == 1.0
     first = limited(stages[:1], {"centre": 0.0, "q": FAR, "gain": FAR})
     assert board_probability([*first, *stages[1:]]) == pytest.approx(0.5, abs=0.006)  # 4 deviations of 1e5 draws
+
+
+@pytest.mark.parametrize("at", [0.5, 1.0, 1.5, 1.7])
+def test_a_figure_and_its_board_take_the_error_as_the_budget_has_it(outcome, at):
+    """Source: the area of a uniform distribution of the u of its row, which is most of Q's."""
+    (stage,) = only(outcome.stages[:1], "linearity out")
+    q = stage.figures["q"]
+    limit = replace(outcome.run.board.stages[0].limits["q"], upper=q.measured + at * q.standard_uncertainty)
+    judged_q = judged(
+        replace(outcome.run.board.stages[0], limits={"q": limit}),
+        "q",
+        q.predicted,
+        q.measured,
+        0.0,
+        stage.budgets["q"],
+        "",
+    )
+    expected = 0.5 + 0.5 * at / sqrt(3.0)
+    assert judged_q.conformance_probability == pytest.approx(expected, abs=1e-3)
+    far = limited([stage], dict.fromkeys(QUANTITIES, FAR))[0]
+    found = board_probability([replace(far, figures={**far.figures, "q": judged_q})])
+    assert found == pytest.approx(expected, abs=0.006)  # 4 deviations of 1e5 draws
+    assert found <= judged_q.conformance_probability
+
+
+@pytest.mark.parametrize(("size", "verdict"), [("20 %", "undecided"), ("22 %", "pass")])
+def test_a_rule_by_risk_counts_the_error_as_the_budget_has_it(outcome, size, verdict):
+    """One u inside its limit a uniform error leaves 21.1 %, a normal one would leave 15.9 %."""
+    (stage,) = only(outcome.stages[:1], "linearity out")
+    q, designed = stage.figures["q"], outcome.run.board.stages[0]
+    limit = replace(
+        designed.limits["q"],
+        upper=q.measured + q.standard_uncertainty,
+        rule=f"risk {size}",
+        decides=read_rule(f"risk {size}"),
+    )
+    found = judged(replace(designed, limits={"q": limit}), "q", q.predicted, q.measured, 0.0, stage.budgets["q"], "")
+    assert found.verdict == verdict
 
 
 def test_noise_is_correlated_as_the_fit_says(outcome):
