@@ -52,10 +52,10 @@ def origin(lines: Mapping[Key, Line], entries: Sequence[Entry]) -> str:
     )
 
 
-def chart_lines(key: Key, line: Line, entries: Sequence[Entry]) -> Iterator[str]:
-    """Yield the chart of one figure over checks: ``o`` in order, ``x`` out, ``·`` centre line and limits."""
+def chart_lines(key: Key, line: Line, entries: Sequence[Entry], *, most: int = _COLUMNS) -> Iterator[str]:
+    """Yield the chart of one figure over the last checks: ``o`` in order, ``x`` out, ``·`` centre line and limits."""
     stage, quantity = key
-    shown = [entry for entry in entries if entry.figures[stage][quantity] is not None][-_COLUMNS:]
+    shown = [entry for entry in entries if entry.figures[stage][quantity] is not None][-min(most, _COLUMNS) :]
     rows = {row: [" ·"[row in (-_HALF, 0, _HALF)]] * len(shown) for row in range(_HALF + 1, -_HALF - 2, -1)}
     for column, entry in enumerate(shown):
         row = _row((entry.figures[stage][quantity] or [nan])[0], line)

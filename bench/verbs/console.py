@@ -5,11 +5,13 @@ import sys
 import tempfile
 import traceback
 from collections.abc import Sequence
+from contextlib import nullcontext
 
 import click
 
 from bandproof.bench.errors import BadInput, BenchFault, Stopped
 from bandproof.bench.types import Verdict
+from bandproof.bench.verbs.screen import narrow_output
 from bandproof.bench.verbs.table import group
 from bandproof.drivers.errors import InstrumentProblem
 from bandproof.drivers.schema import DialectMistakes
@@ -43,7 +45,8 @@ def main() -> None:
 def run(arguments: Sequence[str]) -> int:
     """Run a command line and return its exit code; every message is printed, none is raised."""
     try:
-        code = group.main(list(arguments), prog_name="bandproof", standalone_mode=False)
+        with nullcontext() if "--json" in arguments else narrow_output():
+            code = group.main(list(arguments), prog_name="bandproof", standalone_mode=False)
         return code if isinstance(code, int) else DONE
     except click.ClickException as usage:
         usage.show()

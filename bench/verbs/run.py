@@ -12,6 +12,7 @@ import click
 
 from bandproof.bench.types import Bench
 from bandproof.bench.verbs.conditions import person, stated
+from bandproof.bench.verbs.screen import columns
 
 if TYPE_CHECKING:
     from datetime import datetime
@@ -41,10 +42,9 @@ class Progress:
     def __call__(self, done: int, planned: int, left: float, stage: str) -> None:
         """Tell how far the run is: records done and planned so far, bench seconds left, stage."""
         if self._live:
-            text = (
-                f"\r{stage:<12} record {done} of {planned} planned so far, about {_duration(left)} of bench time left"
-            )
-            click.echo(f"{text:<79}", err=True, nl=False)
+            room = columns() - 1  # a full line would begin the next one, and could not be rewritten
+            text = f"{stage:<12} record {done} of {planned} planned so far, about {_duration(left)} of bench time left"
+            click.echo(f"\r{text:<{room}.{room}}", err=True, nl=False)
         elif stage != self._stage:
             click.echo(f"measuring {stage}, about {_duration(left)} of bench time left", err=True)
         self._stage = stage
@@ -52,7 +52,7 @@ class Progress:
     def close(self) -> None:
         """Leave the line."""
         if self._live and self._stage:
-            click.echo("\r" + " " * 79 + "\r", err=True, nl=False)
+            click.echo("\r" + " " * (columns() - 1) + "\r", err=True, nl=False)
 
 
 def _duration(seconds: float) -> str:
@@ -104,8 +104,8 @@ def show(outcome: "Outcome", wall_seconds: float, as_json: bool, *, simulated: b
 
 
 def wrapped(text: str) -> str:
-    """Return a text on lines of 80 columns, all but the first indented."""
-    return textwrap.fill(text, 80, subsequent_indent="  ", break_long_words=False, break_on_hyphens=False)
+    """Return a text on lines as wide as the terminal, at most 80 columns, all but the first indented."""
+    return textwrap.fill(text, columns(), subsequent_indent="  ", break_long_words=False, break_on_hyphens=False)
 
 
 def exit_code(outcome: "Outcome") -> int:

@@ -205,6 +205,7 @@ def _print(
 ) -> None:
     from bandproof.bench.check_text import chart_lines, origin, table_lines
     from bandproof.bench.verbs.run import wrapped
+    from bandproof.bench.verbs.screen import columns
 
     click.echo(wrapped(entry.standard))
     for line in table_lines(mine):
@@ -212,7 +213,7 @@ def _print(
     since = [one for one in mine if one.number >= (before[0].number if before else entry.number)]
     for key, chart in lines.items():
         click.echo("")
-        for line in chart_lines(key, chart, since):
+        for line in chart_lines(key, chart, since, most=columns() - 14):  # beside the names of its rows
             click.echo(line)
     click.echo("")
     click.echo(wrapped(origin(lines, before)))
