@@ -9,7 +9,7 @@ from bandproof.bench.attempts import with_earlier
 from bandproof.bench.bench_file import parse_bench
 from bandproof.bench.board_file import parse_board
 from bandproof.bench.budget import budget_plain
-from bandproof.bench.chain import CHAIN, add_to_chain
+from bandproof.bench.chain import CHAIN, add_to_chain, link_of
 from bandproof.bench.errors import BadInput, Stopped
 from bandproof.bench.evaluate import evaluate, views
 from bandproof.bench.journal import Journal
@@ -67,7 +67,7 @@ def finish(journal: Journal, folder: Path, problem: Exception | None, words: str
     digest = digest_of(path)
     result = {**result, "alarms": [*result["alarms"], *_chained(run, folder)]}
     journal.ended(run.ended, path.name, digest)
-    return Outcome(run, stages, _reported(run, stages, result, digest, drawn, folder), folder)
+    return Outcome(run, stages, _reported(run, stages, result, digest, link_of(path, digest), drawn, folder), folder)
 
 
 def _with_earlier(
@@ -142,6 +142,7 @@ def _reported(
     stages: tuple[StageResult, ...],
     result: dict[str, Any],
     digest: str,
+    link: str,
     drawn: "Sequence[StageView]",
     folder: Path,
 ) -> dict[str, Any]:
@@ -149,7 +150,7 @@ def _reported(
     try:
         from bandproof.bench.documents.report import write_report
 
-        write_report(folder / REPORT, run, stages, result, digest, drawn)
+        write_report(folder / REPORT, run, stages, result, digest, drawn, link)
     except Exception as problem:  # whatever it is: the run is kept and decides alone
         alarm = f"there is no {REPORT} ({type(problem).__name__}: {problem}); try: bandproof report {folder / RUN}"
         files = {**result["files"], "report": None}

@@ -30,7 +30,12 @@ _TERMS = (
 
 
 def content(
-    run: Run, stages: Sequence[StageResult], result: Mapping[str, Any], digest: str, views: Sequence[StageView]
+    run: Run,
+    stages: Sequence[StageResult],
+    result: Mapping[str, Any],
+    digest: str,
+    views: Sequence[StageView],
+    link: str = "",
 ) -> dict[str, Any]:
     """Return all the report says.
 
@@ -45,11 +50,13 @@ def content(
         That of the run file.
     views : sequence of StageView
         What is drawn, of the stages that have a fit.
+    link : str
+        That of the chain of the run's folder after it, "" where no chain has it.
     """
     drawn = {view.result.name: view for view in views}
     verdict = board_verdict(run, stages)
     return {
-        "head": _head(run, result, digest),
+        "head": _head(run, result, digest, link),
         "verdict": _WORDS[verdict],
         "sentence": _sentence(run, stages),
         "worst": _worst_line(run, stages),
@@ -65,7 +72,7 @@ def content(
     }
 
 
-def _head(run: Run, result: Mapping[str, Any], digest: str) -> dict[str, Any]:
+def _head(run: Run, result: Mapping[str, Any], digest: str, link: str) -> dict[str, Any]:
     return {
         "title": run.board.title,
         "drawing": run.board.drawing,
@@ -81,6 +88,7 @@ def _head(run: Run, result: Mapping[str, Any], digest: str) -> dict[str, Any]:
         "run_id": run.run_id,
         "version": run.version,
         "digest": digest,
+        "link": link or "not in a chain",
         "points": result["points"],
         "bench_seconds": f"{run.bench_seconds:.1f} s",
     }

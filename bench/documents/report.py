@@ -47,6 +47,7 @@ def write_report(
     result: Mapping[str, Any],
     digest: str,
     views: Sequence[StageView],
+    link: str = "",
 ) -> None:
     """Write a run's report, whole or not at all.
 
@@ -57,7 +58,7 @@ def write_report(
     OSError
         The folder cannot be written.
     """
-    write_whole(path, report_bytes(run, stages, result, digest, views))
+    write_whole(path, report_bytes(run, stages, result, digest, views, link))
 
 
 def write_whole(path: Path, content: bytes) -> None:
@@ -72,10 +73,15 @@ def write_whole(path: Path, content: bytes) -> None:
 
 
 def report_bytes(
-    run: Run, stages: Sequence[StageResult], result: Mapping[str, Any], digest: str, views: Sequence[StageView]
+    run: Run,
+    stages: Sequence[StageResult],
+    result: Mapping[str, Any],
+    digest: str,
+    views: Sequence[StageView],
+    link: str = "",
 ) -> bytes:
     """Return a run's report, a PDF (NoReport when typst is missing or refuses)."""
-    return typeset(_TEMPLATE, content(run, stages, result, digest, views), datetime.fromisoformat(run.started))
+    return typeset(_TEMPLATE, content(run, stages, result, digest, views, link), datetime.fromisoformat(run.started))
 
 
 def typeset(name: str, said: dict[str, Any], moment: datetime) -> bytes:

@@ -6,6 +6,7 @@ from pathlib import Path
 from typing import Any
 
 from bandproof.bench.attempts import with_earlier
+from bandproof.bench.chain import link_of
 from bandproof.bench.documents.report import REPORT
 from bandproof.bench.evaluate import evaluate, views
 from bandproof.bench.picture import StageView
@@ -17,13 +18,17 @@ __all__ = ["Stored", "read_stored"]
 
 @dataclass(frozen=True)
 class Stored:
-    """A run as a document shows it: stages evaluated again, pooled as the run was; result and digest as stored."""
+    """A run as a document shows it: stages evaluated again, pooled as the run was; result and digest as stored.
+
+    ``link`` is that of the chain of its folder after this run, "" where no chain has it.
+    """
 
     path: Path
     run: Run
     stages: tuple[StageResult, ...]
     result: dict[str, Any]
     digest: str
+    link: str
 
     @property
     def views(self) -> Sequence[StageView]:
@@ -43,4 +48,5 @@ def read_stored(path: Path) -> Stored:
     if attempts := result["attempts"]:
         *known, own = attempts
         stages, _ = with_earlier(run, stages, path.parent.parent, known, own.get("reason", ""))
-    return Stored(path, run, stages, result, digest_of(path))
+    digest = digest_of(path)
+    return Stored(path, run, stages, result, digest, link_of(path, digest))

@@ -67,6 +67,6 @@ def command(
             click.echo(f"  {path.suffix[1:]:<8} {path}")
     if out or not (data or pictures):
         path = out or stored.default_path
-        write_report(path, stored.run, stored.stages, stored.result, stored.digest, stored.views)
+        write_report(path, stored.run, stored.stages, stored.result, stored.digest, stored.views, stored.link)
         click.echo(f"  report   {path}")
     return 0

@@ -126,6 +126,8 @@ def outcome(tmp_path_factory: pytest.TempPathFactory) -> Outcome:
     board = parse_board(band_text(2), "two bands")
     bench = rehearsal_bench(board)
     world = replace(world_of(board, bench, draw_parts(board, 11), 11, 1), imperfections=QUIET)
+    folder = tmp_path_factory.mktemp("outcome") / "TB-0011" / "1"
+    folder.mkdir(parents=True)
     with simulated(world, bench) as (reachable, clock):
         return Job(
             board=board,
@@ -133,7 +135,7 @@ def outcome(tmp_path_factory: pytest.TempPathFactory) -> Outcome:
             serial="TB-0011",
             attempt=1,
             run_id="eleven",
-            folder=tmp_path_factory.mktemp("outcome"),
+            folder=folder,
             clock=clock,
             operator=Absent(),
             stop=Stop(),

@@ -172,8 +172,13 @@ def test_where_the_chain_cannot_be_written_the_run_is_kept_and_it_is_told(board,
     assert Journal.peeked(place).end["ended"] == "complete"
 
 
-def test_one_seed_in_two_folders_gives_the_same_run_file_chain_and_report(board, tmp_path):
+def test_one_seed_in_two_folders_gives_the_same_run_file_chain_and_report_and_a_later_run_changes_none(board, tmp_path):
     for name in "ab":
         assert rehearse(board, tmp_path / name) == 0
     for path in ("chain.txt", "rehearsal-1/1/run.h5", "rehearsal-1/1/report.pdf"):
         assert (tmp_path / "a" / path).read_bytes() == (tmp_path / "b" / path).read_bytes()
+    report = tmp_path / "a" / "rehearsal-1" / "1" / "report.pdf"
+    before = report.read_bytes()
+    assert rehearse(board, tmp_path / "a") == 0
+    assert console.run(["report", str(report.with_name("run.h5"))]) == 0
+    assert report.read_bytes() == before

@@ -10,10 +10,11 @@ from pathlib import Path
 import pytest
 
 from bandproof.bench import finish, journal
+from bandproof.bench.chain import chain_of
 from bandproof.bench.finish import RUN
 from bandproof.bench.job import Job
 from bandproof.bench.journal import JOURNAL, RAW, Journal
-from bandproof.bench.runfile import read_run
+from bandproof.bench.runfile import digest_of, read_run
 from bandproof.drivers.generator import Generator
 from bandproof.drivers.scope import Scope
 from tests.benchmarks.kill import PASS, Aftermath, Controller, Tally, kill_at_random, patch, quietly, rig
@@ -89,6 +90,8 @@ STATES = {
     "sweep done, no file yet": (halting(finish, "run_of", before=True), 25),
     "part file written": (halting(Path, "rename", before=True), 25),
     "renamed": (halting(Path, "rename"), 25),
+    "before the chain's line": (halting(finish, "_chained", before=True), 25),
+    "after the chain's line": (halting(finish, "_chained"), 25),
     "before the end line": (halting(Journal, "ended", before=True), 25),
     "after the end line": (halting(Journal, "ended"), 25),
 }
@@ -103,9 +106,15 @@ SIGNS = {
     "sweep done, no file yet": lambda folder: not list(folder.glob("*.h5*")),
     "part file written": lambda folder: [path.name for path in folder.glob("*.h5*")] == ["run.h5.part"],
     "renamed": lambda folder: [path.name for path in folder.glob("*.h5*")] == ["run.h5"],
+    "before the chain's line": lambda folder: (folder / RUN).exists() and not lines_of_chain(folder),
+    "after the chain's line": lambda folder: Journal.peeked(folder).end is None and len(lines_of_chain(folder)) == 1,
     "before the end line": lambda folder: Journal.peeked(folder).end is None and (folder / "picture.svg").exists(),
     "after the end line": lambda folder: Journal.peeked(folder).end is not None,
 }
+
+
+def lines_of_chain(folder):
+    return [entry for entry in chain_of(folder / RUN).of(folder / RUN) if entry.digest == digest_of(folder / RUN)]
 
 
 def raw_size(folder):
@@ -130,6 +139,9 @@ def test_a_kill_at_any_state_of_the_journal_loses_nothing(bench, name):
     after.resume(folder)
     assert tally.is_good(), tally.problems
     assert not list(folder.glob("*.part")) or not points
+    if (folder / RUN).exists():
+        assert len(lines_of_chain(folder)) == 1
+        assert chain_of(folder / RUN).problem == ""
 
 
 def test_kills_at_random_instants_lose_nothing(bench):

@@ -35,7 +35,7 @@ def stored(outcome):
 def document(stored, *, run=None, stages=None, result=None, drawn=()):
     """Return a report, without pictures unless there are some to draw: most tests read words."""
     run, stages = run or stored.run, stored.stages if stages is None else stages
-    return report_bytes(run, stages, result or stored.result, stored.digest, drawn)
+    return report_bytes(run, stages, result or stored.result, stored.digest, drawn, stored.link)
 
 
 def pages(pdf):
@@ -113,6 +113,8 @@ def test_last_page_has_instruments_digest_and_words(text, stored):
         assert identity in last
         assert stored.run.bench.instruments[role].dialect in last
     assert digest_of(stored.path) in last
+    assert stored.link == (stored.path.parents[2] / "chain.txt").read_text().split()[-1]
+    assert f"link after this run {stored.link}" in last
     assert f"bandproof {stored.run.version}" in last
     assert "measured in this run" in last
     assert "95.45 %" in last
