@@ -9,7 +9,7 @@ import re
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 from datetime import datetime
-from math import copysign, isfinite, sqrt
+from math import copysign, isfinite
 from pathlib import Path
 from typing import Any
 
@@ -226,16 +226,17 @@ def _budget(quantity: Quantity, results: Sequence[StageResult], common: bool) ->
 
 def _row(together: Sequence[Row], common: bool) -> Row:
     """Return a row of a mean: what repeats by chance adds in squares, all else is the same in each attempt."""
-    last, sizes = together[-1], [row.contribution for row in together]
-    by_chance = last.type == "A" and last.name != _OF_BENCH and not (common and last.name == _SHARED)
-    size = sqrt(sum(size**2 for size in sizes)) if by_chance else sum(sizes)
+    parts = [replace(row, sensitivity=row.sensitivity / len(together)) for row in together]
+    size, dof = sum(part.contribution for part in parts), min(part.dof for part in parts)
+    if parts[-1].type == "A" and parts[-1].name != _OF_BENCH and not (common and parts[-1].name == _SHARED):
+        chance = combine(parts)
+        size, dof = chance.u, chance.dof  # JCGM 100:2008, G.4.1
     if not size:
-        return last
-    told = max(together, key=lambda row: row.contribution)
-    dof = sum(row.dof for row in together) if by_chance else min(row.dof for row in together)
+        return together[-1]
+    told = max(parts, key=lambda row: row.contribution)
     return replace(
         told,
-        standard_uncertainty=size / len(together),
+        standard_uncertainty=size,
         sensitivity=copysign(1.0, told.sensitivity),
         dof=dof,
         reason=f"{told.reason}; mean of {len(together)} attempts",

@@ -121,8 +121,26 @@ def test_a_stored_thru_that_both_attempts_used_is_not_lowered(outcome):
         assert {row.name: row for row in rows}["thru"].contribution == pytest.approx(factor * own, rel=1e-12)
 
 
+def test_unequal_attempts_keep_the_degrees_of_freedom_of_the_one_that_counts_most(outcome):
+    """JCGM 100:2008, G.4.1: u 1.0 of 3 degrees and u 0.1 of 100 are no mean of 103.
+
+    (0.25 + 0.0025)^2 / (0.0625 / 3 + 0.00000625 / 100) = 3.06, by hand; Student's t of 3 for 95.45 % is 3.31, table G.2.
+    """
+    alone = noise_alone(outcome.stages[0])
+
+    def sized(u, dof):
+        row, *zeros = alone.budgets["q"].rows
+        rows = [replace(row, standard_uncertainty=u, distribution="t", dof=dof), *zeros]
+        return [replace(alone, budgets={**alone.budgets, "q": combine(rows)})]
+
+    (stage,) = pooled([outcome.run] * 2, [sized(1.0, 3.0), sized(0.1, 100.0)])
+    budget = stage.budgets["q"]
+    assert budget.rows[0].dof == pytest.approx(3.06, abs=0.005)
+    assert (budget.u, budget.coverage_factor) == (pytest.approx(sqrt(0.2525)), pytest.approx(3.31, abs=0.005))
+
+
 def test_the_verdict_of_both_is_that_of_their_mean(outcome):
-    """A gain above its limit by a quarter in one attempt and well inside in the other."""
+    """A gain 2 % above its limit in one attempt and 1 % below it in the other; then below it in both."""
     limit = outcome.run.board.stages[0].limits["gain"]
     own = outcome.stages[0].figures["gain"].measured
     out, inside = (moved(outcome.stages[0], gain=factor * limit.upper / own) for factor in (1.02, 0.99))
