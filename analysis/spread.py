@@ -9,7 +9,7 @@ import numpy as np
 
 from bandproof.analysis.types import BoolArray, FloatArray
 
-__all__ = ["Fraction", "Spread", "drawn", "fraction", "spread_of", "variance_shares"]
+__all__ = ["Fraction", "Spread", "drawn", "fraction", "spread_of", "uniform_variance", "variance_shares"]
 
 _RANGE = (0.025, 0.975)  # of the boards, so that 95 % lie between
 
@@ -96,6 +96,12 @@ def fraction(hit: BoolArray) -> Fraction:
     return Fraction(value, sqrt(max(value * (1.0 - value), 1.0 / count) / count))
 
 
+def uniform_variance(half_width: FloatArray) -> FloatArray:
+    """Return the variance of what is uniform within ± a half-width (JCGM 100:2008, 4.3.7)."""
+    variance: FloatArray = half_width**2 / 3.0
+    return variance
+
+
 def variance_shares(slopes: FloatArray, tolerances: FloatArray) -> tuple[FloatArray, FloatArray]:
     """Return what each part gives to the spread of figures, to first order.
 
@@ -104,7 +110,7 @@ def variance_shares(slopes: FloatArray, tolerances: FloatArray) -> tuple[FloatAr
     slopes : (F, P) float array
         Derivatives of the ln of each figure by the ln of each part's value.
     tolerances : (P,) float array
-        Relative half-widths; the values are uniform within (JCGM 100:2008, 4.3.7).
+        Relative half-widths; the values are uniform within.
 
     Returns
     -------
@@ -116,6 +122,6 @@ def variance_shares(slopes: FloatArray, tolerances: FloatArray) -> tuple[FloatAr
     >>> print(f"{100.0 * sd[0]:.4f} {shares[0, 1]:.2f}")
     1.4434 0.64
     """
-    variance = (slopes * tolerances) ** 2 / 3.0
+    variance = uniform_variance(slopes * tolerances)
     total = variance.sum(axis=1, keepdims=True)
     return np.sqrt(total[:, 0]), np.divide(variance, total, out=np.zeros_like(variance), where=total > 0.0)

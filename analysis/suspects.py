@@ -16,7 +16,7 @@ from typing import Literal, TypeAlias
 
 import numpy as np
 
-from bandproof.analysis.tolerances import Circuit, Seen, outside, spread
+from bandproof.analysis.tolerances import Circuit, Seen, covariance, outside
 from bandproof.analysis.types import BoolArray, FloatArray
 
 __all__ = ["DISTINGUISHABLE", "Hypothesis", "Judgement", "judged"]
@@ -26,6 +26,7 @@ Kind: TypeAlias = Literal["part", "swapped", "common", "probe", "channels", "tap
 DISTINGUISHABLE = 4.0  # of chi-square to the runner-up
 SATURATED = 4.0  # an end of the scan that fits as well as this means open or bridged
 _UNEXPLAINED = 1e-4  # probability below which the best hypothesis is no explanation; arbitrary
+_PROBES = np.log([0.01, 0.1, 10.0, 100.0])  # what a probe's factor set wrong makes of a gain (common practice)
 _REEL = 3.0**0.5  # standard deviation of a common factor, in tolerances: three times that of one part; arbitrary
 _REFINED, _STEPS = 3, 6  # minima of a scan that are followed, and steps taken
 _CLOSE = 0.1  # standard uncertainties: a last step changes chi-square by the square of it
@@ -39,9 +40,10 @@ class Hypothesis:
     Attributes
     ----------
     kind : str
-        "part": one part has another value; "swapped": two parts of a stage exchanged; "common": one factor on all
-        parts of a kind; "probe": gains off by ten from a stage on; "channels": gains inverted; "tap": the figures of
-        another stage; "nothing": parts as tolerances let them be, however unlikely.
+        "probe": gains off by a probe's factor, of a stage or from one on; "channels": gains inverted, of a stage or of
+        all; "tap": the figures of another stage; "common": one factor on all parts of a kind; "part": one part has
+        another value; "swapped": two parts of a stage exchanged; "nothing": parts as tolerances let them be, however
+        unlikely.
     stages : tuple of int
         Where it strikes.
     names : tuple of str
@@ -100,7 +102,8 @@ def judged(circuits: Sequence[Circuit], seen: Sequence[Seen]) -> list[Judgement]
         found = [_judgement(_ranked([*whole, *alone]), 3 * len(circuits))]
     else:
         together = {i: [replace(h, chi_square=h.chi_square - apart + best[i]) for h in whole] for i in by_stage}
-        found = [_judgement(_ranked([*ranked, *together[i]]), 2) for i, ranked in by_stage.items()]
+        bench = {i: _bench((i,), circuits, seen) for i in by_stage}  # last: one fault of all is likelier than one each
+        found = [_judgement(_ranked([*bench[i], *together[i], *by_stage[i]]), 2) for i in by_stage]
     return [one for one in found if not (one.explained and "nothing" in [h.kind for h in one.candidates])]
 
 
@@ -122,47 +125,49 @@ def _explains(chi_square: float, dof: int) -> bool:
 
 
 def _of_stage(i: int, circuits: Sequence[Circuit], seen: Sequence[Seen], healthy: float) -> list[Hypothesis]:
-    """Return every hypothesis about one stage, also that nothing is wrong with it."""
+    """Return every hypothesis about the parts and the tap of one stage, also that nothing is wrong with it."""
     circuit = circuits[i]
     return [
-        Hypothesis("nothing", (i,), (), healthy),
+        *(_tap(i, j, circuits[j], seen[i]) for j in range(len(circuits)) if j != i),
         *_single_parts(i, circuit, seen[i]),
         *_swapped(i, circuit, seen[i]),
-        *(_tap(i, j, circuits[j], seen[i]) for j in range(len(circuits)) if j != i),
+        Hypothesis("nothing", (i,), (), healthy),
     ]
 
 
 def _of_board(circuits: Sequence[Circuit], seen: Sequence[Seen], apart: float) -> list[Hypothesis]:
-    """Return every hypothesis about all stages together, none for a board of one stage.
+    """Return every hypothesis about all stages together: faults of the bench from a stage on, common factors.
 
     ``apart`` is chi-square with each stage explained by itself.
     """
-    pairs = list(zip(circuits, seen, strict=True))
-    if len(pairs) < 2:
-        return []
-    found = [
-        _common(kind, circuits, seen, apart + _HOPELESS) for kind in dict.fromkeys(k for c in circuits for k in c.kinds)
+    count = len(circuits)
+    bench = [h for first in range(count - 1) for h in _bench(tuple(range(first, count)), circuits, seen)]
+    kinds = dict.fromkeys(kind for circuit in circuits for kind in circuit.kinds)
+    return [*bench, *(_common(kind, circuits, seen, apart + _HOPELESS) for kind in kinds)]
+
+
+def _bench(where: tuple[int, ...], circuits: Sequence[Circuit], seen: Sequence[Seen]) -> list[Hypothesis]:
+    """Return that some stages were measured with a probe's factor wrong, or with the channels swapped.
+
+    Chi-square is that of these stages where it is one, else of all.
+    """
+    among = where if len(where) == 1 else range(len(circuits))
+    away = {i: seen[i].figures - circuits[i].nominal for i in among}
+
+    def left(gains: dict[int, float]) -> float:
+        moved = {i: away[i] - [0.0, 0.0, gains.get(i, 0.0)] for i in among}
+        return sum(_distance(circuits[i], moved[i], seen[i], circuits[i].slopes) for i in among)
+
+    inverted = {i: -2.0 * float(circuits[i].nominal[2]) for i in where}
+    return [
+        *(Hypothesis("probe", where, (), left(dict.fromkeys(where, x)), x, 0.0) for x in _PROBES.tolist()),
+        Hypothesis("channels", where, (), left(inverted)),
     ]
-    away = np.array([s.figures - c.nominal for c, s in pairs])
-    for first in range(len(pairs) - 1):
-        for sign in (1.0, -1.0):
-            moved = away.copy()
-            moved[first:, 2] -= sign * np.log(10.0)
-            at = tuple(range(first, len(pairs)))
-            found.append(Hypothesis("probe", at, (), _total(pairs, moved), sign * float(np.log(10.0)), 0.0))
-    inverted = away.copy()
-    inverted[:, 2] += 2.0 * np.array([c.nominal[2] for c in circuits])
-    found.append(Hypothesis("channels", tuple(range(len(pairs))), (), _total(pairs, inverted)))
-    return found
-
-
-def _total(pairs: Sequence[tuple[Circuit, Seen]], away: FloatArray) -> float:
-    return float(sum(_distance(c, d, s, c.slopes) for (c, s), d in zip(pairs, away, strict=True)))
 
 
 def _distance(circuit: Circuit, away: FloatArray, seen: Seen, slopes: FloatArray, but: int | None = None) -> float:
     """Return the squared Mahalanobis distance of figures (3,) with the tolerances of all parts but one."""
-    return float(away @ np.linalg.solve(spread(circuit, slopes, seen, but), away))
+    return float(away @ np.linalg.solve(covariance(circuit, slopes, seen, but), away))
 
 
 def _single_parts(i: int, circuit: Circuit, seen: Seen) -> list[Hypothesis]:
@@ -193,7 +198,7 @@ def _scanned(circuit: Circuit, seen: Seen, part: int) -> tuple[FloatArray, Float
     usable: BoolArray = np.isfinite(scan.figures[:, 0])
     slopes = np.nan_to_num(scan.slopes)
     away = np.where(usable[:, None], seen.figures - scan.figures, 0.0)
-    weight = np.linalg.inv(spread(circuit, slopes, seen, part))
+    weight = np.linalg.inv(covariance(circuit, slopes, seen, part))
     along = slopes[:, :, part]
     chi = np.einsum("ki,kij,kj->k", away, weight, away)
     pull, steepness = (np.einsum("ki,kij,kj->k", along, weight, x) for x in (away, along))
@@ -219,7 +224,7 @@ def _refined(circuit: Circuit, seen: Seen, starts: Sequence[tuple[int, float]]) 
         slopes = circuit.sensitivities(values, figures)
         usable: BoolArray = np.isfinite(figures[:, 0])
         away, slopes = np.where(usable[:, None], seen.figures - figures, 0.0), np.nan_to_num(slopes)
-        weight = np.linalg.inv([spread(circuit, s, seen, p) for s, p in zip(slopes, parts, strict=True)])
+        weight = np.linalg.inv([covariance(circuit, s, seen, p) for s, p in zip(slopes, parts, strict=True)])
         along = slopes[rows, :, parts]
         chi = np.where(usable, np.einsum("ki,kij,kj->k", away, weight, away), np.inf)
         steepness = np.einsum("ki,kij,kj->k", along, weight, along)
@@ -282,7 +287,7 @@ def _along_common(
         if not np.isfinite(slopes).all():
             return np.inf, 0.0, 1.0
         away, along = one.figures - figures[0], slopes @ member
-        weighted = np.linalg.solve(spread(circuit, slopes, one), np.stack([away, along], axis=1))
+        weighted = np.linalg.solve(covariance(circuit, slopes, one), np.stack([away, along], axis=1))
         chi += float(away @ weighted[:, 0])
         pull += float(along @ weighted[:, 0])
         steepness += float(along @ weighted[:, 1])

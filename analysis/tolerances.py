@@ -7,9 +7,10 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
+from bandproof.analysis.spread import uniform_variance
 from bandproof.analysis.types import FloatArray
 
-__all__ = ["LEVEL", "Circuit", "Scan", "Seen", "least_distance", "outside", "spread"]
+__all__ = ["LEVEL", "Circuit", "Scan", "Seen", "covariance", "least_distance", "outside"]
 
 LEVEL = 0.99  # probability that a healthy board is not accused, at least
 _FINEST = 1e-6  # relative; no figure is known better, and covariances stay regular
@@ -86,15 +87,15 @@ class Seen:
     covariance: FloatArray
 
 
-def spread(circuit: Circuit, slopes: FloatArray, seen: Seen, but: int | None = None) -> FloatArray:
+def covariance(circuit: Circuit, slopes: FloatArray, seen: Seen, but: int | None = None) -> FloatArray:
     """Return the covariance (..., 3, 3) of figures: measurement, and parts uniform within tolerance, all but one.
 
-    Source: JCGM 100:2008, 4.3.7 (variance of a uniform distribution) and 5.1.2.
+    Source: JCGM 100:2008, 5.1.2.
     """
-    variance = np.array(circuit.tolerances) ** 2 / 3.0
+    variance = uniform_variance(circuit.tolerances)
     if but is not None:
         variance[but] = 0.0
-    total: FloatArray = np.einsum("...ip,p,...jp->...ij", slopes, variance, slopes) + _covariance(seen)
+    total: FloatArray = np.einsum("...ip,p,...jp->...ij", slopes, variance, slopes) + _measured(seen)
     return total
 
 
@@ -113,10 +114,10 @@ def outside(circuits: Sequence[Circuit], seen: Sequence[Seen]) -> list[int]:
 def _plainly_inside(circuit: Circuit, seen: Seen, bound: float) -> bool:
     """Whether the likeliest normal parts are within tolerance and give the figures: then nothing need be solved."""
     away = seen.figures - circuit.nominal
-    weighted = np.linalg.solve(spread(circuit, circuit.slopes, seen), away)
-    parts = circuit.tolerances**2 / 3.0 * (circuit.slopes.T @ weighted)
+    weighted = np.linalg.solve(covariance(circuit, circuit.slopes, seen), away)
+    parts = uniform_variance(circuit.tolerances) * (circuit.slopes.T @ weighted)
     left = away - circuit.slopes @ parts
-    close = float(left @ np.linalg.solve(_covariance(seen), left)) < 0.5 * bound
+    close = float(left @ np.linalg.solve(_measured(seen), left)) < 0.5 * bound
     return close and bool(np.all(np.abs(parts) < np.log1p(circuit.tolerances)))
 
 
@@ -127,7 +128,7 @@ def least_distance(circuit: Circuit, seen: Seen, *, rounds: int = 3) -> float:
     """
     from scipy.optimize import lsq_linear
 
-    white = np.linalg.inv(np.linalg.cholesky(_covariance(seen)))
+    white = np.linalg.inv(np.linalg.cholesky(_measured(seen)))
     bounds = np.log1p(-circuit.tolerances), np.log1p(circuit.tolerances)
     at, figures, slopes = np.zeros(len(circuit.parts)), circuit.nominal, circuit.slopes
     least = np.inf
@@ -143,6 +144,6 @@ def least_distance(circuit: Circuit, seen: Seen, *, rounds: int = 3) -> float:
     return least
 
 
-def _covariance(seen: Seen) -> FloatArray:
-    covariance: FloatArray = seen.covariance + _FINEST**2 * np.eye(3)
-    return covariance
+def _measured(seen: Seen) -> FloatArray:
+    regular: FloatArray = seen.covariance + _FINEST**2 * np.eye(3)
+    return regular

@@ -16,6 +16,8 @@ __all__ = ["suspects_of"]
 _SURE = 3.0  # standard uncertainties an estimate may lie beside the value it is taken for
 _ROUND = {2.0: "twice the value", 0.5: "half the value"}
 _SERIES = ("E12", "E24", "E96")
+_TIMES = {-2: "a hundredth of", -1: "a tenth of", 1: "ten times", 2: "a hundred times"}  # by decades
+_TRIED = ("a probe's factor", "swapped channels", "another reel", "one wrong part", "two exchanged")
 _NEAR = 0.05  # of ln: an estimate this near to a round factor is taken for it
 
 
@@ -24,6 +26,9 @@ def suspects_of(
 ) -> dict[str, tuple[Suspect, ...]]:
     """Return suspects by stage; one about several stages is with the first of them."""
     found: dict[str, tuple[Suspect, ...]] = {}
+    if len(judgements) == len(names) > 1 and not any(judgement.explained for judgement in judgements):
+        delta = min(judgement.delta_chi_square for judgement in judgements)
+        return {names[0]: (Suspect(f"all stages: {_unexplained(names)}", "unexplained", (), None, delta),)}
     for judgement in judgements:
         first = judgement.candidates[0]
         where = names[first.stages[0]]
@@ -36,11 +41,8 @@ def _suspect(judgement: Judgement, circuits: Sequence[Circuit], names: Sequence[
     parts = tuple(dict.fromkeys(name for h in judgement.candidates for name in _parts(h, circuits)))
     delta = judgement.delta_chi_square
     if not judgement.explained:
-        text = (
-            "outside what tolerances and U allow, and no single part, swap, common factor or bench fault gives these "
-            "figures: more than one part?"
-        )
-        return Suspect(_at(first, names) + text, "unexplained", (), None, delta)
+        text = f"{names[first.stages[0]]}: {_unexplained(names)}"
+        return Suspect(text, "unexplained", (), None, delta)
     if others:
         alternatives = "; ".join(_short(h, circuits, names) for h in judgement.candidates)
         return Suspect(
@@ -51,9 +53,16 @@ def _suspect(judgement: Judgement, circuits: Sequence[Circuit], names: Sequence[
     )
 
 
+def _unexplained(names: Sequence[str]) -> str:
+    """Return what was tried in vain, no more than was."""
+    tried = ", ".join((*_TRIED, "another stage's test point") if len(names) > 1 else _TRIED)
+    return f"outside what tolerances and U allow, and none of these gives it: {tried}. More than one fault?"
+
+
 def _at(hypothesis: Hypothesis, names: Sequence[str]) -> str:
     """Return the stage as it begins a sentence, nothing where the board is meant."""
-    return f"{names[hypothesis.stages[0]]}: " if hypothesis.kind in ("part", "swapped", "tap", "nothing") else ""
+    is_board = hypothesis.kind == "common" or (hypothesis.kind in ("probe", "channels") and len(hypothesis.stages) > 1)
+    return "" if is_board else f"{names[hypothesis.stages[0]]}: "
 
 
 def _kind(hypothesis: Hypothesis) -> str:
@@ -109,16 +118,25 @@ def _told(hypothesis: Hypothesis, circuits: Sequence[Circuit], names: Sequence[s
         case "common":
             return f"all {hypothesis.names[0]}s read about {percent:.2g} % {high}: another reel or another type?"
         case "probe":
-            since = "all stages read" if hypothesis.stages[0] == 0 else f"from {names[hypothesis.stages[0]]} on"
-            verb = "" if hypothesis.stages[0] == 0 else " every stage reads"
-            way = "ten times the gain" if hypothesis.log_factor > 0.0 else "a tenth of the gain"
-            return f"{since}{verb} {way}: is a probe's factor set as the bench file says?"
+            way = f"{_TIMES[round(hypothesis.log_factor / log(10.0))]} the gain"
+            return f"{_where(hypothesis, names)}{way}: is the probe's factor set as the bench file says?"
         case "channels":
-            return "all gains read upside down: are the two channels swapped?"
+            return f"{_where(hypothesis, names)}its gain upside down: are the two channels swapped?"
         case "tap":
             return f"reads like {names[hypothesis.stages[1]]}: is the probe on another test point?"
         case "nothing":
             return "nothing, by an unlikely chance"
+
+
+def _where(hypothesis: Hypothesis, names: Sequence[str]) -> str:
+    """Return who reads so: a stage that was named already, all, or those from one on."""
+    if len(hypothesis.stages) == 1:
+        return "reads "
+    return (
+        "every stage reads "
+        if hypothesis.stages[0] == 0
+        else f"from {names[hypothesis.stages[0]]} on every stage reads "
+    )
 
 
 def _part_told(hypothesis: Hypothesis, circuits: Sequence[Circuit]) -> str:

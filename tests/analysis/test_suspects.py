@@ -12,7 +12,7 @@ from bandproof.analysis.circuits import MfbParts, mfb_design, mfb_figures, mfb_n
 from bandproof.analysis.curve import figure_slopes
 from bandproof.analysis.elements import OpAmp
 from bandproof.analysis.suspects import judged
-from bandproof.analysis.tolerances import Circuit, Seen, least_distance, outside, spread
+from bandproof.analysis.tolerances import Circuit, Seen, covariance, least_distance, outside
 
 PARTS = ("R_in", "R_shunt", "R_feedback", "C_1", "C_2")
 KINDS = ("resistor", "resistor", "resistor", "capacitor", "capacitor")
@@ -58,6 +58,14 @@ def seen(circuits, factors=None, u=U):
     return found
 
 
+def moved(given, gains):
+    """Return what is measured with gains times factors {stage: factor}."""
+    return [
+        Seen(one.figures + np.array([0.0, 0.0, np.log(gains.get(i, 1.0))]), one.covariance)
+        for i, one in enumerate(given)
+    ]
+
+
 def suspects(factors, **options):
     circuits = board(**options)
     return judged(circuits, seen(circuits, factors))
@@ -93,12 +101,12 @@ def test_slopes_where_there_is_no_band_are_not_a_number():
     assert np.isnan(found[1]).all()
 
 
-def test_spread_is_that_of_drawn_parts():
+def test_covariance_is_that_of_drawn_parts():
     """Parts drawn uniformly: their figures' covariance, by its own standard error (normal theory, from memory)."""
     one, count = circuit(1e3), 4000
     rng = np.random.default_rng(5)
     drawn = figures(one.values * (1.0 + np.array(TOLERANCES) * rng.uniform(-1.0, 1.0, (count, 5))))
-    expected = spread(one, one.slopes, Seen(one.nominal, np.zeros((3, 3))))
+    expected = covariance(one, one.slopes, Seen(one.nominal, np.zeros((3, 3))))
     size = np.sqrt(np.outer(np.diag(expected), np.diag(expected)) + expected**2) / np.sqrt(count)
     assert (np.abs(np.cov(drawn.T) - expected) < 4.0 * size).all()
 
@@ -147,7 +155,7 @@ def test_parts_within_tolerance_are_not_accused_however_unlikely(corner, errors)
     factors = {("all", part): 1.0 + t * c for part, t, c in zip(PARTS, TOLERANCES, corner, strict=True)}
     given = [Seen(one.figures + 0.7 * U * rng.standard_normal(3), one.covariance) for one in seen(circuits, factors)]
     away = [one.figures - c.nominal for c, one in zip(circuits, given, strict=True)]
-    far = sum(d @ np.linalg.solve(spread(c, c.slopes, s), d) for c, s, d in zip(circuits, given, away, strict=True))
+    far = sum(d @ np.linalg.solve(covariance(c, c.slopes, s), d) for c, s, d in zip(circuits, given, away, strict=True))
     assert corner == UNLIKELY["one reel"] or far > chi2.ppf(0.99, 9)  # so a distance with their spread would accuse
     assert judged(circuits, given) == []
 
@@ -225,12 +233,7 @@ def test_two_bad_stages_are_told_one_by_one():
 @pytest.mark.parametrize("factor", [0.1, 10.0])
 def test_a_probe_factor_from_some_stage_on_is_the_bench(first, factor):
     circuits = board(gain=3.9)  # at 10 dB a tenth and upside down are the same
-    given = seen(circuits)
-    moved = [
-        Seen(one.figures + np.array([0.0, 0.0, np.log(factor) * (i >= first)]), one.covariance)
-        for i, one in enumerate(given)
-    ]
-    (found,) = judged(circuits, moved)
+    (found,) = judged(circuits, moved(seen(circuits), dict.fromkeys(range(first, len(circuits)), factor)))
     assert [(h.kind, h.stages[0]) for h in found.candidates] == [("probe", first)]
     assert np.exp(found.candidates[0].log_factor) == pytest.approx(factor)
 
@@ -240,6 +243,51 @@ def test_gains_upside_down_are_swapped_channels():
     given = [Seen(one.figures * [1.0, 1.0, -1.0], one.covariance) for one in seen(circuits)]
     (found,) = judged(circuits, given)
     assert [h.kind for h in found.candidates] == ["channels"]
+
+
+def test_all_stages_at_ten_times_the_gain_are_one_probe_though_each_alone_could_be():
+    circuits = board(gain=3.9)
+    (found,) = judged(circuits, moved(seen(circuits), {0: 10.0, 1: 10.0, 2: 10.0}))
+    assert [(h.kind, h.stages) for h in found.candidates] == [("probe", (0, 1, 2))]
+
+
+@pytest.mark.parametrize("stage", [1, 2])
+@pytest.mark.parametrize("factor", [0.01, 0.1, 10.0, 100.0])
+def test_a_probe_factor_of_one_stage_only_is_the_bench(stage, factor):
+    circuits = board(gain=3.9)
+    (found,) = judged(circuits, moved(seen(circuits), {stage: factor}))
+    (named,) = found.candidates
+    assert (named.kind, named.stages) == ("probe", (stage,))
+    assert np.exp(named.log_factor) == pytest.approx(factor)
+
+
+@pytest.mark.parametrize("count", [1, 3])
+def test_a_stage_upside_down_is_swapped_channels(count):
+    circuits = board(gain=3.9)[:count]
+    given = seen(circuits)
+    given[-1] = Seen(given[-1].figures * [1.0, 1.0, -1.0], given[-1].covariance)
+    (found,) = judged(circuits, given)
+    assert [(h.kind, h.stages) for h in found.candidates] == [("channels", (count - 1,))]
+
+
+@pytest.mark.parametrize("factor", [0.1, 10.0])
+def test_a_board_of_one_stage_has_bench_faults_too(factor):
+    circuits = board(gain=3.9)[:1]
+    (found,) = judged(circuits, moved(seen(circuits), {0: factor}))
+    assert [(h.kind, h.stages) for h in found.candidates] == [("probe", (0,))]
+    assert found.explained
+
+
+def test_a_board_of_one_stage_can_have_another_reel():
+    circuits = board()[:1]
+    (found,) = judged(circuits, seen(circuits, {("all", "capacitor"): 1.5}))
+    assert ("common", ("capacitor",)) in [(h.kind, h.names) for h in found.candidates]
+
+
+def test_a_bench_fault_at_one_stage_leaves_a_wrong_part_at_another_its_name():
+    circuits = board(gain=3.9)
+    found = judged(circuits, moved(seen(circuits, {(0, "R_in"): 10.0}), {1: 10.0}))
+    assert [(one.candidates[0].kind, one.candidates[0].stages) for one in found] == [("part", (0,)), ("probe", (1,))]
 
 
 def test_figures_of_another_stage_are_a_wrong_tap():

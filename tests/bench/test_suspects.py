@@ -55,8 +55,8 @@ def words(outcome, values):
 
 CIRCUITS = {}
 UNEXPLAINED = (
-    "outside what tolerances and U allow, and no single part, swap, common factor or bench fault gives these "
-    "figures: more than one part?"
+    "outside what tolerances and U allow, and none of these gives it: a probe's factor, swapped channels, another "
+    "reel, one wrong part, two exchanged, another stage's test point. More than one fault?"
 )
 # What is wrong with the demo's low stage (R_in 14.3 kΩ, R_shunt 34 kΩ, R_feedback 90.9 kΩ, C 33 nF), and what is said.
 SENTENCES = {
@@ -102,7 +102,7 @@ def test_a_probe_factor_is_sought_at_the_bench(outcome):
     given = with_parts(outcome, {})
     ten = [with_figures(r, [r.figures[n].measured * (10.0 if n == "gain" else 1.0) for n in QUANTITIES]) for r in given]
     (suspect,) = said(outcome, ten)
-    assert suspect.text == "all stages read ten times the gain: is a probe's factor set as the bench file says?"
+    assert suspect.text == "every stage reads ten times the gain: is the probe's factor set as the bench file says?"
     assert suspect.kind == "bench"
 
 
@@ -111,6 +111,45 @@ def test_a_probe_left_on_the_stage_before_is_named(outcome):
     (suspect,) = said(outcome, [low, with_figures(body, [low.figures[name].measured for name in QUANTITIES])])
     assert suspect.text == "body: reads like low: is the probe on another test point?"
     assert suspect.kind == "bench"
+
+
+def times(results, gains):
+    """Return results with gains times factors {stage: factor}."""
+    return [
+        with_figures(r, [r.figures[n].measured * (gains.get(r.name, 1.0) if n == "gain" else 1.0) for n in QUANTITIES])
+        for r in results
+    ]
+
+
+@pytest.mark.parametrize(
+    ("factor", "words"),
+    [(10.0, "ten times"), (0.1, "a tenth of"), (100.0, "a hundred times"), (0.01, "a hundredth of")],
+)
+def test_a_probe_factor_of_one_stage_is_sought_there(outcome, factor, words):
+    (suspect,) = said(outcome, times(with_parts(outcome, {}), {"body": factor}))
+    if factor == 0.1:  # the gain is 9.8 dB: a tenth of it and upside down are alike
+        assert suspect.text.startswith("body: not distinguishable: reads a tenth of the gain; reads its gain upside")
+    else:
+        assert suspect.text == f"body: reads {words} the gain: is the probe's factor set as the bench file says?"
+        assert suspect.kind == "bench"
+
+
+def test_a_board_of_one_stage_tells_bench_faults_too(outcome):
+    low, _ = times(with_parts(outcome, {}), {"low": 10.0})
+    (suspect,) = said(outcome, [low])
+    assert suspect.text == "low: reads ten times the gain: is the probe's factor set as the bench file says?"
+
+
+def test_what_explains_no_stage_at_all_is_one_sentence(outcome):
+    (suspect,) = said(outcome, times(with_parts(outcome, {}), {"low": 2.0, "body": 2.0}))
+    assert suspect.text == f"all stages: {UNEXPLAINED}"
+
+
+def test_a_board_of_one_stage_has_no_other_test_point_to_look_at(outcome):
+    low, _ = times(with_parts(outcome, {}), {"low": 2.0})
+    (suspect,) = said(outcome, [low])
+    fewer = UNEXPLAINED.replace(", another stage's test point", "")
+    assert suspect.text == f"low: {fewer}"
 
 
 # --- silence ---
