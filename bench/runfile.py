@@ -28,7 +28,7 @@ from bandproof.bench.types import Point, Run
 if TYPE_CHECKING:
     import h5py
 
-__all__ = ["SCHEMA", "digest_of", "read_columns", "read_result", "read_run", "write_run"]
+__all__ = ["SCHEMA", "digest_of", "read_columns", "read_result", "read_run", "read_version", "write_run"]
 
 _T = TypeVar("_T")
 _LARGEST = 4_000_000_000  # bytes read for a digest; arbitrary
@@ -207,6 +207,11 @@ def _truncated(size: int) -> str:
 def read_result(path: Path) -> dict[str, Any]:
     """Return the result object stored in a run file (RunFileDamaged as digest_of)."""
     return _read(path, lambda file: cast(dict[str, Any], json.loads(_text(file, "result"))))
+
+
+def read_version(path: Path) -> int:
+    """Return the version of the schema of a run file (RunFileDamaged as digest_of)."""
+    return _read(path, lambda file: int(file.attrs["schema"].rpartition(b"/")[2]))
 
 
 def read_columns(path: Path) -> dict[str, dict[str, tuple[str, list[Any]]]]:

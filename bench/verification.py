@@ -10,14 +10,16 @@ from bandproof.bench.chain import Chain, chain_of
 from bandproof.bench.documents.stored import Stored, read_stored
 from bandproof.bench.errors import BadInput, RunFileDamaged
 from bandproof.bench.result import board_verdict, stage_object
-from bandproof.bench.runfile import digest_of, read_result, read_run
+from bandproof.bench.run_schema import READABLE
+from bandproof.bench.runfile import digest_of, read_result, read_run, read_version
 from bandproof.bench.types import Run
 
 __all__ = ["RunAltered", "Verified", "verified"]
 
 # Part of U by which a figure or its U may come out otherwise. A fit ends within 1e-8 of its parameters' own standard
 # uncertainties (analysis/least_squares.py) whichever way rounding leads it there, and U follows from it without steps;
-# a hundred times that is left for the arithmetic of other library versions. What is smaller changes no digit shown.
+# a hundred times that is left for the arithmetic of other library versions (kernels for five generations of processors
+# differ by 4e-13 U, measured). What is smaller changes no digit shown.
 _SHARE = 1e-6
 _COMPARED = ("designed", "lower_limit", "upper_limit", "measured", "expanded_uncertainty")
 
@@ -80,7 +82,7 @@ def verified(path: Path) -> Verified:
         reasons = list(_differences(read_stored(path)))
     except Exception as problem:  # whatever it is: a file that the program wrote can be evaluated
         reasons = [f"what it holds cannot be evaluated ({type(problem).__name__}: {problem})"]
-    notes, compared = [], True
+    notes, compared = _of_version(read_version(path)), True
     if reasons and (absent := _absent_attempts(path, result)):
         reasons, compared = [], False
         notes.append(
@@ -101,6 +103,13 @@ def verified(path: Path) -> Verified:
         notes += _unchained(chain, path)
         reasons += _against_chain(chain, path, digest) if chain else []
     return Verified(run, digest, compared, tuple(reasons), tuple(notes), chain, path)
+
+
+def _of_version(number: int) -> list[str]:
+    older = (
+        f"it has schema version {number}, older than this bandproof writes ({READABLE[-1]}); it is read all the same"
+    )
+    return [older] if number < READABLE[-1] else []
 
 
 def _differences(stored: Stored) -> Iterator[str]:

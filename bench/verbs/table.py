@@ -30,7 +30,7 @@ VERBS = (
     Verb("fit", "refit", "fit stored runs again, changing nothing that was measured"),
     Verb("report", "report", "write a stored run as a PDF document"),
     Verb("import", "elsewhere", "fit a response measured elsewhere (CSV); with a board compare it"),
-    Verb("verify", "integrity", "check that a run file is as it was written"),
+    Verb("verify", "integrity", "tell whether a run file is sound, damaged or altered"),
 )
 
 

@@ -9,6 +9,7 @@ import h5py
 import numpy as np
 import pytest
 
+from bandproof.bench import verification
 from bandproof.bench.chain import CHAIN
 from bandproof.bench.documents.report import report_bytes
 from bandproof.bench.documents.stored import read_stored
@@ -143,6 +144,13 @@ def test_a_run_that_is_put_in_the_place_of_another_is_altered(folder):
     shutil.copy(folder / "FAIL-1/1/run.h5", folder / "PASS-1/1/run.h5")
     (reason,) = verified(folder / "PASS-1/1/run.h5").reasons
     assert "not the run that was made there" in reason
+
+
+def test_an_older_version_that_is_still_read_is_told(folder, monkeypatch):
+    monkeypatch.setattr(verification, "READABLE", (1, 2))
+    found = verified(folder / "PASS-1/1/run.h5")
+    assert found.reasons == ()
+    assert found.notes == ("it has schema version 1, older than this bandproof writes (2); it is read all the same",)
 
 
 # --- what cannot be seen is said, not called altered ---
