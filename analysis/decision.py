@@ -153,6 +153,7 @@ def decide(
     prior: Prior | None = None,
     below: Callable[[FloatArray], FloatArray] | None = None,
     doubt: str = "",
+    reach: float = inf,
 ) -> Decision:
     """Return the verdict on one measured value; parameters as for `outcomes`.
 
@@ -160,6 +161,8 @@ def decide(
     ----------
     doubt : str
         Why the value cannot be trusted (a material misfit, a missing point); makes the verdict undecided.
+    reach : float
+        How far what is doubted can move the value, and U: a value farther outside its limits fails all the same.
 
     Examples
     --------
@@ -171,7 +174,11 @@ def decide(
     if doubt or value != value:
         if not low <= high:
             raise ValueError(f"low must not be above high, found {low!r} and {high!r}")
-        return Decision("undecided", float("nan"), doubt or "no value")
+        if low - reach <= value <= high + reach or value != value:
+            return Decision("undecided", float("nan"), doubt or "no value")
+        return Decision(
+            "fail", 0.0, f"{_reason(value, low, high, 'fail', SIMPLE)}, farther than what is doubted: {doubt}"
+        )
     code = outcomes(np.asarray(value), u, low=low, high=high, rule=rule, expanded=expanded, prior=prior, below=below)
     probability = float(_probability(np.asarray(value), np.asarray(u), low, high, prior, below))
     return Decision(_WORDS[int(code)], probability, _reason(value, low, high, _WORDS[int(code)], rule))

@@ -1,7 +1,7 @@
 """A fitted figure beside its design: what it is, how sure, within its limits or not."""
 
 from functools import partial
-from math import nan
+from math import inf, nan
 
 from bandproof.analysis.decision import decide
 from bandproof.analysis.fit import BandFit
@@ -26,11 +26,20 @@ def figure(fit: BandFit | None, quantity: Quantity) -> tuple[float, float]:
 
 
 def compared(
-    stage: Stage, quantity: Quantity, prediction: Prediction, fit: BandFit | None, budget: Combined | None, doubt: str
+    stage: Stage,
+    quantity: Quantity,
+    prediction: Prediction,
+    fit: BandFit | None,
+    budget: Combined | None,
+    doubt: str,
+    reach: float = inf,
 ) -> Comparison:
-    """Return a figure of a stage compared with its limits; ``doubt`` says why no verdict can be given, or nothing."""
+    """Return a figure of a stage compared with its limits.
+
+    ``doubt`` says why no verdict can be given, or nothing; ``reach`` how far that can move the figure.
+    """
     value, repeatability = figure(fit, quantity)
-    return judged(stage, quantity, prediction[quantity], value, repeatability, budget, doubt)
+    return judged(stage, quantity, prediction[quantity], value, repeatability, budget, doubt, reach)
 
 
 def judged(
@@ -41,6 +50,7 @@ def judged(
     repeatability: float,
     budget: Combined | None,
     doubt: str,
+    reach: float = inf,
 ) -> Comparison:
     """Return a measured value of a figure compared with the limits of its stage, as `compared` does."""
     limit = stage.limits[quantity]
@@ -54,6 +64,7 @@ def judged(
         prior=limit.prior,
         below=partial(probability_below, budget.rows) if budget and budget.u else None,
         doubt=doubt,
+        reach=reach + (budget.expanded if budget else 0.0),
     )
     return Comparison(
         quantity=quantity,

@@ -120,7 +120,10 @@ def evaluate_stage(
     prediction = predict(board, stage)
     seen, listed, misfit, doubt = _look(board, bench, stage, points, found, ambient, checks)
     rows = budgets(seen, listed) if seen else {}
-    figures = {name: compared(stage, name, prediction, found.fit, rows.get(name), doubt) for name in QUANTITIES}
+    figures = {
+        name: compared(stage, name, prediction, found.fit, rows.get(name), doubt, misfit.reach(name))
+        for name in QUANTITIES
+    }
     fit = found.fit
     alarms = [doubt] if doubt else []
     expanded_gain = rows["gain"].expanded if rows else nan

@@ -2,7 +2,7 @@
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
-from math import log10, nan, pi, sqrt
+from math import inf, log10, nan, pi, sqrt
 
 import numpy as np
 from scipy.special import chdtrc
@@ -18,6 +18,7 @@ __all__ = ["Misfit", "StageFit", "arrays", "look_for_misfit"]
 
 _SIGNIFICANT = 1e-4  # noise alone makes a chi-square this unlikely once in ten thousand stages
 _MATERIAL = 1.0 / 3.0  # of U: a shift below it is not worth a doubt
+_FARTHEST = 3.0  # times what a leakage moves a figure: as far as a misfit may; arbitrary
 _NOISE = 5.0  # standard uncertainties a closing point may differ by
 _DRIFTED = 0.01  # and this part of it; arbitrary, far above what a bench drifts in a minute
 _CERTAIN = 3.0  # times U of the delay
@@ -82,6 +83,12 @@ class Misfit:
                 f"noise and declared errors give); a leakage would move {' and '.join(moved)} by more than a third of U"
             )
         return ""
+
+    def reach(self, quantity: Quantity) -> float:
+        """Return how far what is doubted can move a figure: no bound is known of a change, clipping, or no model."""
+        if self.changed or self.distorted or not self.shifts:
+            return inf
+        return _FARTHEST * abs(self.shifts[quantity])
 
 
 def arrays(points: Sequence[Point]) -> tuple[FloatArray, ComplexArray, FloatArray]:

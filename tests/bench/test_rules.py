@@ -146,6 +146,28 @@ def test_rule_and_prior_are_told(outcome):
     ]
 
 
+def leaking(outcome, centre):
+    """Return the first stage's result when a leakage passes its band by, with limits of its centre frequency."""
+    run = outcome.run
+    points = [
+        replace(p, response=p.response + 0.2) if p.stage == "low" and p.purpose != "no-signal" else p
+        for p in run.points
+    ]
+    first = run.board.stages[0]
+    limits = {**first.limits, "centre": replace(first.limits["centre"], lower=centre[0], upper=centre[1])}
+    stages = (replace(first, limits=limits), *run.board.stages[1:])
+    return evaluate(replace(run, points=tuple(points), board=replace(run.board, stages=stages)))[0]
+
+
+def test_a_figure_in_doubt_fails_only_farther_outside_than_the_doubt_can_move_it(outcome):
+    near, far = leaking(outcome, (150.0, 160.0)), leaking(outcome, (150.0, 158.0))
+    assert "do not follow a second-order band" in near.alarms[0]
+    assert [figure.verdict for figure in near.figures.values()] == ["undecided"] * 3
+    assert [figure.verdict for figure in far.figures.values()] == ["fail", "undecided", "undecided"]
+    assert (far.verdict, far.figures["centre"].conformance_probability) == ("fail", 0.0)
+    assert far.figures["centre"].measured == near.figures["centre"].measured > 160.0
+
+
 # --- the whole board ---
 
 
