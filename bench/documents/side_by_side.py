@@ -22,8 +22,18 @@ from bandproof.bench.types import QUANTITIES, Comparison, Run, StageResult
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
+    from matplotlib.figure import Figure
 
-__all__ = ["Side", "change", "change_in_U", "in_order", "read_side", "side_by_side_bytes", "write_side_by_side"]
+__all__ = [
+    "Side",
+    "change",
+    "change_in_U",
+    "draw_both",
+    "in_order",
+    "read_side",
+    "side_by_side_bytes",
+    "write_side_by_side",
+]
 
 _TEMPLATE = "side_by_side.typ"
 _NAMES = ("before", "after")
@@ -109,6 +119,7 @@ def change_in_U(before: Comparison, after: Comparison) -> float:
 
 def _content(before: Side, after: Side) -> dict[str, Any]:
     run, sides = after.run, (before, after)
+    drawn = [views(side.run, side.stages) for side in sides]
     return {
         "head": {
             "title": run.board.title,
@@ -121,7 +132,7 @@ def _content(before: Side, after: Side) -> dict[str, Any]:
         },
         "facts": _facts(before, after),
         "rows": _rows(before.stages, after.stages),
-        "picture": _picture([views(side.run, side.stages) for side in sides]),
+        "picture": as_svg(draw_both(*drawn)) if any(drawn) else None,
         "cautions": [*_differences(before.run, run), *_told(sides, "alarms")],
         "suspects": _told(sides, "suspects"),
     }
@@ -214,15 +225,12 @@ def _told(sides: Sequence[Side], what: str) -> list[str]:
 # --- the picture ---
 
 
-def _picture(drawn: Sequence[Sequence[StageView]]) -> str | None:
+def draw_both(before: Sequence[StageView], after: Sequence[StageView]) -> "Figure":
     """Return both runs' curves: the later one broad and grey with dots, the earlier one dashed with rings over it."""
-    if not any(drawn):
-        return None
     from matplotlib.figure import Figure
 
     figure = Figure(figsize=_SIZE, layout="constrained")
     axes = figure.add_subplot()
-    before, after = drawn
     for view in after:
         _draw(axes, view, "-", color="0.65", width=2.4)
         axes.plot(view.at, _dB(view.measured), "o", markersize=2.2, color="black", zorder=4)
@@ -233,7 +241,7 @@ def _picture(drawn: Sequence[Sequence[StageView]]) -> str | None:
         )
     _draw_limits(axes, after or before)
     _dress(axes, [*before, *after])
-    return as_svg(figure)
+    return figure
 
 
 def _dB(ratio: Any) -> Any:
