@@ -21,13 +21,13 @@ from bandproof.analysis.decision import (
 from bandproof.analysis.uncertainty import Row, combine, coverage_factor
 
 
-# Source: JCGM 106:2012, Zener diode and motor oil examples (0.92 and 0.66 published)
-@pytest.mark.parametrize(
-    ("value", "u", "low", "high", "probability"),
-    [(-5.47, 0.05, -inf, -5.40, 0.919243), (13.6, 1.8, 12.5, 16.3, 0.662630)],
-)
-def test_conformance_probability_of_the_guide(value, u, low, high, probability):
-    assert conformance_probability(value, u, low=low, high=high) == pytest.approx(probability, abs=5.1e-7)
+# Source: JCGM 106:2012, Zener diode and motor oil examples
+@pytest.mark.parametrize(("example", "published"), [("zener", 0.92), ("motor_oil", 0.66)])
+def test_conformance_probability_of_the_guide(outside, example, published):
+    case = tomllib.loads((outside / "conformity.toml").read_text())[example]
+    found = conformance_probability(case["y"], case["u"], low=case.get("lower", -inf), high=case["upper"])
+    assert found == pytest.approx(case["pc"], abs=1e-8)
+    assert round(found, 2) == published
 
 
 def test_conformance_probability_keeps_its_digits_in_the_tail():

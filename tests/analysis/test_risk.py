@@ -1,4 +1,4 @@
-"""Risks of wrong decisions against published ones, and against draws."""
+"""The witness of risks (tests/benchmarks/_risk.py) against published ones, and against draws."""
 
 from __future__ import annotations
 
@@ -9,7 +9,7 @@ import numpy as np
 import pytest
 from scipy.special import ndtri
 
-from bandproof.analysis.risk import guard_band, normal_process, risks
+from tests.benchmarks._risk import normal_process, risks
 
 EXACT = 5e-7  # of a probability
 
@@ -40,12 +40,10 @@ def test_risks_of_the_ball_bearings_are_those_of_the_guide(published, bearings):
     assert (round(100 * found.outside, 1), round(100 * found.consumer, 1)) == (4.2, 0.8)  # as printed
 
 
-def test_guard_band_of_the_ball_bearings_is_that_of_the_guide(published, bearings):
+def test_risks_at_the_acceptance_limit_of_the_ball_bearings_are_those_of_the_guide(published, bearings):
     case = published["bearings"]
-    limit = case["upper"] - guard_band(*bearings, 0.001, high=case["upper"])
-    assert limit == pytest.approx(case["limit_for_0001"], abs=EXACT)
-    assert round(limit, 2) == 1.67  # as printed
-    found = risks(*bearings, high=case["upper"], accept_high=limit)
+    assert round(case["limit_for_0001"], 2) == 1.67  # as printed
+    found = risks(*bearings, high=case["upper"], accept_high=case["limit_for_0001"])
     assert found.consumer == pytest.approx(0.001, abs=1e-9)
     assert found.producer == pytest.approx(case["producer_at_that_limit"], abs=EXACT)
 
@@ -99,13 +97,8 @@ def test_guard_bands_that_cross_accept_nothing():
     assert found.producer == pytest.approx(1.0 - found.outside, abs=1e-12)
 
 
-def test_what_no_guard_band_can_give_is_refused():
+def test_what_has_no_risk_is_refused():
     process = normal_process(0.0, 1.0)
-    for consumer in (0.0, 0.4):  # 0.317 are outside at all
-        with pytest.raises(ValueError, match="no guard band gives"):
-            guard_band(*process, 0.2, consumer, low=-1.0, high=1.0)
-    with pytest.raises(ValueError, match="u must be above 0"):
-        guard_band(*process, 0.0, 0.01, low=-1.0, high=1.0)
     with pytest.raises(ValueError, match="u must not be negative"):
         risks(*process, -1.0)
     with pytest.raises(ValueError, match="low must not be above high"):

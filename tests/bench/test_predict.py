@@ -10,7 +10,6 @@ import pytest
 from bandproof.analysis.curve import network_figures
 from bandproof.analysis.decision import outcomes
 from bandproof.analysis.one_pole import one_pole_figures
-from bandproof.analysis.risk import risks
 from bandproof.analysis.spread import drawn, fraction, spread_of
 from bandproof.bench.board_file import parse_board
 from bandproof.bench.circuit import draw_parts, stage_network, taps
@@ -24,6 +23,7 @@ from bandproof.bench.types import QUANTITIES, Limit
 from bandproof.bench.verbs.console import run
 from bandproof.bench.verbs.rehearse import world_of
 from tests.benchmarks import _direct, predicted
+from tests.benchmarks._risk import risks
 
 DONE, BAD_INPUT = 0, 2
 FOUR = 4.0  # standard errors

@@ -14,7 +14,7 @@ from math import sqrt
 import numpy as np
 
 from bandproof.analysis.decision import SIMPLE, Rule, outcomes
-from bandproof.analysis.risk import Risks, normal_process, risks
+from tests.benchmarks._risk import Risks, normal_process, risks
 
 CP, FIGURES = 1.33, 30
 LIMIT = 3.0 * CP  # standard deviations of the process

@@ -2,7 +2,7 @@
 
 Source: JCGM 106:2012, 9.5: global risks are integrals of the prior of the property times the probability that its
 measured value, normal around it, falls inside the acceptance limits. Nothing is drawn: the inner integral is the
-normal distribution function, the outer one is done by quadrature.
+normal distribution function, the outer one is done by quadrature. The program counts drawn boards; this is the witness.
 """
 
 from __future__ import annotations
@@ -12,7 +12,7 @@ from dataclasses import dataclass
 from itertools import pairwise
 from math import exp, inf, isfinite, pi, sqrt
 
-__all__ = ["Risks", "guard_band", "normal_process", "risks"]
+__all__ = ["Risks", "normal_process", "risks"]
 
 Density = Callable[[float], float]
 _TAIL = 40.0  # standard deviations: a normal density is 0 beyond
@@ -129,50 +129,6 @@ def risks(
         consumer=consumer,
         producer=integral(lambda x: 1.0 - accepting(x), low, high),
     )
-
-
-def guard_band(
-    density: Density,
-    ends: tuple[float, float],
-    u: float,
-    consumer: float,
-    *,
-    low: float = -inf,
-    high: float = inf,
-    knots: Sequence[float] = (),
-) -> float:
-    """Return the guard band w that keeps the consumer's risk at a wanted value.
-
-    Both limits are drawn in by w (the measured value is accepted from low + w to high - w); parameters as for `risks`.
-    A negative w widens them: the risk would be lower without.
-
-    Raises
-    ------
-    ValueError
-        No guard band gives that risk (it is above the fraction that does not conform at all, or not above 0).
-
-    Examples
-    --------
-    >>> w = guard_band(*normal_process(0.0, 4.0), 1.0, 0.0080060848, low=-8.0, high=8.0)
-    >>> abs(w) < 1e-6  # the risk that the limits themselves have
-    True
-    """
-    from scipy.optimize import brentq
-
-    if not u > 0.0:
-        raise ValueError(f"u must be above 0, found {u!r}")
-
-    def excess(w: float) -> float:
-        drawn_in = (low + w, high - w)
-        found = risks(
-            density, ends, u, low=low, high=high, accept_low=drawn_in[0], accept_high=drawn_in[1], knots=knots
-        )
-        return found.consumer - consumer
-
-    widest, narrowest = -_TAIL * u, min(_TAIL * u, 0.5 * (high - low))
-    if not (consumer > 0.0 and excess(widest) > 0.0 > excess(narrowest)):
-        raise ValueError(f"no guard band gives a consumer's risk of {consumer!r}")
-    return float(brentq(excess, widest, narrowest, xtol=1e-12 * u, rtol=1e-14))
 
 
 def _accepting(u: float, low: float, high: float) -> Density:
