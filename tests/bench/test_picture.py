@@ -3,12 +3,19 @@
 import math
 import re
 from dataclasses import replace
+from itertools import combinations
 
 import numpy as np
 import pytest
+from matplotlib.backends.backend_agg import FigureCanvasAgg
+from matplotlib.colors import to_rgb
+from matplotlib.figure import Figure
+from matplotlib.text import Text
 
+from bandproof.bench.documents.stage_picture import draw_stage
 from bandproof.bench.evaluate import views
-from bandproof.bench.picture import draw, save
+from bandproof.bench.picture import draw, image, save, ticks
+from bandproof.bench.types import PASSIVE
 
 
 @pytest.fixture
@@ -103,3 +110,156 @@ def test_a_stage_that_fails_is_drawn_filled(two):
 def test_a_png_is_written_by_its_ending(two, tmp_path):
     save(draw(two, "title"), tmp_path / "picture.png")
     assert (tmp_path / "picture.png").read_bytes().startswith(b"\x89PNG\r\n")
+
+
+# --- one stage ---
+
+
+def curves(axes):
+    return {line.get_label(): line for line in axes.lines if not line.get_label().startswith("_")}
+
+
+def dB(ratio):
+    return 20 * np.log10(np.abs(ratio))
+
+
+@pytest.fixture
+def passive(outcome):
+    board = outcome.run.board
+    stages = tuple(replace(stage, circuit=PASSIVE) for stage in board.stages)
+    return views(replace(outcome.run, board=replace(board, stages=stages)), outcome.stages)[0]
+
+
+@pytest.fixture
+def moved(outcome):
+    """A stage whose limits lie far below what was measured."""
+    first = outcome.stages[0]
+    centre = first.figures["centre"]
+    names = ("designed", "lower_limit", "upper_limit")
+    far = replace(centre, **{name: getattr(centre, name) / 30 for name in names})
+    return views(outcome.run, [replace(first, figures={**first.figures, "centre": far})])[0]
+
+
+@pytest.fixture(params=["healthy", "passive", "moved"])
+def any_view(request, two, passive, moved):
+    return {"healthy": two[0], "passive": passive, "moved": moved}[request.param]
+
+
+def test_the_predicted_curve_has_the_predicted_figures(two):
+    line = curves(draw_stage(two[1]).axes[0])["predicted from the parts"]
+    figures = two[1].result.figures
+    highest = np.argmax(line.get_ydata())
+    spacing = two[1].near[1] / two[1].near[0]
+    # The greatest of a grid is within its spacing, there less than (Q spacing)^2 / 2 low.
+    assert abs(np.log(line.get_xdata()[highest] / figures["centre"].predicted)) < np.log(spacing)
+    low = 1 + 0.5 * (2 * figures["q"].predicted * np.log(spacing)) ** 2
+    assert 0 <= dB(figures["gain"].predicted) - line.get_ydata()[highest] < dB(low)
+
+
+def test_nothing_is_predicted_of_a_passive_stage(passive, two):
+    assert "predicted from the parts" not in curves(draw_stage(passive).axes[0])
+    assert two[0].predicted is not None
+
+
+def test_lines_are_told_apart_without_colour(two):
+    figure = draw_stage(two[0])
+    drawn = curves(figure.axes[0])
+    styles = {name: (line.get_linestyle(), line.get_marker(), line.get_linewidth()) for name, line in drawn.items()}
+    assert len(set(styles.values())) == len(styles) == 4
+    for line in drawn.values():
+        assert len(set(to_rgb(line.get_color()))) == 1 or line.get_linestyle() == "None"
+        assert len(set(to_rgb(line.get_markeredgecolor()))) == 1 or line.get_marker() == "None"
+    words = [text.get_text() for text in figure.legends[0].get_texts()]
+    assert words == ["within the limits", "designed", "predicted from the parts", "fitted", "measured"]
+
+
+def test_the_mask_reaches_the_limits_of_gain_and_holds_a_sound_stage(two):
+    figures = two[0].result.figures
+    magnitude, phase = draw_stage(two[0]).axes[:2]
+    corners = magnitude.collections[0].get_paths()[0].vertices
+    assert np.isclose(corners[:, 1].max(), dB(figures["gain"].upper_limit), atol=1e-9)
+    for axes in (magnitude, phase):
+        mask = axes.collections[0].get_paths()[0]
+        points = axes.lines[-1].get_xydata()
+        assert len(points) == len(two[0].at)
+        assert mask.contains_points(points).all()
+
+
+def test_bars_are_two_standard_uncertainties_of_each_part(two):
+    view = two[0]
+    scale = 100 / view.result.figures["gain"].measured
+    for axes, uncertainty in zip(draw_stage(view).axes[2:], (view.uncertainty, view.across), strict=True):
+        assert axes.get_ylabel() == "% of gain"
+        bars = axes.containers[0].lines[2][0].get_segments()
+        assert np.allclose([bar[1, 1] - bar[0, 1] for bar in bars], 4 * scale * uncertainty, rtol=1e-12)
+
+
+def test_uncertainty_along_and_across_is_that_of_draws(outcome):
+    def stretched(point):
+        return replace(point, covariance=(1e-6, 3e-7, 9e-6))
+
+    run = replace(outcome.run, points=tuple(map(stretched, outcome.run.points)))
+    view = views(run, outcome.stages)[0]
+    point = next(p for p in run.points if p.stage == view.result.name and p.frequency == view.at[0])
+    cloud = np.random.default_rng(3).multivariate_normal([0, 0], [[1e-6, 3e-7], [3e-7, 9e-6]], 20_000) @ [1, 1j]
+    turned = cloud / (point.response / abs(point.response))
+    # 4 standard errors of a standard deviation of 20 000 draws: 4/sqrt(40 000) = 2 %, and 1 % that the path changes
+    assert np.isclose(turned.real.std(), view.uncertainty[0], rtol=0.03)
+    assert np.isclose(turned.imag.std(), view.across[0], rtol=0.03)
+
+
+def test_the_shaded_band_at_the_centre_is_that_of_the_gain(two):
+    """At the greatest |H| neither f0 nor Q moves it, so its uncertainty is that of the gain by the same noise."""
+    gain, centre = two[0].result.figures["gain"], two[0].result.figures["centre"]
+    edge = draw_stage(two[0]).axes[2].collections[0].get_paths()[0].vertices
+    at = edge[np.abs(np.log(edge[:, 0] / centre.measured)) < np.log(two[0].near[1] / two[0].near[0])]
+    assert np.isclose(at[:, 1].max(), 200 * gain.repeatability / gain.measured, rtol=0.02)
+
+
+def test_all_letters_are_large_enough_inside_and_apart(any_view):
+    figure = draw_stage(any_view, "Talkback voice equalizer   serial TB-0001, attempt 1   low")
+    renderer = FigureCanvasAgg(figure).get_renderer()
+    figure.draw(renderer)
+    words = [text for text in figure.findobj(Text) if text.get_visible() and text.get_text()]
+    for axes in figure.axes:  # labels of ticks beyond the ends are there but not drawn
+        for axis in (axes.xaxis, axes.yaxis):
+            low, high = sorted(axis.get_view_interval())
+            hidden = [tick for tick in axis.get_major_ticks() if not low <= tick.get_loc() <= high]
+            gone = {id(label) for tick in hidden for label in (tick.label1, tick.label2)}
+            words = [text for text in words if id(text) not in gone]
+    assert min(text.get_fontsize() for text in words) >= 7.0
+    boxes = {f"{number} {text.get_text()}": text.get_window_extent(renderer) for number, text in enumerate(words)}
+    assert len(boxes) > 25
+    (left, bottom), (right, top) = figure.bbox.get_points()
+    outside = [name for name, b in boxes.items() if min(b.x0 - left, b.y0 - bottom, right - b.x1, top - b.y1) < 0.0]
+    assert outside == []
+    assert [pair for pair in combinations(boxes, 2) if boxes[pair[0]].overlaps(boxes[pair[1]])] == []
+
+
+def test_a_stage_far_from_its_limits_shows_both(moved):
+    magnitude = draw_stage(moved).axes[0]
+    low, high = magnitude.get_xlim()
+    assert low < moved.result.figures["centre"].lower_limit < moved.at.min() < moved.at.max() < high
+    assert magnitude.get_ylim()[1] > dB(moved.result.figures["gain"].upper_limit)
+
+
+def test_the_same_stage_gives_the_same_bytes(outcome, two):
+    again = views(outcome.run, outcome.stages)[0]
+    for kind in ("svg", "png"):
+        assert image(draw_stage(two[0]), kind) == image(draw_stage(again), kind)
+
+
+@pytest.mark.parametrize(
+    ("low", "high", "labels"),
+    [
+        (2.2e3, 2.8e3, ["2.2 k", "2.4 k", "2.6 k", "2.8 k"]),
+        (15.0, 1.1e3, ["20", "50", "100", "200", "500", "1 k"]),
+        (140.0, 1.08e3, ["150", "200", "300", "400", "600", "800", "1 k"]),
+        (0.9, 1.1e6, ["1", "10", "100", "1 k", "10 k", "100 k", "1 M"]),
+    ],
+)
+def test_frequencies_have_round_labels(low, high, labels):
+    axes = Figure().add_subplot()
+    axes.set_xscale("log")
+    ticks(axes, low, high)
+    assert [label.get_text() for label in axes.get_xticklabels()] == labels
