@@ -1,12 +1,13 @@
 """A fitted figure beside its design: what it is, how sure, within its limits or not."""
 
 from functools import partial
-from math import inf, nan
+from math import inf, log10, nan
 
 from bandproof.analysis.decision import decide
 from bandproof.analysis.fit import BandFit
 from bandproof.analysis.uncertainty import Combined, probability_below
 from bandproof.bench.circuit import Prediction
+from bandproof.bench.quantities import engineering
 from bandproof.bench.types import UNITS, Comparison, Quantity, Stage
 
 __all__ = ["compared", "figure", "judged", "outside_by_design"]
@@ -88,8 +89,13 @@ def judged(
 def outside_by_design(stage: Stage, prediction: Prediction) -> list[str]:
     """Return what the stage's own parts cannot keep, so that the board is not blamed for its drawing."""
     return [
-        f"its parts as drawn should give {quantity} {prediction[quantity]:.4g}, outside its own limits "
-        f"{limit.lower:.4g} to {limit.upper:.4g}: look at the design first"
+        f"its parts as drawn should give {quantity} {_read(quantity, prediction[quantity])}, outside its own limits "
+        f"{_read(quantity, limit.lower)} to {_read(quantity, limit.upper)}: look at the design first"
         for quantity, limit in stage.limits.items()
         if not limit.lower <= prediction[quantity] <= limit.upper
     ]
+
+
+def _read(quantity: Quantity, value: float) -> str:
+    """Return a figure as people read it, with digits enough to see a limit missed by little."""
+    return f"{20.0 * log10(value):.5g} dB" if quantity == "gain" else engineering(value, UNITS[quantity], 6)

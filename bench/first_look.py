@@ -60,7 +60,7 @@ def check_low_level(board: Board, bench: Bench, stage: Stage, point: Point) -> l
             raise BenchFault(
                 f"no signal at {tap} (channel {bench.wires[tap].channel}) while the generator gives "
                 f"{engineering(point.amplitude, 'V')} at {engineering(point.frequency, 'Hz')}: check the probe, the "
-                "route to this test point and the board's supply"
+                "route to this test point and the board's supply; then whether a part is far wrong"
             )
     _check_input(bench, stage, point)
     strange = strange_response(board, stage, point)

@@ -151,7 +151,8 @@ def _overloads(points: Sequence[Point]) -> list[str]:
     if not lost:
         return []
     reach = max(point.ranges[1] for point in lost)
-    return [f"{len(lost)} records were overloaded (range of the output tap up to {reach:.3g} V) and left out"]
+    count = "1 record was" if len(lost) == 1 else f"{len(lost)} records were"
+    return [f"{count} overloaded (range of the output tap up to {reach:.3g} V) and left out"]
 
 
 def _delay(board: Board, bench: Bench, found: StageFit, u: float) -> list[str]:

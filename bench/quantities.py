@@ -1,8 +1,8 @@
 """Quantities as people write them, read into SI by a strict small grammar.
 
 A number, an optional space, a prefix and a unit: ``"4.7 kΩ"``, ``"2.5 kHz"``, ``"12 dB"``, ``"5 %"``; or, for
-resistors and capacitors, the code of IEC 60062 (``"4k7"``, ``"33n"``, ``"4R7"``). A decimal comma, an unknown unit
-and a missing unit are mistakes: nothing is guessed. Printing goes the other way, with engineering prefixes.
+resistors and capacitors, the code of IEC 60062 (``"4k7"``, ``"33n"``, ``"4R7"``; ``"4.7k"`` too). A decimal comma, an
+unknown unit and a missing unit are mistakes: nothing is guessed. Printing goes the other way, with prefixes.
 """
 
 import math
@@ -145,6 +145,8 @@ def read_quantity(text: str | float, kind: Kind) -> float:
 def _scaled(number: float, unit: str, written: str, kind: Kind) -> float:
     if not math.isfinite(number):
         raise _out_of_range(written, kind)
+    if unit in _CODE.get(kind, {}):
+        return _times(number, _CODE[kind][unit], written, kind)
     if unit not in _UNITS[kind]:
         raise QuantityError(
             written, kind, f"unknown unit {shown(unit)} in {shown(written)}" if unit else f"no unit in {shown(written)}"

@@ -33,7 +33,7 @@ TITLES: dict[Quantity, str] = {
     "gain": "Gain at f0",
 }
 _HEADINGS = ("band", "designed", "predicted", "measured ± U (95 %)", "deviation", "limits", "verdict")
-_WORDS: dict[Verdict, str] = {"pass": "pass", "fail": "FAIL", "undecided": "undecided"}
+_WORDS: dict[Verdict | None, str] = {"pass": "pass", "fail": "FAIL", "undecided": "undecided", None: "-"}
 _WIDTHS = (9, 10, 10, 23, 10, 8, 10)  # of the columns above; 80 together
 
 
@@ -54,9 +54,11 @@ def summary_lines(stages: Sequence[StageResult]) -> list[str]:
 def rule_lines(stages: Sequence[StageResult], probability: float | None) -> list[str]:
     """Return what decided where limits did not as they are, and how probable it is that all figures conform."""
     figures = [figure for stage in stages for figure in stage.figures.values()]
-    lines = []
+    lines: list[str] = []
     for rule in dict.fromkeys(figure.rule for figure in figures if figure.rule != SIMPLE_TEXT):
-        lines.append(f"rule {rule}: {verdict_counts([figure for figure in figures if figure.rule == rule])}")
+        counts = verdict_counts([figure for figure in figures if figure.rule == rule])
+        text = f"rule {rule} ({', '.join(_ruled(stages, rule))}): {counts}"
+        lines += textwrap.wrap(text, 80, subsequent_indent="  ", break_on_hyphens=False)
     if probability is not None:
         spread = sum(figure.prior is not None for figure in figures)
         prior = f" (process spread known of {spread} of {len(figures)} figures)" if spread else ""
@@ -64,9 +66,16 @@ def rule_lines(stages: Sequence[StageResult], probability: float | None) -> list
     return lines
 
 
+def _ruled(stages: Sequence[StageResult], rule: str) -> Iterator[str]:
+    """Yield what a rule decides: a stage by its name, single figures of one with theirs."""
+    for stage in stages:
+        names = [name for name, figure in stage.figures.items() if figure.rule == rule]
+        yield from [stage.name] if len(names) == len(stage.figures) else [f"{stage.name} {name}" for name in names]
+
+
 def verdict_counts(figures: Sequence[Comparison]) -> str:
     """Return how many figures have which verdict, in words."""
-    verdicts = [figure.verdict for figure in figures]
+    verdicts = [figure.verdict for figure in figures if figure.verdict]
     return ", ".join(f"{verdicts.count(word)} {word}" for word in dict.fromkeys(sorted(verdicts)))
 
 

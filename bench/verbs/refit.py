@@ -2,7 +2,7 @@
 
 from collections.abc import Iterator, Sequence
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import click
 
@@ -37,7 +37,7 @@ def command(run_paths: tuple[Path, ...], as_json: bool, with_budget: bool, draws
     from bandproof.bench.finish import Outcome
     from bandproof.bench.refits import keep_refit
     from bandproof.bench.result import result_object
-    from bandproof.bench.runfile import read_run
+    from bandproof.bench.runfile import read_result, read_run
     from bandproof.bench.summary import budget_lines
     from bandproof.bench.verbs.run import show, wall, worst_code
 
@@ -49,6 +49,7 @@ def command(run_paths: tuple[Path, ...], as_json: bool, with_budget: bool, draws
         run = read_run(path)
         stages = evaluate(run)
         result = result_object(run, stages, {"run": path.name, "picture": None, "report": None})
+        result["alarms"] += _alone(read_result(path))
         refit = keep_refit(path, result)
         outcome = Outcome(run, stages, result, path.parent)
         codes.append(show(outcome, wall() - begin, as_json))
@@ -58,6 +59,15 @@ def command(run_paths: tuple[Path, ...], as_json: bool, with_budget: bool, draws
             click.echo(line, err=as_json)
         click.echo(f"  refit    {refit}", err=as_json)
     return worst_code(codes)
+
+
+def _alone(stored: dict[str, Any]) -> list[str]:
+    """Return a note for a run whose verdict was of several attempts together, else nothing."""
+    together = [str(entry["attempt"]) for entry in stored["attempts"] or () if entry["pooled"]]
+    if len(together) < 2:
+        return []
+    verdict = str(stored["verdict"]).upper()
+    return [f"this attempt alone; the board's verdict, of attempts {', '.join(together)}, was {verdict}"]
 
 
 def _against_draws(run: "Run", stages: Sequence["StageResult"], draws: int) -> Iterator[str]:

@@ -141,7 +141,7 @@ def test_rule_and_prior_are_told(outcome):
     assert result["verdict"] == "undecided"
     assert result["conformance_probability"] == pytest.approx(0.5, abs=0.01)
     assert rule_lines(stages, 0.4978) == [
-        "rule guarded 0.5: 1 undecided",
+        "rule guarded 0.5 (low gain): 1 undecided",
         "probability that the whole board conforms: 0.498 (process spread known of 1 of 6 figures)",
     ]
 
