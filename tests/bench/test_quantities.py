@@ -122,6 +122,7 @@ CODES = {
     "100p": ("capacitance", 100e-12),
     "3n32": ("capacitance", 3.32e-9),
     "33n": ("capacitance", 33e-9),
+    "1.76n": ("capacitance", 1.76e-9),  # as people write it, beside the code
     "n15": ("capacitance", 0.15e-9),
     "4u7": ("capacitance", 4.7e-6),
     "4µ7": ("capacitance", 4.7e-6),
