@@ -5,7 +5,6 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from bandproof.bench.attempts import with_earlier
 from bandproof.bench.bench_file import parse_bench
 from bandproof.bench.board_file import parse_board
 from bandproof.bench.budget import budget_plain
@@ -14,6 +13,7 @@ from bandproof.bench.errors import BadInput, Stopped
 from bandproof.bench.evaluate import evaluate, views
 from bandproof.bench.journal import Journal
 from bandproof.bench.plain import checks_from, thru_from
+from bandproof.bench.pooling import with_earlier
 from bandproof.bench.result import result_object
 from bandproof.bench.runfile import digest_of, read_result, read_run, write_run
 from bandproof.bench.thru import THRU
@@ -146,14 +146,18 @@ def _reported(
     drawn: "Sequence[StageView]",
     folder: Path,
 ) -> dict[str, Any]:
-    """Write the report; return the result, without its name and with a note where it could not be written."""
+    """Write the report; return the result, without its name and with a note where it could not be written.
+
+    The run file names it in any case: its digest is in the report, so it is closed before the report is made.
+    """
     try:
         from bandproof.bench.documents.report import write_report
 
         write_report(folder / REPORT, run, stages, result, digest, drawn, link)
     except Exception as problem:  # whatever it is: the run is kept and decides alone
-        alarm = f"there is no {REPORT} ({type(problem).__name__}: {problem}); try: bandproof report {folder / RUN}"
         files = {**result["files"], "report": None}
+        again = folder / files["run"]
+        alarm = f"there is no {REPORT} ({type(problem).__name__}: {problem}); try: bandproof report {again}"
         return {**result, "files": files, "alarms": [*result["alarms"], alarm]}
     return result
 

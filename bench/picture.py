@@ -19,7 +19,7 @@ if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
 
-__all__ = ["MAKER", "StageView", "as_svg", "draw", "image", "save", "ticks"]
+__all__ = ["MAKER", "StageView", "as_svg", "draw", "image", "labels", "numbered", "save", "ticks"]
 
 MAKER = "bandproof"  # named inside every picture
 _DPI = 200  # of a PNG; arbitrary, letters of 7 pt are 20 pixels high
@@ -97,10 +97,9 @@ def draw(
     magnitude = figure.add_subplot(grid[0, 0])
     phase = figure.add_subplot(grid[1, 0], sharex=magnitude)
     residual = figure.add_subplot(grid[2, 0], sharex=magnitude)
-    named = sum(len(view.result.name) + 1 for view in views) <= _MOST_LETTERS
-    for number, view in enumerate(views):
+    for number, (view, label) in enumerate(zip(views, labels(views), strict=True)):
         mark = _MARKS[number % len(_MARKS)]
-        _draw_magnitude(magnitude, view, mark, named=named)
+        _draw_magnitude(magnitude, view, mark, label)
         _draw_phase(phase, view, mark)
         _draw_residual(residual, view, mark)
     _dress(magnitude, phase, residual, views, letters=7.5 if is_small else 9.0)
@@ -115,17 +114,28 @@ def _dB(ratio: ComplexArray | FloatArray | float) -> Any:
     return 20.0 * np.log10(np.abs(ratio))
 
 
-def _draw_magnitude(axes: "Axes", view: StageView, mark: str, *, named: bool) -> None:
+def labels(views: Sequence[StageView]) -> list[str]:
+    """Return what stands above each curve: names, or numbers in board order where names would overlap, or nothing."""
+    if sum(len(view.result.name) + 1 for view in views) <= _MOST_LETTERS:
+        return [view.result.name for view in views]
+    numbers = [str(number) for number in range(1, len(views) + 1)]
+    return numbers if sum(len(number) + 1 for number in numbers) <= _MOST_LETTERS else [""] * len(views)
+
+
+def numbered(views: Sequence[StageView]) -> str:
+    """Return what a picture says of its labels where they are numbers, else ""."""
+    return "   numbers: bands in the order of the table" if labels(views)[0] == "1" else ""
+
+
+def _draw_magnitude(axes: "Axes", view: StageView, mark: str, label: str) -> None:
     axes.plot(view.frequency, _dB(view.designed), color="0.45", linewidth=1.0)
     axes.plot(view.at, _dB(view.measured), mark, **_open_mark())
     centre, gain = (view.result.figures[name] for name in ("centre", "gain"))
     low, high = _dB(gain.lower_limit), _dB(gain.upper_limit)
     left, right = centre.lower_limit, centre.upper_limit
     axes.plot([left, right, right, left, left], [low, low, high, high, low], color="black", linewidth=0.9)
-    if named:
-        axes.annotate(
-            view.result.name, (centre.designed, high), (0, 4), textcoords="offset points", ha="center", fontsize=8
-        )
+    if label:
+        axes.annotate(label, (centre.designed, high), (0, 4), textcoords="offset points", ha="center", fontsize=8)
 
 
 def _open_mark() -> dict[str, Any]:
@@ -168,7 +178,10 @@ def _dress(magnitude: "Axes", phase: "Axes", residual: "Axes", views: Sequence[S
     magnitude.set_ylim(min(top - 22.0, float(np.min(drawn)) - 2.0), max(top, float(np.max(drawn))) + 3.0)
     magnitude.set_ylabel("gain / dB")
     magnitude.set_title(
-        "line: as designed   marks: measured   box: limits of centre and gain", loc="left", fontsize=8, pad=4
+        f"line: as designed   marks: measured   box: limits of centre and gain{numbered(views)}",
+        loc="left",
+        fontsize=8,
+        pad=4,
     )
     phase.set_ylabel("phase − 180° / °")
     phase.set_yticks([-90, -45, 0, 45, 90])

@@ -2,7 +2,7 @@
 
 from collections.abc import Mapping, Sequence
 from math import isfinite
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from bandproof.bench.documents import cells
 from bandproof.bench.documents.bench_content import bench_content
@@ -12,7 +12,10 @@ from bandproof.bench.result import board_verdict
 from bandproof.bench.summary import verdict_counts
 from bandproof.bench.types import Comparison, Run, StageResult
 
-__all__ = ["content", "worst_figure"]
+if TYPE_CHECKING:
+    from matplotlib.figure import Figure
+
+__all__ = ["content", "draw_board", "worst_figure"]
 
 _WIDTH = 6.85  # inches of text on A4
 _BESIDE = 6  # bands whose figures fit beside the curves
@@ -63,7 +66,7 @@ def content(
         "cautions": _cautions(run, stages, result),
         "suspects": [suspect.text for stage in stages for suspect in stage.suspects],
         "rows": [_row(stage.name, figure) for stage in stages for figure in stage.figures.values()],
-        "picture": _picture(views),
+        "picture": as_svg(draw_board(views)) if views else None,
         "stages": [stage_content(run, stage, drawn.get(stage.name)) for stage in stages],
         "bench": bench_content(run),
         "rules": [[rule, cells.rule_meaning(rule)] for rule in _rules(stages)],
@@ -159,11 +162,10 @@ def _row(band: str, figure: Comparison) -> dict[str, Any]:
     }
 
 
-def _picture(views: Sequence[StageView]) -> str | None:
-    if not views:
-        return None
+def draw_board(views: Sequence[StageView]) -> "Figure":
+    """Return the picture of all bands as page one has it."""
     beside = len(views) <= _BESIDE
-    return as_svg(draw(views, "", size=(_WIDTH, 4.9 if beside else 3.9), beside=beside))
+    return draw(views, "", size=(_WIDTH, 4.9 if beside else 3.9), beside=beside)
 
 
 def _rules(stages: Sequence[StageResult]) -> list[str]:
@@ -175,6 +177,6 @@ def _attempt(entry: Mapping[str, Any]) -> dict[str, Any]:
         "attempt": entry["attempt"],
         "verdict": cells.WORDS[entry["verdict"]],
         "pooled": "yes" if entry["pooled"] else "no",
-        "digest": entry["digest"] or "this run",
+        "digest": entry["digest"] or ("this run" if "reason" in entry else "unfinished"),
         "reason": entry.get("reason", ""),
     }

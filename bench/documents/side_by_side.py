@@ -15,7 +15,7 @@ from bandproof.bench.documents import cells
 from bandproof.bench.documents.report import typeset, write_whole
 from bandproof.bench.errors import BadInput
 from bandproof.bench.evaluate import evaluate, views
-from bandproof.bench.picture import StageView, as_svg, ticks
+from bandproof.bench.picture import StageView, as_svg, labels, numbered, ticks
 from bandproof.bench.result import board_verdict
 from bandproof.bench.runfile import digest_of, read_result, read_run
 from bandproof.bench.types import QUANTITIES, Comparison, Run, StageResult
@@ -39,7 +39,6 @@ _TEMPLATE = "side_by_side.typ"
 _NAMES = ("before", "after")
 _SIZE = (6.85, 3.1)  # inches: the width of the text on A4
 _SMALLEST = 7.0  # points
-_MOST_LETTERS = 90  # of all names together above the curves, without overlap; arbitrary
 _NONE = "–"
 
 
@@ -240,7 +239,7 @@ def draw_both(before: Sequence[StageView], after: Sequence[StageView]) -> "Figur
             view.at, _dB(view.measured), "o", markersize=5.0, fillstyle="none", color="black", markeredgewidth=0.7
         )
     _draw_limits(axes, after or before)
-    _dress(axes, [*before, *after])
+    _dress(axes, [*before, *after], numbered(after or before))
     return figure
 
 
@@ -256,17 +255,16 @@ def _draw(axes: "Axes", view: StageView, style: str, *, color: str, width: float
 
 
 def _draw_limits(axes: "Axes", drawn: Sequence[StageView]) -> None:
-    named = sum(len(view.result.name) + 1 for view in drawn) <= _MOST_LETTERS
-    for view in drawn:
+    for view, label in zip(drawn, labels(drawn), strict=True):
         centre, gain = (view.result.figures[name] for name in ("centre", "gain"))
         low, high, left, right = *map(_dB, (gain.lower_limit, gain.upper_limit)), centre.lower_limit, centre.upper_limit
         axes.plot([left, right, right, left, left], [low, low, high, high, low], color="black", linewidth=0.8)
-        if named:
+        if label:
             place = (centre.designed, high)
-            axes.annotate(view.result.name, place, (0, 3), textcoords="offset points", ha="center", fontsize=_SMALLEST)
+            axes.annotate(label, place, (0, 3), textcoords="offset points", ha="center", fontsize=_SMALLEST)
 
 
-def _dress(axes: "Axes", drawn: Sequence[StageView]) -> None:
+def _dress(axes: "Axes", drawn: Sequence[StageView], more: str) -> None:
     lowest = min(min(view.frequency[0], view.at.min()) for view in drawn)
     highest = max(max(view.frequency[-1], view.at.max()) for view in drawn)
     top = max(_dB(view.result.figures["gain"].upper_limit) for view in drawn)
@@ -280,7 +278,7 @@ def _dress(axes: "Axes", drawn: Sequence[StageView]) -> None:
     axes.set_xlabel("frequency / Hz", fontsize=_SMALLEST)
     axes.set_ylabel("gain / dB", fontsize=_SMALLEST)
     axes.set_title(
-        "dashed and rings: before   grey and dots: after   box: limits of centre and gain",
+        f"dashed and rings: before   grey and dots: after   box: limits of centre and gain{more}",
         loc="left",
         fontsize=_SMALLEST,
         pad=3,

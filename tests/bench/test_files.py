@@ -210,6 +210,24 @@ def test_every_missing_tap_and_shared_channel_is_named_with_the_nearest_wire():
     assert "wiring.body_out: is on channel 1 like 'input'" in second
 
 
+@pytest.mark.parametrize("written", ["2026-05-01", '"2026-05-01"'])
+def test_a_bench_says_where_it_is_and_when_an_instrument_was_calibrated(written):
+    changes = ('title   = "Simulated bench"', 'title = "a"\nplace = "test room 2"')
+    bench = parse_bench(changed(BENCH, changes, ("[scope]\n", f"[scope]\ncalibrated = {written}\n")), "a.bench.toml")
+    assert bench.place == "test room 2"
+    assert {role: found.calibrated for role, found in bench.instruments.items()} == {
+        "generator": "",
+        "scope": "2026-05-01",
+        "switch": "",
+    }
+
+
+@pytest.mark.parametrize("written", ['"1.5.2026"', "2026", "2026-05-01T10:00:00Z", '"2026-02-30"'])
+def test_a_calibration_that_is_no_date_is_a_mistake(written):
+    with pytest.raises(FileMistakes, match=r"scope.calibrated: found .*; expected a date such as 2026-05-01"):
+        parse_bench(changed(BENCH, ("[scope]\n", f"[scope]\ncalibrated = {written}\n")), "a.bench.toml")
+
+
 def test_the_demo_board_is_wired_by_its_bench():
     check_wiring(demo_board(), parse_bench(BENCH, "demo"), "demo")
     assert rehearsal_bench(demo_board()).wires == parse_bench(BENCH, "demo").wires

@@ -14,10 +14,13 @@ from importlib import resources
 import numpy as np
 import pypdf
 import pytest
+from matplotlib.text import Text
 
 from bandproof.bench.documents import cells
-from bandproof.bench.documents.content import content, worst_figure
+from bandproof.bench.documents.content import content, draw_board, worst_figure
 from bandproof.bench.documents.report import NoReport, report_bytes
+from bandproof.bench.documents.side_by_side import draw_both
+from bandproof.bench.documents.stage_picture import draw_stage
 from bandproof.bench.documents.stored import read_stored
 from bandproof.bench.evaluate import views
 from bandproof.bench.runfile import digest_of
@@ -82,7 +85,26 @@ def test_worst_figure_and_its_uncertainty_are_told(text, stored):
     most, band, figure = max(named, key=lambda entry: entry[0])
     assert worst_figure(stored.stages) == (band, figure)
     assert f"Worst figure: {band} {cells.SYMBOLS[figure.quantity]}, {cells.measured(figure)}" in text[0]
-    assert f"uses {100 * most:.0f} % of its tolerance" in text[0]
+    assert f"closest to a limit, uses {100 * most:.0f} % of its tolerance" in text[0]
+    assert f"(limits {cells.limits(figure)}, rule {figure.rule})" in text[0]
+
+
+def test_a_figure_outside_its_limits_is_told_by_how_much(stored):
+    low = stored.stages[0]
+    q = replace(low.figures["q"], measured=1.5 + 3.5 * 0.09, verdict="fail")  # designed 1.5, tolerance 6 %: 0.09
+    said = pages(document(stored, stages=[replace(low, figures=low.figures | {"q": q}, verdict="fail")]))
+    assert f"low Q, {cells.measured(q)}, farthest outside its limits, 3.5 times its tolerance from design" in said[0]
+
+
+def test_place_and_calibration_are_told_as_the_bench_file_states_them(stored):
+    bench = stored.run.bench
+    scope = replace(bench.instruments["scope"], calibrated="2026-05-01")
+    bench = replace(bench, place="test room 2", instruments={**bench.instruments, "scope": scope})
+    said = pages(document(stored, run=replace(stored.run, bench=bench)))
+    assert "Where test room 2; Simulated bench; ambient temperature not stated" in said[0]
+    identities = stored.run.identities
+    assert f"scope {identities['scope']} 2026-05-01" in said[-1]
+    assert f"generator {identities['generator']} not stated" in said[-1]
 
 
 def test_a_page_for_each_band_with_its_whole_budget(text, stored):
@@ -176,11 +198,28 @@ def test_no_letter_is_smaller_than_seven_points(whole):
     found = []
     for page in pypdf.PdfReader(io.BytesIO(whole)).pages:
         page.extract_text(
-            visitor_text=lambda text, _, matrix, font, size: (
-                found.append(size * abs(matrix[3])) if text.strip() else None
+            visitor_text=lambda text, now, matrix, font, size: (
+                found.append(size * abs(matrix[3] * now[3])) if text.strip() else None
             )
         )
     assert min(found) >= 7.0
+
+
+def test_no_letter_in_a_picture_is_smaller_than_seven_points(stored):
+    """Pictures are as wide as the text, 174 mm of an A4 page, or narrower: they are not shown smaller than drawn."""
+    _, _, drawn = many(stored, 30)
+    for figure in (
+        draw_stage(drawn[0]),
+        draw_board(stored.views),
+        draw_board(drawn),
+        draw_both(stored.views, stored.views),
+        draw_both(drawn, drawn[1:]),
+    ):
+        assert figure.get_figwidth() * 25.4 == pytest.approx(174.0, abs=0.1)
+        figure.draw_without_rendering()
+        sizes = [text.get_fontsize() for text in figure.findobj(Text) if text.get_visible() and text.get_text()]
+        assert len(sizes) > 10
+        assert min(sizes) >= 7.0
 
 
 def test_a_letter_that_no_font_has_is_no_obstacle(stored):
@@ -206,7 +245,9 @@ def test_failing_and_lost_figures_come_out(stored):
 
 
 def test_a_run_that_was_cut_short_has_no_verdict(stored):
-    said = pages(document(stored, run=replace(stored.run, ended="cut_short", reason="the scope fell silent")))
+    cut = replace(stored.run, ended="cut_short", reason="the scope fell silent")
+    said = pages(document(stored, run=cut, stages=stored.stages[:1]))
+    assert f"Not measured: {stored.stages[1].name}." in said[0]
     assert "NO VERDICT" in said[0]
     assert "PASS" not in said[0]
     assert "cut short: the scope fell silent" in said[0]
@@ -246,6 +287,18 @@ def test_a_table_over_two_pages_repeats_its_heading(stored):
     assert first_band >= 2
     for page in said[:first_band]:
         assert "band figure designed measured ± U deviation limits rule verdict" in page
+    for page in said[1:first_band]:  # a band's rows are on one page: none begins within a band
+        assert page.partition("rule verdict ")[2].startswith("f0 ")
+
+
+def test_a_name_of_sixty_letters_is_on_the_page_whole(stored):
+    name = "low_side_of_the_speech_band_as_drawn_on_sheet_4_revision_C_x"
+    assert len(name) == 60
+    board = replace(stored.run.board, stages=(replace(stored.run.board.stages[0], name=name),))
+    run, stage = replace(stored.run, board=board), replace(stored.stages[0], name=name)
+    said = pages(document(stored, run=run, stages=[stage], drawn=[replace(stored.views[0], result=stage)]))
+    assert name in said[0].replace(" ", "")
+    assert f"Band{name}:pass" in said[1].replace(" ", "")
 
 
 def test_typst_missing_is_told_and_the_run_is_kept(stored, monkeypatch, tmp_path, capsys):
