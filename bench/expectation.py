@@ -6,6 +6,7 @@ rounding of the converter, and go through the program's own points, fit and budg
 
 from collections.abc import Mapping
 from dataclasses import dataclass
+from functools import partial
 from math import floor, log2, log10
 
 import numpy as np
@@ -14,7 +15,7 @@ from numpy.typing import NDArray
 from bandproof.analysis.decision import outcomes
 from bandproof.analysis.spread import Fraction, fraction
 from bandproof.analysis.types import BoolArray, FloatArray
-from bandproof.analysis.uncertainty import share
+from bandproof.analysis.uncertainty import probability_below, share
 from bandproof.bench.budget import dominating
 from bandproof.bench.circuit import predicted_response
 from bandproof.bench.conformance import board_errors
@@ -26,7 +27,7 @@ from bandproof.bench.plan import Planner
 from bandproof.bench.prediction import PredictedBoards
 from bandproof.bench.record import Taken, point_of
 from bandproof.bench.thru import THRU, Asked, Path, Ranges, paths, thru_stage
-from bandproof.bench.types import QUANTITIES, Bench, Board, Comparison, Point, Quantity, Stage, StageResult, Step
+from bandproof.bench.types import QUANTITIES, Bench, Board, Comparison, Limit, Point, Quantity, Stage, StageResult, Step
 from bandproof.drivers.slots import ScopeDialect
 
 __all__ = ["LEAST_RATIO", "Expectation", "ExpectedFigure", "Verdicts", "expected", "predicted_results"]
@@ -57,7 +58,8 @@ class Verdicts:
 class ExpectedFigure:
     """A figure on a bench: what U will be and what will be decided.
 
-    U in SI and ``relative`` to the figure; ``ratio`` of the tolerance's half-width to U; U's largest row and its share.
+    U in SI and ``relative`` to the figure; ``ratio`` of the tolerance's half-width to U; U's largest row and its share;
+    ``verdicts`` is None where no parts are stated.
     """
 
     expanded: float
@@ -67,18 +69,18 @@ class ExpectedFigure:
     largest: str
     largest_share: float
     rule: str
-    verdicts: Verdicts
+    verdicts: Verdicts | None
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Expectation:
-    """What is expected of boards on a bench: by stage and figure, of whole boards; notes are about the bench.
+    """What is expected of boards on a bench: by stage and figure, of all stages with parts; notes are about the bench.
 
     ``codes`` (K, F) are the verdicts on the drawn boards' figures: 0 pass, 1 undecided, 2 fail.
     """
 
     stages: Mapping[str, Mapping[Quantity, ExpectedFigure]]
-    board: Verdicts
+    board: Verdicts | None
     bits: float
     thru: str
     notes: tuple[str, ...]
@@ -94,36 +96,42 @@ def expected(board: Board, bench: Bench, boards: PredictedBoards) -> Expectation
         The board cannot be planned on this bench, or its points give no figures there.
     """
     results = predicted_results(board, bench, seed=boards.seed)
-    figures = [result.figures[quantity] for result in results for quantity in QUANTITIES]
+    figures = [(result, quantity) for result in results for quantity in QUANTITIES]
     rng = np.random.default_rng([boards.seed, _ERRORS])
-    relative = board_errors(results, rng, len(boards.true)) / np.array([figure.measured for figure in figures])
-    measured = boards.true * (1.0 + relative)
+    nominal = np.array([result.figures[quantity].measured for result, quantity in figures])
+    measured = boards.true * (1.0 + board_errors(results, rng, len(boards.true)) / nominal)
     limits = [stage.limits[quantity] for stage in board.stages for quantity in QUANTITIES]
-    codes = np.stack(
-        [
-            outcomes(
-                measured[:, i],
-                measured[:, i] * figure.standard_uncertainty / figure.measured,
-                low=limit.lower,
-                high=limit.upper,
-                rule=limit.decides,
-                expanded=measured[:, i] * figure.expanded_uncertainty / figure.measured,
-                prior=limit.prior,
-            )
-            for i, (figure, limit) in enumerate(zip(figures, limits, strict=True))
-        ],
-        axis=1,
-    )
-    each = [verdicts_of(codes[:, i], boards.inside[:, i]) for i in range(len(figures))]
+    codes = np.stack([_decided(*one) for one in zip(measured.T, figures, limits, boards.known, strict=True)], axis=1)
+    known = boards.known
+    each = [verdicts_of(codes[:, i], boards.inside[:, i]) if known[i] else None for i in range(len(figures))]
     stages = {
         result.name: {
             quantity: _figure(result, quantity, each[len(QUANTITIES) * s + i]) for i, quantity in enumerate(QUANTITIES)
         }
         for s, result in enumerate(results)
     }
-    whole = verdicts_of(codes.max(axis=1), np.asarray(boards.inside.all(axis=1)))
+    among = codes[:, known], boards.inside[:, known]
+    whole = verdicts_of(among[0].max(axis=1), np.asarray(among[1].all(axis=1))) if known.any() else None
     notes = tuple(alarm for result in results for alarm in result.alarms)
     return Expectation(stages, whole, converter_bits(bench), _thru_in_words(board, bench), notes, codes)
+
+
+def _decided(measured: FloatArray, figure: tuple[StageResult, Quantity], limit: Limit, known: bool) -> NDArray[np.int8]:
+    """Return the verdicts on a figure of drawn boards (K,), as a comparison decides them; undecided where not known."""
+    if not known:
+        return np.ones(len(measured), dtype=np.int8)
+    result, quantity = figure
+    budget, scale = result.budgets[quantity], measured / result.figures[quantity].measured
+    return outcomes(
+        measured,
+        scale * budget.u,
+        low=limit.lower,
+        high=limit.upper,
+        rule=limit.decides,
+        expanded=scale * budget.expanded,
+        prior=limit.prior,
+        below=partial(probability_below, budget.rows),
+    )
 
 
 def verdicts_of(codes: NDArray[np.int8], inside: BoolArray) -> Verdicts:
@@ -138,7 +146,7 @@ def verdicts_of(codes: NDArray[np.int8], inside: BoolArray) -> Verdicts:
     )
 
 
-def _figure(result: StageResult, quantity: Quantity, verdicts: Verdicts) -> ExpectedFigure:
+def _figure(result: StageResult, quantity: Quantity, verdicts: Verdicts | None) -> ExpectedFigure:
     figure: Comparison = result.figures[quantity]
     budget = result.budgets[quantity]
     row = dominating(budget)

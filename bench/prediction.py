@@ -5,7 +5,7 @@ nodal curve by definition, in closed form (`analysis.one_pole`; tests hold both 
 """
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 
@@ -29,18 +29,18 @@ _APART = 0x9B5D  # keeps these draws apart from those of a rehearsal with the sa
 class PredictedFigure:
     """One figure of one stage: SI, ratios.
 
-    ``textbook`` with an ideal op-amp, None where no parts are stated; ``nodal`` by definition with the board's op-amp;
-    ``spread`` over the drawn boards; ``first_order`` its standard deviation by sensitivities, relative; ``shares`` of
-    its variance by part; ``conforming`` the boards within the limits.
+    ``nodal`` by definition with the board's op-amp, ``textbook`` with an ideal one; ``spread`` over the drawn boards;
+    ``first_order`` its standard deviation by sensitivities, relative; ``shares`` of its variance by part;
+    ``conforming`` the boards within the limits. None where no parts are stated: nothing is drawn then.
     """
 
     limit: Limit
-    textbook: float | None
     nodal: float
-    spread: Spread
-    first_order: float
-    shares: Mapping[str, float]
-    conforming: Fraction
+    textbook: float | None = None
+    spread: Spread | None = None
+    first_order: float | None = None
+    shares: Mapping[str, float] = field(default_factory=dict)
+    conforming: Fraction | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -49,19 +49,28 @@ class PredictedStage:
 
     name: str
     figures: Mapping[Quantity, PredictedFigure]
-    conforming: Fraction
+    conforming: Fraction | None
     notes: tuple[str, ...]
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class PredictedBoards:
-    """Drawn boards: ``true`` (K, F) are their figures, f0, Q, gain of each stage in turn, ``inside`` within limits."""
+    """Drawn boards: ``true`` (K, F) are their figures, f0, Q, gain of each stage in turn, ``inside`` within limits.
+
+    Figures of a stage without stated parts are NaN, and not part of what conforms.
+    """
 
     stages: tuple[PredictedStage, ...]
-    conforming: Fraction
+    conforming: Fraction | None
     true: FloatArray
     inside: BoolArray
     seed: int
+
+    @property
+    def known(self) -> BoolArray:
+        """Which figures (F,) are of stages with stated parts."""
+        known: BoolArray = np.isfinite(self.true[0])
+        return known
 
 
 def predicted_boards(board: Board, *, draws: int = DRAWS, seed: int = 1) -> PredictedBoards:
@@ -76,14 +85,15 @@ def predicted_boards(board: Board, *, draws: int = DRAWS, seed: int = 1) -> Pred
     true = [_figures(board, stage, draws, rng) for stage in board.stages]
     inside = [_within(stage, figures) for stage, figures in zip(board.stages, true, strict=True)]
     stages = tuple(_stage(board, *one) for one in zip(board.stages, true, inside, strict=True))
-    whole = np.concatenate(inside, axis=1)
-    return PredictedBoards(stages, fraction(np.asarray(whole.all(axis=1))), np.concatenate(true, axis=1), whole, seed)
+    known = [one for stage, one in zip(board.stages, inside, strict=True) if stage.parts]
+    conforming = fraction(np.asarray(np.concatenate(known, axis=1).all(axis=1))) if known else None
+    return PredictedBoards(stages, conforming, np.concatenate(true, axis=1), np.concatenate(inside, axis=1), seed)
 
 
 def _figures(board: Board, stage: Stage, draws: int, rng: np.random.Generator) -> FloatArray:
-    """Return f0, Q, gain (K, 3) of drawn stages; a stage without stated parts is as designed."""
+    """Return f0, Q, gain (K, 3) of drawn stages, NaN where no parts are stated."""
     if not stage.parts:
-        return np.tile([stage.limits[quantity].designed for quantity in QUANTITIES], (draws, 1))
+        return np.full((draws, 3), np.nan)
     values, tolerances = np.array([(part.value, part.tolerance) for part in stage.parts]).T
     table = dict(zip((part.name for part in stage.parts), drawn(values, tolerances, draws, rng).T, strict=True))
     return one_pole_figures(**table, gbw=board.op_amp.gbw).T
@@ -100,26 +110,25 @@ def _stage(board: Board, stage: Stage, true: FloatArray, inside: BoolArray) -> P
         nodal = predict(board, stage)
     except ValueError as problem:
         raise BadInput(f"stage {stage.name!r}: its circuit makes no band ({problem}); check the parts") from problem
-    textbook = dict[Quantity, float]()
-    first_order, shares = np.zeros(3), np.zeros((3, 0))
-    if stage.parts:
-        parts = MfbParts(**{part.name: part.value for part in stage.parts})
-        ideal = mfb_figures(parts)
-        textbook = {"centre": ideal.f0, "q": ideal.q, "gain": ideal.gain}
-        slopes = part_sensitivities(parts, gbw=board.op_amp.gbw)
-        tolerances = np.array([part.tolerance for part in stage.parts])
-        first_order, shares = variance_shares(np.array([slopes[part.name] for part in stage.parts]).T, tolerances)
+    notes = tuple(f"{stage.name}: {note}" for note in outside_by_design(stage, nodal))
+    if not stage.parts:
+        bare = {quantity: PredictedFigure(stage.limits[quantity], nodal[quantity]) for quantity in QUANTITIES}
+        return PredictedStage(stage.name, bare, None, notes)
+    parts = MfbParts(**{part.name: part.value for part in stage.parts})
+    ideal = mfb_figures(parts)
+    slopes = part_sensitivities(parts, gbw=board.op_amp.gbw)
+    tolerances = np.array([part.tolerance for part in stage.parts])
+    first_order, shares = variance_shares(np.array([slopes[part.name] for part in stage.parts]).T, tolerances)
     figures = {
         quantity: PredictedFigure(
             limit=stage.limits[quantity],
-            textbook=textbook.get(quantity),
             nodal=nodal[quantity],
+            textbook=textbook,
             spread=spread_of(true[:, i]),
             first_order=float(first_order[i]),
             shares={part.name: float(share) for part, share in zip(stage.parts, shares[i], strict=True)},
             conforming=fraction(inside[:, i]),
         )
-        for i, quantity in enumerate(QUANTITIES)
+        for i, (quantity, textbook) in enumerate(zip(QUANTITIES, (ideal.f0, ideal.q, ideal.gain), strict=True))
     }
-    notes = tuple(f"{stage.name}: {note}" for note in outside_by_design(stage, nodal))
     return PredictedStage(stage.name, figures, fraction(np.asarray(inside.all(axis=1))), notes)

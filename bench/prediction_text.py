@@ -5,6 +5,7 @@ from collections.abc import Iterator, Sequence
 from typing import Any
 
 from bandproof.analysis.spread import Fraction
+from bandproof.analysis.types import BoolArray
 from bandproof.bench.expectation import LEAST_RATIO, Expectation, ExpectedFigure, Verdicts
 from bandproof.bench.prediction import PredictedBoards, PredictedFigure, PredictedStage
 from bandproof.bench.quantities import engineering
@@ -61,17 +62,17 @@ def prediction_object(
     }
 
 
-def _plain(found: Fraction) -> dict[str, float]:
-    return {"value": found.value, "standard_error": found.error}
+def _plain(found: Fraction | None) -> dict[str, float] | None:
+    return None if found is None else {"value": found.value, "standard_error": found.error}
 
 
-def _plain_verdicts(found: Verdicts) -> dict[str, Any]:
+def _plain_verdicts(found: Verdicts | None) -> dict[str, Any]:
     return {
-        "pass": _plain(found.passed),
-        "undecided": _plain(found.undecided),
-        "fail": _plain(found.failed),
-        "consumer_risk": _plain(found.consumer),
-        "producer_risk": _plain(found.producer),
+        "pass": found and _plain(found.passed),
+        "undecided": found and _plain(found.undecided),
+        "fail": found and _plain(found.failed),
+        "consumer_risk": found and _plain(found.consumer),
+        "producer_risk": found and _plain(found.producer),
     }
 
 
@@ -94,9 +95,9 @@ def _plain_figure(quantity: Quantity, figure: PredictedFigure) -> dict[str, Any]
         "upper_limit": figure.limit.upper,
         "textbook": figure.textbook,
         "predicted": figure.nodal,
-        "mean": spread.mean,
-        "standard_deviation": {"value": spread.sd, "standard_error": spread.sd_error},
-        "range_95": [spread.low, spread.high],
+        "mean": spread and spread.mean,
+        "standard_deviation": spread and {"value": spread.sd, "standard_error": spread.sd_error},
+        "range_95": spread and [spread.low, spread.high],
         "relative_standard_deviation_first_order": figure.first_order,
         "variance_shares": dict(figure.shares),
         "yield": _plain(figure.conforming),
@@ -132,7 +133,7 @@ def prediction_lines(
         for note in stage.notes:
             yield from _wrapped(f"note: {note}")
     if bench is not None and found is not None:
-        yield from _bench_lines(bench, found, len(boards.true))
+        yield from _bench_lines(bench, found, _whole(boards.known))
 
 
 def _row(name: str, cells: Sequence[str], widths: Sequence[int]) -> Iterator[str]:
@@ -157,7 +158,7 @@ def _figure_lines(quantity: Quantity, stages: Sequence[PredictedStage]) -> Itera
 
 def _spread_cells(quantity: Quantity, figure: PredictedFigure) -> tuple[str, str]:
     spread = figure.spread
-    if not spread.sd:
+    if spread is None or not spread.sd:
         return "-", "-"
     if quantity == "gain":
         size = f"{dB(1.0 + spread.sd / spread.mean):.2g} dB"
@@ -179,17 +180,28 @@ def _shown(quantity: Quantity, value: float) -> str:
 def _yield_lines(boards: PredictedBoards) -> Iterator[str]:
     widths = (17, 17, 17, 17)
     yield ""
-    yield "Boards within limits in %, ± one standard error of so many draws"
+    yield from _wrapped("Boards within limits in %, ± one standard error; < or >: none or all of the draws (95 % sure)")
     yield from _row("band", ("f0", "Q", "gain", "band"), widths)
     for stage in boards.stages:
         each = [stage.figures[quantity].conforming for quantity in QUANTITIES]
         yield from _row(stage.name, [_percent(one) for one in (*each, stage.conforming)], widths)
-    yield from _row("whole board", ["", "", "", _percent(boards.conforming)], widths)
+    yield from _row(_whole(boards.known), ["", "", "", _percent(boards.conforming)], widths)
 
 
-def _percent(found: Fraction) -> str:
-    places = 1 if found.error >= 1e-3 else 2
-    return f"{100.0 * found.value:.{places}f} ± {100.0 * found.error:.{places}f}"
+def _whole(known: BoolArray) -> str:
+    return "whole board" if known.all() else "whole board, of the stages with parts"
+
+
+def _percent(found: Fraction | None, *, with_error: bool = True) -> str:
+    """Return a fraction of draws; what none or all of them show, as its bound by the rule of three."""
+    if found is None:
+        return "-"
+    bound = 300.0 * found.error  # of none or all, the error is that of one draw
+    if found.value in (0.0, 1.0):
+        return f"<{bound:.2g}" if found.value == 0.0 else f">{100.0 - bound:.6g}"
+    places = 1 if with_error and found.error >= 1e-3 else 2
+    error = f" ± {100.0 * found.error:.{places}f}" if with_error else ""
+    return f"{100.0 * found.value:.{places}f}{error}"
 
 
 def _spread_lines(stages: Sequence[PredictedStage]) -> Iterator[str]:
@@ -232,33 +244,29 @@ def _joined(names: Sequence[str]) -> str:
     return " and ".join([", ".join(names[:-1]), names[-1]]) if len(names) > 1 else names[0]
 
 
-def _bench_lines(bench: Bench, found: Expectation, draws: int) -> Iterator[str]:
+def _bench_lines(bench: Bench, found: Expectation, whole: str) -> Iterator[str]:
     widths = (6, 10, 8, 9, 11, 8, 8, 8)
     yield ""
     yield from _wrapped(f"Measured on {bench.title or 'this bench'} ({found.bits:.3g} bits; thru: {found.thru})")
-    yield "Boards in %; out: truly out of limits and passed; in: truly within, not passed"
+    yield from _wrapped(
+        "Boards in %; out: truly out of limits and passed (consumer's risk); in: truly within and not passed "
+        "(producer's risk)"
+    )
     yield from _row("band", ("", "U", "tol./U", "pass", "undecided", "fail", "out", "in"), widths)
     for name, figures in found.stages.items():
         for i, (quantity, figure) in enumerate(figures.items()):
             size = dB(1.0 + figure.relative) if quantity == "gain" else 100.0 * figure.relative
             u = f"{size:.2g} {'dB' if quantity == 'gain' else '%'}"
-            cells = [_LABELS[quantity], u, f"{figure.ratio:.3g}", *_verdict_cells(figure.verdicts, draws)]
+            cells = [_LABELS[quantity], u, f"{figure.ratio:.3g}", *_verdict_cells(figure.verdicts)]
             yield from _row("" if i else name, cells, widths)
-    yield from _row("whole board", ["", "", "", *_verdict_cells(found.board, draws)], widths)
-    board = found.board
-    yield from _wrapped(
-        f"Boards: {_percent(board.passed)} % pass, {_percent(board.undecided)} % undecided, {_percent(board.failed)} % "
-        f"fail; consumer's risk (passed though out) {_percent(board.consumer)} %, producer's risk (not passed though "
-        f"within) {_percent(board.producer)} %"
-    )
+    yield from _row(whole, ["", "", "", *_verdict_cells(found.board)], widths)
     for text in (*(f"warning: {warning}" for warning in warnings(found)), *(f"note: {note}" for note in found.notes)):
         yield from _wrapped(text)
 
 
-def _verdict_cells(found: Verdicts, draws: int) -> list[str]:
-    every = (found.passed, found.undecided, found.failed, found.consumer, found.producer)
-    none = f"<{300.0 / draws:.2g}"  # 95 % sure when no draw of so many hit (the rule of three)
-    return [f"{100.0 * one.value:.2f}" if one.value else none for one in every]
+def _verdict_cells(found: Verdicts | None) -> list[str]:
+    every = (found.passed, found.undecided, found.failed, found.consumer, found.producer) if found else (None,) * 5
+    return [_percent(one, with_error=False) for one in every]
 
 
 def warnings(found: Expectation) -> list[str]:

@@ -2,24 +2,26 @@
 
 import json
 from dataclasses import replace
+from itertools import pairwise
 from math import sqrt
 
 import numpy as np
 import pytest
 
 from bandproof.analysis.curve import network_figures
-from bandproof.analysis.decision import outcomes
+from bandproof.analysis.decision import Rule, outcomes
 from bandproof.analysis.one_pole import one_pole_figures
 from bandproof.analysis.spread import drawn, fraction, spread_of
 from bandproof.bench.board_file import parse_board
 from bandproof.bench.circuit import draw_parts, stage_network, taps
+from bandproof.bench.comparison import judged
 from bandproof.bench.evaluate import evaluate_stage
-from bandproof.bench.expectation import expected, predicted_results, verdicts_of
+from bandproof.bench.expectation import _decided, expected, predicted_results, verdicts_of
 from bandproof.bench.prediction import predicted_boards
-from bandproof.bench.prediction_text import prediction_lines
+from bandproof.bench.prediction_text import prediction_lines, prediction_object
 from bandproof.bench.rehearsal import DEMO_BENCH, demo_board, demo_text, rehearsal_bench
 from bandproof.bench.thru import THRU, paths
-from bandproof.bench.types import QUANTITIES, Limit
+from bandproof.bench.types import PASSIVE, QUANTITIES, Limit
 from bandproof.bench.verbs.console import run
 from bandproof.bench.verbs.rehearse import world_of
 from tests.benchmarks import _direct, predicted
@@ -246,6 +248,24 @@ def test_risks_of_a_figure_are_those_of_the_integrals(noisy, rule, size):
     assert (told.undecided.value > 0.01) == (rule == "guarded")
 
 
+def test_rule_by_risk_decides_as_a_measured_figure_is_decided(one_band):
+    """The converter's linearity dominates: its distribution is not normal, and a rule by risk looks at it."""
+    stage, bench = one_band.stages[0], rehearsal_bench(one_band)
+    (result,) = predicted_results(one_band, bench, seed=1)
+    nominal, budget = result.figures["gain"].measured, result.budgets["gain"]
+    away = np.linspace(-3.0, 6.0, 91) * budget.u
+    decides = Rule("risk", 0.05)
+    limit = Limit(nominal, 0.5 * nominal, nominal + 2.0 * budget.u, "risk 5 %", decides)
+    limited = replace(stage, limits={**stage.limits, "gain": limit})
+    one_by_one = [judged(limited, "gain", nominal, nominal + x, 0.0, budget, "").verdict for x in away]
+    many = _decided(nominal + away, (result, "gain"), limit, True)
+    words = [("pass", "undecided", "fail")[code] for code in many]
+    assert words == one_by_one
+    assert set(words) == {"pass", "undecided", "fail"}
+    normal = outcomes(nominal + away, budget.u, low=limit.lower, high=limit.upper, rule=decides)
+    assert (many != normal).any()
+
+
 def test_predicted_u_is_that_of_a_board_that_is_measured(one_band):
     """The board as drawn, swept on a simulated bench: the same plan, levels and noise, so the same U."""
     bench, stage = rehearsal_bench(one_band), one_band.stages[0]
@@ -375,6 +395,63 @@ def test_parts_without_tolerances_spread_nothing_and_cost_nothing(one_band):
     assert [row[-2:] for row in rows[:3]] == [["-", "-"]] * 3
     assert "  none: no parts with a tolerance are stated" in lines
     assert "spread (" not in "".join(lines)
+
+
+@pytest.fixture
+def two_bands():
+    board = demo_board()
+    return replace(board, stages=board.stages[:2])
+
+
+def without_parts(board, *names):
+    """Return a board of which nothing is known about the parts of these stages."""
+    bare = (replace(s, circuit=PASSIVE, parts=()) if s.name in names else s for s in board.stages)
+    return replace(board, stages=tuple(bare))
+
+
+def test_nothing_is_promised_of_a_stage_whose_parts_are_not_stated(two_bands):
+    board = without_parts(two_bands, "body")
+    bench, boards = rehearsal_bench(board), predicted_boards(board, draws=200)
+    found = expected(board, bench, boards)
+    lines = list(prediction_lines(board, boards, bench, found))
+    rows = [line.split() for line in lines if line.startswith("body")]
+    assert [row[-2:] for row in rows[:3]] == [["-", "-"]] * 3  # spread and range of f0, Q, gain
+    assert rows[3][1:] == ["-"] * 4  # within limits
+    assert rows[4][-5:] == ["-"] * 5  # on the bench; U and the ratio are known
+    assert float(rows[4][4]) > 4.0
+    assert lines.count("whole board, of the stages with parts") == 2
+    alone = predicted_boards(without_parts(two_bands), draws=200)
+    assert boards.conforming == alone.stages[0].conforming
+    told = json.loads(json.dumps(prediction_object(board, boards, bench, found), allow_nan=False))
+    low, body = told["stages"]
+    assert (low["yield"], body["yield"]) == (told["yield"], None)
+    centre = body["parameters"]["centre"]
+    assert [centre[key] for key in ("mean", "standard_deviation", "range_95", "yield")] == [None] * 4
+    assert centre["bench"]["pass"] is None
+    assert centre["bench"]["consumer_risk"] is None
+    passed = [low["parameters"][name]["bench"]["pass"]["value"] for name in QUANTITIES]
+    assert 0.9 < told["bench"]["board"]["pass"]["value"] <= min(passed)
+
+
+def test_of_a_board_without_any_parts_no_yield_is_told(two_bands):
+    board = without_parts(two_bands, "low", "body")
+    bench, boards = rehearsal_bench(board), predicted_boards(board, draws=200)
+    found = expected(board, bench, boards)
+    lines = list(prediction_lines(board, boards, bench, found))
+    below = [line.split() for above, line in pairwise(lines) if above == "whole board, of the stages with parts"]
+    assert below == [["-"], ["-"] * 5]
+    told = json.loads(json.dumps(prediction_object(board, boards, bench, found), allow_nan=False))
+    assert (told["yield"], told["bench"]["board"]["pass"]) == (None, None)
+
+
+def test_what_no_draw_or_every_draw_showed_has_one_form(predict, one_band_text, bench_path):
+    """The rule of three: 95 % sure that what none of n draws was is rarer than 3 / n."""
+    _, out, _ = predict(one_band_text, "--bench", bench_path, "--draws", "1000")
+    rows = [line.split() for line in out.splitlines() if line.startswith(("low", "whole board"))]
+    assert rows[3] == ["low", *[">99.7"] * 4]
+    assert rows[5][-5:] == [">99.7", "<0.3", "<0.3", "<0.3", "<0.3"]
+    assert "0.00" not in out
+    assert "100.00" not in out
 
 
 def test_drawing_outside_its_own_limits_is_noted(predict, one_band_text):
