@@ -95,6 +95,7 @@ def judged(lines: Mapping[Key, Line], stages: Sequence[StageResult]) -> Judged:
         for quantity, figure in stage.figures.items():
             line = lines[stage.name, quantity]
             what, value = f"{quantity} of {stage.name}", figure.measured
+            assert figure.verdict is not None  # a check that was cut short is not judged
             verdicts.append(figure.verdict)
             if not isfinite(value):
                 reasons.append(f"{what} could not be had: {stage.status}")

@@ -80,7 +80,10 @@ def _is_large(point: Point) -> bool:
 
 
 def evaluate(run: Run) -> tuple[StageResult, ...]:
-    """Return what is concluded about every stage that was driven; one without a fit is undecided, and why."""
+    """Return what is concluded about every stage that was driven; one without a fit is undecided, and why.
+
+    Of a run that was cut short neither a stage nor a figure has a verdict.
+    """
     measured, known = {point.stage for point in run.points if point.purpose != "no-signal"}, known_paths(run)
     board, bench = run.board, run.bench
     results = [
@@ -91,7 +94,15 @@ def evaluate(run: Run) -> tuple[StageResult, ...]:
         if stage.name in measured
     ]
     suspects = suspected(board, results)
-    return tuple(replace(result, suspects=suspects.get(result.name, ())) for result in results)
+    found = tuple(replace(result, suspects=suspects.get(result.name, ())) for result in results)
+    return found if run.ended == "complete" else tuple(map(_without_verdict, found))
+
+
+def _without_verdict(stage: StageResult) -> StageResult:
+    figures = {
+        name: replace(figure, verdict=None, conformance_probability=nan) for name, figure in stage.figures.items()
+    }
+    return replace(stage, figures=figures, verdict=None)
 
 
 def known_paths(run: Run) -> dict[Ranges, Path]:
@@ -136,7 +147,7 @@ def evaluate_stage(
     return StageResult(
         name=stage.name,
         kind=stage.kind,
-        verdict=worst(*(figure.verdict for figure in figures.values())),
+        verdict=worst(*(figure.verdict for figure in figures.values() if figure.verdict)),
         model=MODEL,
         figures=figures,
         theta=tuple(fit.theta[0].tolist()) if fit else (),

@@ -28,6 +28,7 @@ _SINCE: dict[str, Any] = {
     "checks": None,
     "earlier": [],
     "retest": "",
+    "longer": 1.0,
 }  # what journals of earlier versions lack
 _REHEARSAL: dict[str, Any] = {
     "seed": int,
@@ -59,5 +60,7 @@ def checked_head(entry: dict[str, Any]) -> dict[str, Any]:
     if entry["checks"] is not None:
         checks_from(entry["checks"])
     for attempt in entry["earlier"]:
-        whole(attempt, attempt=int, digest=str, verdict=str, pooled=bool)
-    return whole(entry, retest=str, **_HEAD)
+        whole(attempt, attempt=int, pooled=bool)
+        if attempt["pooled"]:
+            whole(attempt, digest=str, verdict=str)
+    return whole(entry, retest=str, longer=float, **_HEAD)

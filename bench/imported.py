@@ -87,7 +87,7 @@ def _result(
     return StageResult(
         name=name,
         kind="band",
-        verdict=worst(*(figure.verdict for figure in figures.values())) if figures else None,
+        verdict=worst(*(figure.verdict for figure in figures.values() if figure.verdict)) if figures else None,
         model=choice.model,
         figures=figures,
         theta=tuple(fit.theta[0].tolist()),

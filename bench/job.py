@@ -46,9 +46,10 @@ class Job:
 
     ``rehearsal`` is what a rehearsal was asked for (seed, defects, faults): a resume starts the same simulated bench
     again. ``thru`` is one stored in a file, used by a new run if all its conditions hold; a resumed run uses that of
-    its journal. ``earlier`` are the complete attempts on the serial number that the verdict is pooled with, ``retest``
-    why it is asked again. ``checks`` are those of the bench on its check standard, ``notes`` what is to be told of a
-    new run from its beginning. ``begin_journal`` makes the journal of a new run in its folder.
+    its journal. ``earlier`` are the attempts on the serial number; the verdict is pooled with those that count.
+    ``retest`` is why it is asked again, ``longer`` how many times as long as usual its records are. ``checks`` are
+    those of the bench on its check standard, ``notes`` what is to be told of a new run from its beginning.
+    ``begin_journal`` makes the journal of a new run in its folder.
     """
 
     board: Board
@@ -70,6 +71,7 @@ class Job:
     rehearsal: Mapping[str, Any] | None = None
     earlier: Sequence[Attempt] = ()
     retest: str = ""
+    longer: float = 1.0
     checks: CheckHistory | None = None
     notes: Sequence[str] = ()
     bench_path: str = ""
@@ -165,7 +167,7 @@ class Job:
             progress=self.progress,
             keep_raw=self.keep_raw,
             start=journal.head["clock_start"],
-            planner=Planner(self.board, bench, known),
+            planner=Planner(self.board, bench, known, longer=journal.head["longer"]),
         )
         sweep.prepare()
         return sweep
@@ -191,6 +193,7 @@ class Job:
             "keep_raw": self.keep_raw,
             "earlier": [entry.plain() for entry in self.earlier],
             "retest": self.retest,
+            "longer": self.longer,
             "rehearsal": dict(self.rehearsal) if self.rehearsal is not None else None,
         }
 

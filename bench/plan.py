@@ -35,6 +35,8 @@ _OVERHEAD = 0.03  # s a record costs beyond dwell and duration, for the time lef
 class Planner:
     """Plans the records of a board on a bench, stage by stage, and the path's on every pair of ranges not ``known``.
 
+    ``longer``: how many times the usual length the records with a signal are, and their samples, those of the path not.
+
     Raises
     ------
     BadInput
@@ -42,9 +44,9 @@ class Planner:
         a band is too low for the longest record.
     """
 
-    def __init__(self, board: Board, bench: Bench, known: Collection[Ranges] = ()) -> None:
+    def __init__(self, board: Board, bench: Bench, known: Collection[Ranges] = (), *, longer: float = 1.0) -> None:
         _refuse_series(board)
-        self._board, self._bench, self._known = board, bench, set(known)
+        self._board, self._bench, self._known, self._longer = board, bench, set(known), longer
         self._predictions = {stage.name: _predicted(board, stage) for stage in board.stages}
         self._levels = {stage.name: self._level(stage) for stage in board.stages}
         self._costs: dict[str, list[float]] = {}
@@ -225,9 +227,10 @@ class Planner:
             record = plan_record(frequency, mains=self._bench.mains, longest=LONGEST)
         except ValueError as problem:
             raise BadInput(f"stage {stage.name!r}: {problem}") from problem
-        dwell = self._dwell(stage, frequency, previous, record.duration)
+        duration, samples = self._longer * record.duration, ceil(self._longer * record.points)
+        dwell = self._dwell(stage, frequency, previous, duration)
         tones = (Tone(frequency, level),)
-        return Step(index, stage.name, purpose, tones, dwell, record.duration, record.points, ranges)
+        return Step(index, stage.name, purpose, tones, dwell, duration, samples, ranges)
 
     def _dwell(self, stage: Stage, frequency: float, previous: tuple[float, float] | None, duration: float) -> float:
         """Return the dwell after a change from a frequency at a part of the level, or from no signal."""

@@ -352,7 +352,7 @@ class Comparison:
     rule: str
     lower_limit: float
     upper_limit: float
-    verdict: Verdict
+    verdict: Verdict | None
     conformance_probability: float
     prior: Prior | None = None
 

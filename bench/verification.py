@@ -122,7 +122,7 @@ def _differences(stored: Stored) -> Iterator[str]:
         yield "it has conclusions of other stages than points"
         return
     for now, then in zip(again, stored.result["stages"], strict=True):
-        if now["verdict"] != then["verdict"]:
+        if now["verdict"] not in (then["verdict"], None):  # cut short: earlier versions gave one all the same
             yield f"{now['name']}: its verdict is {then['verdict']}, from its points it comes out {now['verdict']}"
         for quantity, figure in now["parameters"].items():
             yield from _of_figure(f"{now['name']}, {quantity}", figure, then["parameters"][quantity])
@@ -134,7 +134,7 @@ def _of_figure(name: str, now: Mapping[str, Any], then: Mapping[str, Any]) -> It
         a, b = now[key], then[key]
         if (a is None) != (b is None) or (a is not None and not abs(a - b) <= tolerance):
             yield f"{name}: {key.replace('_', ' ')} is {b}, from its points it comes out {a}"
-    if now["verdict"] != then["verdict"]:
+    if now["verdict"] not in (then["verdict"], None):
         yield f"{name}: its verdict is {then['verdict']}, from its points it comes out {now['verdict']}"
 
 

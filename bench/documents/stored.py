@@ -5,11 +5,11 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-from bandproof.bench.attempts import with_earlier
 from bandproof.bench.chain import link_of
 from bandproof.bench.documents.report import REPORT
 from bandproof.bench.evaluate import evaluate, views
 from bandproof.bench.picture import StageView
+from bandproof.bench.pooling import with_earlier
 from bandproof.bench.runfile import digest_of, read_result, read_run
 from bandproof.bench.types import Run, StageResult
 

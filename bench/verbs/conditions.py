@@ -1,4 +1,4 @@
-"""Who measures, in which room: taken from options, asked for once on a terminal, else not stated."""
+"""Who measures, in which room, and why: taken from options, or asked for once on a terminal, else not stated."""
 
 import sys
 from typing import TYPE_CHECKING
@@ -11,7 +11,16 @@ if TYPE_CHECKING:
     from bandproof.bench.operator import Operator
     from bandproof.bench.stop import Stop
 
-__all__ = ["ambient_of", "person", "stated"]
+__all__ = ["ambient_of", "in_words", "person", "stated"]
+
+
+def in_words(_: click.Context, option: click.Parameter, text: str) -> str:
+    """Return a reason given as an option, "" for none; a callback of click (BadInput: it says nothing)."""
+    if text and not any(map(str.isalnum, text)):
+        raise BadInput(
+            f"{option.opts[0]} {text!r} says nothing: it is kept for whoever reads the run, write a few words"
+        )
+    return text.strip()
 
 
 def stated(operator: str, ambient: str | None) -> tuple[str, float | None]:

@@ -21,6 +21,8 @@ def command(folder: Path, as_json: bool) -> int:
     Example:
       bandproof resume runs/TB-0001/1
     """
+    from bandproof.bench.attempts import superseded
+    from bandproof.bench.errors import BadInput
     from bandproof.bench.finish import board_and_bench
     from bandproof.bench.journal import Journal
     from bandproof.bench.resumption import unfinished
@@ -32,6 +34,8 @@ def command(folder: Path, as_json: bool) -> int:
     with closing(Journal.opened(place)) as journal:
         if journal.head["rehearsal"] is not None:
             return resume_rehearsal(journal, place, as_json=as_json)
+        if later := superseded(place.parent, journal.head["attempt"]):
+            raise BadInput(later)
         board, bench = board_and_bench(journal)
         job = job_of(board=board, bench=bench, folder=place, clock=clock_of(bench), **of_head(journal.head))
         return carried_out(job, journal=journal, as_json=as_json)

@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING, Any
 import click
 
 from bandproof.bench.types import Bench
-from bandproof.bench.verbs.conditions import person, stated
+from bandproof.bench.verbs.conditions import in_words, person, stated
 from bandproof.bench.verbs.screen import columns
 
 if TYPE_CHECKING:
@@ -134,10 +134,28 @@ def worst_code(codes: Sequence[int]) -> int:
 @click.option("--operator", "name", default="", help="Who does this; kept in the run file.")
 @click.option("--ambient", help='Temperature of the room, such as "23 °C"; kept in the run file.')
 @click.option("--note", default="", help="A remark; kept in the run file.")
-@click.option("--retest", default="", metavar="REASON", help="Why a board that has a verdict is measured once more.")
-@click.option("--repair", default="", metavar="TEXT", help="What was repaired since; kept in the serial number's log.")
+@click.option(
+    "--retest",
+    default="",
+    metavar="REASON",
+    callback=in_words,
+    help="Why a board that has a verdict, or an unfinished attempt, is measured once more.",
+)
+@click.option(
+    "--repair",
+    default="",
+    metavar="TEXT",
+    callback=in_words,
+    help="What was repaired since; kept in the serial number's log.",
+)
 @click.option("--without-thru", is_flag=True, help="Leave out the thru that is stored beside the bench file.")
-@click.option("--without-check", default="", metavar="REASON", help="Why to sweep on a bench that wants a check first.")
+@click.option(
+    "--without-check",
+    default="",
+    metavar="REASON",
+    callback=in_words,
+    help="Why to sweep on a bench that wants a check first.",
+)
 @click.option("--raw", is_flag=True, help="Keep every record in the run file.")
 @click.option("--json", "as_json", is_flag=True, help="Print the result object and nothing else.")
 def command(
@@ -179,7 +197,9 @@ def command(
     operator, room = stated(name, ambient)
     clock = clock_of(bench)
     checks, notes = checks_for(bench, path, clock.utc(), without_check)
-    known = _may_begin(folder, serial, retest, repair, operator=operator, utc=clock.utc())
+    known, longer = _may_begin(folder, serial, retest, repair, operator=operator, utc=clock.utc())
+    if longer > 1.0:
+        notes = (*notes, f"records are {longer:.0f} times as long: for their noise the attempt before was undecided")
     place, attempt = new_attempt(folder, serial)
     job = job_of(
         board=board,
@@ -191,6 +211,7 @@ def command(
         clock=clock,
         earlier=known,
         retest=retest,
+        longer=longer,
         checks=checks,
         notes=notes,
         operator_name=operator,
@@ -206,18 +227,25 @@ def command(
 
 def _may_begin(
     folder: Path, serial: str, retest: str, repair: str, *, operator: str, utc: "datetime"
-) -> "list[Attempt]":
-    """Return the complete attempts there are, a repair logged first (BadInput when another one may not begin)."""
+) -> "tuple[list[Attempt], float]":
+    """Return the attempts there are and how many times longer the next one's records are, after logging a repair.
+
+    Raises
+    ------
+    BadInput
+        Another attempt may not begin; nothing is logged.
+    """
     from bandproof.bench.attempts import earlier, log_repair, place_of, refusal
     from bandproof.bench.errors import BadInput
+    from bandproof.bench.pooling import earned
 
     place = place_of(folder, serial)
+    known = earlier(place, repaired=bool(repair))
+    if why := refusal(known, retest, place):
+        raise BadInput(f"{serial}: {why}")
     if repair:
         log_repair(place, repair, operator=operator, utc=utc)
-    known = earlier(place)
-    if why := refusal([attempt.verdict for attempt in known if attempt.counts], retest):
-        raise BadInput(f"{serial}: {why}")
-    return known
+    return known, earned(place, known)
 
 
 def job_of(**facts: Any) -> "Job":
@@ -238,6 +266,7 @@ def of_head(head: dict[str, Any]) -> dict[str, Any]:
 
 def carried_out(job: "Job", *, as_json: bool, journal: "Journal | None" = None) -> int:
     """Carry a job out, or go on with its journal, print the outcome and return the exit code."""
+    from bandproof.bench.pooling import outlook
     from bandproof.bench.stop import watching_signals
 
     begin = wall()
@@ -246,7 +275,10 @@ def carried_out(job: "Job", *, as_json: bool, journal: "Journal | None" = None) 
             outcome = job.carry_out() if journal is None else job.go_on(journal)
     finally:
         job.progress.close()
-    return show(outcome, wall() - begin, as_json, simulated=job.rehearsal is not None)
+    code = show(outcome, wall() - begin, as_json, simulated=job.rehearsal is not None)
+    if not as_json and (told := outlook(outcome.run, outcome.stages, outcome.result)):
+        click.echo(wrapped(told))
+    return code
 
 
 def wall() -> float:

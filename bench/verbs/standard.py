@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING, Any
 import click
 
 from bandproof.bench.errors import BadInput
+from bandproof.bench.verbs.conditions import in_words
 
 if TYPE_CHECKING:
     from bandproof.bench.check_chart import Judged, Key, Line
@@ -28,7 +29,13 @@ RESULT_SCHEMA = "bandproof-check-result/1"
 @click.option("--ambient", help='Temperature of the room, such as "23 °C".')
 @click.option("--operator", "name", default="", help="Who does this.")
 @click.option("--note", default="", help="A remark; kept in the history.")
-@click.option("--accept", default="", metavar="REASON", help="Why the bench goes on out of limits; begins a new chart.")
+@click.option(
+    "--accept",
+    default="",
+    metavar="REASON",
+    callback=in_words,
+    help="Why the bench goes on out of limits; begins a new chart.",
+)
 @click.option("--without-thru", is_flag=True, help="Leave out the thru that is stored beside the bench file.")
 @click.option("--json", "as_json", is_flag=True, help="Print the result object and nothing else.")
 def command(

@@ -5,6 +5,7 @@ import re
 from dataclasses import replace
 from datetime import UTC, datetime
 from math import sqrt
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -12,9 +13,11 @@ from scipy.stats import multivariate_normal
 
 from bandproof.analysis.decision import SIMPLE, Rule, outcomes
 from bandproof.analysis.uncertainty import combine
-from bandproof.bench.attempts import earlier, log_repair, pooled, refusal, with_earlier
+from bandproof.bench.attempts import Attempt, earlier, log_repair, refusal, superseded
 from bandproof.bench.errors import BadInput
 from bandproof.bench.evaluate import evaluate
+from bandproof.bench.journal import Journal
+from bandproof.bench.pooling import outlook, pooled, with_earlier
 from bandproof.bench.runfile import digest_of, read_result, write_run
 from bandproof.bench.types import QUANTITIES
 
@@ -24,6 +27,14 @@ NOON = datetime(2026, 1, 1, 12, tzinfo=UTC)
 # --- which may begin ---
 
 
+def known(*verdicts):
+    """Return attempts of these verdicts since the last repair; None: unfinished."""
+    return [Attempt(n, verdict and "5e3c", verdict, counts=True) for n, verdict in enumerate(verdicts, 1)]
+
+
+UNFINISHED = r"attempt 1 is unfinished\. Go on with it:  bandproof resume runs/TB-1/1\n.*--retest"
+
+
 @pytest.mark.parametrize(
     ("verdicts", "retest", "words"),
     [
@@ -31,15 +42,20 @@ NOON = datetime(2026, 1, 1, 12, tzinfo=UTC)
         (["undecided"], "", None),  # earns one more
         (["fail"], "a clip had come off", None),
         (["pass"], "audit", None),
+        ([None], "the scope is broken", None),
         (["fail"], "", r"its verdict is fail. To ask once more, say why: --retest"),
         (["pass"], "", r"its verdict is pass\."),
-        (["undecided", "undecided"], "once more", r"measured twice .* undecided .* now a person decides"),
+        ([None], "", UNFINISHED),
+        (["undecided", "undecided"], "once more", r"measured twice .* a person decides: its verdict is undecided"),
         (["fail", "fail"], "", r"measured twice .*--repair"),
+        ([None, "pass"], "once more", r"measured twice .* a person decides: its verdict is pass"),
+        ([None, None], "once more", r"measured twice .*attempt 2 is unfinished.*resume runs/TB-1/2\n"),
+        (["fail", None], "once more", r"measured twice .*attempt 2 is unfinished.*resume runs/TB-1/2\n"),
         ([], "why", r"nothing to retest"),
     ],
 )
-def test_a_verdict_is_asked_again_once_with_a_reason(verdicts, retest, words):
-    found = refusal(verdicts, retest)
+def test_a_board_is_looked_at_again_once_with_a_reason(verdicts, retest, words):
+    found = refusal(known(*verdicts), retest, Path("runs/TB-1"))
     assert (re.search(words, found) is not None) if words else found == ""
 
 
@@ -68,9 +84,29 @@ def test_attempts_count_when_complete_and_since_the_last_repair(outcome, tmp_pat
     assert (place / "repairs.txt").read_text().startswith(log)  # nothing that was logged is lost
 
 
-def test_a_repair_says_something_and_its_log_is_read_strictly(tmp_path):
-    with pytest.raises(BadInput, match="says nothing"):
-        log_repair(tmp_path, " \n", operator="Ann", utc=NOON)
+def begun(place, number, outcome, points):
+    """Keep a journal that ends behind so many points of the outcome's run."""
+    (place / str(number)).mkdir(parents=True)
+    journal = Journal.begin(place / str(number), Journal.peeked(outcome.folder).head)
+    journal.planned(outcome.run.steps[:points])
+    for point in outcome.run.points[:points]:
+        journal.measured(point, began=0.0, finished=0.0)
+    journal.close()
+
+
+def test_an_unfinished_attempt_counts_once_it_has_a_point_of_a_curve(outcome, tmp_path):
+    first = next(i for i, point in enumerate(outcome.run.points) if point.purpose == "curve")
+    begun(tmp_path, 1, outcome, first)
+    assert earlier(tmp_path) == []
+    begun(tmp_path, 2, outcome, first + 1)
+    assert earlier(tmp_path) == [Attempt(2, None, None, counts=True)]
+    assert earlier(tmp_path, repaired=True) == [Attempt(2, None, None, counts=False)]
+    assert earlier(tmp_path)[0].plain() == {"attempt": 2, "digest": None, "verdict": None, "pooled": False}
+    assert "2 was begun since" in superseded(tmp_path, 1)
+    assert superseded(tmp_path, 2) == ""
+
+
+def test_a_log_of_repairs_is_read_strictly(tmp_path):
     (tmp_path / "repairs.txt").write_text("changed a part\n")
     with pytest.raises(BadInput, match=r"repairs\.txt: 'changed a part' is no entry"):
         earlier(tmp_path)
@@ -111,6 +147,19 @@ def test_figures_of_two_attempts_are_averaged_and_type_a_alone_is_lowered(outcom
             assert stage.figures[name].repeatability == pytest.approx(own.figures[name].repeatability / sqrt(2.0))
 
 
+def test_an_attempt_of_longer_records_counts_by_their_length(outcome):
+    """Four times the samples, half the noise: 0.2 and 0.8 are the weights of least variance, 1/5 of the first's."""
+    points = tuple(replace(point, samples=4 * point.samples) for point in outcome.run.points)
+    first, second = noise_alone(moved(outcome.stages[0], q=1.01)), noise_alone(outcome.stages[0])
+    halved = {
+        name: combine([replace(row, standard_uncertainty=0.5 * row.standard_uncertainty) for row in b.rows])
+        for name, b in second.budgets.items()
+    }
+    (stage,) = pooled([outcome.run, replace(outcome.run, points=points)], [[first], [replace(second, budgets=halved)]])
+    assert stage.figures["q"].measured == pytest.approx(1.002 * second.figures["q"].measured, rel=1e-12)
+    assert stage.budgets["q"].u == pytest.approx(first.budgets["q"].u / sqrt(5.0), rel=1e-12)
+
+
 def test_a_stored_thru_that_both_attempts_used_is_not_lowered(outcome):
     run = replace(outcome.run, thru=type("Stored", (), {"started": "2026-01-01T00:00:00+00:00"})())
     other = replace(outcome.run, thru=type("Stored", (), {"started": "2026-01-02T00:00:00+00:00"})())
@@ -124,7 +173,7 @@ def test_a_stored_thru_that_both_attempts_used_is_not_lowered(outcome):
 def test_unequal_attempts_keep_the_degrees_of_freedom_of_the_one_that_counts_most(outcome):
     """JCGM 100:2008, G.4.1: u 1.0 of 3 degrees and u 0.1 of 100 are no mean of 103.
 
-    (0.25 + 0.0025)^2 / (0.0625 / 3 + 0.00000625 / 100) = 3.06, by hand; Student's t of 3 for 95.45 % is 3.31, table G.2.
+    (0.25 + 0.0025)^2 / (0.0625 / 3 + 0.00000625 / 100) = 3.06, by hand; t of 3 for 95.45 % is 3.31 (table G.2).
     """
     alone = noise_alone(outcome.stages[0])
 
@@ -163,20 +212,65 @@ def test_a_stage_in_doubt_is_left_out_before_and_stays_undecided_now(outcome):
 def test_a_run_names_its_earlier_attempts_and_says_when_one_has_changed(outcome, tmp_path):
     place = tmp_path / "TB-1"
     stored(place, outcome, 1, "pass")
-    known = [attempt.plain() for attempt in earlier(place)]
+    before = [attempt.plain() for attempt in earlier(place)]
     run, stages = replace(outcome.run, attempt=2), evaluate(outcome.run)
-    found, named = with_earlier(run, stages, place, known, "audit")
+    found, named = with_earlier(run, stages, place, before, "audit")
     assert [entry["attempt"] for entry in named] == [1, 2]
     assert named[0]["digest"] == digest_of(place / "1" / "run.h5")
     assert (named[1]["digest"], named[1]["reason"], named[1]["pooled"]) == (None, "audit", True)
     assert found[0].budgets["q"].u_type_a == pytest.approx(stages[0].budgets["q"].u_type_a / sqrt(2.0))
-    known[0]["digest"] = "0" * 64
-    found, _ = with_earlier(run, stages, place, known, "audit")
+    before[0]["digest"] = "0" * 64
+    found, _ = with_earlier(run, stages, place, before, "audit")
     assert {stage.verdict for stage in found} == {"undecided"}
     assert all("attempt 1 cannot be pooled" in stage.alarms[-1] for stage in found)
     assert with_earlier(run, stages, place, [], "") == (stages, None)
     cut = replace(run, ended="cut_short")
-    assert with_earlier(cut, stages, place, known, "")[0] is stages
+    assert with_earlier(cut, stages, place, before, "")[0] is stages
+
+
+# --- whether one more can help ---
+
+
+def undecided(stage, **parts):
+    """Return a stage of undecided figures; of each that is named, so much of u² is the converter's linearity."""
+    budgets = {}
+    for name, budget in noise_alone(stage).budgets.items():
+        size = budget.u * sqrt(parts.get(name, 0.0) / (1.0 - parts.get(name, 0.0)))
+        rows = [
+            replace(row, standard_uncertainty=size, sensitivity=1.0) if row.name == "linearity out" else row
+            for row in budget.rows
+        ]
+        budgets[name] = combine(rows)
+    figures = {
+        name: replace(figure, verdict="undecided" if name in parts else "pass")
+        for name, figure in stage.figures.items()
+    }
+    return replace(stage, figures=figures, budgets=budgets, verdict="undecided")
+
+
+@pytest.mark.parametrize(
+    ("parts", "words"),
+    [
+        ({"q": 0.0}, r"^Noise left it undecided\. Sweep it once more, .* 4 times as long"),
+        ({"q": 0.7, "gain": 0.5}, r"^Noise left"),
+        ({"q": 0.98}, r"cannot help: q of low is undecided, and 98 % of its u² is linearity out, the same in every"),
+        ({"centre": 0.0, "gain": 0.8}, r"cannot help: gain of low"),  # the board stays open whatever f0 becomes
+    ],
+)
+def test_what_noise_left_undecided_earns_longer_records_and_what_it_did_not_is_told(outcome, parts, words):
+    stages = (undecided(outcome.stages[0], **parts),)
+    result = {"verdict": "undecided", "attempts": None}
+    assert re.search(words, outlook(outcome.run, stages, result))
+    assert outlook(outcome.run, stages, {**result, "verdict": "pass"}) == ""
+    for own in ({"pooled": True, "reason": ""}, {"pooled": False, "reason": "the first was cut short"}):
+        twice = {**result, "attempts": [{"pooled": True}, own]}
+        assert outlook(outcome.run, stages, twice) == "It was measured twice: now a person decides."
+
+
+def test_a_doubt_says_nothing_of_noise(outcome):
+    open_, result = undecided(outcome.stages[0], q=0.0), {"verdict": "undecided", "attempts": None}
+    figures = {n: replace(f, conformance_probability=float("nan")) for n, f in open_.figures.items()}
+    assert outlook(outcome.run, (replace(open_, figures=figures),), result) == ""
 
 
 # --- what the rule lets through ---
@@ -202,7 +296,7 @@ def test_a_board_on_its_limit_passes_no_more_often_than_two_attempts_allow(outco
     passed = 0
     for codes in zip(first, second, strict=True):
         verdicts = []
-        while not refusal(verdicts, "please" if verdicts else "") and "pass" not in verdicts:
+        while not refusal(known(*verdicts), "please" if verdicts else "", Path()) and "pass" not in verdicts:
             verdicts.append(words[codes[len(verdicts)]])  # an attempt more than two would be an IndexError
         passed += verdicts[-1] == "pass"
     expected = 1.0 - multivariate_normal([0.0, 0.0], [[1.0, sqrt(0.5)], [sqrt(0.5), 1.0]]).cdf([-z, -z])

@@ -336,6 +336,16 @@ def test_an_overloaded_batch_is_measured_again_on_a_wider_range(healthy, one_ban
     assert all(step.ranges[1] >= 2.0 * before for step in again)
 
 
+def test_longer_records_keep_their_sampling_and_never_wait_longer(healthy, one_band):
+    planners = [Planner(one_band, rehearsal_bench(one_band), longer=longer) for longer in (1.0, 4.0)]
+    curves = [planner.more(healthy.journal.points[:2]) for planner in planners]
+    assert [step.purpose for step in curves[0]] == ["curve"] * 11 + ["closing"]
+    for usual, longer in zip(*curves, strict=True):
+        assert (longer.duration, longer.samples) == (4.0 * usual.duration, 4 * usual.samples)
+        assert (longer.frequency, longer.ranges) == (usual.frequency, usual.ranges)
+        assert longer.dwell <= usual.dwell
+
+
 def test_a_plan_ends_however_bad_the_records_are(healthy, one_band):
     bench = rehearsal_bench(one_band)
     template = {point.purpose: point for point in healthy.journal.points}

@@ -16,8 +16,11 @@ import pytest
 
 from bandproof.bench.board_file import parse_board
 from bandproof.bench.circuit import draw_parts
+from bandproof.bench.errors import Stopped
+from bandproof.bench.evaluate import evaluate
+from bandproof.bench.journal import Journal
 from bandproof.bench.rehearsal import rehearsal_bench
-from bandproof.bench.runfile import digest_of, read_result
+from bandproof.bench.runfile import digest_of, read_result, read_run
 from bandproof.bench.verbs.console import run
 from bandproof.bench.verbs.rehearse import world_of
 from bandproof.bench.verbs.table import VERBS
@@ -353,6 +356,115 @@ def test_a_verdict_is_asked_again_once_and_anew_after_a_repair(console, served):
     assert re.fullmatch(r"\S+\tafter attempt 2\tAnn\tC_2 replaced\n", (bench.folder / "TB-1/repairs.txt").read_text())
     code, out, _ = bench.sweep(console, "--retest", "seen")
     assert (code, "The figures are means of attempts 3, 4." in out) == (PASS, True)
+
+
+def test_a_repair_is_logged_only_where_a_sweep_may_begin(console, served):
+    bench = served()
+    for _ in range(2):
+        code, _, err = bench.sweep(console, "--repair", "C_2 replaced", "--retest", "seen")
+        assert (code, "nothing to retest" in err) == (BAD_INPUT, True)
+    assert not (bench.folder / "TB-1").exists()
+
+
+@pytest.mark.parametrize("option", ["--retest", "--repair", "--without-check"])
+def test_a_reason_that_says_nothing_is_none(console, served, option):
+    bench = served()
+    for text in (" ", "\t", "-", "..."):
+        code, _, err = bench.sweep(console, option, text)
+        assert (code, f"{option} {text!r} says nothing" in err) == (BAD_INPUT, True)
+    assert console("check", bench.bench, "--accept", " ")[0] == BAD_INPUT
+    assert not (bench.folder / "TB-1").exists()
+
+
+def stopped_behind(monkeypatch, purpose, nth=1):
+    """Let Ctrl-C come behind the nth point of a purpose."""
+    true, seen = Journal.measured, []
+
+    def measured(journal, point, **details):
+        true(journal, point, **details)
+        seen.append(point.purpose)
+        if seen.count(purpose) == nth and point.purpose == purpose:
+            raise Stopped("Ctrl-C")
+
+    monkeypatch.setattr(Journal, "measured", measured)
+
+
+def test_a_look_that_was_cut_short_has_no_verdict_and_is_gone_on_with(console, served, monkeypatch):
+    bench = served()
+    with monkeypatch.context() as patch:
+        stopped_behind(patch, "thru")
+        code, out, _ = bench.sweep(console)
+    assert (code, "CUT SHORT: stopped by Ctrl-C" in out) == (INTERRUPTED, True)
+    rows = [line for line in out.splitlines() if re.match(r"low .* ± ", line)]
+    assert [row.split()[-1] for row in rows] == ["-"] * 3
+    assert "pass" not in out
+    place = bench.folder / "TB-1" / "1"
+    result = read_result(place / "run.cut_short-1.h5")
+    (stage,) = result["stages"]
+    kept = [stage, *stage["parameters"].values()]
+    assert [one["verdict"] for one in kept] == [None] * 4
+    assert [one["conformance_probability"] for one in kept[1:]] == [None] * 3
+    assert console("verify", place / "run.cut_short-1.h5")[0] == PASS
+    code, _, err = bench.sweep(console)
+    assert (code, f"bandproof resume {place}" in err, 'say why: --retest "REASON"' in err) == (BAD_INPUT, True, True)
+    assert console("resume", place)[0] == PASS
+    assert bench.sweep(console)[0] == BAD_INPUT  # it has a verdict now
+
+
+def test_of_two_looks_only_the_last_goes_on(console, served, monkeypatch):
+    """Two unfinished attempts, of which somebody would choose the better one."""
+    bench = served()
+    with monkeypatch.context() as patch:
+        stopped_behind(patch, "thru")
+        assert bench.sweep(console)[0] == INTERRUPTED
+        stopped_behind(patch, "thru")
+        assert bench.sweep(console, "--retest", "a probe fell off")[0] == INTERRUPTED
+    code, _, err = bench.sweep(console, "--retest", "again")
+    assert (code, "measured twice" in err) == (BAD_INPUT, True)
+    code, _, err = console("resume", bench.folder / "TB-1" / "1")
+    assert (code, "only the last goes on" in err) == (BAD_INPUT, True)
+    code, out, _ = console("resume", bench.folder / "TB-1" / "2", "--json")
+    first, second = json.loads(out)["attempts"]
+    assert (code, first["verdict"], first["pooled"], second["pooled"]) == (PASS, None, False, True)
+    assert second["reason"] == "a probe fell off"
+
+
+def test_a_run_cut_short_before_its_first_curve_is_no_look(console, served, monkeypatch):
+    bench = served()
+    with monkeypatch.context() as patch:
+        stopped_behind(patch, "low-level")
+        assert bench.sweep(console)[0] == INTERRUPTED
+    assert bench.sweep(console)[0] == PASS
+
+
+def test_an_undecided_board_is_measured_once_more_with_longer_records_also_after_a_resume(
+    console, served, monkeypatch, board_path, tmp_path
+):
+    """The board's f0 is 1.43 % above its design, and half of its u² is noise; both as the README's first table says."""
+    bench, text = served(), board_path.read_text()
+    bench.board = tmp_path / "open.board.toml"
+    bench.board.write_text(
+        text.replace('centre = "6 %", q', 'centre = "1.43 %", q').replace('rule      = "simple"', 'rule = "guarded 1"')
+    )
+    assert bench.board.read_text() != text
+    code, out, _ = bench.sweep(console)
+    assert code == UNDECIDED
+    assert "Noise left it undecided. Sweep it once more" in " ".join(out.split())
+    with monkeypatch.context() as patch:
+        stopped_behind(patch, "curve", nth=5)
+        assert bench.sweep(console)[0] == INTERRUPTED
+    code, out, _ = console("resume", bench.folder / "TB-1" / "2")
+    assert "The figures are means of attempts 1, 2." in out
+    assert "records are 4 times as long" in out
+    if code == UNDECIDED:
+        assert "now a person decides" in out
+    first, second = (read_run(bench.folder / "TB-1" / n / "run.h5") for n in "12")
+    curves = [[step for step in run.steps if step.purpose in ("curve", "closing")] for run in (first, second)]
+    for before, after in zip(*curves, strict=True):
+        assert after.duration == pytest.approx(4.0 * before.duration)
+        assert after.samples == 4 * before.samples
+    noise = [evaluate(run)[0].budgets["centre"].rows[0].contribution for run in (first, second)]
+    assert noise[1] == pytest.approx(noise[0] / 2.0, rel=0.2)
 
 
 def test_the_bench_verb_names_every_instrument_and_leaves_the_generator_off(console, served):
