@@ -9,7 +9,7 @@ import numpy as np
 
 from bandproof.analysis.types import BoolArray, FloatArray
 
-__all__ = ["Fraction", "Spread", "drawn", "fraction", "spread_of", "uniform_variance", "variance_shares"]
+__all__ = ["Fraction", "Spread", "drawn", "fraction", "spread_of", "uniform_variance", "variance_shares", "worst_case"]
 
 _RANGE = (0.025, 0.975)  # of the boards, so that 95 % lie between
 
@@ -125,3 +125,12 @@ def variance_shares(slopes: FloatArray, tolerances: FloatArray) -> tuple[FloatAr
     variance = uniform_variance(slopes * tolerances)
     total = variance.sum(axis=1, keepdims=True)
     return np.sqrt(total[:, 0]), np.divide(variance, total, out=np.zeros_like(variance), where=total > 0.0)
+
+
+def worst_case(slopes: FloatArray, tolerances: FloatArray) -> FloatArray:
+    """Return how far figures (F,) go, relative, to first order, with every part at the harmful end of its tolerance.
+
+    Slopes (F, P) and tolerances (P,) as for `variance_shares`.
+    """
+    worst: FloatArray = np.abs(slopes) @ tolerances
+    return worst

@@ -9,7 +9,7 @@ do), and all triples of the series inside them are tried. The bound is what the 
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Iterable
 from dataclasses import dataclass
 from functools import cache
 from itertools import product
@@ -31,7 +31,6 @@ __all__ = [
     "best_resistors",
     "is_realizable",
     "part_sensitivities",
-    "spread",
     "standard_parts",
     "usual_range",
 ]
@@ -114,10 +113,10 @@ def standard_parts(
     Returns
     -------
     tuple of Choice
-        With all resistors in the usual range, for each capacitor with which the error is then within the widest step
-        of the series (exact values inside the range always reach that, by rounding); of equal errors the one nearest to
-        the middle of the range comes first (arbitrary). If there is none: for each capacitor the best choice whatever
-        the range, the nearest breach first.
+        With all resistors in the usual range, for each capacitor with which the error is then within the widest step of
+        the series (exact values inside the range always reach that, by rounding); of equal errors, which are equally
+        sensitive too, the one nearest to the middle of the range comes first (arbitrary). If there is none: for each
+        capacitor the best choice whatever the range, the nearest breach first.
 
     Raises
     ------
@@ -188,18 +187,6 @@ def part_sensitivities(parts: MfbParts, *, gbw: float = inf) -> dict[str, tuple[
     logs = np.log(one_pole_figures(r_in, r_shunt, r_feedback, c_1, c_2, gbw=gbw))
     slopes = (logs[:, :5] - logs[:, 5:]) / (2 * step)
     return {name: (float(a), float(b), float(c)) for name, (a, b, c) in zip(NAMES, slopes.T, strict=True)}
-
-
-def spread(
-    sensitivities: Mapping[str, Sequence[float]], tolerances: Mapping[str, float]
-) -> tuple[tuple[float, float], ...]:
-    """Return how far tolerances move f0, Q and gain, relative, to first order: (worst case, root of sum of squares).
-
-    The worst case has every part at the end of its tolerance that does harm.
-    """
-    moves = np.array([[slope * tolerances[name] for slope in slopes] for name, slopes in sensitivities.items()])
-    worst, squares = np.abs(moves).sum(axis=0), np.sqrt((moves**2).sum(axis=0))
-    return tuple((float(a), float(b)) for a, b in zip(worst, squares, strict=True))
 
 
 def _exact(wanted: MfbFigures, gbw: float) -> tuple[float, float, float]:

@@ -6,16 +6,20 @@ from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import Any
 
+import numpy as np
+
 from bandproof.analysis.circuits import MfbFigures, mfb_figures
+from bandproof.analysis.one_pole import one_pole_design
+from bandproof.analysis.spread import variance_shares, worst_case
 from bandproof.analysis.standard_parts import (
     CAPACITANCE,
     NAMES,
     RESISTANCE,
     Choice,
     part_sensitivities,
-    spread,
     usual_range,
 )
+from bandproof.analysis.types import FloatArray
 from bandproof.bench.quantities import engineering
 
 __all__ = ["PartsRequest", "described", "in_decibels", "parts_lines", "parts_object"]
@@ -66,7 +70,7 @@ def parts_lines(request: PartsRequest, choices: tuple[Choice, ...]) -> Iterator[
     yield from (_row(number, choice) for number, choice in enumerate(choices, 1))
     yield ""
     yield "Errors of f0, Q and gain are relative; worst is the largest of the three."
-    for text in _breaches(request, choices[0]):
+    for text in (*_equally_sensitive(request, choices), *_breaches(request, choices[0])):
         for line in textwrap.wrap(text, 80, subsequent_indent="  ", break_on_hyphens=False):
             yield line.replace(_TIED, " ")
     yield from _first_lines(request, choices[0])
@@ -87,7 +91,7 @@ def _plain_figures(figures: MfbFigures) -> dict[str, float]:
 
 
 def _plain_choice(request: PartsRequest, choice: Choice) -> dict[str, Any]:
-    slopes, spreads = _sensitivity(request, choice)
+    slopes, worst, sd = _sensitivity(request, choice)
     return {
         "parts": {name: getattr(choice.parts, name) for name in NAMES},
         "breaches": list(choice.breaches),
@@ -95,19 +99,33 @@ def _plain_choice(request: PartsRequest, choice: Choice) -> dict[str, Any]:
         "errors": dict(zip(_FIGURES, choice.errors, strict=True)),
         "figures": _plain_figures(choice.figures),
         "figures_ideal": _plain_figures(mfb_figures(choice.parts)),
-        "sensitivities": {name: dict(zip(_FIGURES, row, strict=True)) for name, row in slopes.items()},
+        "sensitivities": {
+            name: dict(zip(_FIGURES, row, strict=True)) for name, row in zip(NAMES, slopes.T.tolist(), strict=True)
+        },
         "spread": {
-            figure: {"worst": worst, "root_sum_square": squares}
-            for figure, (worst, squares) in zip(_FIGURES, spreads, strict=True)
+            figure: {"worst_case": most, "standard_deviation": one}
+            for figure, most, one in zip(_FIGURES, worst.tolist(), sd.tolist(), strict=True)
         },
     }
 
 
-def _sensitivity(
-    request: PartsRequest, choice: Choice
-) -> tuple[dict[str, tuple[float, float, float]], tuple[tuple[float, float], ...]]:
-    slopes = part_sensitivities(choice.parts, gbw=request.gbw)
-    return slopes, spread(slopes, {name: request.tolerances[name.startswith("C")] for name in NAMES})
+def _sensitivity(request: PartsRequest, choice: Choice) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Return sensitivities (3, 5) of f0, Q, gain by part; their worst case and standard deviation (3,), relative."""
+    by_part = part_sensitivities(choice.parts, gbw=request.gbw)
+    slopes = np.array([by_part[name] for name in NAMES]).T
+    tolerances = np.array([request.tolerances[name.startswith("C")] for name in NAMES])
+    return slopes, worst_case(slopes, tolerances), variance_shares(slopes, tolerances)[0]
+
+
+def _equally_sensitive(request: PartsRequest, choices: tuple[Choice, ...]) -> Iterator[str]:
+    """Yield why choices are not ranked by sensitivity, where there are several."""
+    if len(choices) > 1:
+        largest = sorted({f"{np.abs(_sensitivity(request, choice)[0]).max():.2f}" for choice in choices})
+        size = largest[0] if len(largest) == 1 else f"{largest[0]} to {largest[-1]}"
+        yield (
+            "Sensitivity ranks none of them: with C_1 = C_2 it follows from the wanted figures (1 % of a part moves a "
+            f"figure by at most {size} % in every choice)."
+        )
 
 
 def _row(number: int, choice: Choice) -> str:
@@ -127,16 +145,38 @@ def _breaches(request: PartsRequest, first: Choice) -> Iterator[str]:
         return
     who = f"No capacitor of {request.capacitors} keeps" if request.capacitors else "This capacitor does not keep"
     yield f"! {who} all resistors within {_span(RESISTANCE, 'Ω')}. Nearest: {found}."
-    gain, q = request.wanted.gain, request.wanted.q
-    sizes = (1.0, 1 / (2 * gain), 1 / (2 * (2 * q * q - gain)))  # of R_feedback, R_in, R_shunt, over R_feedback
-    widest, most = max(sizes) / min(sizes), RESISTANCE[1] / RESISTANCE[0]
-    if widest > most:
-        yield (
-            "  R_feedback is 2 gain times R_in and 2 (2Q² - gain) times R_shunt whatever the capacitor. Largest over "
-            f"smallest is {widest:.0f} here, and the range holds {most:.0f}: change Q or gain, or accept the breach."
+    yield f"  {_way_out(request, first)}, or accept the breach."
+
+
+def _way_out(request: PartsRequest, first: Choice) -> str:
+    """Return what would keep all resistors within their range, as a sentence without its end."""
+    wanted = np.array([[request.wanted.f0], [request.wanted.q], [request.wanted.gain]])
+    g_in, g_node, g_feedback = one_pole_design(wanted, gbw=request.gbw)[:, 0]  # for 1 F
+    exact = 1.0 / np.array([g_in, g_node - g_in, g_feedback])
+    low, high = float(exact.max()) / RESISTANCE[1], float(exact.min()) / RESISTANCE[0]  # capacitors that would do
+    if low > high:
+        widest, most = exact.max() / exact.min(), RESISTANCE[1] / RESISTANCE[0]
+        return (
+            "R_feedback is 2 gain times R_in and 2 (2Q² - gain) times R_shunt whatever the capacitor. Largest over "
+            f"smallest is {widest:.0f} here, and the range holds {most:.0f}: change Q or gain"
         )
-    else:
-        yield "  All resistors fall as the capacitors rise: look at another capacitor or series, or accept the breach."
+    fall = "All resistors fall as the capacitors rise"
+    if high < CAPACITANCE[0]:
+        ends = f"one is below {_near(RESISTANCE[0], 'Ω')} already at {_near(CAPACITANCE[0], 'F')}"
+        return f"{fall}, and {ends}: a lower centre is left, or a smaller capacitor (about {_near(high, 'F')})"
+    if low > CAPACITANCE[1]:
+        ends = f"one is above {_near(RESISTANCE[1], 'Ω')} still at {_near(CAPACITANCE[1], 'F')}"
+        return f"{fall}, and {ends}: a higher centre is left, or a larger capacitor (about {_near(low, 'F')})"
+    one = (
+        "one of another series" if request.capacitors else "a smaller one" if low < first.parts.C_1 else "a larger one"
+    )
+    return (
+        f"{fall}: take {one}, about {_near(max(low, CAPACITANCE[0]), 'F')} to {_near(min(high, CAPACITANCE[1]), 'F')}"
+    )
+
+
+def _near(value: float, unit: str) -> str:
+    return engineering(value, unit, 3).replace(" ", _TIED)
 
 
 def _breach(name: str, choice: Choice) -> str:
@@ -147,23 +187,25 @@ def _breach(name: str, choice: Choice) -> str:
 
 
 def _first_lines(request: PartsRequest, choice: Choice) -> Iterator[str]:
-    slopes, spreads = _sensitivity(request, choice)
+    slopes, worst, sd = _sensitivity(request, choice)
     is_real = math.isfinite(request.gbw)
     yield ""
     head = f"{'Choice 1':<9}{'wanted':>11}{'ideal op-amp':>14}" + (f"{'this op-amp':>13}" if is_real else "")
-    yield f"{head}{'error':>9}  spread: worst     rss"
+    yield f"{head}{'error':>9}{'worst case':>15}{'spread':>8}"
     wanted, ideal, real = (_texts(x) for x in (request.wanted, mfb_figures(choice.parts), choice.figures))
     for i, label in enumerate(_LABELS):
         figures = f"{label:<9}{wanted[i]:>11}{ideal[i]:>14}" + (f"{real[i]:>13}" if is_real else "")
-        worst, squares = (f"±{100 * x:.2g} %" for x in spreads[i])
-        yield f"{figures}{_percent(choice.errors[i]):>9}{worst:>15}{squares:>8}"
+        ends, spread = f"±{100 * worst[i]:.2g} %", f"{100 * sd[i]:.2g} %"
+        yield f"{figures}{_percent(choice.errors[i]):>9}{ends:>15}{spread:>8}"
     yield ""
     yield f"{'1 % more of':<12}{'moves f0':>9}{'Q':>9}{'gain':>9}"
-    yield from (f"{name:<12}" + "".join(f"{_percent(slope / 100):>9}" for slope in slopes[name]) for name in NAMES)
+    for name, row in zip(NAMES, slopes.T.tolist(), strict=True):
+        yield f"{name:<12}" + "".join(f"{_percent(slope / 100):>9}" for slope in row)
     yield ""
     resistor, capacitor = (f"±{100 * x:g} %" for x in request.tolerances)
-    yield f"Spread with resistors {resistor}, capacitors {capacitor}. Worst: each part at the end of its"
-    yield "tolerance that does harm; rss: root of the sum of squares. For the board file:"
+    yield f"With resistors {resistor}, capacitors {capacitor}. Worst case: each part at the end of its"
+    yield "tolerance that does harm; spread: one standard deviation, parts uniform within"
+    yield "tolerance. For the board file:"
     yield ""
     yield "parts = { " + ", ".join(f'{name} = "{_value(name, choice, 6)}"' for name in NAMES) + " }"
 

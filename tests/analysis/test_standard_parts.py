@@ -9,6 +9,7 @@ import pytest
 from bandproof.analysis.circuits import MfbFigures, MfbParts, mfb_design, mfb_figures
 from bandproof.analysis.e_series import e_series, nearest_preferred, preferred_values, widest_step
 from bandproof.analysis.one_pole import one_pole_figures
+from bandproof.analysis.spread import variance_shares, worst_case
 from bandproof.analysis.standard_parts import (
     CAPACITANCE,
     NAMES,
@@ -16,7 +17,6 @@ from bandproof.analysis.standard_parts import (
     TooSlow,
     best_resistors,
     part_sensitivities,
-    spread,
     standard_parts,
 )
 from tests.benchmarks.parts import SAMPLE, judged, least_error, requests
@@ -147,7 +147,7 @@ def test_sensitivities_of_example_a():
         assert found[name] == pytest.approx(row, abs=1e-8)
 
 
-def test_worst_spread_of_small_tolerances_is_that_of_the_worst_corner():
+def test_worst_case_of_small_tolerances_is_that_of_the_worst_corner():
     parts = mfb_design(1000.0, 1.5, 10**0.5, 10e-9)
     tolerances = {name: 1e-5 if name.startswith("R") else 5e-5 for name in NAMES}
     moved = []
@@ -155,20 +155,25 @@ def test_worst_spread_of_small_tolerances_is_that_of_the_worst_corner():
         values = [getattr(parts, n) * (1 + s * tolerances[n]) for n, s in zip(NAMES, signs, strict=True)]
         figures = mfb_figures(MfbParts(*values))
         moved.append([log(figures.f0 / 1000.0), log(figures.q / 1.5), log(figures.gain / 10**0.5)])
-    found = spread(part_sensitivities(parts), tolerances)
+    found = worst_case(table(parts), np.array(list(tolerances.values())))
     # second order: the tolerance itself; Q of equal capacitors has no first order in them at all
-    assert [worst for worst, _ in found] == pytest.approx(np.abs(moved).max(axis=0), rel=5e-4)
+    assert found == pytest.approx(np.abs(moved).max(axis=0), rel=5e-4)
 
 
-def test_root_of_squares_is_the_scatter_of_draws():
+def table(parts):
+    """Return sensitivities (3, 5) of f0, Q and gain."""
+    slopes = part_sensitivities(parts)
+    return np.array([slopes[name] for name in NAMES]).T
+
+
+def test_first_order_spread_is_the_scatter_of_draws():
     parts = mfb_design(1000.0, 1.5, 10**0.5, 10e-9)
     tolerances = {name: 1e-3 if name.startswith("R") else 5e-3 for name in NAMES}
     rng, count = np.random.default_rng(7), 20000
     values = {n: getattr(parts, n) * (1 + tolerances[n] * rng.uniform(-1, 1, count)) for n in NAMES}
     scatter = np.log(one_pole_figures(*values.values())).std(axis=1)
-    found = spread(part_sensitivities(parts), tolerances)
-    # uniform within the tolerance: its standard deviation is the tolerance over sqrt 3; 20000 draws give 0.5 %, times 4
-    assert [squares / sqrt(3) for _, squares in found] == pytest.approx(scatter, rel=0.02)
+    found, _ = variance_shares(table(parts), np.array(list(tolerances.values())))
+    assert found == pytest.approx(scatter, rel=0.02)  # 20000 draws give 0.5 %, times 4
 
 
 def test_preferred_values_are_all_of_them_and_no_others():

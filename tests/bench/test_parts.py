@@ -10,6 +10,7 @@ from bandproof.analysis.circuits import MfbParts, mfb_figures
 from bandproof.analysis.curve import curve_figures
 from bandproof.bench.board_file import parse_board
 from bandproof.bench.circuit import predict
+from bandproof.bench.prediction import predicted_boards
 from bandproof.bench.quantities import read_quantity
 from bandproof.bench.verbs.console import run
 
@@ -101,16 +102,38 @@ def test_figures_agree_with_the_curve_of_ngspice(parts, spice):
 def test_spread_follows_from_the_tolerances(parts):
     out = parts(*BAND, "--tolerance-resistors", "2 %", "--tolerance-capacitors", "10 %", "--json")[1]
     spread = json.loads(out)["choices"][0]["spread"]
-    assert spread["centre"]["worst"] == pytest.approx(0.5 * 0.02 + 0.5 * 0.02 + 2 * 0.5 * 0.10, rel=1e-6)
-    assert spread["q"]["worst"] == pytest.approx(0.5 * 0.02 + 0.5 * 0.02, rel=1e-6)
-    assert spread["gain"]["worst"] == pytest.approx(2 * 0.02 + 2 * 0.5 * 0.10, rel=1e-6)
-    assert spread["gain"]["root_sum_square"] == pytest.approx((2 * 0.02**2 + 2 * 0.05**2) ** 0.5, rel=1e-6)
+    assert spread["centre"]["worst_case"] == pytest.approx(0.5 * 0.02 + 0.5 * 0.02 + 2 * 0.5 * 0.10, rel=1e-6)
+    assert spread["q"]["worst_case"] == pytest.approx(0.5 * 0.02 + 0.5 * 0.02, rel=1e-6)
+    assert spread["gain"]["worst_case"] == pytest.approx(2 * 0.02 + 2 * 0.5 * 0.10, rel=1e-6)
+    # uniform within tolerance: half-width over the root of 3 (JCGM 100:2008, 4.3.7)
+    assert spread["gain"]["standard_deviation"] == pytest.approx((2 * 0.02**2 + 2 * 0.05**2) ** 0.5 / 3**0.5, rel=1e-6)
 
 
-def test_worst_spread_is_printed_beside_the_root_of_squares(parts):
+def test_worst_case_is_printed_beside_one_standard_deviation(parts):
     out = parts(*BAND)[1]
     gain = next(line for line in out.splitlines() if line.startswith("gain "))
-    assert gain.endswith("±7 %  ±3.8 %")  # 2 x 1 % + 2 x 2.5 %; sqrt(2 x 1 + 2 x 6.25) %
+    assert gain.endswith("±7 %   2.2 %")  # 2 x 1 % + 2 x 2.5 %; sqrt((2 x 1 + 2 x 6.25) / 3) %
+
+
+def test_spread_is_what_a_prediction_of_these_parts_calls_spread(parts, one_band_text):
+    arguments = ("--centre", "160 Hz", "--q", "1.5", "--gain", "10 dB", "--gbw", "4 MHz")
+    line = parts(*arguments)[1].splitlines()[-1]
+    old = next(text for text in one_band_text.splitlines() if text.startswith("parts "))
+    board = parse_board(one_band_text.replace(old, line), "a board with the parts of the verb")
+    spread = json.loads(parts(*arguments, "--json")[1])["choices"][0]["spread"]
+    for name, figure in predicted_boards(board, draws=10_000).stages[0].figures.items():
+        assert spread[name]["standard_deviation"] == pytest.approx(figure.first_order, rel=1e-6)
+        # of 10000 draws, 4 standard errors; second order: the tolerance itself, 5 %, of the spread
+        assert figure.spread.sd / figure.spread.mean == pytest.approx(figure.first_order, rel=0.05)
+
+
+@pytest.mark.parametrize("gbw", [(), ("--gbw", "4 MHz")])
+def test_sensitivity_that_ranks_no_choice_is_said_to(parts, gbw):
+    """Gain goes as R_feedback / R_in: no exact sensitivity of the circuit is larger than 1 (see tests/analysis)."""
+    text = " ".join(parts(*BAND, *gbw)[1].split())
+    assert "Sensitivity ranks none of them" in text
+    assert "1 % of a part moves a figure by at most 1.00 % in every choice" in text
+    assert "Sensitivity" not in parts(*BAND, *gbw, "--count", "1")[1]
 
 
 @pytest.mark.parametrize(
@@ -187,7 +210,40 @@ def test_breach_of_a_capacitor_that_is_too_large_says_so(parts):
     code, out, _ = parts("--centre", "1 kHz", "--q", "3", "--gain", "10 dB", "--capacitor", "1 uF")
     assert code == DONE
     assert "! This capacitor does not keep all resistors within 1 kΩ to 1 MΩ. Nearest:" in out
-    assert "another capacitor" in " ".join(out.split())
+    # Q/(pi f0 C), over 2 gain: 955 and 151 ohm; over 2 (2 Q^2 - gain) = 29.7: 32.2 ohm; to 1 kohm a 31st of 1 uF
+    assert "take a smaller one, about 955 pF to 32.2 nF, or accept" in " ".join(out.split())
+
+
+# At C resistors are Q / (pi f0 C) over 1, 2 gain and 2 (2 Q^2 - gain): 1 MHz, Q 5, gain 10: 15.9 kohm, 796 and 199 ohm
+# at 100 pF; 1 mHz, Q 1.5, gain 3.16 at 1 uF: 477, 75.5 and 179 Mohm.
+@pytest.mark.parametrize(
+    ("band", "told"),
+    [
+        (
+            ("--centre", "1 MHz", "--q", "5", "--gain", "20 dB"),
+            "one is below 1 kΩ already at 100 pF: a lower centre is left, or a smaller capacitor (about 19.9 pF)",
+        ),
+        (
+            ("--centre", "1 mHz", "--q", "1.5", "--gain", "10 dB"),
+            "one is above 1 MΩ still at 1 µF: a higher centre is left, or a larger capacitor (about 477 µF)",
+        ),
+    ],
+)
+@pytest.mark.parametrize("series", [(), ("--capacitor", "1 nF")])
+def test_end_of_the_capacitors_leaves_another_centre(parts, band, told, series):
+    assert told in " ".join(parts(*band, *series)[1].split())
+
+
+def test_capacitor_that_is_too_small_asks_for_a_larger_one(parts):
+    out = parts("--centre", "100 Hz", "--q", "3", "--gain", "10 dB", "--capacitor", "1 nF")[1]
+    assert "take a larger one, about 9.55 nF to 322 nF, or accept" in " ".join(out.split())
+
+
+def test_series_with_a_gap_asks_for_a_finer_one(parts):
+    # R_feedback Q / (pi f0 C) is 1 Mohm at 3.01 nF, R_shunt 1 kohm at 1000 / 794 of that, 2 (2 Q^2 - gain) = 794
+    out = parts("--centre", "1.5 kHz", "--q", "14.2", "--gain", "6.28 V/V", "--capacitors", "E3")[1]
+    assert "No capacitor of E3 keeps all resistors" in " ".join(out.split())
+    assert "take one of another series, about 3.01 nF to 3.8 nF" in " ".join(out.split())
 
 
 def test_capacitor_beyond_the_usual_range_is_named_though_all_resistors_are_inside(parts):
