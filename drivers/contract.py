@@ -10,8 +10,9 @@ from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from typing import Literal
 
+from bandproof.drivers.answers import is_like
 from bandproof.drivers.clause import Broken, NotTried, demand
-from bandproof.drivers.errors import InstrumentError, InstrumentProblem
+from bandproof.drivers.errors import BeyondLimits, InstrumentError, InstrumentProblem
 from bandproof.drivers.generator import Generator
 from bandproof.drivers.instrument import Instrument
 from bandproof.drivers.scope import Scope
@@ -74,7 +75,7 @@ def is_off_when_safe(generator: Generator) -> None:
     if not output.query:
         raise NotTried("its output cannot be asked")
     answer = generator.session.ask(output.query, as_text)
-    demand(answer.upper() == output.is_off.upper(), f"answers {answer!r}")
+    demand(is_like(output.is_off, answer), f"answers {answer!r}")
 
 
 def reads_back_frequency_amplitude_and_offset(generator: Generator) -> None:
@@ -144,8 +145,8 @@ def closes_one_route_and_opens_the_others(switch: Switch, routes: Sequence[str])
         raise NotTried("it takes two routes that can be asked")
     for route in (routes[0], routes[1]):
         switch.close(route)
-    demand(not _is_closed(switch, routes[0]), f"{routes[0]} is still closed after {routes[1]}")
-    demand(_is_closed(switch, routes[1]), f"{routes[1]} answers that it is open")
+    demand(not switch.is_closed(routes[0]), f"{routes[0]} is still closed after {routes[1]}")
+    demand(switch.is_closed(routes[1]), f"{routes[1]} answers that it is open")
 
 
 def opens_every_route(switch: Switch, routes: Sequence[str]) -> None:
@@ -154,7 +155,7 @@ def opens_every_route(switch: Switch, routes: Sequence[str]) -> None:
         raise NotTried("it takes a route that can be asked")
     switch.close(routes[0])
     switch.be_safe()
-    closed = [route for route in routes if _is_closed(switch, route)]
+    closed = [route for route in routes if switch.is_closed(route)]
     demand(not closed, f"{', '.join(closed)} still closed")
 
 
@@ -165,15 +166,10 @@ def closes_again_after_reopening(switch: Switch, routes: Sequence[str]) -> None:
     switch.close(routes[0])
     switch.reopen()
     switch.restore()
-    demand(_is_closed(switch, routes[0]), f"{routes[0]} is open")
+    demand(switch.is_closed(routes[0]), f"{routes[0]} is open")
     before = switch.session.sent
     switch.close(routes[0])
     demand(switch.session.sent == before, f"{switch.session.sent - before} messages were sent")
-
-
-def _is_closed(switch: Switch, route: str) -> bool:
-    answer = switch.session.ask(switch.dialect.query.format(route=route), as_text)
-    return answer.upper() == switch.dialect.is_closed.upper()
 
 
 # --- supply ---
@@ -272,7 +268,7 @@ def _tried(clause: Callable[..., None], instrument: Instrument, more: tuple[obje
         if instrument.session.link.is_dirty:
             instrument.reopen()
         clause(instrument, *more)
-    except NotTried as why:
+    except (NotTried, BeyondLimits) as why:
         return _outcome(clause, "not tried", str(why))
     except (Broken, InstrumentProblem) as problem:
         return _outcome(clause, "broken", str(problem))

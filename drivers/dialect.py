@@ -4,12 +4,21 @@ from __future__ import annotations
 
 import math
 import tomllib
+from dataclasses import fields
 from importlib import resources
 from pathlib import Path
 from typing import Any
 
 from bandproof.drivers.schema import DialectMistakes, Finding, read_table
-from bandproof.drivers.slots import Dialect, GeneratorDialect, ScopeDialect, SupplyDialect, SwitchDialect, Waveform
+from bandproof.drivers.slots import (
+    Dialect,
+    GeneratorDialect,
+    Number,
+    ScopeDialect,
+    SupplyDialect,
+    SwitchDialect,
+    Waveform,
+)
 
 __all__ = [
     "Dialect",
@@ -104,6 +113,9 @@ def parse(text: str, name: str) -> Dialect:
 def _contradictions(dialect: Dialect) -> list[Finding]:
     """Return what no slot shows alone."""
     rules = _scope_rules(dialect) if isinstance(dialect, ScopeDialect) else _other_rules(dialect)
+    for name, number in ((slot.name, getattr(dialect, slot.name)) for slot in fields(dialect)):
+        if isinstance(number, Number):
+            rules[f"{name}.place"] = (bool(number.answer and number.place), "0: with an answer there are no fields")
     return [Finding(path, "empty or contrary", accepted) for path, (is_wrong, accepted) in rules.items() if is_wrong]
 
 
@@ -117,6 +129,9 @@ def _other_rules(dialect: GeneratorDialect | SwitchDialect | SupplyDialect) -> d
         needed = {f"{name}.set": getattr(dialect, name).set for name in numbers}
         needed |= {"output.on": dialect.output.on, "output.off": dialect.output.off}
     rules = {path: (text == "", f"a command, every {dialect.kind} needs one") for path, text in needed.items()}
+    if isinstance(dialect, SwitchDialect):
+        tells = "{route}" in dialect.query + dialect.is_closed
+        rules["query"] = (dialect.query != "" and not tells, "{route} in it or in is_closed, to tell which is closed")
     if isinstance(dialect, GeneratorDialect):
         rules |= _waveform_rules(dialect.waveform)
     if isinstance(dialect, SupplyDialect):
@@ -146,13 +161,22 @@ def _scope_rules(dialect: ScopeDialect) -> dict[str, tuple[bool, str]]:
         "transfer.read": (transfer.read == "", "a query, every scope needs one"),
         "transfer.scale": (transfer.scaling == "query" and not transfer.scale, 'a query, scaling is "query"'),
         "transfer.preamble": (transfer.scaling == "preamble" and not transfer.preamble, "a query"),
-        "transfer.scale_field": (transfer.scaling == "preamble" and transfer.scale_field < 0, "a place, 0 the first"),
+        "transfer.scale_field": (
+            transfer.scaling == "preamble" and transfer.scale_field < 0 and not transfer.scale_answer,
+            "a place, 0 the first, or transfer.scale_answer"),
+        **{f"transfer.{slot}_field": (True, f"-1: {slot}_answer is for the whole preamble")
+           for slot in ("scale", "offset", "origin")
+           if getattr(transfer, f"{slot}_field") >= 0 and getattr(transfer, f"{slot}_answer")},
         "transfer.scaling": (transfer.scaling == "volts" and whole, "query or preamble, samples are codes"),
         "transfer.framing": (transfer.framing == "line" and transfer.encoding != "ascii", "block, samples are bytes"),
         "overload.low": (overload.by == "end codes" and transfer.scaling != "volts" and overload.low >= overload.high,
                          "less than overload.high"),
         "overload.query": (overload.by == "query" and not overload.query, "a query"),
         "acquisition.start": (dialect.acquisition.start == "", "a command, every scope needs one"),
-        "interval.query": (dialect.interval.query == "", "a query, the interval really used is needed"),
+        "interval.query": (dialect.interval.query == "",
+                           "a query, the interval really used is needed: one rounded unseen shifts every frequency"),
+        "interval.set": (bool(dialect.interval.set and dialect.duration.set), "nothing, duration.set tells the same"),
+        "points.query": (not (dialect.points.set or dialect.points.query or dialect.points.fixed),
+                         "a query, or points.fixed if it always takes so many"),
         "range.set": (dialect.range.set == "", "a command, every scope needs one"),
     }  # fmt: skip

@@ -8,6 +8,7 @@ from collections.abc import Callable
 from contextlib import suppress
 from typing import Any, TypeVar
 
+from bandproof.drivers.answers import is_like, number_in
 from bandproof.drivers.errors import BeyondLimits, InstrumentError, InstrumentProblem, SettingRefused
 from bandproof.drivers.scpi import ErrorEntry, parse_number, split_fields
 from bandproof.drivers.session import Session, as_text
@@ -173,29 +174,31 @@ class Instrument:
 
     def read_number(self, number: Number, channel: str = "") -> float:
         """Ask for a number and return it in SI."""
-        return self.session.ask(number.query.format(channel=channel), lambda line: understood(number, line))
+        return self.session.ask(number.query.format(channel=channel), lambda line: understood(number, line, channel))
 
     def _set_choice(self, slot: str, choice: Choice, word: str, channel: str = "") -> None:
         if word not in choice.words:
             raise self._beyond(slot, f"{slot} must be one of {', '.join(choice.words) or 'nothing'}, got {word!r}")
-        theirs = choice.words[word]
-        text, query = choice.set.format(value=theirs, channel=channel), choice.query.format(channel=channel)
-        self._once(slot + channel, text, lambda: self._command_and_compare(text, query, theirs))
+        names = {"value": choice.words[word], "channel": channel}
+        text, query = choice.set.format(**names), choice.query.format(channel=channel)
+        expected = choice.answer or "{value}"
+        self._once(slot + channel, text, lambda: self._command_and_compare(text, query, expected, **names))
 
     def _set_toggle(self, slot: str, toggle: Toggle, on: bool, channel: str = "") -> None:
         text = (toggle.on if on else toggle.off).format(channel=channel)
         query, expected = toggle.query.format(channel=channel), toggle.is_on if on else toggle.is_off
-        self._once(slot + channel, text, lambda: self._command_and_compare(text, query, expected))
+        self._once(slot + channel, text, lambda: self._command_and_compare(text, query, expected, channel=channel))
 
-    def _command_and_compare(self, text: str, query: str, expected: str) -> None:
-        self._command_and_see(text, query, expected)
+    def _command_and_compare(self, text: str, query: str, expected: str, **names: str) -> None:
+        self._command_and_see(text, query, expected, **names)
         self.check_errors()
 
-    def _command_and_see(self, text: str, query: str, expected: str) -> None:
+    def _command_and_see(self, text: str, query: str, expected: str, **names: str) -> None:
+        """Make a setting and compare the answer to its query with a template, in which `names` are known."""
         self.session.command(text)
-        found = self.session.ask(query, as_text) if query else expected
-        if found.strip("\"'").upper() != expected.upper():
-            raise SettingRefused(self.address, text, expected, found, expected, self.session.setting_line)
+        if query and not is_like(expected, found := self.session.ask(query, as_text), **names):
+            wanted = expected.format(any="...", **names)
+            raise SettingRefused(self.address, text, wanted, found, wanted, self.session.setting_line)
 
     def _beyond(self, slot: str, rule: str) -> BeyondLimits:
         return BeyondLimits(self.address, slot, rule)
@@ -213,9 +216,9 @@ def spelt(number: Number, value: float) -> str:
     return format(round(theirs) if number.format == "d" else theirs, number.format)
 
 
-def understood(number: Number, line: bytes) -> float:
+def understood(number: Number, line: bytes, channel: str = "") -> float:
     """Return the value in SI of an instrument's answer."""
-    fields = split_fields(line)
+    fields = split_fields(number_in(number.answer, line, channel=channel))
     if number.place >= len(fields):
         raise ValueError(f"at least {number.place + 1} fields between commas")
     theirs = parse_number(fields[number.place]) * number.unit

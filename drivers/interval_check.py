@@ -33,7 +33,10 @@ def checked_interval(scope: Scope) -> str:
     dialect = scope.dialect
     answer = scope.session.ask(dialect.interval.query, as_text)
     if not (dialect.points.query and dialect.duration.query):
-        understood(dialect.interval, answer.encode("ascii"))
+        try:
+            understood(dialect.interval, answer.encode("ascii"))
+        except ValueError as problem:
+            raise ValueError(f"answers {answer}, not {problem}") from problem
         return answer
     points, duration = round(scope.read_number(dialect.points)), scope.read_number(dialect.duration)
     if points > 0 and duration > 0:

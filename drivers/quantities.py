@@ -11,6 +11,7 @@ __all__ = [
     "CurrentLimit",
     "Duration",
     "Frequency",
+    "Interval",
     "Level",
     "Load",
     "Middle",
@@ -19,7 +20,9 @@ __all__ = [
     "Points",
     "Range",
     "Voltage",
+    "numbered",
     "template",
+    "worded",
 ]
 
 Range = tuple[float, float]
@@ -28,6 +31,16 @@ Range = tuple[float, float]
 def template(*names: str, needs: tuple[str, ...] = ()) -> Any:
     """Return a slot for a command that may contain the placeholders named; empty: no such command."""
     return field(default="", metadata={"names": names, "needs": needs})
+
+
+def numbered(*names: str) -> Any:
+    """Return a slot for the template of an answer with ``{value}`` in it; empty: the answer is the value."""
+    return template("value", "any", *names, needs=("value",))
+
+
+def worded(words: str, *names: str) -> Any:
+    """Return a slot for the template of an answer that is compared; it may contain ``{any}`` and the names given."""
+    return field(default=words, metadata={"names": ("any", *names)})
 
 
 @dataclass(frozen=True, slots=True)
@@ -40,6 +53,8 @@ class Number:
         Command with ``{value}`` and, on a scope, ``{channel}``.
     query : str
         Query of the value really used.
+    answer : str
+        Its answer, where that is no bare number: ``TONE {value} kHz``.
     format : str
         Python's format of the number, ``.9g`` or ``.3f`` or ``d``.
     unit : float
@@ -54,11 +69,12 @@ class Number:
     absolute : float
         SI; a difference this small is accepted whatever its ratio.
     place : int
-        Which of the answer's comma-separated fields is the number, 0 the first.
+        Which of the answer's comma-separated fields is the number, 0 the first, where `answer` is empty.
     """
 
     set: str = template("value", "channel", needs=("value",))
     query: str = template("channel")
+    answer: str = numbered("channel")
     format: str = field(default=".9g", metadata={"format": True})
     unit: float = 1.0
     reciprocal: bool = False
@@ -123,8 +139,17 @@ class Duration(Number):
 
 
 @dataclass(frozen=True, slots=True)
+class Interval(Number):
+    """Between two samples; it may be set instead of the duration, and does no harm if rounded: it is read back."""
+
+    readback: Range = (0.5, 2.0)
+
+
+@dataclass(frozen=True, slots=True)
 class Points(Number):
-    """Samples of a record."""
+    """Samples of a record; `fixed` is their number if it can neither be told nor asked, 0 if it can."""
+
+    fixed: int = 0
 
     format: str = field(default="d", metadata={"format": True})
     readback: Range = (0.5, 2.0)

@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+from functools import partial
 from typing import TYPE_CHECKING, Protocol
 
+from bandproof.drivers.answers import is_like, number_in
 from bandproof.drivers.scpi import parse_number, parse_samples, sample_size, split_fields
 from bandproof.drivers.session import Session, as_text
 from bandproof.drivers.slots import ScopeDialect, Transfer
@@ -12,7 +14,7 @@ if TYPE_CHECKING:
     import numpy as np
     from numpy.typing import NDArray
 
-__all__ = ["read_channel", "read_scaling"]
+__all__ = ["preamble_scaling", "read_channel", "read_scaling", "scaling_number"]
 
 TEXT_SAMPLE = 40  # bytes of one number as text, at most (arbitrary; 24 hold any float64)
 
@@ -99,21 +101,39 @@ def read_scaling(session: Session, transfer: Transfer, channel: str) -> tuple[fl
     if transfer.scaling == "volts":
         return 1.0, 0.0, 0.0
     if transfer.scaling == "query":
-        queries = (transfer.scale, transfer.offset, transfer.origin)
+        queries = {"scale": transfer.scale, "offset": transfer.offset, "origin": transfer.origin}
         scale, offset, origin = (
-            session.ask(query.format(channel=channel), parse_number) if query else 0.0 for query in queries
+            session.ask(query.format(channel=channel), partial(scaling_number, transfer, channel, slot))
+            if query
+            else 0.0
+            for slot, query in queries.items()
         )
         return scale, offset, origin
-    return session.ask(transfer.preamble.format(channel=channel), lambda line: _from_preamble(transfer, line))
+    return session.ask(transfer.preamble.format(channel=channel), partial(preamble_scaling, transfer, channel))
 
 
-def _from_preamble(transfer: Transfer, line: bytes) -> tuple[float, float, float]:
+def preamble_scaling(transfer: Transfer, channel: str, line: bytes) -> tuple[float, float, float]:
+    """Return scale, offset and origin out of a preamble; what is not as the dialect says is a ValueError."""
     fields = split_fields(line, transfer.separator.encode("ascii"))
-    places = (transfer.scale_field, transfer.offset_field, transfer.origin_field)
-    if max(places) >= len(fields):
-        raise ValueError(f"a preamble of at least {max(places) + 1} fields, {len(fields)} came")
-    scale, offset, origin = (parse_number(fields[place]) if place >= 0 else 0.0 for place in places)
+    places = {"scale": transfer.scale_field, "offset": transfer.offset_field, "origin": transfer.origin_field}
+    if max(places.values()) >= len(fields):
+        raise ValueError(f"a preamble of at least {max(places.values()) + 1} fields, {len(fields)} came")
+    scale, offset, origin = (
+        scaling_number(transfer, channel, slot, line if place < 0 else fields[place])
+        if place >= 0 or getattr(transfer, f"{slot}_answer")
+        else 0.0
+        for slot, place in places.items()
+    )
     return scale, offset, origin
+
+
+def scaling_number(transfer: Transfer, channel: str, slot: str, answer: bytes) -> float:
+    """Return scale, offset or origin (``slot``) in V or codes; a ValueError names the template it is not like."""
+    template, unit = getattr(transfer, f"{slot}_answer"), {"scale": transfer.scale_unit, "offset": transfer.offset_unit}
+    try:
+        return parse_number(number_in(template, answer, channel=channel)) * unit.get(slot, 1.0)
+    except ValueError as problem:
+        raise ValueError(f"for {slot}{'_answer' * bool(template)}: {problem}") from problem
 
 
 def _ends(dialect: ScopeDialect, setting: _Setting, software: float, scale: float) -> tuple[float, float, float]:
@@ -133,6 +153,6 @@ def _is_overloaded(
     """Return the verdict; a sample that is no number counts as an overload, its volts are unknown."""
     slot = dialect.overload
     if slot.by == "query":
-        return session.ask(slot.query.format(channel=channel), as_text) == slot.is_overloaded
+        return is_like(slot.is_overloaded, session.ask(slot.query.format(channel=channel), as_text), channel=channel)
     low, high = ends
     return not bool(((samples > low) & (samples < high)).all())

@@ -142,7 +142,10 @@ def checked_record(dialect: ScopeDialect, channel: str, points: int, taken: Sequ
         likely = _likely(dialect, channel, points, taken, looks) if doubted else ""
     if wrong or likely:
         wrong = wrong or f"noise of {looks[-1].noise():.3g} V on a range of {looks[-1].setting.range:g} V"
-        usual = "`encoding`, `byte_order`, scale, offset or origin in [transfer], or the unit of [range] or [offset]"
+        usual = (
+            "`encoding`, `byte_order`, scale, offset, origin or their units in [transfer], or the unit of [range] or "
+            "[offset]"
+        )
         raise ValueError(f"{found}: {wrong}: likely {likely or usual}")
     return found + (", overload" if looks[-1].overload else "")
 
@@ -250,7 +253,14 @@ def _slips(dialect: ScopeDialect, fields: int) -> Iterator[tuple[str, ScopeDiale
     for slot in ("scale_field", "offset_field", "origin_field"):
         for place in range(fields):
             yield f"{slot} = {place}", changed(**{slot: place}), same
-    for factor in _FACTORS[1:]:
-        yield f"[range] unit = {dialect.range.unit * factor:g}", dialect, (factor, 1.0)
-    for factor in _FACTORS:
-        yield f"[offset] unit = {dialect.offset.unit * factor:g}", dialect, (1.0, factor)
+    for slot, factors in (("range", _FACTORS[1:]), ("offset", _FACTORS)):
+        for factor in factors:
+            words = f"[{slot}] unit = {getattr(dialect, slot).unit * factor:g}"
+            if transfer.scaling != "volts":  # a record read so many times too large looks alike
+                scaling = "scale" if slot == "range" else "offset"
+                words = f"{scaling}_unit = {getattr(transfer, f'{scaling}_unit') / factor:g}, or {words}"
+            yield words, dialect, (factor, 1.0) if slot == "range" else (1.0, factor)
+    if transfer.scaling != "volts":
+        for factor in _FACTORS[1:]:
+            unit = transfer.offset_unit / factor
+            yield f"offset_unit = {unit:g}", changed(offset_unit=unit), same

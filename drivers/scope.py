@@ -7,11 +7,12 @@ from functools import partial
 from math import inf
 from typing import TYPE_CHECKING, Literal
 
+from bandproof.drivers.answers import is_like
 from bandproof.drivers.errors import SettingRefused
 from bandproof.drivers.instrument import Instrument
 from bandproof.drivers.record import read_channel
 from bandproof.drivers.session import Session, as_text
-from bandproof.drivers.slots import Number, ScopeDialect
+from bandproof.drivers.slots import ScopeDialect
 
 if TYPE_CHECKING:
     import numpy as np
@@ -119,6 +120,7 @@ class Scope(Instrument):
         """
         options = {"range": range, "offset": offset, "coupling": coupling}
         more = {"bandwidth_limit": bandwidth_limit, "probe_factor": probe_factor}
+        self._once("prepare", "", self.prepare)
         self._remember("channel", channel, partial(self.set_channel, channel, **options, **more))  # type: ignore[arg-type]
         name = self.name_of(channel)
         self._channels.pop(channel, None)
@@ -151,7 +153,6 @@ class Scope(Instrument):
         import numpy as np
 
         record, channels = self._settings()
-        self._once("prepare", "", self.prepare)
         self.start_and_wait(record.duration)
         traces = [
             read_channel(self.session, self.dialect, self.name_of(number), record.points, setting)
@@ -220,12 +221,18 @@ class Scope(Instrument):
         return 0.0
 
     def _set_and_read_record(self, duration: float, points: int) -> RecordSetting:
-        self._forget("points", "duration")
-        used = round(self._set_if_possible("points", self.dialect.points, points))
-        self._set_if_possible("duration", self.dialect.duration, duration)
-        interval = self.read_number(self.dialect.interval)
-        if self.dialect.points.query:  # the duration may have changed them
-            used = round(self.read_number(self.dialect.points))
+        self._once("prepare", "", self.prepare)
+        self._forget("points", "duration", "interval")
+        dialect = self.dialect
+        used = self._set_points(points)
+        if dialect.duration.set:
+            self._set_number("duration", dialect.duration, duration)
+        elif dialect.interval.set:  # longer than asked where it cannot be as short: that does no harm
+            duration = max(duration, used * dialect.interval.limits[0])
+            self._set_number("interval", dialect.interval, duration / used)
+        interval = self.read_number(dialect.interval)
+        if dialect.points.query:  # the duration may have changed them
+            used = round(self.read_number(dialect.points))
         setting = RecordSetting(interval, used, used * interval)
         self._refuse_strange(setting, duration, points)
         return setting
@@ -240,11 +247,20 @@ class Scope(Instrument):
         accepted = f"the dialect's limits for points, at most {_MOST_POINTS}, a duration within {_FAR:g} times"
         raise SettingRefused(self.address, "record", asked, read, accepted, self.session.setting_line)
 
-    def _set_if_possible(self, slot: str, number: Number, value: float) -> float:
-        return self._set_number(slot, number, value) if number.set else self.read_number(number)
+    def _set_points(self, points: int) -> int:
+        """Set the points of a record and return how many it will have."""
+        slot = self.dialect.points
+        if slot.set:
+            return round(self._set_number("points", slot, points))
+        return self.points()
+
+    def points(self) -> int:
+        """Return how many points a record has now, as the instrument or its dialect says."""
+        slot = self.dialect.points
+        return slot.fixed or round(self.read_number(slot))
 
     def prepare(self) -> None:
-        """Send what comes once before records are taken."""
+        """Send what comes once, before anything is set: it may change the points of a record, or their format."""
         for text in self.dialect.acquisition.prepare:
             self.session.command(text)
         self.check_errors()
@@ -263,7 +279,7 @@ class Scope(Instrument):
         slot, clock = self.dialect.acquisition, self.session.link.clock
         limit = 2.0 + 3 * expected  # bench seconds: as generous as the real clock's patience
         end = clock.now() + limit
-        while self.session.ask(slot.complete, as_text) != slot.is_complete:
+        while not is_like(slot.is_complete, self.session.ask(slot.complete, as_text)):
             if clock.now() >= end:
                 self.session.give_up(slot.complete, limit)
             clock.wait(slot.poll)

@@ -5,11 +5,13 @@ from __future__ import annotations
 from typing import Any
 
 from bandproof.drivers.clause import NotTried, demand
+from bandproof.drivers.errors import InstrumentError, SettingRefused
 from bandproof.drivers.scope import Scope
 
 __all__ = ["SCOPE_CLAUSES"]
 
 RANGE, DURATION, POINTS = 1.0, 0.01, 1000
+_BESIDE = 1.9  # ranges from 0 V: outside also where samples reach past the screen, within one full range; arbitrary
 
 
 def takes_the_record_it_says(scope: Scope) -> None:
@@ -44,10 +46,11 @@ def tells_an_overload(scope: Scope) -> None:
     """An input outside the range is told as overloaded: here a range that is shifted away from 0 V."""
     if not scope.dialect.offset.set:
         raise NotTried("its range cannot be shifted, and without a signal nothing else overloads it")
-    for offset in (0.5, -0.5):  # both ends of the converter
-        _prepared(scope, peak=0.1, offset=offset)
+    peak = max(scope.set_channel(channel, range=0.1).range for channel in (1, 2))
+    for offset in (_BESIDE * peak, -_BESIDE * peak):  # both ends of the converter
+        _shifted(scope, 0.1, offset)
         record = scope.acquire()
-        seen = f"{record.volts.min():g} to {record.volts.max():g} V on a range of 0.1 V round {offset:g} V"
+        seen = f"{record.volts.min():g} to {record.volts.max():g} V on a range of {peak:g} V round {offset:g} V"
         demand(bool(record.overload.all()), f"{seen}, and no overload told: look at [overload]")
 
 
@@ -57,10 +60,12 @@ def shifts_its_range_without_shifting_the_input(scope: Scope) -> None:
         raise NotTried("its range cannot be shifted")
     _prepared(scope, peak=2.0)
     still = scope.acquire().volts.mean(axis=1)
-    _prepared(scope, peak=2.0, offset=1.0)
+    shift = min(1.0, scope.dialect.offset.limits[1])
+    _shifted(scope, 2.0, shift)
     moved = scope.acquire().volts.mean(axis=1) - still
     demand(
-        bool((abs(moved) < 0.2).all()), f"it reads {moved[0]:+.3g} V more on a range shifted by 1 V: look at [offset]"
+        bool((abs(moved) < 0.2 * shift).all()),
+        f"it reads {moved[0]:+.3g} V more on a range shifted by {shift:g} V: look at [offset]",
     )
 
 
@@ -81,6 +86,14 @@ def records_as_before_after_reopening(scope: Scope) -> None:
     record = scope.acquire()
     found = (record.volts.shape, record.sample_interval)
     demand(found == ((2, setting.points), setting.sample_interval), f"{found} for {setting}")
+
+
+def _shifted(scope: Scope, peak: float, offset: float) -> None:
+    """Prepare a record on a shifted range; one that the instrument does not take is not tried."""
+    try:
+        _prepared(scope, peak=peak, offset=offset)
+    except (InstrumentError, SettingRefused) as problem:
+        raise NotTried(f"its range of {peak:g} V is not to be shifted by {offset:g} V: {problem}") from problem
 
 
 def _prepared(scope: Scope, *, peak: float = RANGE, offset: float = 0.0) -> Any:

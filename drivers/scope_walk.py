@@ -3,19 +3,23 @@
 from __future__ import annotations
 
 from dataclasses import replace
+from functools import partial
 
 from bandproof.drivers.errors import InstrumentProblem, NoAnswer, ReplyError
 from bandproof.drivers.instrument import spelt
 from bandproof.drivers.interval_check import checked_interval
+from bandproof.drivers.record import preamble_scaling, scaling_number
 from bandproof.drivers.record_check import Taken, checked_record
 from bandproof.drivers.scope import ChannelSetting, Scope
 from bandproof.drivers.scpi import sample_size
+from bandproof.drivers.session import as_text
 from bandproof.drivers.walk import Walk
 
 __all__ = ["walk_scope"]
 
 RANGES, OFFSETS = (0.5, 5.0), (1.0, 0.0)  # V; the last is what records are taken with
 POINTS, DURATIONS = (1000.0, 500.0), (0.05, 0.02)  # 25 000 samples a second: no power of ten, so slips can be told
+INTERVALS = (50e-6, 40e-6)
 SHIFT = 0.4  # of the range: a quiet input stays well inside
 LONGEST = 30.0  # s that a record of this walk may be waited for, whatever its interval is taken for; arbitrary
 
@@ -32,7 +36,10 @@ def walk_scope(steps: Walk, scope: Scope) -> None:
         steps.number("offset", dialect.offset, name, values=OFFSETS, stays=True)
     steps.number("points", dialect.points, values=POINTS, stays=True)
     steps.number("duration", dialect.duration, values=DURATIONS, stays=True)
-    known = steps.attempt("interval.query", dialect.interval.query, lambda: checked_interval(scope))
+    if dialect.interval.set:
+        known = steps.number("interval", dialect.interval, values=INTERVALS, stays=True)
+    else:
+        known = steps.attempt("interval.query", dialect.interval.query, lambda: checked_interval(scope))
     _acquisition(steps, scope, known)
     steps.restore()
 
@@ -44,11 +51,11 @@ def _acquisition(steps: Walk, scope: Scope, interval_known: bool) -> None:
         steps.tell("acquisition.prepare", text)
     if not dialect.acquisition.prepare:
         steps.note("acquisition.prepare", "missing")
-    if not dialect.points.query:
+    if not (dialect.points.query or dialect.points.fixed):
         steps.note("transfer.read", "skipped", dialect.transfer.read, "how many points it takes cannot be asked")
         return
     try:
-        points = round(scope.read_number(dialect.points))
+        points = scope.points()
         duration = points * scope.read_number(dialect.interval) if interval_known else LONGEST
         if dialect.duration.query and not interval_known:
             duration = scope.read_number(dialect.duration)
@@ -94,10 +101,22 @@ class _Records:
         for text in dialect.transfer.before:
             self.steps.tell(f"transfer.before {name}", text.format(channel=name))
         for slot in ("scale", "offset", "origin", "preamble"):
-            if text := getattr(dialect.transfer, slot):
-                self.steps.ask(f"transfer.{slot} {name}", text.format(channel=name))
+            if text := getattr(dialect.transfer, slot).format(channel=name):
+                self.steps.attempt(f"transfer.{slot} {name}", text, partial(self._scaling, slot, text, name))
         if dialect.overload.query:
             self.steps.ask(f"overload.query {name}", dialect.overload.query.format(channel=name))
+
+    def _scaling(self, slot: str, text: str, name: str) -> str:
+        """Ask for what scales a record; return the answer, which must be one."""
+        answer, transfer = self.scope.session.ask(text, as_text), self.scope.dialect.transfer
+        try:
+            if slot == "preamble":
+                preamble_scaling(transfer, name, answer.encode("ascii"))
+            else:
+                scaling_number(transfer, name, slot, answer.encode("ascii"))
+        except ValueError as problem:
+            raise ValueError(f"answers {answer}, not as it should be {problem}") from problem
+        return answer
 
     def _read(self, slot: str, name: str, setting: ChannelSetting) -> None:
         def record() -> str:

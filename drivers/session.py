@@ -7,9 +7,11 @@ from collections.abc import Callable
 from dataclasses import dataclass
 from typing import NoReturn, TypeVar
 
+from bandproof.drivers.answers import is_like, number_in
 from bandproof.drivers.errors import InstrumentError, NoAnswer
 from bandproof.drivers.link import LINE_CAP, Link, Transaction
-from bandproof.drivers.scpi import ErrorEntry, parse_error_entry
+from bandproof.drivers.quantities import numbered, worded
+from bandproof.drivers.scpi import ErrorEntry, parse_error_entry, parse_integer
 
 __all__ = ["Habits", "Session", "as_text"]
 
@@ -31,6 +33,8 @@ class Habits:
         The answer that says so.
     errors : str
         Query of the error queue, one entry an answer; empty: it has none.
+    errors_answer : str
+        Template of its answer where that is no number with words after a comma: ``FAULT {value} {any}``.
     harmless : tuple of int
         Error numbers that are noted, not raised.
     terminator : str
@@ -38,8 +42,9 @@ class Habits:
     """
 
     confirm: str = "*OPC?"
-    confirmed: str = "1"
+    confirmed: str = worded("1")
     errors: str = "SYSTem:ERRor?"
+    errors_answer: str = numbered()
     harmless: tuple[int, ...] = ()
     terminator: str = "\n"
 
@@ -209,9 +214,16 @@ class Session:
             _LOGGER.info("%s: harmless error %d %s", self.address, entry.number, entry.words)
         return tuple(entries)
 
+    def error_entry(self, line: bytes) -> ErrorEntry:
+        """Return what an answer to the error query says."""
+        template = self.habits.errors_answer
+        return (
+            ErrorEntry(parse_integer(number_in(template, line)), as_text(line)) if template else parse_error_entry(line)
+        )
+
     def _queue(self) -> list[ErrorEntry]:
         entries: list[ErrorEntry] = []
-        while (entry := self.ask(self.habits.errors, parse_error_entry)).number != 0:
+        while (entry := self.ask(self.habits.errors, self.error_entry)).number != 0:
             entries.append(entry)
             if len(entries) >= QUEUE_CAP:
                 break
@@ -257,5 +269,5 @@ def as_text(line: bytes) -> str:
 
 
 def _check_confirmation(line: bytes, answer: str) -> None:
-    if as_text(line).lstrip("+") != answer:
+    if not is_like(answer, as_text(line).lstrip("+")):
         raise ValueError(f"{answer!r} as confirmation")

@@ -11,6 +11,7 @@ from bandproof.drivers.quantities import (
     CurrentLimit,
     Duration,
     Frequency,
+    Interval,
     Level,
     Load,
     Middle,
@@ -19,7 +20,9 @@ from bandproof.drivers.quantities import (
     Points,
     Range,
     Voltage,
+    numbered,
     template,
+    worded,
 )
 from bandproof.drivers.scpi import ByteOrder, Encoding
 from bandproof.drivers.session import Habits
@@ -57,10 +60,11 @@ class Identity:
 
 @dataclass(frozen=True, slots=True)
 class Choice:
-    """A setting that is one of some words; `words` gives the instrument's word for each of ours."""
+    """A setting that is one of some words; `words` gives its word for each of ours, `answer` is as a number's."""
 
     set: str = template("value", "channel", needs=("value",))
     query: str = template("channel")
+    answer: str = numbered("channel")
     words: dict[str, str] = field(default_factory=dict)
 
 
@@ -78,8 +82,8 @@ class Toggle:
     on: str = template("channel")
     off: str = template("channel")
     query: str = template("channel")
-    is_on: str = "1"
-    is_off: str = "0"
+    is_on: str = worded("1", "channel")
+    is_off: str = worded("0", "channel")
 
 
 @dataclass(frozen=True, slots=True)
@@ -88,7 +92,7 @@ class Shape:
 
     sine: tuple[str, ...] = ()
     query: str = ""
-    is_sine: str = ""
+    is_sine: str = worded("")
 
 
 @dataclass(frozen=True, slots=True)
@@ -130,7 +134,7 @@ class Waveform:
     limits: Range = (2, math.inf)
     select: tuple[str, ...] = ()
     query: str = ""
-    is_selected: str = ""
+    is_selected: str = worded("")
     rate: float = 1e5
     latency: float = 1.0
 
@@ -163,7 +167,7 @@ class Acquisition:
     start: str = ""
     complete: str = "*OPC?"
     completes: Literal["awaited", "polled"] = "awaited"
-    is_complete: str = "1"
+    is_complete: str = worded("1")
     poll: float = 0.01
     abort: str = ""
     latency: float = 0.05
@@ -195,6 +199,11 @@ class Transfer:
         Between the preamble's fields.
     scale_field, offset_field, origin_field : int
         Places in the preamble, 0 the first; -1: not there (offset and origin are then 0).
+    scale_answer, offset_answer, origin_answer : str
+        Templates of the answers to these queries, or of the whole preamble, where a place does not do:
+        ``{any}STEP {value};{any}``.
+    scale_unit, offset_unit : float
+        V in one of its units.
     offset_sign : {1, -1}
         Whether the offset is added or taken away.
     rate : float
@@ -216,6 +225,11 @@ class Transfer:
     scale_field: int = -1
     offset_field: int = -1
     origin_field: int = -1
+    scale_answer: str = numbered("channel")
+    offset_answer: str = numbered("channel")
+    origin_answer: str = numbered("channel")
+    scale_unit: float = 1.0
+    offset_unit: float = 1.0
     offset_sign: Literal[1, -1] = 1
     rate: float = 1e5
 
@@ -244,7 +258,7 @@ class Overload:
     low: float = 0.0
     high: float = 0.0
     query: str = template("channel")
-    is_overloaded: str = "1"
+    is_overloaded: str = worded("1", "channel")
 
 
 @dataclass(frozen=True, slots=True)
@@ -273,7 +287,7 @@ class ScopeDialect:
     range: Peak
     duration: Duration
     points: Points
-    interval: Number
+    interval: Interval
     acquisition: Acquisition
     transfer: Transfer
     overload: Overload
@@ -293,9 +307,9 @@ class SwitchDialect:
     Parameters
     ----------
     close, query : str
-        With ``{route}``.
+        With ``{route}``; a query without it asks which route is closed.
     is_closed : str
-        The query's answer for a closed route.
+        The query's answer for a closed route, perhaps with ``{route}``.
     open_all : str
         Opens every route.
     exclusive : bool
@@ -305,9 +319,9 @@ class SwitchDialect:
     title: str
     kind: Literal["switch"]
     close: str = template("route", needs=("route",))
-    query: str = template("route", needs=("route",))
+    query: str = template("route")
     open_all: str = ""
-    is_closed: str = "1"
+    is_closed: str = worded("1", "route")
     exclusive: bool = True
     identity: Identity = Identity()
     habits: Habits = field(default_factory=Habits)

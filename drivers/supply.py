@@ -48,7 +48,7 @@ class Supply(Instrument):
             self._forget("output" + name)
             toggle = self.dialect.output
             query = toggle.query.format(channel=name)
-            self._command_and_see(toggle.off.format(channel=name), query, toggle.is_off)
+            self._command_and_see(toggle.off.format(channel=name), query, toggle.is_off, channel=name)
 
     def set_voltage(self, channel: int, voltage: float) -> float:
         """Set the voltage of a channel (from 1) in V; return the one read back."""

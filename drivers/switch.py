@@ -4,8 +4,9 @@ from __future__ import annotations
 
 from functools import partial
 
+from bandproof.drivers.answers import is_like
 from bandproof.drivers.instrument import Instrument
-from bandproof.drivers.session import Session
+from bandproof.drivers.session import Session, as_text
 from bandproof.drivers.slots import SwitchDialect
 
 __all__ = ["Switch"]
@@ -50,7 +51,12 @@ class Switch(Instrument):
         self._remember("route", "", self.open_all)
         self._once("route", "", partial(self._command_and_compare, self.dialect.open_all, "", ""))
 
+    def is_closed(self, route: str) -> bool:
+        """Return whether the instrument answers that a route is closed; the dialect has a query."""
+        answer = self.session.ask(self.dialect.query.format(route=route), as_text)
+        return is_like(self.dialect.is_closed, answer, route=route)
+
     def _close_and_compare(self, route: str) -> None:
         dialect = self.dialect
         query = dialect.query.format(route=route)
-        self._command_and_compare(dialect.close.format(route=route), query, dialect.is_closed)
+        self._command_and_compare(dialect.close.format(route=route), query, dialect.is_closed, route=route)

@@ -8,10 +8,11 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from contextlib import suppress
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import partial
 from typing import Literal
 
+from bandproof.drivers.answers import is_like
 from bandproof.drivers.errors import InstrumentError, InstrumentProblem, LinkBroken, NoAnswer, ReplyError
 from bandproof.drivers.instrument import Instrument, is_accepted, spelt, understood
 from bandproof.drivers.session import as_text
@@ -60,6 +61,42 @@ class Walk:
     def __init__(self, instrument: Instrument) -> None:
         self.instrument, self.lines = instrument, list[Line]()
         self._later: list[Callable[[], object]] = []
+        self._habits = instrument.session.habits
+
+    def begin(self, *off: str) -> None:
+        """Send what makes an instrument harmless, then read away the errors from before: no slot is to blame for them.
+
+        Where the answers to the error query are not understood, that is told once and it is not asked any more.
+        """
+        for text in off:
+            with suppress(InstrumentProblem):  # it is tried again as a slot
+                self._reopen_if_dirty()
+                self.instrument.session.command(text)
+        try:
+            self._reopen_if_dirty()
+            self.instrument.check_errors()
+        except InstrumentError as error:
+            self.note("habits.errors before", "accepted", self._habits.errors, f"error {error.number} {error.words}")
+        except InstrumentProblem as problem:
+            if not self._is_about_errors(problem):
+                raise
+
+    def end(self) -> None:
+        """Give the instrument its habits back."""
+        self.instrument.session.habits = self._habits
+
+    def _is_about_errors(self, problem: Exception) -> bool:
+        """Return whether only the error query failed; if so, note it as its own slot and ask it no more."""
+        session = self.instrument.session
+        if not isinstance(problem, (NoAnswer, ReplyError)) or problem.command != session.habits.errors:
+            return False
+        session.habits = replace(session.habits, errors="")
+        self.refuse("habits.errors", self._habits.errors, problem)
+        return True
+
+    def _reopen_if_dirty(self) -> None:
+        if self.instrument.session.link.is_dirty:
+            self.instrument.session.link.reopen()
 
     def note(self, slot: str, verdict: Verdict, sent: str = "", came: object = "", *, needed: bool = True) -> None:
         """Add a line."""
@@ -77,9 +114,12 @@ class Walk:
             self.note(slot, "missing", needed=needed)
             return False
         try:
+            self._reopen_if_dirty()
             came = act()
             self.instrument.check_errors()
         except (InstrumentProblem, ValueError) as problem:
+            if slot != "habits.errors" and self._is_about_errors(problem):
+                return self.attempt(slot, sent, act, needed=needed, hint=hint)
             more = hint(problem) if hint and isinstance(problem, InstrumentProblem) else ""
             self.refuse(slot, sent, problem, more, needed=needed)
             return False
@@ -102,6 +142,11 @@ class Walk:
         """Try a query."""
         return self.attempt(slot, text, lambda: self.instrument.session.ask(text, as_text), needed=needed)
 
+    def read(self, slot: str, number: Number, channel: str = "", *, needed: bool = True) -> bool:
+        """Try the query of a number."""
+        text = number.query.format(channel=channel)
+        return self.attempt(slot, text, lambda: self._read(number, channel)[0], needed=needed)
+
     def tell(self, slot: str, text: str, *, needed: bool = True) -> bool:
         """Try a command whose effect cannot be asked for."""
         return self.attempt(slot, text, lambda: self.instrument.session.command(text), needed=needed)
@@ -115,13 +160,14 @@ class Walk:
             self.note("identity.reset", "skipped", identity.reset, "it would lose the settings")
         else:
             self.note("identity.reset", "missing")
-        self.ask("habits.errors", habits.errors)
+        if habits == self._habits:  # else it was told
+            self.ask("habits.errors", habits.errors)
         self.ask("habits.confirm", habits.confirm)
 
     def number(
         self, slot: str, number: Number, channel: str = "", *, values: tuple[float, float], stays: bool = False
-    ) -> None:
-        """Try a number: ask it, set it to two values, set it back.
+    ) -> bool:
+        """Try a number: ask it, set it to two values, set it back; return whether it can be asked.
 
         Parameters
         ----------
@@ -133,8 +179,7 @@ class Walk:
             It stays at the last of them until `restore`.
         """
         where = f" {channel}" if channel else ""
-        query = number.query.format(channel=channel)
-        asked = self.ask(f"{slot}.query{where}", query)
+        asked = self.read(f"{slot}.query{where}", number, channel)
         if not number.set:
             self.note(f"{slot}.set{where}", "missing")
         elif not asked:
@@ -142,6 +187,7 @@ class Walk:
             self.note(f"{slot}.set{where}", "skipped", number.set, why)
         else:
             self._change(f"{slot}.set{where}", number, channel, trials(number, values), stays)
+        return asked
 
     def restore(self) -> None:
         """Set back what was to stay until now, in the order it was set."""
@@ -150,13 +196,7 @@ class Walk:
             back()
 
     def _change(self, slot: str, number: Number, channel: str, values: tuple[float, ...], stays: bool) -> None:
-        query = number.query.format(channel=channel)
-        answer = self.instrument.session.ask(query, as_text)
-        try:
-            before = understood(number, answer.encode("ascii"))
-        except ValueError as problem:
-            self.note(slot, "refused", query, f"answers {answer}, expected {problem}: is `place` right?")
-            return
+        before = self.instrument.read_number(number, channel)
         texts = [self._text(number, values[0], channel), *(spelt(number, value) for value in values[1:])]
         self.attempt(slot, ", then ".join(texts), lambda: self._follow(number, values, channel))
         text = self._text(number, before, channel)
@@ -176,7 +216,11 @@ class Walk:
     def _read(self, number: Number, channel: str) -> tuple[str, float]:
         """Return the answer to a number's query, and its value in SI."""
         answer = self.instrument.session.ask(number.query.format(channel=channel), as_text)
-        return answer, understood(number, answer.encode("ascii"))
+        try:
+            return answer, understood(number, answer.encode("ascii"), channel)
+        except ValueError as problem:
+            which = "" if number.answer else ": has it to have a template, `answer`, or another `place`?"
+            raise ValueError(f"answers {answer}, not {problem}{which}") from problem
 
     def _set(self, number: Number, value: float, channel: str) -> str:
         """Set a number and return the answer to its query; a value that is not accepted is a ValueError."""
@@ -202,36 +246,37 @@ class Walk:
         for ours, word in sorted(choice.words.items()):
             self._word(f"{slot} {ours} {channel}", choice, word, channel, ours in needed)
         for word in choice.words.values():
-            if before.upper() == word.upper():
+            if before and is_like(choice.answer or "{value}", before, value=word, channel=channel):
                 self._word(f"{slot} back {channel}", choice, word, channel, True)
 
     def _word(self, slot: str, choice: Choice, word: str, channel: str, needed: bool) -> None:
-        text = choice.set.format(value=word, channel=channel)
-        query = choice.query.format(channel=channel)
-        self.attempt(slot, text, lambda: self._tell_and_compare(text, query, word), needed=needed)
+        names = {"value": word, "channel": channel}
+        text, query, answer = choice.set.format(**names), choice.query.format(channel=channel), choice.answer
+        act = partial(self._tell_and_compare, text, query, answer or "{value}", **names)
+        self.attempt(slot, text, act, needed=needed)
 
     def toggle(self, slot: str, toggle: Toggle, channel: str) -> None:
         """Try on and off and leave it as it was."""
         texts = [text.format(channel=channel) for text in (toggle.on, toggle.off)]
         query = toggle.query.format(channel=channel)
         asked = self.ask(f"{slot}.query {channel}", query)
-        was_on = asked and self.instrument.session.ask(query, as_text).upper() == toggle.is_on.upper()
+        was_on = asked and is_like(toggle.is_on, self.instrument.session.ask(query, as_text), channel=channel)
         ways = [("on", texts[0], toggle.is_on), ("off", texts[1], toggle.is_off)]
         for name, text, answer in ways[:: -1 if was_on else 1]:  # what it was comes last
-            self.answered(f"{slot}.{name} {channel}", text, query, answer)
+            self.answered(f"{slot}.{name} {channel}", text, query, answer, channel=channel)
 
-    def answered(self, slot: str, text: str, query: str, answer: str) -> bool:
-        """Try a command and compare what its query answers then."""
-        return self.attempt(slot, text, lambda: self._tell_and_compare(text, query, answer))
+    def answered(self, slot: str, text: str, query: str, answer: str, **names: str) -> bool:
+        """Try a command and compare what its query answers then with a template, in which `names` are known."""
+        return self.attempt(slot, text, lambda: self._tell_and_compare(text, query, answer, **names))
 
-    def _tell_and_compare(self, text: str, query: str, answer: str) -> str | None:
+    def _tell_and_compare(self, text: str, query: str, answer: str, **names: str) -> str | None:
         session = self.instrument.session
         session.command(text)
         if not query:
             return None
         found = session.ask(query, as_text)
-        if found.strip("\"'").upper() != answer.upper():
-            raise ValueError(f"then answers {found}, not {answer}")
+        if not is_like(answer, found, **names):
+            raise ValueError(f"then answers {found}, not {answer.format(any='...', **names)}")
         return found
 
     def _reason(self, problem: Exception) -> str:

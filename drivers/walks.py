@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from functools import partial
 
+from bandproof.drivers.answers import is_like
 from bandproof.drivers.generator import Generator
 from bandproof.drivers.instrument import Instrument
 from bandproof.drivers.scope import Scope
@@ -36,15 +37,20 @@ def walk(instrument: Instrument, *, no_board: bool = False, routes: Sequence[str
     """
     steps = Walk(instrument)
     if isinstance(instrument, Generator):
+        steps.begin(instrument.dialect.output.off)
         _generator(steps, instrument, no_board)
     elif isinstance(instrument, Scope):
+        steps.begin()
         walk_scope(steps, instrument)
     elif isinstance(instrument, Switch):
+        steps.begin()
         _switch(steps, instrument, routes)
     elif isinstance(instrument, Supply):
+        steps.begin(*(instrument.dialect.output.off.format(channel=name) for name in instrument.switches()))
         _supply(steps, instrument, no_board)
     else:
         raise TypeError(f"nothing is known to walk for a {type(instrument).__name__}")
+    steps.end()
     return tuple(steps.lines)
 
 
@@ -94,11 +100,11 @@ def _switch(steps: Walk, instrument: Switch, routes: Sequence[str]) -> None:
         steps.note("close", "skipped", dialect.close, "the bench file names no route")
     for route in routes[:1]:
         text, query = dialect.close.format(route=route), dialect.query.format(route=route)
-        steps.answered(f"close {route}", text, query, dialect.is_closed)
+        steps.answered(f"close {route}", text, query, dialect.is_closed, route=route)
         steps.attempt("open_all", dialect.open_all, partial(_open_all, instrument, route))
     for route in closed:
         text, query = dialect.close.format(route=route), dialect.query.format(route=route)
-        steps.answered(f"close {route} back", text, query, dialect.is_closed)
+        steps.answered(f"close {route} back", text, query, dialect.is_closed, route=route)
 
 
 def _open_all(instrument: Switch, route: str) -> str:
@@ -108,34 +114,31 @@ def _open_all(instrument: Switch, route: str) -> str:
     if not dialect.query:
         return ""
     answer = instrument.session.ask(dialect.query.format(route=route), as_text)
-    if answer.upper() == dialect.is_closed.upper():
+    if is_like(dialect.is_closed, answer, route=route):
         raise ValueError(f"then {route} answers {answer}, as when it was closed: is `open_all` or `query` wrong?")
     return answer
 
 
 def _is_closed(steps: Walk, instrument: Switch, route: str) -> bool:
-    dialect = instrument.dialect
-    query = dialect.query.format(route=route)
-    if not steps.ask(f"query {route}", query):
-        return False
-    return instrument.session.ask(query, as_text).upper() == dialect.is_closed.upper()
+    query = instrument.dialect.query.format(route=route)
+    return steps.ask(f"query {route}", query) and instrument.is_closed(route)
 
 
 def _supply(steps: Walk, instrument: Supply, no_board: bool) -> None:
     dialect, output = instrument.dialect, instrument.dialect.output
     for name in instrument.switches():
         off, query = output.off.format(channel=name), output.query.format(channel=name)
-        steps.answered(f"output.off {name}", off, query, output.is_off)
+        steps.answered(f"output.off {name}", off, query, output.is_off, channel=name)
     steps.identity(dialect.identity)
     for name in dialect.channels:
         steps.number("voltage", dialect.voltage, name, values=(5.0, 2.0))
         steps.number("current_limit", dialect.current_limit, name, values=(0.05, 0.02))
-        steps.ask(f"current.query {name}", dialect.current.query.format(channel=name))
+        steps.read(f"current.query {name}", dialect.current, name)
     for name in instrument.switches():
         on, off = output.on.format(channel=name), output.off.format(channel=name)
         query = output.query.format(channel=name)
         if no_board:
-            steps.answered(f"output.on {name}", on, query, output.is_on)
-            steps.answered(f"output.off {name}", off, query, output.is_off)
+            steps.answered(f"output.on {name}", on, query, output.is_on, channel=name)
+            steps.answered(f"output.off {name}", off, query, output.is_off, channel=name)
         else:
             steps.note(f"output.on {name}", "skipped", on, NO_BOARD)

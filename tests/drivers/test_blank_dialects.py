@@ -109,7 +109,7 @@ def test_a_line_left_out_has_the_value_that_the_blank_dialect_shows(kind):
 
 NEEDED = {
     "generator": {"frequency.set", "amplitude.set", "output.on", "output.off"},
-    "scope": {"range.set", "interval.query", "acquisition.start", "transfer.read"},
+    "scope": {"range.set", "points.query", "interval.query", "acquisition.start", "transfer.read"},
     "switch": {"close", "open_all"},
     "supply": {"voltage.set", "current_limit.set", "current.query", "output.on", "output.off"},
 }

@@ -33,6 +33,7 @@ errors = ""
 set = "R{channel} {value}"
 [duration]
 [points]
+fixed = 64
 [interval]
 query = "I?"
 [acquisition]
