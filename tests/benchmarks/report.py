@@ -53,7 +53,7 @@ def rehearsed(program: str, folder: str) -> float:
     return after.ru_utime + after.ru_stime - before.ru_utime - before.ru_stime
 
 
-def main(rounds: int = 5, few: int = 10, many: int = 100) -> bool:
+def main(rounds: int = 3, few: int = 10, many: int = 100) -> bool:
     """Print both ratios beside their bounds."""
     with tempfile.TemporaryDirectory() as folder:
         costs = [(rehearsed(_WITH, f"{folder}/with"), rehearsed(_WITHOUT, f"{folder}/without")) for _ in range(rounds)]
