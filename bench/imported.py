@@ -6,7 +6,7 @@ A budget has what the points tell and nothing else: of the instruments that meas
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from math import inf, sqrt
 from pathlib import PurePath
 from typing import Any
@@ -19,6 +19,7 @@ from bandproof.bench.conformance import board_probability
 from bandproof.bench.model_choice import Choice, choose
 from bandproof.bench.response_file import Response
 from bandproof.bench.result import RESULT_SCHEMA, bare_parameter, stage_object
+from bandproof.bench.suspects import suspected
 from bandproof.bench.types import QUANTITIES, UNITS, Board, Comparison, Quantity, Stage, StageResult
 
 __all__ = ["Imported", "imported_object", "read_off"]
@@ -61,7 +62,10 @@ def read_off(found: Response, *, model: str | None = None, board: Board | None =
             for quantity in QUANTITIES
         }
         alarms += outside_by_design(designed, prediction)
-    return Imported(found, choice, budgets, _result(found, choice, designed, figures, budgets, alarms))
+    concluded = _result(found, choice, designed, figures, budgets, alarms)
+    if board is not None:
+        concluded = replace(concluded, suspects=suspected(board, [concluded]).get(concluded.name, ()))
+    return Imported(found, choice, budgets, concluded)
 
 
 def _rows(choice: Choice, quantity: Quantity) -> list[Row]:

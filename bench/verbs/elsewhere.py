@@ -97,6 +97,8 @@ def _show(found: "Imported", path: Path, board: "Board | None") -> None:
     click.echo("")
     for alarm in found.stage.alarms:
         click.echo(_wrapped(f"note: {alarm}", "  "))
+    for suspect in found.stage.suspects:
+        click.echo(_wrapped(f"suspect: {suspect.text}", "  "))
     click.echo(_wrapped(_ONLY_NOISE, ""))
     if found.stage.verdict is not None:
         click.echo(f"Stage {found.stage.name}: {found.stage.verdict.upper()}")

@@ -5,14 +5,17 @@ import random
 import re
 import shlex
 import subprocess
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
 import pytest
 
 from bandproof.analysis.fit import fit_bands
+from bandproof.bench.circuit import predicted_response
 from bandproof.bench.evaluate import usable
 from bandproof.bench.misfit import arrays
+from bandproof.bench.rehearsal import demo_board
 from bandproof.bench.verbs.console import run
 from tests.benchmarks._mutations import mutated
 
@@ -310,6 +313,19 @@ def test_a_band_that_needs_a_leakage_nobody_asked_for_is_undecided(result, low, 
     assert found["verdict"] == verdict
     assert found["stages"][0]["model"] == "band+delay+leakage"
     assert "leakage of" in found["alarms"][-1]
+
+
+def test_a_wrong_part_is_suspected_as_in_a_run(imported, result, with_design, tmp_path):
+    board = demo_board()
+    low = board.stage("low")
+    parts = tuple(replace(part, value=3.4e3) if part.name == "R_shunt" else part for part in low.parts)
+    f = np.geomspace(100.0, 1000.0, 15)
+    h = predicted_response(board, replace(low, parts=parts), f)
+    told = "low: R_shunt reads like 3.4 kΩ where 34 kΩ was drawn: wrong decade"
+    found = result(f, h, *with_design, uncertainty=1e-3, code=BOARD_FAILS)
+    assert [suspect["text"] for suspect in found["stages"][0]["suspects"]] == [told]
+    _, out, _ = imported(tmp_path / "given.csv", *with_design)
+    assert f"suspect: {told}" in " ".join(out.split())
 
 
 # --- what a person reads ---
