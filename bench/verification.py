@@ -18,7 +18,7 @@ __all__ = ["RunAltered", "Verified", "verified"]
 
 # Part of U by which a figure or its U may come out otherwise. A fit ends within 1e-8 of its parameters' own standard
 # uncertainties (analysis/least_squares.py) whichever way rounding leads it there, and U follows from it without steps;
-# a hundred times that is left for the arithmetic of other library versions (kernels for five generations of processors
+# a hundred times that is left for the arithmetic of other library versions (other kernels for the same processor
 # differ by 4e-13 U, measured). What is smaller changes no digit shown.
 _SHARE = 1e-6
 _COMPARED = ("designed", "lower_limit", "upper_limit", "measured", "expanded_uncertainty")
