@@ -1,15 +1,14 @@
 """The control chart of single values: centre line, limits, and a run on one side of the line."""
 
 from dataclasses import dataclass
+from math import inf, sqrt
 
 import numpy as np
 
 from bandproof.analysis.types import FloatArray
+from bandproof.analysis.uncertainty import coverage_factor
 
-__all__ = ["Limits", "individuals", "relative_spread", "run_length"]
-
-D2 = 1.128  # mean range of two normal values, in standard deviations, as the handbook of `individuals` rounds it
-_WIDTH = 3.0  # standard deviations from the centre line to a limit
+__all__ = ["Limits", "prediction_limits", "relative_spread", "run_length"]
 
 
 @dataclass(frozen=True, slots=True)
@@ -21,13 +20,15 @@ class Limits:
     upper: float
 
 
-def individuals(values: FloatArray, *, least: float = 0.0) -> Limits:
-    """Return centre line and limits from values (n,) in the order of time: mean ± 3/1.128 mean moving range of two.
+def prediction_limits(values: FloatArray, *, chance: float, least: float = 0.0) -> Limits:
+    """Return centre line and limits that the next value leaves by ``chance``, from values (n,) of one normal process.
 
-    ``least`` is the smallest standard deviation that values can have: limits are no closer than three of it, because
-    the mean range of few values may come out small by chance.
+    Mean ± t s √(1 + 1/n), s their standard deviation with n - 1 degrees of freedom, t Student's: few values know their
+    process badly, and a value and the mean of n others differ by more than a value does. For many values and a chance
+    of 0.0027 these are the three standard deviations of every handbook's chart. The moving range is not used: it has
+    no exact factor for few values. ``least`` is the smallest standard deviation that values can have.
 
-    Source: NIST/SEMATECH e-Handbook of Statistical Methods, 6.3.2.2, individuals control charts (from memory).
+    Source: prediction interval of one further observation (any handbook of statistics); t as JCGM 100:2008, table G.2.
 
     Raises
     ------
@@ -37,15 +38,17 @@ def individuals(values: FloatArray, *, least: float = 0.0) -> Limits:
     Examples
     --------
     >>> flow = [49.6, 47.6, 49.9, 51.3, 47.8, 51.2, 52.6, 52.4, 53.6, 52.1]
-    >>> limits = individuals(np.array(flow))
-    >>> print(f"{limits.lower:.4f} {limits.centre:.2f} {limits.upper:.4f}")
-    45.8159 50.81 55.8041
+    >>> limits = prediction_limits(np.array(flow), chance=0.0027)
+    >>> print(f"{limits.lower:.2f} {limits.centre:.2f} {limits.upper:.2f}")
+    42.08 50.81 59.54
     """
-    if values.ndim != 1 or len(values) < 2:
+    n = len(values)
+    if values.ndim != 1 or n < 2:
         raise ValueError(f"a chart needs two values or more, found an array of {values.shape}")
-    centre = float(values.mean())
-    spread = max(float(np.abs(np.diff(values)).mean()) / D2, least)
-    return Limits(centre, centre - _WIDTH * spread, centre + _WIDTH * spread)
+    centre, spread = float(values.mean()), float(values.std(ddof=1))
+    t, normal = (coverage_factor(dof, coverage=1.0 - chance) for dof in (n - 1, inf))
+    half = max(t * spread, normal * least) * sqrt(1.0 + 1.0 / n)
+    return Limits(centre, centre - half, centre + half)
 
 
 def run_length(values: FloatArray, centre: float) -> int:

@@ -6,7 +6,7 @@ from math import inf, isfinite, sqrt
 
 import numpy as np
 
-from bandproof.analysis.control_chart import Limits, individuals, relative_spread, run_length
+from bandproof.analysis.control_chart import Limits, prediction_limits, relative_spread, run_length
 from bandproof.analysis.decision import worst
 from bandproof.bench.check_file import Entry
 from bandproof.bench.types import QUANTITIES, Board, CheckHistory, Quantity, StageResult, Verdict
@@ -15,6 +15,7 @@ __all__ = [
     "FEWEST",
     "Judged",
     "Line",
+    "blocker",
     "counting",
     "judged",
     "lines_of",
@@ -26,6 +27,9 @@ __all__ = [
 
 FEWEST = 8  # checks that limits and the reproducibility are made of; arbitrary
 _FIRST = 20  # checks at most that limits are made of, so that they do not follow a slow drift; arbitrary
+# Of checks of a healthy bench: three figures with limits at three standard deviations have it, 0.27 % each. It comes to
+# 1 % while limits grow, because a check that is out by chance is left out of them.
+_FALSE_ALARMS = 0.0081
 _USED = 200  # last checks at most that the reproducibility is made of; arbitrary
 _ONE_SIDE = 8  # in a row: once in 128 such rows by chance (a usual run rule, e-Handbook 6.3.2, from memory)
 Key = tuple[str, Quantity]
@@ -63,11 +67,20 @@ def counting(entries: Sequence[Entry], standard: str) -> tuple[Entry, ...]:
     return tuple(standing[changes[-1] if changes else 0 :])
 
 
-def used(entries: Sequence[Entry]) -> CheckHistory | None:
-    """Return what a run keeps of a history: the checks that count for the standard measured last; None for none."""
-    if not entries:
-        return None
-    standard = entries[-1].standard
+def blocker(entries: Sequence[Entry], standard: str) -> str:
+    """Return why the first check of a standard must not call the bench in order by itself; nothing where it may.
+
+    Its chart has yet to begin, so all it has are declared limits: another box would free a bench that was found out.
+    """
+    last = {entry.standard: entry for entry in entries}
+    others = [entry.standard for entry in last.values() if not entry.stands]
+    if not others or counting(entries, standard):
+        return ""
+    return f"it is the first check of this standard, and the last one of {others[-1]} was out of order"
+
+
+def used(entries: Sequence[Entry], standard: str) -> CheckHistory | None:
+    """Return what a run keeps of a history: the checks that count for the bench's standard; None for none."""
     found = counting(entries, standard)[-_USED:]
     return CheckHistory(standard, tuple(entry.check() for entry in found)) if found else None
 
@@ -75,6 +88,7 @@ def used(entries: Sequence[Entry]) -> CheckHistory | None:
 def lines_of(board: Board, entries: Sequence[Entry]) -> dict[Key, Line]:
     """Return the chart of each figure from the checks that count; of fewer than `FEWEST`, the declared limits."""
     first = [entry.check() for entry in entries[:_FIRST]]
+    chance = _FALSE_ALARMS / (len(QUANTITIES) * len(board.stages))
     lines = {}
     for stage in board.stages:
         for quantity in QUANTITIES:
@@ -83,14 +97,20 @@ def lines_of(board: Board, entries: Sequence[Entry]) -> dict[Key, Line]:
             if len(first) >= FEWEST:
                 found = np.array([check.figures[stage.name][quantity] for check in first])
                 noise = sqrt(float((found[:, 1] ** 2).mean()))
-                line = Line(individuals(found[:, 0], least=noise), len(first))
+                line = Line(prediction_limits(found[:, 0], chance=chance, least=noise), len(first))
             lines[stage.name, quantity] = line
     return lines
 
 
-def judged(lines: Mapping[Key, Line], stages: Sequence[StageResult]) -> Judged:
-    """Return whether a new check is in order: within the limits of its standard's file, and within its chart's."""
+def judged(lines: Mapping[Key, Line], stages: Sequence[StageResult], doubt: str = "") -> Judged:
+    """Return whether a new check is in order: within the limits of its standard's file, and within its chart's.
+
+    ``doubt`` is what speaks against it whatever its figures are.
+    """
     reasons, verdicts = list[str](), list[Verdict]()
+    if doubt:
+        reasons.append(doubt)
+        verdicts.append("undecided")
     for stage in stages:
         for quantity, figure in stage.figures.items():
             line = lines[stage.name, quantity]

@@ -1,6 +1,7 @@
-"""The history of a bench's check standard: NAME.check.jsonl beside its bench file, a line a check, never rewritten.
+"""The history of a bench's check standard: NAME.check.jsonl beside its bench file, a line a check or sweep begun.
 
-Each line has a checksum of its content and its number, so that a line that was changed, cut or taken out is told.
+It is never rewritten. Each line has a checksum of its content, each check its number, so that a line that was changed
+or cut, and a check that was taken out, is told.
 """
 
 import json
@@ -19,7 +20,7 @@ from bandproof.bench.plain import fits, to_json
 from bandproof.bench.system import sync_folder
 from bandproof.bench.types import QUANTITIES, Check, Quantity, Verdict
 
-__all__ = ["SCHEMA", "Entry", "History", "append", "check_path", "read_history"]
+__all__ = ["SCHEMA", "Entry", "History", "add_sweep", "append", "check_path", "read_history"]
 
 SCHEMA = "bandproof-check/1"
 _LARGEST = 64_000_000  # bytes; arbitrary, some hundred thousand checks
@@ -63,12 +64,16 @@ class Entry:
 
 @dataclass(frozen=True, slots=True)
 class History:
-    """Every whole entry, oldest first, and in words what is wrong with the others; whether the last line is such."""
+    """Every whole check, oldest first, and in words what is wrong with other lines; whether such stand after the last.
+
+    ``sweeps`` has for each sweep begun the number of the check before it, 0 for none.
+    """
 
     path: Path
     entries: tuple[Entry, ...]
     damages: tuple[str, ...]
     ends_damaged: bool = False
+    sweeps: tuple[int, ...] = ()
 
     @property
     def next_number(self) -> int:
@@ -90,8 +95,17 @@ def append(path: Path, entry: Entry) -> None:
     OSError
         The file cannot be written.
     """
-    content = to_json(asdict(entry))
-    line = to_json({"schema": SCHEMA, "crc32": _sum(content), "check": json.loads(content)})
+    _add(path, "check", asdict(entry))
+
+
+def add_sweep(path: Path, serial: str, attempt: int, utc: str) -> None:
+    """Add that a sweep began, on disk before this returns (OSError: the file cannot be written)."""
+    _add(path, "sweep", {"serial": serial, "attempt": attempt, "started": utc})
+
+
+def _add(path: Path, kind: str, plain: Mapping[str, Any]) -> None:
+    content = to_json(plain)
+    line = to_json({"schema": SCHEMA, "crc32": _sum(content), kind: json.loads(content)})
     is_new = not path.exists()
     with path.open("a+b") as file:
         if file.tell():  # at the end: what a power cut tore there stays a line of its own
@@ -123,39 +137,48 @@ def read_history(path: Path) -> History:
         lines = path.read_bytes().split(b"\n") if path.exists() else []
     except OSError as problem:
         raise FileMistakes(str(path), (f"cannot be read: {problem.strerror or problem}",)) from problem
-    entries, damages = list[Entry](), list[str]()
-    lost = 0  # damaged lines since the last whole one
+    entries, sweeps, damages = list[Entry](), list[int](), list[str]()
+    lost = 0  # damaged lines since the last whole check
     for number, line in enumerate(lines, 1):
         if not line.strip():
+            continue
+        before = entries[-1].number if entries else 0
+        if _content(line, "sweep") is not None:
+            sweeps.append(before)
             continue
         if (entry := _entry(line)) is None:
             damages.append(f"line {number} is damaged and left out")
             lost += 1
             continue
-        before = entries[-1].number if entries else 0
         if not before < entry.number <= before + 1 + lost:
             damages.append(
                 f"line {number} has check {entry.number} behind check {before}: lines are missing or doubled"
             )
         entries.append(entry)
         lost = 0
-    if damages and not entries:
+    if damages and not entries and not sweeps:
         raise FileMistakes(
             str(path), ("has no line that is a check of this program; move it away and check the bench anew",)
         )
-    return History(path, tuple(entries), tuple(damages), ends_damaged=lost > 0)
+    return History(path, tuple(entries), tuple(damages), ends_damaged=lost > 0, sweeps=tuple(sweeps))
 
 
 def _entry(line: bytes) -> Entry | None:
     """Return the check of a line, None where it is not as it was written."""
-    with suppress(ValueError, KeyError, TypeError, RecursionError):
-        whole = json.loads(line)
-        plain = whole["check"]
-        if whole["schema"] != SCHEMA or _sum(to_json(plain)) != whole["crc32"]:
-            return None
+    with suppress(ValueError, KeyError, TypeError):
+        plain = _content(line, "check")
         entry = Entry(**{field.name: plain[field.name] for field in fields(Entry)})
         if _is_one(entry):
             return entry
+    return None
+
+
+def _content(line: bytes, kind: str) -> Any:
+    """Return what a line of a kind says, None where it is another one or not as it was written."""
+    with suppress(ValueError, KeyError, TypeError, RecursionError):
+        whole = json.loads(line)
+        if whole["schema"] == SCHEMA and _sum(to_json(whole[kind])) == whole["crc32"]:
+            return whole[kind]
     return None
 
 

@@ -47,8 +47,8 @@ def origin(lines: Mapping[Key, Line], entries: Sequence[Entry]) -> str:
         )
     first, last = (datetime.fromisoformat(entries[i].started).date() for i in (0, made_of - 1))
     return (
-        f"limits: mean ± 3/1.128 × mean moving range of the first {made_of} checks ({first} to {last}), "
-        "no closer than three times a check's own noise"
+        f"limits: about one check of a healthy bench in 100 leaves them; made of the first {made_of} checks ("
+        f"{first} to {last}), no closer than a check's own noise allows"
     )
 
 

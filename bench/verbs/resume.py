@@ -28,6 +28,7 @@ def command(folder: Path, as_json: bool) -> int:
     from bandproof.bench.resumption import unfinished
     from bandproof.bench.verbs.rehearse import resume_rehearsal
     from bandproof.bench.verbs.run import carried_out, clock_of, job_of, of_head
+    from bandproof.bench.verbs.standard import checked_bench, concluded
 
     place = unfinished(folder)
     click.echo(f"resuming {place}", err=True)
@@ -38,4 +39,6 @@ def command(folder: Path, as_json: bool) -> int:
             raise BadInput(later)
         board, bench = board_and_bench(journal)
         job = job_of(board=board, bench=bench, folder=place, clock=clock_of(bench), **of_head(journal.head))
+        if path := checked_bench(place, journal.head):
+            return concluded(job, path, journal=journal, as_json=as_json)
         return carried_out(job, journal=journal, as_json=as_json)

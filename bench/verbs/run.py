@@ -185,7 +185,7 @@ def command(
     """
     from bandproof.bench.bench_file import check_wiring, find_bench, read_bench
     from bandproof.bench.board_file import read_board
-    from bandproof.bench.check_use import checks_for
+    from bandproof.bench.check_use import checks_for, counted
     from bandproof.bench.job import new_attempt
     from bandproof.bench.thru_file import read_thru, thru_path
 
@@ -221,6 +221,7 @@ def command(
         thru_path=str(thru_path(path)),
         keep_raw=raw,
         bench_path=str(path.resolve()),
+        begin_journal=counted(bench, path),
     )
     return carried_out(job, as_json=as_json)
 

@@ -2,7 +2,7 @@
 
 import json
 import secrets
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from math import isfinite
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -16,11 +16,14 @@ if TYPE_CHECKING:
     from bandproof.bench.check_chart import Judged, Key, Line
     from bandproof.bench.check_file import Entry
     from bandproof.bench.finish import Outcome
+    from bandproof.bench.job import Job
+    from bandproof.bench.journal import Journal
     from bandproof.bench.types import Bench, Board
 
 __all__ = ["command"]
 
 RESULT_SCHEMA = "bandproof-check-result/1"
+_SERIAL = "check"  # what stands for a serial number in the folder of checks
 
 
 @click.command("check")
@@ -56,7 +59,7 @@ def command(
     \b
       [check]
       board       = "check.board.toml"   # a board file whose stage has circuit = "passive"
-      every       = 20                   # boards
+      every       = 20                   # sweeps begun
       longest_age = "12 h"
 
     \b
@@ -65,22 +68,22 @@ def command(
     """
     from bandproof.bench.bench_file import check_wiring, find_bench, read_bench
     from bandproof.bench.board_file import read_board
+    from bandproof.bench.check_chart import standard_of
     from bandproof.bench.check_file import check_path, read_history
-    from bandproof.bench.verbs.run import wall
 
-    begin = wall()
     path, why = find_bench(str(bench_path) if bench_path else None)
     bench = read_bench(path)
-    board = read_board(_board_path(bench, path, board_path))
+    named = _board_path(bench, path, board_path)
+    board = read_board(named)
+    _must_be_passive(board, named)
     check_wiring(board, bench, str(path))
     click.echo(f"bench: {path} ({why})", err=as_json)
-    history = read_history(check_path(path))  # what cannot be read is told before anything is measured
-    outcome = _measured(board, bench, path, without_thru, name, ambient, note)
-    if outcome.run.ended == "cut_short":
-        from bandproof.bench.verbs.run import show
-
-        return show(outcome, wall() - begin, as_json)
-    return _concluded(board, bench, outcome, history.path, accept, as_json)
+    if bench.check and standard_of(read_board(Path(bench.check.board))) != standard_of(board):
+        other = Path(bench.check.board).name
+        click.echo(f"note: {path.name} names {other} in [check]: this check does not free the bench", err=True)
+    read_history(check_path(path))  # what cannot be read is told before anything is measured
+    job = _job(board, bench, path, without_thru, name, ambient, note)
+    return concluded(job, path, accept=accept, as_json=as_json)
 
 
 def _board_path(bench: "Bench", path: Path, named: Path | None) -> Path:
@@ -94,23 +97,32 @@ def _board_path(bench: "Bench", path: Path, named: Path | None) -> Path:
     return Path(bench.check.board)
 
 
-def _measured(
+def _must_be_passive(board: "Board", path: Path) -> None:
+    from bandproof.bench.types import PASSIVE
+
+    if active := [stage.name for stage in board.stages if stage.circuit != PASSIVE]:
+        raise BadInput(
+            f'{path} is no check standard: {", ".join(active)} is not of circuit = "{PASSIVE}". An amplifier drifts, '
+            "and would be charted as the bench; name a board file of a passive network"
+        )
+
+
+def _job(
     board: "Board", bench: "Bench", path: Path, without_thru: bool, name: str, ambient: str | None, note: str
-) -> "Outcome":
-    """Measure the standard as a board is measured, with the path that is stored; its run is kept beside the history."""
+) -> "Job":
+    """Return the job that measures the standard as a board, with the stored path; its run is kept by the history."""
     from bandproof.bench.job import new_attempt
-    from bandproof.bench.stop import watching_signals
     from bandproof.bench.thru_file import read_thru, thru_path
     from bandproof.bench.verbs.conditions import stated
     from bandproof.bench.verbs.run import clock_of, job_of
 
     thru = None if without_thru else read_thru(thru_path(path))
     operator, room = stated(name, ambient)
-    place, attempt = new_attempt(_runs(path), "check")
-    job = job_of(
+    place, attempt = new_attempt(_runs(path), _SERIAL)
+    return job_of(
         board=board,
         bench=bench,
-        serial="check",
+        serial=_SERIAL,
         attempt=attempt,
         run_id=secrets.token_hex(8),
         folder=place,
@@ -122,11 +134,32 @@ def _measured(
         thru_path=str(thru_path(path)),
         bench_path=str(path.resolve()),
     )
+
+
+def checked_bench(place: Path, head: Mapping[str, Any]) -> Path | None:
+    """Return the bench file that a run in a folder, with its journal's head, is a check of; None for a board's run."""
+    path = Path(head["bench_path"])
+    is_check = head["serial"] == _SERIAL and place.resolve().parent.parent == _runs(path)
+    return path if is_check else None
+
+
+def concluded(
+    job: "Job", path: Path, *, accept: str = "", as_json: bool = False, journal: "Journal | None" = None
+) -> int:
+    """Carry out a check of the bench in a file, or go on with its journal; keep and print it, return the exit code."""
+    from bandproof.bench.check_file import check_path
+    from bandproof.bench.stop import watching_signals
+    from bandproof.bench.verbs.run import show, wall
+
+    begin = wall()
     try:
         with watching_signals(job.stop):
-            return job.carry_out()
+            outcome = job.carry_out() if journal is None else job.go_on(journal)
     finally:
         job.progress.close()
+    if outcome.run.ended == "cut_short":
+        return show(outcome, wall() - begin, as_json)
+    return _concluded(job.board, job.bench, outcome, check_path(path), accept, as_json)
 
 
 def _runs(path: Path) -> Path:
@@ -138,7 +171,7 @@ def _concluded(
     board: "Board", bench: "Bench", outcome: "Outcome", history_path: Path, accept: str, as_json: bool
 ) -> int:
     """Judge a check against its chart, keep it, print it, and return the exit code."""
-    from bandproof.bench.check_chart import counting, judged, lines_of, standard_of, warnings
+    from bandproof.bench.check_chart import blocker, counting, judged, lines_of, standard_of, warnings
     from bandproof.bench.check_file import append, read_history
     from bandproof.bench.verbs.console import DONE, VERDICT_CODES
 
@@ -146,7 +179,7 @@ def _concluded(
     standard = standard_of(board)
     before = counting(history.entries, standard)
     lines = lines_of(board, before)
-    found = judged(lines, outcome.stages)
+    found = judged(lines, outcome.stages, blocker(history.entries, standard))
     entry = _entry(history.next_number, standard, outcome, found, accept)
     append(history_path, entry)
     entries = (*history.entries, entry)
@@ -229,7 +262,7 @@ def _print(
     click.echo(wrapped(f"Bench: {_state(entry)}"))
     if bench.check is not None and entry.stands:
         hours = bench.check.longest_age / 3600.0
-        click.echo(f"check again within {hours:.3g} h, and after {bench.check.every} boards")
+        click.echo(f"check again within {hours:.3g} h or {bench.check.every} sweeps")
     click.echo(f"  history  {history_path}\n  run      {outcome.folder / outcome.result['files']['run']}")
 
 

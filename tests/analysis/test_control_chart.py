@@ -1,53 +1,57 @@
 """The control chart of single values, against the handbook and against draws."""
 
 import statistics
-from math import pi, sqrt
+from math import sqrt
 
 import numpy as np
 import pytest
 
-from bandproof.analysis.control_chart import D2, individuals, relative_spread, run_length
+from bandproof.analysis.control_chart import prediction_limits, relative_spread, run_length
 
-# NIST/SEMATECH e-Handbook, 6.3.2.2, example of an individuals chart: flow rates and the limits printed there (from
-# memory; the moving ranges sum to 16.9, so that the limits can be had by hand, too)
+# NIST/SEMATECH e-Handbook, 6.3.2.2, flow rates of its example of a chart of single values (from memory)
 FLOW = np.array([49.6, 47.6, 49.9, 51.3, 47.8, 51.2, 52.6, 52.4, 53.6, 52.1])
-FLOW_LIMITS = 45.8159, 50.81, 55.8041
+THREE_SIGMA = 0.0027  # what a normal value leaves three standard deviations by, both sides, rounded as in handbooks
+# JCGM 100:2008, table G.2, Student's t for 99.73 % (from memory), by degrees of freedom
+T_99_73 = {2: 19.21, 4: 6.62, 7: 4.53, 9: 4.09, 10: 3.96, 19: 3.45, 20: 3.42}
 
 
-def test_limits_of_the_handbooks_example():
-    found = individuals(FLOW)
-    assert (found.lower, found.centre, found.upper) == pytest.approx(FLOW_LIMITS, abs=5e-5)
-    by_hand = 3 / 1.128 * 16.9 / 9
-    assert found.upper - found.centre == pytest.approx(by_hand, rel=1e-12)
+@pytest.mark.parametrize(("dof", "t"), T_99_73.items())
+def test_limits_are_those_of_one_more_value_by_the_table_of_students_t(dof, t):
+    # a value and the mean of n others differ with the variance 1 + 1/n (by hand)
+    values = np.random.default_rng(dof).normal(10.0, 0.1, dof + 1)
+    found = prediction_limits(values, chance=THREE_SIGMA)
+    mean, half = statistics.mean(values), t * statistics.stdev(values) * sqrt(1 + 1 / (dof + 1))
+    assert (found.lower, found.centre, found.upper) == pytest.approx(
+        (mean - half, mean, mean + half), abs=0.0015 * half
+    )
 
 
-def test_d2_is_the_mean_distance_of_two_normal_values_rounded_as_in_handbooks():
-    # E|x - y| of two standard normal values is 2/sqrt(pi), because x - y has the variance 2 (by integration)
-    assert pytest.approx(2 / sqrt(pi), abs=5e-4) == D2
-    # 3/d2 is printed as 2.66 (handbook constants of the individuals chart, from memory)
-    assert round(3 / D2, 2) == 2.66
+def test_limits_of_many_values_are_the_three_standard_deviations_of_handbooks():
+    values = np.random.default_rng(3).normal(10.0, 0.1, 100_000)
+    found = prediction_limits(values, chance=THREE_SIGMA)
+    assert found.upper - found.centre == pytest.approx(3 * values.std(), rel=1e-4)
 
 
-def test_limits_hold_all_but_a_few_of_a_process_in_control():
-    # 3 standard deviations of a normal process hold all but 0.27 %: of 20000 values 54 are expected outside, sd 7.3;
-    # limits of 2000 values are known to 2 %, which moves that by some 15 %.
-    rng = np.random.default_rng(3)
-    found = individuals(rng.normal(10.0, 0.1, 2000))
-    later = rng.normal(10.0, 0.1, 20000)
-    outside = int(((later < found.lower) | (later > found.upper)).sum())
-    assert 54 - 4 * 7.3 - 10 < outside < 54 + 4 * 7.3 + 10
+@pytest.mark.parametrize("n", [8, 20])
+def test_the_next_value_of_a_process_in_control_leaves_the_limits_as_often_as_stated(n):
+    # 20000 charts of n values each and one more: 2 % are 400 outside, standard deviation 20
+    draws = np.random.default_rng(n).normal(10.0, 0.1, (20_000, n + 1))
+    limits = [prediction_limits(row[:n], chance=0.02) for row in draws]
+    outside = sum(not chart.lower <= row[n] <= chart.upper for chart, row in zip(limits, draws, strict=True))
+    assert abs(outside - 400) < 4 * 20
 
 
-def test_limits_are_no_closer_than_three_times_the_least_standard_deviation():
-    found = individuals(np.array([5.0, 5.0, 5.0]), least=0.1)
-    assert (found.lower, found.centre, found.upper) == pytest.approx((4.7, 5.0, 5.3))
-    assert individuals(FLOW, least=1e-3) == individuals(FLOW)
+def test_limits_are_no_closer_than_those_of_the_least_standard_deviation():
+    found = prediction_limits(np.array([5.0, 5.0, 5.0]), chance=THREE_SIGMA, least=0.1)
+    half = 0.3 * sqrt(4 / 3)
+    assert (found.lower, found.centre, found.upper) == pytest.approx((5 - half, 5.0, 5 + half), rel=1e-5)
+    assert prediction_limits(FLOW, chance=0.01, least=1e-3) == prediction_limits(FLOW, chance=0.01)
 
 
 @pytest.mark.parametrize("values", [[1.0], [], [[1.0, 2.0]]])
 def test_no_chart_of_less_than_two_values(values):
     with pytest.raises(ValueError, match="two values or more"):
-        individuals(np.array(values))
+        prediction_limits(np.array(values), chance=0.01)
 
 
 @pytest.mark.parametrize(
