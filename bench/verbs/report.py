@@ -18,20 +18,22 @@ __all__ = ["command"]
 )
 @click.option("--pictures", type=click.Path(path_type=Path), metavar="FOLDER", help="Write a picture of every stage.")
 @click.option(
+    "--format", "kind", type=click.Choice(["svg", "png"]), default="svg", show_default=True, help="Of pictures."
+)
+@click.option(
     "--with",
     "other",
     type=click.Path(path_type=Path),
     metavar="OTHER_RUN",
     help="Instead: one page about both runs of the same board, figure by figure, such as before and after a repair.",
 )
-@click.option("--format", "kind", type=click.Choice(["svg", "png"]), default="svg", show_default=True)
 def command(
     run_path: Path,
     out: Path | None,
     data: Path | None,
     pictures: Path | None,
-    other: Path | None,
     kind: Literal["svg", "png"],
+    other: Path | None,
 ) -> int:
     """Write the report of a stored run as PDF: verdict and all figures on page one, then band by band, then the bench.
 
