@@ -287,8 +287,14 @@ def test_a_table_over_two_pages_repeats_its_heading(stored):
     assert first_band >= 2
     for page in said[:first_band]:
         assert "band figure designed measured ± U deviation limits rule verdict" in page
-    for page in said[1:first_band]:  # a band's rows are on one page: none begins within a band
-        assert page.partition("rule verdict ")[2].startswith("f0 ")
+
+
+def test_a_band_s_rows_are_on_one_page(stored):
+    run, stages, _ = many(stored, 30)
+    for lines in range(3):  # three rows a band: one of these would end the page within a band
+        said = pages(document(stored, run=replace(run, alarms=("told",) * lines), stages=stages))
+        assert "Band a band" not in said[1]
+        assert said[1].partition("rule verdict ")[2].startswith("f0 ")
 
 
 def test_a_name_of_sixty_letters_is_on_the_page_whole(stored):
