@@ -115,6 +115,8 @@ def _cause(ratio: float) -> str:
         (2.0, "the generator assumes a 50 Ω load: set it to high impedance"),
         (2.0**0.5, "the instrument counts rms, its dialect says peak: see `meaning` of its amplitude"),
         (0.5**0.5, "the instrument counts peak, its dialect says rms: see `meaning` of its amplitude"),
+        (8.0**0.5, "the instrument counts rms, its dialect says peak to peak: see `meaning` of its amplitude"),
+        (0.125**0.5, "the instrument counts peak to peak, its dialect says rms: see `meaning` of its amplitude"),
         (0.5, "a 50 Ω load hangs on the generator, or the instrument counts peak to peak: check its dialect"),
     ):
         if abs(log10(ratio / factor)) < log10(1.15):

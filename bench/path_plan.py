@@ -5,11 +5,12 @@ from math import inf, sqrt
 
 import numpy as np
 
-from bandproof.analysis.planning import plan_record, shift_from_mains
+from bandproof.analysis.planning import RecordPlan, plan_record, shift_from_mains
 from bandproof.bench.bench_file import BY_HAND
 from bandproof.bench.errors import BadInput
 from bandproof.bench.level import HEADROOM, well_ranged
 from bandproof.bench.plan import LONGEST, LOW_LEVEL, thru_steps
+from bandproof.bench.record_limits import record_limits
 from bandproof.bench.thru import THRU, Asked, thru_stage
 from bandproof.bench.types import Bench, Board, OpAmpData, Point, Stage, Step, TestPoint, Tone, Wire
 
@@ -31,10 +32,15 @@ class PathPlanner:
         first = asked[0]
         frequency = np.array([sqrt(first.span[0] * first.span[1])])
         middle = float(shift_from_mains(frequency, mains=bench.mains, longest=0.1 * LONGEST)[0])
-        record = plan_record(middle, mains=bench.mains, longest=LONGEST)
+        limits, usual = record_limits(bench), plan_record(middle, mains=bench.mains, longest=LONGEST)
+        try:
+            record = limits.fitted(usual, middle)
+            quiet = limits.fitted(RecordPlan(2.0 / bench.mains, _QUIET_SAMPLES))
+        except ValueError as problem:
+            raise BadInput(f"the path at {middle:.4g} Hz: {problem}") from problem
         low = (Tone(middle, LOW_LEVEL * first.level),)
         steps = [
-            Step(0, path.name, "no-signal", (), 0.0, 2.0 / bench.mains, _QUIET_SAMPLES, first.ranges),
+            Step(0, path.name, "no-signal", (), 0.0, quiet.duration, quiet.points, first.ranges),
             Step(1, path.name, "low-level", low, 0.0, record.duration, record.points, first.ranges),
         ]
         for pair in asked:

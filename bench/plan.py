@@ -1,18 +1,20 @@
 """The plan: which records to take next, given what was measured so far. Pure and incremental; empty means done."""
 
 from collections import Counter
-from collections.abc import Collection, Sequence
+from collections.abc import Callable, Collection, Sequence
+from functools import partial
 from math import ceil, log, log10
 
 import numpy as np
 
-from bandproof.analysis.planning import band_frequencies, dwell_after_step, plan_record, shift_from_mains
+from bandproof.analysis.planning import RecordPlan, band_frequencies, dwell_after_step, plan_record, shift_from_mains
 from bandproof.analysis.types import FloatArray
 from bandproof.bench.circuit import Prediction, predict, predicted_response, stage_network, taps
 from bandproof.bench.errors import BadInput
 from bandproof.bench.evaluate import fit_points, usable
 from bandproof.bench.level import HEADROOM, greatest_level, well_ranged
 from bandproof.bench.record import HUM_BELOW, hum_frequencies
+from bandproof.bench.record_limits import record_limits
 from bandproof.bench.thru import THRU, Asked, Ranges, thru_stage
 from bandproof.bench.types import Bench, Board, Point, Purpose, Stage, Step, Tone
 
@@ -41,7 +43,7 @@ class Planner:
     ------
     BadInput
         A stage's circuit has no band near its designed centre, no level is safe for it, its stages are in series, or
-        a band is too low for the longest record.
+        a band needs a record that is too long, or that the scope cannot take by its dialect: all of them at once.
     """
 
     def __init__(self, board: Board, bench: Bench, known: Collection[Ranges] = (), *, longer: float = 1.0) -> None:
@@ -49,11 +51,23 @@ class Planner:
         self._board, self._bench, self._known, self._longer = board, bench, set(known), longer
         self._predictions = {stage.name: _predicted(board, stage) for stage in board.stages}
         self._levels = {stage.name: self._level(stage) for stage in board.stages}
+        self._limits = record_limits(bench)
         self._costs: dict[str, list[float]] = {}
         self._finished: dict[str, int] = {}  # points after which a stage needed no more, so that it is not fitted again
         self._dwells: dict[tuple[str, float, float | None, float], float] = {}
-        for stage in board.stages:  # now, so that what cannot be planned is told before anything is driven
-            self._seconds(stage)
+        self._refuse_unplannable()
+
+    def _refuse_unplannable(self) -> None:
+        """Plan every stage once now, so that what cannot be planned is told before anything is driven."""
+        wrong = []
+        for stage in self._board.stages:
+            try:
+                self._quiet(stage, 0)
+                self._seconds(stage)
+            except BadInput as problem:
+                wrong.append(str(problem))
+        if wrong:
+            raise BadInput("\n".join(wrong))
 
     def more(self, points: Sequence[Point]) -> tuple[Step, ...]:
         """Return the next batch of steps; empty when every stage has what it needs.
@@ -167,7 +181,8 @@ class Planner:
     def _quiet(self, stage: Stage, index: int) -> Step:
         """Return the record without signal."""
         longest = max(2.0 / self._bench.mains, 3.0 / self._predictions[stage.name].centre)
-        return Step(index, stage.name, "no-signal", (), 0.0, longest, _QUIET_SAMPLES, self._first_ranges(stage))
+        record = _planned(stage, lambda: self._limits.fitted(RecordPlan(longest, _QUIET_SAMPLES)))
+        return Step(index, stage.name, "no-signal", (), 0.0, record.duration, record.points, self._first_ranges(stage))
 
     def _low_level(self, stage: Stage, index: int) -> Step:
         """Return the first point with a signal."""
@@ -223,14 +238,13 @@ class Planner:
         level: float,
         ranges: tuple[float, float],
     ) -> Step:
-        try:
-            record = plan_record(frequency, mains=self._bench.mains, longest=LONGEST)
-        except ValueError as problem:
-            raise BadInput(f"stage {stage.name!r}: {problem}") from problem
-        duration, samples = self._longer * record.duration, ceil(self._longer * record.points)
-        dwell = self._dwell(stage, frequency, previous, duration)
-        tones = (Tone(frequency, level),)
-        return Step(index, stage.name, purpose, tones, dwell, duration, samples, ranges)
+        def planned() -> RecordPlan:
+            usual = plan_record(frequency, mains=self._bench.mains, longest=LONGEST)
+            return self._limits.fitted(usual, frequency, self._longer)
+
+        record, tones = _planned(stage, planned), (Tone(frequency, level),)
+        dwell = self._dwell(stage, frequency, previous, record.duration)
+        return Step(index, stage.name, purpose, tones, dwell, record.duration, record.points, ranges)
 
     def _dwell(self, stage: Stage, frequency: float, previous: tuple[float, float] | None, duration: float) -> float:
         """Return the dwell after a change from a frequency at a part of the level, or from no signal."""
@@ -257,12 +271,21 @@ def thru_steps(
     """Return the records of the path on a pair of ranges in V, at a level in V, a little beyond a span in Hz."""
     low, high = span[0] / _BEYOND, span[1] * _BEYOND
     grid = np.geomspace(low, high, _PATH_POINTS + ceil(_PATH_PER_DECADE * log10(high / low)))
-    steps = []
+    steps, limits = [], record_limits(bench)
     for i, frequency in enumerate(shift_from_mains(grid, mains=bench.mains, longest=0.1 * LONGEST).tolist()):
-        record = plan_record(frequency, mains=bench.mains, longest=LONGEST, points=_PATH_SAMPLES)
+        usual = plan_record(frequency, mains=bench.mains, longest=LONGEST, points=_PATH_SAMPLES)
+        record = _planned(path, partial(limits.fitted, usual, frequency))
         tones = (Tone(frequency, level),)
         steps.append(Step(first + i, path.name, "thru", tones, 0.0, record.duration, record.points, ranges))
     return tuple(steps)
+
+
+def _planned(stage: Stage, plan: Callable[[], RecordPlan]) -> RecordPlan:
+    """Return a planned record; one that cannot be taken is BadInput that names the stage."""
+    try:
+        return plan()
+    except ValueError as problem:
+        raise BadInput(f"stage {stage.name!r}: {problem}") from problem
 
 
 def _refuse_series(board: Board) -> None:

@@ -29,6 +29,7 @@ __all__ = [
 ]
 
 WORDS = 255  # characters of an instrument's own words: the longest error text of SCPI-99 (from memory)
+_CORRECT = "correct the dialect and begin a new run (a resumed one keeps the dialect it began with)"
 EXCERPT = 40  # bytes of a reply or command shown to people: half a line of a terminal (arbitrary)
 
 
@@ -133,7 +134,7 @@ class SettingRefused(InstrumentProblem):
         found = self.found if len(self.found) <= WORDS else self.found[:WORDS] + "..."
         return (
             f"{self.address} was given {self.asked} by {_short(self.command)} and reads back {found} "
-            f"(accepted: {self.accepted}): ask for a value the instrument can set, or correct the dialect"
+            f"(accepted: {self.accepted}): ask for a value the instrument can set, or {_CORRECT}"
             f"{self._where()}"
         )
 
@@ -146,9 +147,7 @@ class BeyondLimits(InstrumentProblem, ValueError):
         self.address, self.command, self.rule, self.line = address, command, rule, line
 
     def __str__(self) -> str:
-        return (
-            f"{self.address}: {self.rule}: nothing was sent; ask for what it can, or correct the dialect{self._where()}"
-        )
+        return f"{self.address}: {self.rule}: nothing was sent; ask for what it can, or {_CORRECT}{self._where()}"
 
 
 def _short(text: str, most: int = EXCERPT) -> str:

@@ -2,6 +2,7 @@
 
 import json
 import sys
+import textwrap
 from collections import Counter
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import asdict
@@ -25,6 +26,15 @@ _BY_HAND = {  # what reads back as it was set although the dialect is wrong
     "scope": "a known voltage at each input: its size, its sign, which input it is",
     "switch": "which test point each route reaches",
     "supply": "the voltage of each output: a unit, which output it is",
+}
+_UNASKED = {  # what it costs that a slot is empty
+    "habits.errors": "no error query: what it refuses goes unnoticed where it is not read back",
+    "frequency.query": "the frequency is not read back: a rounded one goes unnoticed, so frequency_accuracy in the "
+    "bench file must include the rounding",
+    "amplitude.query": "the amplitude is not read back: one that is off shows only in the first records",
+    "output.query": "the output is not read back: that it is off is not known, only told",
+    "range.query": "the range is not read back: records cannot be compared with it",
+    "query": "no route is read back: one that did not close shows only in the first records",
 }
 
 
@@ -111,7 +121,11 @@ def _echo_walk(bench: "Bench", role: str, lines: "Sequence[Line]") -> None:
             click.echo((head + text).rstrip())
             head = " " * _SLOT
     counts = Counter(line.verdict for line in lines)
-    click.echo("  " + ", ".join(f"{count} {verdict}" for verdict, count in sorted(counts.items())) + "\n")
+    click.echo("  " + ", ".join(f"{count} {verdict}" for verdict, count in sorted(counts.items())))
+    missing = dict.fromkeys(line.slot.split()[0] for line in lines if line.verdict == "missing")
+    for words in (_UNASKED[slot] for slot in missing if slot in _UNASKED):
+        click.echo(textwrap.fill(words, _WIDTH, initial_indent="  note: ", subsequent_indent="    "))
+    click.echo("")
 
 
 def _echo_head(bench: "Bench", role: str) -> None:
@@ -122,8 +136,6 @@ def _echo_head(bench: "Bench", role: str) -> None:
 
 def _fitted(sent: str, came: str) -> list[str]:
     """Return what was sent and what came back in as many lines as they need beside the slot's name."""
-    import textwrap
-
     room = _WIDTH - _SLOT
     both = f"{sent} {came}"
     if len(both) <= room:
@@ -148,8 +160,6 @@ def _contract(bench: "Bench", instruments: "Mapping[str, Instrument]", no_board:
 
 
 def _echo_contract(bench: "Bench", role: str, outcomes: "Sequence[Outcome]") -> None:
-    import textwrap
-
     _echo_head(bench, role)
     for outcome in outcomes:
         words = outcome.demand + (f" ({outcome.found})" if outcome.found else "")

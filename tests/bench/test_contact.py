@@ -97,6 +97,15 @@ def test_a_word_that_no_sweep_uses_may_be_refused(call, bench_file):
     assert "refused   coupling AC 1" in out
 
 
+def test_what_is_not_read_back_is_told_with_what_it_costs(call, bench_file):
+    text = source("scpi99-generator").replace('query = "SOURce:FREQuency:CW?"', 'query = ""')
+    code, out, _ = call(bench_file(texts={"generator": text}))
+    assert code == WORKS
+    note = "note: the frequency is not read back: a rounded one goes unnoticed, so frequency_accuracy in the bench file"
+    assert note in " ".join(out.split())
+    assert out.count("note: ") == 1
+
+
 def test_the_walk_as_json_is_one_object(call, bench_file):
     code, out, _ = call(bench_file(), "--json")
     result = json.loads(out)

@@ -58,6 +58,8 @@ def same(anything):
 FAULTS = {
     "probe factor 10 for a 1:1 probe": (same, probes(10.0, 10.0), r"^input \(channel 1\) .*× \d.*\): probe factor 10"),
     "probe factor 1 for a 10:1 probe": (with_gain(0.1), same, r"^input \(channel 1\) .*probe factor 1 .*probe is × 10"),
+    "rms taken for peak to peak": (with_gain(8**0.5), same, r"^input .*counts rms, its dialect says peak to peak"),
+    "peak to peak taken for rms": (with_gain(0.125**0.5), same, r"^input .*counts peak to peak, its dialect says rms"),
     "rms taken for peak": (with_gain(2**0.5), same, r"^input \(channel 1\) .*counts rms, its dialect says peak"),
     "peak taken for rms": (with_gain(0.5**0.5), same, r"^input \(channel 1\) .*counts peak, its dialect says rms"),
     "50 ohm load": (load_50_ohm, same, r"^input \(channel 1\) .*0\.\d+\): a 50 Ω load hangs on the generator"),

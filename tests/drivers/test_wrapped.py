@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import math
 import re
+from typing import ClassVar
 
 import numpy as np
 import pytest
@@ -160,6 +161,7 @@ class Talker:
     """An instrument in memory: `tell` returns an answer, "" for none, None for a message it does not know."""
 
     none, unknown = "", ""
+    start: ClassVar = {}
 
     def __init__(self):
         self.errors, self.values, self.heard = [], dict(self.start), []
@@ -178,7 +180,13 @@ class Talker:
 
 class MemoryGenerator(Talker):
     none, unknown = "FAULT 00 NONE", "FAULT 10 NOT UNDERSTOOD"
-    start = {"TONE": "1.00000 kHz", "LEVEL": "100.0 mV RMS", "SHIFT": "+0 mV", "SHAPE": "SINE", "RELAY": "OPEN"}
+    start: ClassVar = {
+        "TONE": "1.00000 kHz",
+        "LEVEL": "100.0 mV RMS",
+        "SHIFT": "+0 mV",
+        "SHAPE": "SINE",
+        "RELAY": "OPEN",
+    }
 
     def tell(self, text):
         head, _, rest = text.partition(" ")
@@ -207,7 +215,7 @@ class MemoryRecorder(Talker):
 
     none, unknown = "TROUBLE=0 none", "TROUBLE=20 unknown command"
     windows = (100, 200, 400, 1000, 2000, 4000, 10000, 20000, 40000)
-    start = {"PACE": 10.0, "POINTS": 1024} | {
+    start: ClassVar = {"PACE": 10.0, "POINTS": 1024} | {
         f"{word}{n}": value
         for n in "12"
         for word, value in {"WINDOW": 10000.0, "CENTRE": 0.0, "COUPLE": "DC", "SOFT": "NO"}.items()
@@ -427,13 +435,13 @@ def test_a_switch_that_says_which_route_is_closed_is_believed(build):
 
 
 MISTAKES = {  # role, what stands there, what stands there instead, where it is told, what is told
-    "no {value}": ("generator", '"TONE {value} kHz"\nformat', '"TONE kHz"\nformat', "frequency.answer", "{value} somewhere"),
+    "no {value}": ("generator", '"TONE {value} kHz"\nformat', '"TONE kHz"\nformat', "frequency.answer", "{value}"),
     "a slip in a name": (*("generator", "{value} mV RMS", "{valve} mV RMS"), "amplitude.answer", "nearest: {value}"),
     "errors without {value}": ("generator", "FAULT {value} {any}", "FAULT {any}", "habits.errors_answer", "{value}"),
     "a preamble without {value}": ("scope", "}STEP {value}", "}STEP {any}", "transfer.scale_answer", "{value}"),
     "a template and a place": ("scope", "scale_unit", "scale_field = 3\nscale_unit", "transfer.scale_field", "-1"),
     "a template and a place of a number": ("generator", "unit = 1000.0", "place = 1", "frequency.place", "0"),
-    "duration and interval both told": ("scope", "[duration]", '[duration]\nset = "T {value}"', "interval.set", "duration"),
+    "duration and interval both told": ("scope", "[duration]", '[duration]\nset = "T {value}"', "interval.set", "dur"),
     "points nobody knows": ("scope", 'set = "POINTS={value}"\nquery = "?POINTS"', "", "points.query", "fixed"),
     "an interval nobody reads": ("scope", 'query = "?PACE"', "", "interval.query", "rounded"),
     "no route in query or answer": ("switch", "AT 0{route}", "AT 02", "query", "{route}"),
@@ -467,13 +475,11 @@ def test_an_answer_to_the_error_query_that_is_not_understood_is_filed_there_and_
     habits = driver.session.habits
     refused = [line for line in walk(driver) if line.verdict == "refused"]
     assert [line.slot for line in refused] == ["habits.errors"]
-    assert "answers FAULT 00 NONE, not a whole number" in refused[0].came or "FAULT 00 NONE" in refused[0].came
+    assert refused[0].came == "answers FAULT 00 NONE, not a decimal number"
     assert driver.session.habits == habits
 
 
 def test_an_error_that_is_not_understood_later_is_filed_with_the_error_query(build):
-    driver, _ = build("generator", '"FAULT {value} {any}"', '"FAULT {value} NONE"')
-    driver.dialect  # the first error of another kind comes with a word nobody knows
     lines = walk(build("generator", '"FAULT {value} {any}"', '"FAULT {value} NONE"', kind=Stubborn)[0])
     refused = {line.slot: line.came for line in lines if line.verdict == "refused"}
     assert set(refused) == {"habits.errors"}
