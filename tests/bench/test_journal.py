@@ -31,6 +31,7 @@ HEAD = {
     "checks": {"standard": "CS-1 Ω", "checks": []},
     "earlier": [{"attempt": 1, "digest": "d", "verdict": "fail", "pooled": True}],
     "retest": "why Ω",
+    "longer": 4.0,
     "identities": {"scope": "X"},
     "board": "b",
     "bench": "b",

@@ -164,7 +164,7 @@ def test_a_figure_outside_its_limits_fails_and_takes_the_board_with_it(outcome):
 
 def test_a_stage_without_enough_points_is_undecided_and_says_why(outcome):
     kept = [point for point in outcome.run.points if point.stage == "low"][:4]  # quiet, low-level, two of the curve
-    run = replace(outcome.run, points=tuple(kept), ended="cut_short", reason="cut")
+    run = replace(outcome.run, points=tuple(kept))
     (stage,) = evaluate(run)
     assert stage.verdict == "undecided"
     assert stage.alarms == ("low: only 2 usable points",)

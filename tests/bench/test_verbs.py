@@ -376,14 +376,14 @@ def test_a_reason_that_says_nothing_is_none(console, served, option):
     assert not (bench.folder / "TB-1").exists()
 
 
-def stopped_behind(monkeypatch, purpose, nth=1):
-    """Let Ctrl-C come behind the nth point of a purpose."""
+def stopped_behind(monkeypatch, purpose):
+    """Let Ctrl-C come behind the first point of a purpose."""
     true, seen = Journal.measured, []
 
     def measured(journal, point, **details):
         true(journal, point, **details)
         seen.append(point.purpose)
-        if seen.count(purpose) == nth and point.purpose == purpose:
+        if seen.count(purpose) == 1 and point.purpose == purpose:
             raise Stopped("Ctrl-C")
 
     monkeypatch.setattr(Journal, "measured", measured)
@@ -451,7 +451,7 @@ def test_an_undecided_board_is_measured_once_more_with_longer_records_also_after
     assert code == UNDECIDED
     assert "Noise left it undecided. Sweep it once more" in " ".join(out.split())
     with monkeypatch.context() as patch:
-        stopped_behind(patch, "curve", nth=5)
+        stopped_behind(patch, "low-level")  # its curve is planned by the resumed run
         assert bench.sweep(console)[0] == INTERRUPTED
     code, out, _ = console("resume", bench.folder / "TB-1" / "2")
     assert "The figures are means of attempts 1, 2." in out
