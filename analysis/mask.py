@@ -1,6 +1,6 @@
 """Where the curve of a band can run whose centre frequency, Q and gain are within limits: a mask for pictures.
 
-|H| = g / sqrt(1 + (Q x)²) and the phase -atan(Q x), x = f/f0 - f0/f, are monotonic in each figure, so at every frequency
+|H| = g / sqrt(1 + (Q x)²) and the phase -atan(Q x), x = f/f0 - f0/f, are monotonic in each figure, so everywhere
 the bounds are those of single bands and exact: some band within the limits reaches each of them. The bounds themselves
 are no band's curve. A band is one without delay and leakage.
 """

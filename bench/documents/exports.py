@@ -20,7 +20,7 @@ from bandproof.bench.result import RESULT_SCHEMA
 from bandproof.bench.runfile import read_columns
 from bandproof.bench.types import QUANTITIES
 
-__all__ = ["write_data", "write_pictures"]
+__all__ = ["NoExport", "write_data", "write_pictures"]
 
 _FIGURE = (
     *("unit", "designed", "predicted", "measured", "standard_uncertainty", "expanded_uncertainty", "coverage_factor"),
