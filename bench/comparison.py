@@ -10,7 +10,7 @@ from bandproof.bench.circuit import Prediction
 from bandproof.bench.quantities import engineering
 from bandproof.bench.types import UNITS, Comparison, Quantity, Stage
 
-__all__ = ["compared", "figure", "judged", "outside_by_design"]
+__all__ = ["compared", "figure", "judged", "outside_by_design", "read_figure"]
 
 
 def figure(fit: BandFit | None, quantity: Quantity) -> tuple[float, float]:
@@ -89,13 +89,13 @@ def judged(
 def outside_by_design(stage: Stage, prediction: Prediction) -> list[str]:
     """Return what the stage's own parts cannot keep, so that the board is not blamed for its drawing."""
     return [
-        f"its parts as drawn should give {quantity} {_read(quantity, prediction[quantity])}, outside its own limits "
-        f"{_read(quantity, limit.lower)} to {_read(quantity, limit.upper)}: look at the design first"
+        f"its parts as drawn should give {quantity} {read_figure(quantity, prediction[quantity])}, outside its own "
+        f"limits {read_figure(quantity, limit.lower)} to {read_figure(quantity, limit.upper)}: look at the design first"
         for quantity, limit in stage.limits.items()
         if not limit.lower <= prediction[quantity] <= limit.upper
     ]
 
 
-def _read(quantity: Quantity, value: float) -> str:
+def read_figure(quantity: Quantity, value: float) -> str:
     """Return a figure as people read it, with digits enough to see a limit missed by little."""
     return f"{20.0 * log10(value):.5g} dB" if quantity == "gain" else engineering(value, UNITS[quantity], 6)

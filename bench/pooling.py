@@ -1,29 +1,31 @@
 """The verdict of several attempts on a serial number together, and whether one more can change it.
 
-Figures are averaged, and only what repeats by chance (type A) is lowered. What noise left undecided earns one attempt
-with longer records; where U is of what is the same in every attempt, none helps.
+Figures are averaged where attempts do not contradict each other, and only what repeats by chance (type A) is lowered.
+What noise left undecided earns one attempt with longer records; where U is of what is the same in every attempt, none
+helps.
 """
 
 from collections.abc import Mapping, Sequence
 from dataclasses import replace
-from math import copysign, isfinite
+from math import copysign, hypot, isfinite
 from pathlib import Path
 from typing import Any
 
 from bandproof.analysis.decision import worst
 from bandproof.analysis.uncertainty import Combined, Row, combine, share
 from bandproof.bench.attempts import RUN, Attempt
-from bandproof.bench.comparison import judged
+from bandproof.bench.comparison import judged, read_figure
 from bandproof.bench.errors import RunFileDamaged
 from bandproof.bench.evaluate import evaluate
 from bandproof.bench.result import board_verdict
 from bandproof.bench.runfile import digest_of, read_run
-from bandproof.bench.types import QUANTITIES, Run, Stage, StageResult
+from bandproof.bench.types import QUANTITIES, Board, Limit, Quantity, Run, Stage, StageResult
 
-__all__ = ["LONGER", "earned", "outlook", "pooled", "with_earlier"]
+__all__ = ["LONGER", "earned", "judged_otherwise", "outlook", "pooled", "with_earlier"]
 
 LONGER = 4.0  # times: halves the noise of a record, and two attempts together then have 0.45 of the first one's
 _WORTH = 0.25  # of u², what repeats by chance: less, and longer records lower U by less than a tenth; arbitrary
+_APART = 2.0  # times both U together: noise alone does it to one figure in fifteen thousand
 _SHARED = "thru"  # type A, but two runs that used one stored thru have it in common
 _OF_BENCH = "reproducibility"  # type A, but of the bench over days: two runs may well be on one
 
@@ -33,9 +35,39 @@ def earned(place: Path, known: Sequence[Attempt]) -> float:
     counting = [attempt for attempt in known if attempt.counts]
     if [attempt.verdict for attempt in counting] != ["undecided"]:
         return 1.0
-    run = read_run(place / str(counting[0].number) / RUN)
+    run = _run_of(place, counting[0].number)
     noisy, stuck = _undecided(run, evaluate(run))
     return LONGER if noisy and not stuck else 1.0
+
+
+def judged_otherwise(place: Path, known: Sequence[Attempt], board: Board) -> str:
+    """Return by what other limits an attempt that counts was judged, in words; "" where by none."""
+    for attempt in known:
+        if attempt.counts and attempt.verdict and (told := _other_limits(_run_of(place, attempt.number), board)):
+            return told
+    return ""
+
+
+def _run_of(place: Path, number: int) -> Run:
+    return read_run(place / str(number) / RUN)
+
+
+def _other_limits(before: Run, board: Board) -> str:
+    """Return in words the first limit of a run that is not the board's."""
+    theirs = {stage.name: stage for stage in before.board.stages}
+    for stage in board.stages:
+        for quantity, limit in stage.limits.items():
+            other = theirs[stage.name].limits[quantity] if stage.name in theirs else limit
+            if other != limit:
+                return (
+                    f"attempt {before.attempt} was judged by other limits: {quantity} of {stage.name} "
+                    f"{_span(quantity, other)}, now {_span(quantity, limit)}"
+                )
+    return ""
+
+
+def _span(quantity: Quantity, limit: Limit) -> str:
+    return f"{read_figure(quantity, limit.lower)} to {read_figure(quantity, limit.upper)} by rule {limit.rule}"
 
 
 def outlook(run: Run, stages: Sequence[StageResult], result: Mapping[str, Any]) -> str:
@@ -114,15 +146,18 @@ def pooled(runs: Sequence[Run], results: Sequence[Sequence[StageResult]]) -> tup
     stored = [run.thru.started for run in runs if run.thru is not None]
     common = len(set(stored)) < len(stored)
     found = []
+    others = [told for run in runs[:-1] if (told := _other_limits(run, runs[-1].board))]
     for last in results[-1]:
         same = [
-            (stage, _samples(run, stage.name))
+            (run.attempt, stage, _samples(run, stage.name))
             for run, result in zip(runs, results, strict=True)
             for stage in result
             if stage.name == last.name and _is_sound(stage)
         ]
         several = len(same) > 1 and _is_sound(last)
         found.append(_together(runs[-1].board.stage(last.name), same, common) if several else last)
+    if found and others:
+        found[0] = replace(found[0], alarms=(*found[0].alarms, *others))
     return tuple(found)
 
 
@@ -134,9 +169,11 @@ def _is_sound(stage: StageResult) -> bool:
     return bool(stage.budgets) and all(isfinite(f.conformance_probability) for f in stage.figures.values())
 
 
-def _together(stage: Stage, same: Sequence[tuple[StageResult, int]], common: bool) -> StageResult:
-    results = [result for result, _ in same]
-    weights = [samples / sum(samples for _, samples in same) for _, samples in same]
+def _together(stage: Stage, same: Sequence[tuple[int, StageResult, int]], common: bool) -> StageResult:
+    results = [result for _, result, _ in same]
+    if told := _contradiction(same[0][0], results[0], same[-1][0], results[-1]):
+        return _in_doubt(stage, results[-1], told)
+    weights = [samples / sum(samples for *_, samples in same) for *_, samples in same]
     last, figures, budgets = results[-1], {}, {}
     for quantity in QUANTITIES:
         rows = zip(*(result.budgets[quantity].rows for result in results), strict=True)
@@ -146,6 +183,27 @@ def _together(stage: Stage, same: Sequence[tuple[StageResult, int]], common: boo
         figures[quantity] = judged(stage, quantity, predicted, value, repeatability, budgets[quantity], "")
     verdict = worst(*(figure.verdict for figure in figures.values() if figure.verdict))
     return replace(last, figures=figures, budgets=budgets, verdict=verdict)
+
+
+def _contradiction(one: int, first: StageResult, two: int, last: StageResult) -> str:
+    """Return in words that two attempts cannot both be right about one stage, or nothing."""
+    for quantity in QUANTITIES:
+        a, b = first.figures[quantity], last.figures[quantity]
+        if abs(a.measured - b.measured) > _APART * hypot(a.expanded_uncertainty, b.expanded_uncertainty):
+            return (
+                f"attempts {one} and {two} do not agree: {quantity} {read_figure(quantity, a.measured)} and "
+                f"{read_figure(quantity, b.measured)}, farther apart than U allows. They are not averaged: what is "
+                "shown is the last. Was the board, a contact or the bench changed? After a repair, sweep with --repair"
+            )
+    return ""
+
+
+def _in_doubt(stage: Stage, last: StageResult, told: str) -> StageResult:
+    figures = {
+        quantity: judged(stage, quantity, old.predicted, old.measured, old.repeatability, last.budgets[quantity], told)
+        for quantity, old in last.figures.items()
+    }
+    return replace(last, figures=figures, verdict="undecided", alarms=(*last.alarms, f"{last.name}: {told}"))
 
 
 def _row(together: Sequence[Row], weights: Sequence[float], common: bool) -> Row:

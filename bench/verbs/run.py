@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING, Any
 
 import click
 
-from bandproof.bench.types import Bench
+from bandproof.bench.types import Bench, Board
 from bandproof.bench.verbs.conditions import in_words, person, stated
 from bandproof.bench.verbs.screen import columns
 
@@ -197,7 +197,7 @@ def command(
     operator, room = stated(name, ambient)
     clock = clock_of(bench)
     checks, notes = checks_for(bench, path, clock.utc(), without_check)
-    known, longer = _may_begin(folder, serial, retest, repair, operator=operator, utc=clock.utc())
+    known, longer = _may_begin(board, folder, serial, retest, repair, operator=operator, utc=clock.utc())
     if longer > 1.0:
         notes = (*notes, f"records are {longer:.0f} times as long: for their noise the attempt before was undecided")
     place, attempt = new_attempt(folder, serial)
@@ -227,7 +227,7 @@ def command(
 
 
 def _may_begin(
-    folder: Path, serial: str, retest: str, repair: str, *, operator: str, utc: "datetime"
+    board: Board, folder: Path, serial: str, retest: str, repair: str, *, operator: str, utc: "datetime"
 ) -> "tuple[list[Attempt], float]":
     """Return the attempts there are and how many times longer the next one's records are, after logging a repair.
 
@@ -238,12 +238,14 @@ def _may_begin(
     """
     from bandproof.bench.attempts import earlier, log_repair, place_of, refusal
     from bandproof.bench.errors import BadInput
-    from bandproof.bench.pooling import earned
+    from bandproof.bench.pooling import earned, judged_otherwise
 
     place = place_of(folder, serial)
     known = earlier(place, repaired=bool(repair))
     if why := refusal(known, retest, place):
         raise BadInput(f"{serial}: {why}")
+    if not retest and (why := judged_otherwise(place, known, board)):
+        raise BadInput(f'{serial}: {why}. Say why: --retest "REASON"; both will be told in the result')
     if repair:
         log_repair(place, repair, operator=operator, utc=utc)
     return known, earned(place, known)
