@@ -407,6 +407,15 @@ def test_a_recorder_of_a_fixed_number_of_points_says_so(build):
     assert [line for line in walk(scope) if line.verdict == "refused"] == []
 
 
+def test_what_the_limits_of_a_dialect_leave_out_is_not_tried(build):
+    outcomes = check(build("scope", "limits = [0.05, 20.0]", "limits = [0.05, 2.0]")[0])
+    assert {outcome.clause for outcome in outcomes if outcome.verdict != "kept"} == {
+        "reads_back_a_range_no_smaller",
+        "sees_no_overload_inside_its_range",
+    }
+    assert {outcome.verdict for outcome in outcomes} == {"kept", "not tried"}
+
+
 class Deep(MemoryRecorder):
     """Takes as many points as it is prepared for."""
 
@@ -416,12 +425,16 @@ class Deep(MemoryRecorder):
 
 
 def test_what_prepares_records_is_sent_before_their_points_are_asked(build):
-    scope, _ = build("scope", 'set = "POINTS={value}"\n', "", kind=Deep)
+    scope, instrument = build("scope", 'set = "POINTS={value}"\n', "", kind=Deep)
     scope.reset()
+    assert scope.set_record(0.02, 4000).points == 4096
     for channel in (1, 2):
         scope.set_channel(channel, range=1.0)
-    assert scope.set_record(0.02, 4000).points == 4096
     assert scope.acquire().volts.shape == (2, 4096)
+    scope.reset()
+    del instrument.heard[:]
+    scope.set_channel(1, range=1.0)
+    assert instrument.heard[0] == "DEPTH=FULL"  # before anything is set
 
 
 def test_a_switch_that_says_which_route_is_closed_is_believed(build):
