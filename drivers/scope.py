@@ -120,10 +120,10 @@ class Scope(Instrument):
         """
         options = {"range": range, "offset": offset, "coupling": coupling}
         more = {"bandwidth_limit": bandwidth_limit, "probe_factor": probe_factor}
-        self._once("prepare", "", self.prepare)
         self._remember("channel", channel, partial(self.set_channel, channel, **options, **more))  # type: ignore[arg-type]
         name = self.name_of(channel)
         self._channels.pop(channel, None)
+        self._once("prepare", "", self.prepare)
         found_probe = self._set_probe(name, probe_factor)
         self._set_coupling(name, coupling)
         limited = self._set_bandwidth(name, bandwidth_limit)
