@@ -8,7 +8,7 @@ from bandproof.drivers.clock import RealClock
 
 
 def answering(words: bytes | None) -> tuple[str, list[bytes], threading.Thread]:
-    """Return the address of a server for one client, what it hears until its thread ends; None closes without a word."""
+    """Return a server's address, what it hears until its thread ends, and that thread; None closes without a word."""
     server = socket.create_server(("127.0.0.1", 0))
     heard: list[bytes] = []
 
