@@ -63,7 +63,7 @@ def finish(journal: Journal, folder: Path, problem: Exception | None, words: str
             path, run, result, raw=journal.volts, budget={stage.name: budget_plain(stage.budgets) for stage in stages}
         )
     drawn = views(run, stages)
-    _draw(run, drawn, folder / PICTURE)
+    result = _drawn(run, result, drawn, folder)
     digest = digest_of(path)
     result = {**result, "alarms": [*result["alarms"], *_chained(run, folder)]}
     journal.ended(run.ended, path.name, digest)
@@ -162,8 +162,17 @@ def _reported(
     return result
 
 
-def _draw(run: Run, drawn: "Sequence[StageView]", path: Path) -> None:
-    if drawn:
+def _drawn(run: Run, result: dict[str, Any], drawn: "Sequence[StageView]", folder: Path) -> dict[str, Any]:
+    """Draw the picture; return the result, without its name and with a note where it could not be drawn."""
+    if not drawn:
+        return result
+    try:
         from bandproof.bench.picture import draw, save
 
-        save(draw(drawn, f"{run.board.title}   serial {run.serial}, attempt {run.attempt}"), path)
+        save(draw(drawn, f"{run.board.title}   serial {run.serial}, attempt {run.attempt}"), folder / PICTURE)
+    except OSError:
+        raise
+    except Exception as problem:  # whatever it is: the run is kept and decides alone
+        alarm = f"there is no {PICTURE} ({type(problem).__name__}: {problem})"
+        return {**result, "files": {**result["files"], "picture": None}, "alarms": [*result["alarms"], alarm]}
+    return result

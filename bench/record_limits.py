@@ -40,6 +40,8 @@ class RecordLimits:
         duration = min(max(longer * wanted.duration, self.duration[0]), self.duration[1])
         least = ceil(duration / self.interval[1] - 1e-9)
         points = int(min(max(ceil(longer * wanted.points), self.points[0], least), self.points[1]))
+        if frequency:  # longer only as far as the points allow
+            duration = max(min(duration, points / (_LEAST_SAMPLING * frequency)), min(duration, wanted.duration))
         duration = min(max(duration, points * self.interval[0]), points * self.interval[1])
         if duration < wanted.duration * (1 - 1e-9):
             raise ValueError(

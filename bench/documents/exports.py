@@ -20,7 +20,7 @@ from bandproof.bench.result import RESULT_SCHEMA
 from bandproof.bench.runfile import read_columns
 from bandproof.bench.types import QUANTITIES
 
-__all__ = ["NoExport", "write_data", "write_pictures"]
+__all__ = ["Files", "NoExport", "data_files", "picture_files", "write_exports"]
 
 _FIGURE = (
     *("unit", "designed", "predicted", "measured", "standard_uncertainty", "expanded_uncertainty", "coverage_factor"),
@@ -28,7 +28,7 @@ _FIGURE = (
 )  # keys of a figure in the result, each a column
 _FIT = ("points", "reduced_chi_square", "lack_of_fit")
 
-_Files = Mapping[str, tuple[bytes, bytes]]  # name: (content, what is in a file of this name that an export wrote)
+Files = Mapping[str, tuple[bytes, bytes]]  # name: (content, what is in a file of this name that an export wrote)
 
 
 class NoExport(BadInput):
@@ -42,22 +42,21 @@ class NoExport(BadInput):
         return f"{self.path}: {self.reason}"
 
 
-def write_data(folder: Path, stored: Stored) -> list[Path]:
-    """Write ``points_STAGE.csv``, ``figures.csv`` and ``result.json`` and return their paths (NoExport)."""
+def data_files(stored: Stored) -> Files:
+    """Return ``points_STAGE.csv``, ``figures.csv`` and ``result.json``."""
     files = {f"points_{stage}.csv": _points(columns) for stage, columns in read_columns(stored.path).items()}
     files["figures.csv"] = _table(("stage", "model", "figure", *_FIGURE, *_FIT), _figures(stored.result))
     text = json.dumps(stored.result, indent=1) + "\n"
     files["result.json"] = text.encode("utf-8"), f'"{RESULT_SCHEMA}"'.encode()
-    return _write(folder, files)
+    return files
 
 
-def write_pictures(folder: Path, stored: Stored, kind: Literal["svg", "png"]) -> list[Path]:
-    """Write ``stage_STAGE`` for each stage that has a fit, as SVG or PNG, and return their paths (NoExport)."""
+def picture_files(stored: Stored, kind: Literal["svg", "png"]) -> Files:
+    """Return ``stage_STAGE`` for each stage that has a fit, as SVG or PNG."""
     run = stored.run
     head = f"{run.board.title}   serial {run.serial}, attempt {run.attempt}"
     pictures = {view.result.name: draw_stage(view, f"{head}   {view.result.name}") for view in stored.views}
-    files = {f"stage_{name}.{kind}": (image(figure, kind), MAKER.encode()) for name, figure in pictures.items()}
-    return _write(folder, files)
+    return {f"stage_{name}.{kind}": (image(figure, kind), MAKER.encode()) for name, figure in pictures.items()}
 
 
 def _points(columns: Mapping[str, tuple[str, list[Any]]]) -> tuple[bytes, bytes]:
@@ -87,15 +86,34 @@ def _table(head: Iterable[str], rows: Iterable[Iterable[Any]]) -> tuple[bytes, b
     return memory.getvalue().encode("utf-8"), first
 
 
-def _write(folder: Path, files: _Files) -> list[Path]:
+def write_exports(wanted: Mapping[Path, Files]) -> list[Path]:
+    """Write the files of each folder and return their paths.
+
+    Raises
+    ------
+    NoExport
+        A file is there that no export wrote, or one of another run would stay beside these, or a folder cannot be
+        written; nothing is written in the first two cases.
+    """
     try:
-        folder.mkdir(parents=True, exist_ok=True)
-        for name, (_, mark) in files.items():
-            if (folder / name).exists() and mark not in (folder / name).read_bytes():
-                raise NoExport(str(folder / name), "is there and no export wrote it; move it or name another folder")
-        for name, (content, _) in files.items():
-            write_whole(folder / name, content)
+        for folder, files in wanted.items():
+            folder.mkdir(parents=True, exist_ok=True)
+            _look(folder, files)
+        for folder, files in wanted.items():
+            for name, (content, _) in files.items():
+                write_whole(folder / name, content)
     except OSError as problem:
         where = str(problem.filename or folder).removesuffix(".part")
         raise NoExport(where, f"cannot be written: {problem.strerror}; name another folder") from problem
-    return [folder / name for name in files]
+    return [folder / name for folder, files in wanted.items() for name in files]
+
+
+def _look(folder: Path, files: Files) -> None:
+    for name, (_, mark) in files.items():
+        if (folder / name).exists() and mark not in (folder / name).read_bytes():
+            raise NoExport(str(folder / name), "is there and no export wrote it; move it or name another folder")
+    for name in files:
+        kind, _, end = name.partition("_")
+        for other in folder.glob(f"{kind}_*{Path(end).suffix}") if end else ():
+            if other.name not in files:
+                raise NoExport(str(other), "is of another run and would stay beside this one's; name another folder")

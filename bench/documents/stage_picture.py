@@ -61,7 +61,8 @@ def draw_stage(view: StageView, title: str = "") -> "Figure":
         frameon=False, borderpad=0.2, borderaxespad=0.0, handlelength=2.6, columnspacing=1.6,
     )  # fmt: skip
     if title:
-        figure.text(0.01, 1.0 - 0.5 * _TITLE / height, title, fontsize=_SMALLEST + 1.0, va="center")
+        place = (0.01, 1.0 - 0.5 * _TITLE / height)
+        figure.text(*place, title, fontsize=_SMALLEST + 1.0, va="center", parse_math=False)
     return figure
 
 

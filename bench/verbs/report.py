@@ -1,5 +1,7 @@
 """``report``: a stored run as a PDF document, as data and as pictures."""
 
+from collections.abc import Iterator
+from contextlib import contextmanager
 from pathlib import Path
 from typing import Literal
 
@@ -55,20 +57,33 @@ def command(
 
         if data or pictures:
             raise BadInput("--with makes one page about two runs: leave --data and --pictures out, or name them alone")
-        click.echo(f"  report   {write_side_by_side(run_path, other, out)}")
+        with _writing(out):
+            click.echo(f"  report   {write_side_by_side(run_path, other, out)}")
         return 0
     stored = read_stored(run_path)
     if data or pictures:
-        from bandproof.bench.documents.exports import write_data, write_pictures
+        from bandproof.bench.documents.exports import data_files, picture_files, write_exports
 
-        written = [
-            *(write_data(data, stored) if data else ()),
-            *(write_pictures(pictures, stored, kind) if pictures else ()),
-        ]
-        for path in written:
+        wanted = {data: data_files(stored)} if data else {}
+        if pictures:
+            wanted[pictures] = {**wanted.get(pictures, {}), **picture_files(stored, kind)}
+        for path in write_exports(wanted):
             click.echo(f"  {path.suffix[1:]:<8} {path}")
     if out or not (data or pictures):
         path = out or stored.default_path
-        write_report(path, stored.run, stored.stages, stored.result, stored.digest, stored.views, stored.link)
+        with _writing(out):
+            write_report(path, stored.run, stored.stages, stored.result, stored.digest, stored.views, stored.link)
         click.echo(f"  report   {path}")
     return 0
+
+
+@contextmanager
+def _writing(out: Path | None) -> Iterator[None]:
+    """Refuse to write over what is no PDF, and say where one cannot be written (BadInput)."""
+    if out and out.exists() and (not out.is_file() or not out.read_bytes().startswith(b"%PDF-")):
+        raise BadInput(f"{out}: is there and is no PDF; name another file")
+    try:
+        yield
+    except OSError as problem:
+        where = out or str(problem.filename).removesuffix(".part")
+        raise BadInput(f"{where}: cannot be written: {problem.strerror}; name another file with --out") from problem

@@ -73,7 +73,7 @@ def show(outcome: "Outcome", wall_seconds: float, as_json: bool, *, simulated: b
     click.echo(f"serial {run.serial}, attempt {run.attempt}, {run.started[:16].replace('T', ' ')} UTC{bench}")
     together = [str(entry["attempt"]) for entry in result["attempts"] or () if entry["pooled"]]
     if len(together) > 1:
-        click.echo(f"The figures are means of attempts {', '.join(together)}.")
+        click.echo(f"The figures are means of attempts {', '.join(together)} where these agree.")
     for line in [*summary_lines(outcome.stages), *dominating_lines(outcome.stages)]:
         click.echo(line)
     click.echo("")

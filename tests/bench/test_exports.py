@@ -12,6 +12,9 @@ import h5py
 import numpy as np
 import pytest
 
+from bandproof.bench.documents.stage_picture import draw_stage
+from bandproof.bench.evaluate import views
+from bandproof.bench.picture import draw, image
 from bandproof.bench.run_schema import COLUMNS
 from bandproof.bench.verbs import console
 
@@ -138,3 +141,31 @@ def test_a_picture_of_every_stage_the_same_again_and_no_pdf(path, outcome, tmp_p
     assert console.run(command) == 0
     assert {one.name: one.read_bytes() for one in (tmp_path / "out").iterdir()} == first
     assert {one.name for one in tmp_path.iterdir()} == {"run.h5", "out"}
+
+
+def test_data_of_another_run_is_not_mixed_with_this_one_s(path, tmp_path, capsys):
+    folder = tmp_path / "data"
+    assert console.run(["report", str(path), "--data", str(folder)]) == 0
+    other = folder / "points_other.csv"
+    other.write_bytes((folder / "points_low.csv").read_bytes())
+    before = {file.name: file.read_bytes() for file in folder.iterdir()}
+    assert console.run(["report", str(path), "--pictures", str(tmp_path / "p"), "--data", str(folder)]) == 2
+    assert "points_other.csv: is of another run" in capsys.readouterr().err
+    assert {file.name: file.read_bytes() for file in folder.iterdir()} == before
+    assert not (tmp_path / "p" / "stage_low.svg").exists()
+
+
+@pytest.mark.parametrize("name", ["run.h5", "folder", "no/such.pdf"])
+def test_a_report_is_never_written_over_what_is_no_pdf(path, tmp_path, capsys, name):
+    (tmp_path / "folder").mkdir()
+    copy = tmp_path / "run.h5"
+    copy.write_bytes(path.read_bytes())
+    assert console.run(["report", str(copy), "--out", str(tmp_path / name)]) == 2
+    assert f"{tmp_path / name}: " in capsys.readouterr().err
+    assert copy.read_bytes() == path.read_bytes()
+
+
+def test_a_title_is_never_read_as_markup_in_a_picture(outcome):
+    title = r"Bad $\foo{1}$ math, a \u65e5 too"
+    assert image(draw(views(outcome.run, outcome.stages), title), "svg")
+    assert image(draw_stage(views(outcome.run, outcome.stages)[0], title), "png")

@@ -49,6 +49,7 @@ def test_what_no_limits_allow_is_told_of_every_stage_before_anything_is_driven()
 FITTED = {  # limits, what is wanted, the tone, how many times as long, what comes
     "as it is": (RecordLimits(), (0.01, 2048), 1000.0, 1.0, (0.01, 2048)),
     "longer if it can": (RecordLimits(duration=(0.0, 0.03)), (0.01, 2048), 1000.0, 4.0, (0.03, 8192)),
+    "longer as far as its points allow": (RecordLimits(points=(2, 1000)), (0.01, 500), 1000.0, 8.0, (0.05, 1000)),
     "as quick as can be": (RecordLimits(interval=(1e-5, 1e-3)), (0.001, 2048), 1000.0, 1.0, (0.02048, 2048)),
     "as slow as can be": (RecordLimits(interval=(0.0, 1e-4)), (0.5, 2048), 20.0, 1.0, (0.5, 5000)),
     "so many points always": (RecordLimits(points=(1024, 1024)), (0.01, 2048), 1000.0, 1.0, (0.01, 1024)),
