@@ -14,12 +14,12 @@ import struct
 from collections.abc import Callable, Mapping
 from dataclasses import asdict, fields, replace
 from pathlib import Path
-from typing import TYPE_CHECKING, Any, TypeVar, cast
+from typing import TYPE_CHECKING, Any, TypeVar
 
 from bandproof.analysis.types import FloatArray
 from bandproof.bench.bench_file import parse_bench
 from bandproof.bench.board_file import parse_board
-from bandproof.bench.errors import FileMistakes, RunFileDamaged
+from bandproof.bench.errors import RunFileDamaged
 from bandproof.bench.plain import checks_from, checks_plain, step_from, thru_from, thru_plain, to_json
 from bandproof.bench.run_schema import ABOUT, COLUMNS, RAW, READABLE, SCHEMA, USER_BLOCK
 from bandproof.bench.system import sync_folder
@@ -166,6 +166,10 @@ def digest_of(path: Path) -> str:
 
 
 def _checked(path: Path) -> tuple[str, bytes]:
+    if path.is_dir():
+        raise RunFileDamaged(str(path), "is a folder: name the run file in it, run.h5")
+    if path.exists() and not path.is_file():
+        raise RunFileDamaged(str(path), "is not a file")
     try:
         if path.stat().st_size > _LARGEST:
             raise RunFileDamaged(str(path), f"is larger than {_LARGEST // 10**9} GB, no run file is")
@@ -206,7 +210,7 @@ def _truncated(size: int) -> str:
 
 def read_result(path: Path) -> dict[str, Any]:
     """Return the result object stored in a run file (RunFileDamaged as digest_of)."""
-    return _read(path, lambda file: cast(dict[str, Any], json.loads(_text(file, "result"))))
+    return _read(path, lambda file: {**json.loads(_text(file, "result"))})
 
 
 def read_version(path: Path) -> int:
@@ -245,12 +249,14 @@ def _read(path: Path, what: Callable[["h5py.File"], _T]) -> _T:
     _, content = _checked(path)
     try:
         file = h5py.File(io.BytesIO(content), "r")
-    except OSError as problem:
+    except Exception as problem:  # whatever it is: its digest is right, and yet nothing reads it
         raise RunFileDamaged(str(path), f"is not HDF5 behind its user block ({problem})") from problem
     with file:
         try:
+            if bytes(file.attrs["schema"]) != content.partition(b" ")[0]:
+                raise ValueError("its schema attribute is not the version in its user block")
             return what(file)
-        except (KeyError, ValueError, TypeError, FileMistakes) as problem:
+        except Exception as problem:  # whatever it is: what the program wrote is read
             raise RunFileDamaged(str(path), f"lacks what a run file has ({problem})") from problem
 
 
@@ -280,10 +286,8 @@ def _text(file: "h5py.Group", name: str) -> str:
 
 
 def _read_points(group: "h5py.Group", stage: str) -> list[Point]:
-    columns = {name: group[name][()].tolist() for name in COLUMNS}
-    return [
-        _point(stage, {name: column[row] for name, column in columns.items()}) for row in range(len(columns["step"]))
-    ]
+    columns = [group[name][()].tolist() for name in COLUMNS]
+    return [_point(stage, dict(zip(COLUMNS, row, strict=True))) for row in zip(*columns, strict=True)]
 
 
 def _point(stage: str, row: dict[str, Any]) -> Point:

@@ -157,9 +157,63 @@ def foreign_in_our_block(path):
     path.write_bytes(behind_a_good_user_block(path.read_bytes()[512:]))
 
 
+def inside(change):
+    """Return what changes an open run file and gives it the digest of what it holds now."""
+
+    def damage(path):
+        with h5py.File(path, "r+") as file:
+            change(file)
+        path.write_bytes(behind_a_good_user_block(path.read_bytes()[512:]))
+
+    return damage
+
+
+def replaced(name, text):
+    def change(file):
+        del file[name]
+        file[name] = np.frombuffer(text, dtype=np.uint8)
+
+    return change
+
+
+def other_length(length):
+    def change(file):
+        column = np.resize(file["points/low/samples"][()], length(len(file["points/low/samples"])))
+        del file["points/low/samples"]
+        file["points/low/samples"] = column
+
+    return change
+
+
+LACKING = {
+    "a number as schema": lambda file: file.attrs.modify("schema", 7),
+    "another version inside": lambda file: file.attrs.modify("schema", np.bytes_(b"bandproof-run/9")),
+    "no schema": lambda file: file.attrs.pop("schema"),
+    "a column shorter": other_length(lambda count: count - 1),
+    "a column longer": other_length(lambda count: count + 1),
+    "about nothing": replaced("about", b"[]"),
+    "steps in a depth": replaced("steps", b"[" * 100_000),
+}
+
+
+@pytest.mark.parametrize("change", LACKING.values(), ids=LACKING)
+def test_what_is_wrong_behind_a_right_digest_is_damage_and_no_traceback(written, change):
+    inside(change)(written)
+    with pytest.raises(RunFileDamaged, match="lacks what a run file has"):
+        read_run(written)
+
+
+@pytest.mark.parametrize("text", [b"[]", b"7", b"null", b"\xff"])
+def test_a_result_that_is_no_object_is_damage_and_no_traceback(written, text):
+    inside(replaced("result", text))(written)
+    with pytest.raises(RunFileDamaged, match="lacks what a run file has"):
+        runfile.read_result(written)
+
+
 DAMAGED = {
     "missing": (lambda path: path.unlink(), "cannot be read: No such file"),
-    "directory": (lambda path: (path.unlink(), path.mkdir()), "cannot be read: Is a directory"),
+    "directory": (lambda path: (path.unlink(), path.mkdir()), "is a folder: name the run file in it, run.h5"),
+    "device": (lambda path: (path.unlink(), path.symlink_to("/dev/zero")), "is not a file"),
     "empty": (lambda path: path.write_bytes(b""), "is empty"),
     "text": (lambda path: path.write_text("frequency_Hz,gain_dB\n" * 99), "is not a run file"),
     "other HDF5": (lambda path: (path.unlink(), foreign(path)), "is HDF5, but not a run file"),
