@@ -50,7 +50,7 @@ def fit_points(points: Sequence[Point], known: Mapping[Ranges, Path] | None = No
     """Fit the band model with delay to a stage's points, a known path divided out; without a fit: why."""
     used = usable(points)
     if len({point.frequency for point in used}) < _FEWEST:
-        reason = f"only {len(used)} usable points{_lost(points)}"
+        reason = f"{f'only {len(used)}' if used else 'no'} usable points{_lost(points)}"
         return StageFit(used, None, reason, np.zeros(0, dtype=np.complex128), np.zeros((0, 2, 2)), ())
     frequency, response, covariance = arrays(used)
     response, covariance, along = corrected(used, response, covariance, known or {})

@@ -4,8 +4,9 @@ Drawn with the Figure API (no pyplot), readable in black and white, the same byt
 """
 
 import io
+import warnings
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -13,13 +14,25 @@ import numpy as np
 
 from bandproof.analysis.types import ComplexArray, FloatArray
 from bandproof.bench.quantities import engineering
-from bandproof.bench.types import QUANTITIES, StageResult
+from bandproof.bench.types import QUANTITIES, Comparison, StageResult
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
 
-__all__ = ["MAKER", "StageView", "as_svg", "draw", "image", "labels", "numbered", "save", "ticks"]
+__all__ = [
+    "MAKER",
+    "StageView",
+    "as_svg",
+    "draw",
+    "draw_limits",
+    "image",
+    "labels",
+    "numbered",
+    "of_tolerance",
+    "save",
+    "ticks",
+]
 
 MAKER = "bandproof"  # named inside every picture
 _DPI = 200  # of a PNG; arbitrary, letters of 7 pt are 20 pixels high
@@ -62,7 +75,8 @@ def image(figure: "Figure", kind: str) -> bytes:
 
     memory = io.BytesIO()
     metadata: dict[str, Any] = {"Date": None, "Creator": MAKER} if kind == "svg" else {"Software": MAKER}
-    with matplotlib.rc_context({"svg.hashsalt": "bandproof", "svg.fonttype": "path"}):
+    with matplotlib.rc_context({"svg.hashsalt": "bandproof", "svg.fonttype": "path"}), warnings.catch_warnings():
+        warnings.filterwarnings("ignore", message="Glyph .* missing from")  # of another script: a box is drawn
         figure.savefig(memory, format=kind, metadata=metadata, dpi=_DPI)
     return memory.getvalue()
 
@@ -106,7 +120,7 @@ def draw(
     if beside:
         _draw_figures(figure.add_subplot(grid[:, 1]), views, letters=7.0 if is_small else 8.0)
     if title:
-        figure.suptitle(title, fontsize=11, x=0.01, ha="left")
+        figure.suptitle(title, fontsize=11, x=0.01, ha="left", parse_math=False)
     return figure
 
 
@@ -130,12 +144,16 @@ def numbered(views: Sequence[StageView]) -> str:
 def _draw_magnitude(axes: "Axes", view: StageView, mark: str, label: str) -> None:
     axes.plot(view.frequency, _dB(view.designed), color="0.45", linewidth=1.0)
     axes.plot(view.at, _dB(view.measured), mark, **_open_mark())
+    draw_limits(axes, view, label, letters=8.0)
+
+
+def draw_limits(axes: "Axes", view: StageView, label: str, *, letters: float) -> None:
+    """Draw where f0 and gain may be as a grey field behind the marks, which are white and black, and its name above."""
     centre, gain = (view.result.figures[name] for name in ("centre", "gain"))
     low, high = _dB(gain.lower_limit), _dB(gain.upper_limit)
-    left, right = centre.lower_limit, centre.upper_limit
-    axes.plot([left, right, right, left, left], [low, low, high, high, low], color="black", linewidth=0.9)
+    axes.fill_between([centre.lower_limit, centre.upper_limit], low, high, facecolor="0.75", linewidth=0.0, zorder=0.5)
     if label:
-        axes.annotate(label, (centre.designed, high), (0, 4), textcoords="offset points", ha="center", fontsize=8)
+        axes.annotate(label, (centre.designed, high), (0, 4), textcoords="offset points", ha="center", fontsize=letters)
 
 
 def _open_mark() -> dict[str, Any]:
@@ -178,7 +196,7 @@ def _dress(magnitude: "Axes", phase: "Axes", residual: "Axes", views: Sequence[S
     magnitude.set_ylim(min(top - 22.0, float(np.min(drawn)) - 2.0), max(top, float(np.max(drawn))) + 3.0)
     magnitude.set_ylabel("gain / dB")
     magnitude.set_title(
-        f"line: as designed   marks: measured   box: limits of centre and gain{numbered(views)}",
+        f"line: as designed   marks: measured   grey: limits of centre and gain{numbered(views)}",
         loc="left",
         fontsize=8,
         pad=4,
@@ -217,26 +235,45 @@ def ticks(axes: "Axes", lowest: float, highest: float) -> None:
     axes.minorticks_off()
 
 
+def of_tolerance(figure: Comparison) -> float:
+    """Return the deviation in units of the room on its side, gain in dB: beyond ± 1 outside the limits; NaN unfound."""
+    ends = [figure.measured, figure.designed, figure.lower_limit, figure.upper_limit]
+    if figure.quantity == "gain":
+        ends = [float(_dB(max(end, _NOTHING))) for end in ends]
+    measured, designed, lower, upper = ends
+    room = abs((upper if measured >= designed else lower) - designed)
+    return (measured - designed) / room if room else float(np.copysign(np.inf, measured - designed))
+
+
+_FACES: dict[str | None, dict[str, Any]] = {
+    "fail": {"markerfacecolor": "black"},
+    "undecided": {"markerfacecolor": "black", "markerfacecoloralt": "white", "fillstyle": "bottom"},
+}
+_NOTHING = 1e-9  # a gain that stands for 0, which has no dB; arbitrary
+_END = 1.9  # tolerances from design; what is farther is off the scale
+
+
 def _draw_figures(axes: "Axes", views: Sequence[StageView], *, letters: float) -> None:
     """Deviation of each figure in units of its own tolerance: between the two lines is inside the limits."""
     rows = [(view.result, quantity) for view in views for quantity in QUANTITIES]
     for row, (result, quantity) in enumerate(rows):
         figure = result.figures[quantity]
-        room = figure.upper_limit if figure.measured >= figure.designed else figure.lower_limit
-        half = abs(room - figure.designed)
-        place = float(np.clip((figure.measured - figure.designed) / half, -1.9, 1.9))
-        mark = _MARKS[(row // len(QUANTITIES)) % len(_MARKS)]
-        face = "black" if figure.verdict == "fail" else "white"
+        place = of_tolerance(figure)
+        is_off = abs(place) > _END
         axes.errorbar(
-            [place],
+            [float(np.clip(place, -_END, _END))],
             [row],
-            xerr=[min(figure.expanded_uncertainty / half, 2.0)],
-            fmt=mark,
+            xerr=[[0.0], [0.0]] if is_off else _bar(figure, place),
+            fmt=_MARKS[(row // len(QUANTITIES)) % len(_MARKS)],
             ecolor="0.3",
             elinewidth=0.9,
-            capsize=2.0,
-            **{**_open_mark(), "markerfacecolor": face},
+            capsize=0.0 if is_off else 2.0,
+            **{**_open_mark(), **_FACES.get(figure.verdict, {})},
         )
+        if is_off:
+            side, words = ("left", "← off scale") if place < 0.0 else ("right", "off scale →")
+            spot, field = (np.copysign(_END - 0.2, place), row), {"facecolor": "white", "linewidth": 0.0, "pad": 0.8}
+            axes.annotate(words, spot, ha=side, va="center", fontsize=7, bbox=field)
     axes.axvline(0.0, color="0.75", linewidth=0.8)
     for edge in (-1.0, 1.0):
         axes.axvline(edge, color="black", linewidth=1.0)
@@ -245,4 +282,10 @@ def _draw_figures(axes: "Axes", views: Sequence[StageView], *, letters: float) -
     axes.set_xlim(-2.1, 2.1)
     axes.set_xticks([-1, 0, 1], labels=["lower\nlimit", "design", "upper\nlimit"])
     axes.tick_params(labelsize=7 if len(rows) > 45 else letters)
-    axes.set_title("figures against limits (± U; filled: fails)", fontsize=letters, pad=4)
+    axes.set_title("figures against limits, ± U\nfilled: fails; half: undecided", fontsize=letters, pad=4)
+
+
+def _bar(figure: Comparison, place: float) -> list[list[float]]:
+    """Return how far U reaches below and above a figure's place, in units of its tolerance, at most 2."""
+    ends = [replace(figure, measured=figure.measured + sign * figure.expanded_uncertainty) for sign in (-1.0, 1.0)]
+    return [[min(abs(of_tolerance(end) - place), 2.0)] for end in ends]

@@ -1,16 +1,19 @@
 """What the report says of a run, as plain values for the template: page one, and how the board was decided."""
 
-from collections.abc import Mapping, Sequence
-from math import isfinite
+from collections.abc import Iterator, Mapping, Sequence
+from dataclasses import replace
+from math import isfinite, nan
 from typing import TYPE_CHECKING, Any
 
+from bandproof.bench.circuit import Prediction
+from bandproof.bench.comparison import compared
 from bandproof.bench.documents import cells
 from bandproof.bench.documents.bench_content import bench_content
-from bandproof.bench.documents.stage_content import alarms_of, stage_content
-from bandproof.bench.picture import StageView, as_svg, draw
+from bandproof.bench.documents.stage_content import full_stop, stage_content, undecided
+from bandproof.bench.picture import StageView, as_svg, draw, of_tolerance
 from bandproof.bench.result import board_verdict
 from bandproof.bench.summary import verdict_counts
-from bandproof.bench.types import Comparison, Run, StageResult
+from bandproof.bench.types import QUANTITIES, Comparison, Run, Stage, StageResult
 
 if TYPE_CHECKING:
     from matplotlib.figure import Figure
@@ -18,7 +21,13 @@ if TYPE_CHECKING:
 __all__ = ["content", "draw_board", "worst_figure"]
 
 _WIDTH = 6.85  # inches of text on A4
+_UNSETTLED = "had not settled"  # an alarm that ends so weighs least
 _BESIDE = 6  # bands whose figures fit beside the curves
+_CUT_SHORT = (
+    "none, NO VERDICT",
+    "the run ended early: neither board nor band is judged, whatever was measured until then",
+)
+_SIMULATED = "BANDPROOF,SIMULATED "  # how instruments of a rehearsal name themselves
 _WORDS = {"pass": "PASS", "fail": "FAIL", "undecided": "UNDECIDED", None: "NO VERDICT"}
 _TERMS = (
     ("f0", "the frequency of greatest |H|; H is the complex ratio of the voltages at the two test points of a band"),
@@ -27,6 +36,22 @@ _TERMS = (
     ("± U", "the true value is within measured ± U with a probability of 95.45 % (JCGM 100; U = k u)"),
     ("deviation", "measured against designed"),
     ("u", "standard uncertainty; type A: from observations, type B: from anything else (JCGM 100)"),
+    ("k", "U / u: 2 for a normal distribution, less where a source with ends dominates"),
+    ("tap", "a test point of the board that a channel of the scope is connected to"),
+    ("thru, the path", "what probes, switches and channels do by themselves: measured, divided out of every point"),
+    (
+        "chi-square",
+        "squared distances of the points from the fit over their u²; near 1 a degree of freedom: noise alone",
+    ),
+    ("misfit", "what the points leave of the model beyond their noise"),
+    ("along, across", "in the direction of the fitted phasor (its length) and at right angles to it (its angle)"),
+    (
+        "bars, 2 u of point",
+        "noise and rounding of its own records; what moves many points at once is in the budget alone",
+    ),
+    ("closing point", "the first frequency of a band again, as its last: has anything drifted meanwhile?"),
+    ("off fit", "distance of a point from the fitted curve, in any direction"),
+    ("dialect", "the file that says in which words an instrument is spoken to"),
     ("undecided", "the rule permits neither pass nor fail, or something speaks against the measurement itself"),
     ("suspect", "the part whose change would explain what was measured; a hint for the search, not a verdict"),
 )
@@ -61,16 +86,18 @@ def content(
     return {
         "head": _head(run, result, digest, link),
         "verdict": _WORDS[verdict],
+        "simulated": any(identity.startswith(_SIMULATED) for identity in run.identities.values()),
         "sentence": _sentence(run, stages),
+        "undecided": [text for stage in stages for text in undecided(stage)],
         "worst": _worst_line(run, stages),
         "cautions": _cautions(run, stages, result),
         "suspects": [suspect.text for stage in stages for suspect in stage.suspects],
-        "rows": [_row(stage.name, figure) for stage in stages for figure in stage.figures.values()],
+        "rows": list(_rows(run, stages)),
         "picture": as_svg(draw_board(views)) if views else None,
         "stages": [stage_content(run, stage, drawn.get(stage.name)) for stage in stages],
         "bench": bench_content(run),
         "rules": [[rule, cells.rule_meaning(rule)] for rule in _rules(stages)],
-        "terms": [list(term) for term in _TERMS],
+        "terms": [list(term) for term in (*_TERMS, *([_CUT_SHORT] if run.ended == "cut_short" else []))],
         "attempts": [_attempt(entry) for entry in result["attempts"] or ()],
     }
 
@@ -91,6 +118,7 @@ def _head(run: Run, result: Mapping[str, Any], digest: str, link: str) -> dict[s
         "run_id": run.run_id,
         "version": run.version,
         "digest": digest,
+        "file": f"run file {digest[:8]}…",
         "link": link or "not in a chain",
         "points": result["points"],
         "bench_seconds": f"{run.bench_seconds:.1f} s",
@@ -99,7 +127,7 @@ def _head(run: Run, result: Mapping[str, Any], digest: str, link: str) -> dict[s
 
 def _sentence(run: Run, stages: Sequence[StageResult]) -> str:
     if run.ended == "cut_short":
-        return f"The run was cut short: {run.reason}"
+        return full_stop(f"The run was cut short: {run.reason}")
     figures = [figure for stage in stages for figure in stage.figures.values()]
     return f"{len(figures)} figures of {len(stages)} band{'' if len(stages) == 1 else 's'}: {verdict_counts(figures)}."
 
@@ -107,7 +135,7 @@ def _sentence(run: Run, stages: Sequence[StageResult]) -> str:
 def worst_figure(stages: Sequence[StageResult]) -> tuple[str, Comparison] | None:
     """Return the band and the figure that uses most of its tolerance, of those that were found."""
     found = [(stage.name, figure) for stage in stages for figure in stage.figures.values() if isfinite(figure.measured)]
-    return max(found, key=lambda named: cells.of_tolerance(named[1]), default=None)
+    return max(found, key=lambda named: abs(of_tolerance(named[1])), default=None)
 
 
 def _worst_line(run: Run, stages: Sequence[StageResult]) -> str:
@@ -124,29 +152,50 @@ def _worst_line(run: Run, stages: Sequence[StageResult]) -> str:
     told += [f"Not found: {', '.join(lost)}."] if lost else []
     if worst := worst_figure(stages):
         band, figure = worst
-        used = cells.of_tolerance(figure)
+        used = abs(of_tolerance(figure))
         how = (
             f"closest to a limit, uses {100.0 * used:.0f} % of its tolerance"
             if used <= 1.0
             else f"farthest outside its limits, {used:.3g} times its tolerance from design"
         )
         told.append(
-            f"Worst figure: {band} {cells.SYMBOLS[figure.quantity]}, {cells.measured(figure)}, {how} "
-            f"(limits {cells.limits(figure)}, rule {figure.rule})."
+            f"Worst figure{' of those measured' if told else ''}: {band} {cells.SYMBOLS[figure.quantity]}, "
+            f"{cells.measured(figure)}, {how} (limits {cells.limits(figure)}, rule {figure.rule})."
         )
     return " ".join(told)
 
 
 def _cautions(run: Run, stages: Sequence[StageResult], result: Mapping[str, Any]) -> list[str]:
-    found = [*run.alarms, *alarms_of(stages)]
+    """Return all cautions once, by weight: another verdict, bands without a fit first, what had not settled last."""
+    lost = [alarm for stage in stages if not stage.theta for alarm in stage.alarms]
+    told = [alarm for stage in stages if stage.theta for alarm in stage.alarms]
+    found = list(dict.fromkeys([*lost, *sorted([*run.alarms, *told], key=lambda text: text.endswith(_UNSETTLED))]))
     together = [str(entry["attempt"]) for entry in result["attempts"] or () if entry["pooled"]]
-    if len(together) > 1:
+    if len(together) > 1 and not any("cannot be pooled" in alarm for alarm in found):
         found.insert(
-            0, f"The figures are means of attempts {', '.join(together)}; points and pictures are of this one."
+            0,
+            f"The figures are means of attempts {', '.join(together)} where these agree; "
+            "points and pictures are of this one.",
         )
     if result["verdict"] != board_verdict(run, stages):
         found.insert(0, f"The run file says {result['verdict']}; evaluated again here the board comes out otherwise.")
     return found
+
+
+def _rows(run: Run, stages: Sequence[StageResult]) -> Iterator[dict[str, Any]]:
+    """Yield the rows of the table: every band of the board, driven or not."""
+    found = {stage.name: stage for stage in stages}
+    for asked in run.board.stages:
+        if asked.name in found:
+            yield from (_row(asked.name, figure) for figure in found[asked.name].figures.values())
+        else:
+            yield from (_row(asked.name, figure) | {"measured": "not measured"} for figure in _unmeasured(asked))
+
+
+def _unmeasured(stage: Stage) -> Iterator[Comparison]:
+    """Yield the figures of a band that was never driven: limits, nothing else."""
+    for quantity in QUANTITIES:
+        yield replace(compared(stage, quantity, Prediction(nan, nan, nan), None, None, ""), verdict=None)
 
 
 def _row(band: str, figure: Comparison) -> dict[str, Any]:

@@ -15,7 +15,7 @@ from bandproof.bench.documents import cells
 from bandproof.bench.documents.report import typeset, write_whole
 from bandproof.bench.errors import BadInput
 from bandproof.bench.evaluate import evaluate, views
-from bandproof.bench.picture import StageView, as_svg, labels, numbered, ticks
+from bandproof.bench.picture import StageView, as_svg, draw_limits, labels, numbered, ticks
 from bandproof.bench.result import board_verdict
 from bandproof.bench.runfile import digest_of, read_result, read_run
 from bandproof.bench.types import QUANTITIES, Comparison, Run, StageResult
@@ -128,8 +128,10 @@ def _content(before: Side, after: Side) -> dict[str, Any]:
             "attempt": f"{before.run.attempt} and {run.attempt}",
             "started": cells.utc(run.started),
             "date": run.started[:19],
+            "file": f"run files {before.digest[:8]}… and {after.digest[:8]}…",
         },
         "facts": _facts(before, after),
+        "digests": [[f"Run file {name}, SHA-256", side.digest] for name, side in zip(_NAMES, sides, strict=True)],
         "rows": _rows(before.stages, after.stages),
         "picture": as_svg(draw_both(*drawn)) if any(drawn) else None,
         "cautions": [*_differences(before.run, run), *_told(sides, "alarms")],
@@ -159,7 +161,6 @@ def _facts(before: Side, after: Side) -> list[list[str]]:
         ["Bench", *(side.run.bench.title for side in both)],
         ["Ambient", *("not stated" if s.run.ambient is None else f"{s.run.ambient:.4g} °C" for s in both)],
         ["Note", *(side.run.note or "none" for side in both)],
-        ["Run file, SHA-256", *(side.digest for side in both)],
     ]
 
 
@@ -238,7 +239,8 @@ def draw_both(before: Sequence[StageView], after: Sequence[StageView]) -> "Figur
         axes.plot(
             view.at, _dB(view.measured), "o", markersize=5.0, fillstyle="none", color="black", markeredgewidth=0.7
         )
-    _draw_limits(axes, after or before)
+    for view, label in zip(after or before, labels(after or before), strict=True):
+        draw_limits(axes, view, label, letters=_SMALLEST)
     _dress(axes, [*before, *after], numbered(after or before))
     return figure
 
@@ -252,16 +254,6 @@ def _draw(axes: "Axes", view: StageView, style: str, *, color: str, width: float
     frequency = np.geomspace(min(ends), max(ends), 200)
     curve = band_response(np.array([view.result.theta]), frequency[None])[0]
     axes.plot(frequency, _dB(curve), style, color=color, linewidth=width)
-
-
-def _draw_limits(axes: "Axes", drawn: Sequence[StageView]) -> None:
-    for view, label in zip(drawn, labels(drawn), strict=True):
-        centre, gain = (view.result.figures[name] for name in ("centre", "gain"))
-        low, high, left, right = *map(_dB, (gain.lower_limit, gain.upper_limit)), centre.lower_limit, centre.upper_limit
-        axes.plot([left, right, right, left, left], [low, low, high, high, low], color="black", linewidth=0.8)
-        if label:
-            place = (centre.designed, high)
-            axes.annotate(label, place, (0, 3), textcoords="offset points", ha="center", fontsize=_SMALLEST)
 
 
 def _dress(axes: "Axes", drawn: Sequence[StageView], more: str) -> None:
@@ -278,7 +270,7 @@ def _dress(axes: "Axes", drawn: Sequence[StageView], more: str) -> None:
     axes.set_xlabel("frequency / Hz", fontsize=_SMALLEST)
     axes.set_ylabel("gain / dB", fontsize=_SMALLEST)
     axes.set_title(
-        f"dashed and rings: before   grey and dots: after   box: limits of centre and gain{more}",
+        f"dashed and rings: before   grey and dots: after   field: limits of centre and gain{more}",
         loc="left",
         fontsize=_SMALLEST,
         pad=3,

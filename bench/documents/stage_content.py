@@ -8,18 +8,27 @@ import numpy as np
 
 from bandproof.analysis.uncertainty import Row
 from bandproof.bench.budget import dominating
-from bandproof.bench.documents.cells import SYMBOLS, WORDS
+from bandproof.bench.documents.cells import SYMBOLS, WORDS, measured, why_undecided
 from bandproof.bench.documents.stage_picture import draw_stage
 from bandproof.bench.picture import StageView, as_svg
 from bandproof.bench.quantities import engineering
 from bandproof.bench.types import QUANTITIES, Quantity, Run, StageResult
 
-__all__ = ["alarms_of", "stage_content"]
+__all__ = ["full_stop", "stage_content", "undecided"]
 
 
-def alarms_of(stages: Sequence[StageResult]) -> list[str]:
-    """Return what the stages warn of, in board order."""
-    return [alarm for stage in stages for alarm in stage.alarms]
+def full_stop(text: str) -> str:
+    """Return a sentence with its end, where it has none yet."""
+    return text if text.endswith((".", "?", "!")) else f"{text}."
+
+
+def undecided(stage: StageResult) -> list[str]:
+    """Return why figures of a stage that were found are undecided, a sentence each."""
+    return [
+        f"{stage.name} {SYMBOLS[figure.quantity]} {measured(figure)} {why_undecided(figure)}."
+        for figure in stage.figures.values()
+        if figure.verdict == "undecided" and isfinite(figure.measured)
+    ]
 
 
 def stage_content(run: Run, stage: StageResult, view: StageView | None) -> dict[str, Any]:
@@ -32,15 +41,24 @@ def stage_content(run: Run, stage: StageResult, view: StageView | None) -> dict[
         "fit": _fit(stage),
         "picture": as_svg(draw_stage(view)) if view is not None else None,
         "points": _points(view) if view is not None else [],
+        "closing": view is not None and bool(view.at[0] == view.at[-1]),
         "budget": _budget(stage),
-        "notes": [alarm.removeprefix(f"{stage.name}: ") for alarm in stage.alarms],
+        "notes": _notes(run, stage),
+        "undecided": undecided(stage),
         "suspects": [suspect.text for suspect in stage.suspects],
     }
 
 
+def _notes(run: Run, stage: StageResult) -> list[str]:
+    """Return what the run and the stage warn of this stage, but for what `_fit` says already."""
+    mine = [alarm for alarm in run.alarms if alarm.startswith(f"{stage.name}: ")]
+    told = dict.fromkeys(alarm.removeprefix(f"{stage.name}: ") for alarm in (*mine, *stage.alarms))
+    return [text for text in told if stage.theta or text != stage.status]
+
+
 def _fit(stage: StageResult) -> str:
     if not stage.theta:
-        return f"No fit: {stage.status}."
+        return full_stop(f"No fit: {stage.status}")
     lack = " The points do not follow the model." if stage.lack_of_fit else ""
     chi = f"{stage.reduced_chi_square:.3g}" if isfinite(stage.reduced_chi_square) else "not known"
     return f"Model {stage.model}, {stage.points} points, chi-square per degree of freedom {chi}.{lack}"

@@ -14,7 +14,7 @@ from matplotlib.text import Text
 
 from bandproof.bench.documents.stage_picture import draw_stage
 from bandproof.bench.evaluate import views
-from bandproof.bench.picture import draw, image, save, ticks
+from bandproof.bench.picture import draw, image, of_tolerance, save, ticks
 from bandproof.bench.types import PASSIVE
 
 
@@ -105,6 +105,44 @@ def test_a_stage_that_fails_is_drawn_filled(two):
     figure = draw([replace(two[0], result=replace(result, figures=figures)), two[1]], "title")
     faces = [c.lines[0].get_markerfacecolor() for c in figure.axes[3].containers]
     assert faces == ["white", "black", *["white"] * 4]
+
+
+def test_an_undecided_figure_has_a_mark_of_its_own(two):
+    result = two[0].result
+    figures = {**result.figures, "q": replace(result.figures["q"], verdict="undecided")}
+    figure = draw([replace(two[0], result=replace(result, figures=figures)), two[1]], "title")
+    marks = [c.lines[0].get_fillstyle() for c in figure.axes[3].containers]
+    assert marks == ["full", "bottom", *["full"] * 4]
+    assert "half: undecided" in figure.axes[3].get_title()
+
+
+def test_a_figure_off_the_scale_says_so(two):
+    result = two[0].result
+    figures = {**result.figures, "q": replace(result.figures["q"], measured=0.85, verdict="fail")}
+    figure = draw([replace(two[0], result=replace(result, figures=figures)), two[1]], "title")
+    (words,) = figure.axes[3].texts
+    assert (words.get_text(), words.xy[1]) == ("← off scale", 1)
+
+
+def test_gain_is_measured_against_its_tolerance_in_decibels(two):
+    # By hand: designed 10 dB, limits 9 and 11 dB.
+    gain = two[0].result.figures["gain"]
+    for level, wanted in ((10.0, 0.0), (10.5, 0.5), (8.0, -2.0), (-5.13, -15.13)):
+        assert np.isclose(of_tolerance(replace(gain, measured=10 ** (level / 20))), wanted, atol=1e-6)
+    assert math.isnan(of_tolerance(replace(gain, measured=math.nan)))
+
+
+def test_limits_are_no_lines_that_look_like_marks(two):
+    """They are grey fields behind curves and marks: every line of the picture is a curve or has marks."""
+    magnitude = draw(two, "title").axes[0]
+    fields = [field for field in magnitude.collections if to_rgb(field.get_facecolor()[0]) == (0.75, 0.75, 0.75)]
+    assert len(fields) == len(magnitude.lines) / 2 == len(two)
+    for view, field in zip(two, fields, strict=True):
+        centre, gain = (view.result.figures[name] for name in ("centre", "gain"))
+        corners = field.get_paths()[0].get_extents()
+        assert np.allclose([corners.x0, corners.x1], [centre.lower_limit, centre.upper_limit])
+        assert np.allclose([corners.y0, corners.y1], dB(np.array([gain.lower_limit, gain.upper_limit])))
+        assert field.get_zorder() < min(line.get_zorder() for line in magnitude.lines)
 
 
 def test_a_png_is_written_by_its_ending(two, tmp_path):

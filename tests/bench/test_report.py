@@ -4,6 +4,7 @@ The text is read back by an independent reader of PDF (pypdf).
 """
 
 import builtins
+import hashlib
 import io
 import json
 import math
@@ -11,12 +12,12 @@ import re
 from dataclasses import replace
 from importlib import resources
 
-import numpy as np
 import pypdf
 import pytest
 from matplotlib.text import Text
 
 from bandproof.bench.documents import cells
+from bandproof.bench.documents.bench_content import bench_content
 from bandproof.bench.documents.content import content, draw_board, worst_figure
 from bandproof.bench.documents.report import NoReport, report_bytes
 from bandproof.bench.documents.side_by_side import draw_both
@@ -44,7 +45,7 @@ def document(stored, *, run=None, stages=None, result=None, drawn=()):
 def pages(pdf):
     """Return the text of every page, words apart by one space."""
     reader = pypdf.PdfReader(io.BytesIO(pdf))
-    return [" ".join(page.extract_text().replace("\u200b", "").split()) for page in reader.pages]
+    return [" ".join(page.extract_text().split()) for page in reader.pages]
 
 
 @pytest.fixture(scope="module")
@@ -77,9 +78,11 @@ def test_page_one_has_every_figure_with_its_limits_and_rule(text, stored):
 
 def test_worst_figure_and_its_uncertainty_are_told(text, stored):
     # Recomputed here from the definition: the share of the room between design and limit that the deviation uses.
+    # Gain is compared in decibels, as its limits are written (20 lg of a ratio of voltages, IEC 60027-3).
     def share(figure):
-        edge = figure.upper_limit if figure.measured > figure.designed else figure.lower_limit
-        return (figure.measured - figure.designed) / (edge - figure.designed)
+        scale = (lambda ratio: 20 * math.log10(ratio)) if figure.quantity == "gain" else float
+        edge = scale(figure.upper_limit if figure.measured > figure.designed else figure.lower_limit)
+        return (scale(figure.measured) - scale(figure.designed)) / (edge - scale(figure.designed))
 
     named = [(share(f), stage.name, f) for stage in stored.stages for f in stage.figures.values()]
     most, band, figure = max(named, key=lambda entry: entry[0])
@@ -161,7 +164,7 @@ def test_a_long_word_stays_on_the_page(stored):
     word = "W" * 300
     said = document(stored, run=replace(stored.run, note=word))
     page = pypdf.PdfReader(io.BytesIO(said)).pages[0]
-    lines = page.extract_text().replace("\u200b", "").splitlines()
+    lines = page.extract_text().splitlines()
     lengths = [line.count("W") for line in lines if "WWW" in line]
     assert sum(lengths) == 300
     # A4 less both margins is 174 mm = 493 pt; a W of a serif type takes about its size, 9.5 pt, and no less than half
@@ -250,7 +253,12 @@ def test_a_run_that_was_cut_short_has_no_verdict(stored):
     assert f"Not measured: {stored.stages[1].name}." in said[0]
     assert "NO VERDICT" in said[0]
     assert "PASS" not in said[0]
-    assert "cut short: the scope fell silent" in said[0]
+    assert "cut short: the scope fell silent. Not measured:" in said[0]
+    assert "Worst figure of those measured:" in said[0]
+    assert said[0].count("not measured – ") == 3  # figures of the band that was not reached, with their limits
+    for figure in stored.stages[1].figures.values():
+        assert f"not measured – {cells.limits(figure)} {figure.rule} none" in said[0]
+    assert "none, NO VERDICT" in said[-1]
 
 
 def many(stored, count):
@@ -376,4 +384,104 @@ def test_gain_is_in_decibels(stored):
     # 20 lg by definition (IEC 60027-3); the numbers by hand: 20 lg 3.1623 = 10.000, 20 lg 1.01 = 0.0864
     gain = replace(stored.stages[0].figures["gain"], measured=3.16228, expanded_uncertainty=0.0316228)
     assert cells.measured(gain) == "10.000 ± 0.087 dB"
-    assert np.isclose(cells.of_tolerance(replace(gain, measured=gain.upper_limit)), 1.0)
+
+
+def test_the_worst_figure_s_share_follows_from_what_the_page_shows(stored):
+    # By hand: -15.13 dB of deviation over a tolerance of 1 dB are 15.1; as ratios they would be 0.83 of 0.11: 7.6.
+    low = stored.stages[0]
+    gain = replace(low.figures["gain"], measured=low.figures["gain"].designed * 10 ** (-15.13 / 20), verdict="fail")
+    failed = replace(low, figures={**low.figures, "gain": gain}, verdict="fail")
+    said = pages(document(stored, stages=[failed, stored.stages[1]]))[0]
+    assert "-15.13 dB 9 to 11 dB" in said
+    assert "Worst figure: low gain" in said
+    assert "15.1 times its tolerance from design" in said
+
+
+def guarded(stored, quantity, **values):
+    """Return the first stage with one figure undecided under a guard band of 1 U."""
+    low = stored.stages[0]
+    figure = replace(low.figures[quantity], rule="guarded 1", verdict="undecided", **values)
+    return replace(low, figures={**low.figures, quantity: figure}, verdict="undecided")
+
+
+def test_an_undecided_figure_says_where_it_would_pass_and_fail(stored):
+    # By hand: limit 1.41, U 0.02, so 1.43 and 1.39 (ISO 14253-1: limits drawn in and widened by U).
+    stage = guarded(stored, "q", measured=1.42, expanded_uncertainty=0.02, conformance_probability=0.84)
+    said = pages(document(stored, stages=[stage, stored.stages[1]]))
+    told = "low Q 1.420 ± 0.020 is within 1 U of its limit 1.41: passes from 1.430, fails below 1.390."
+    assert f"Undecided: {told}" in said[0]
+    assert f"Undecided: {told}" in said[1]
+    high = guarded(stored, "q", measured=1.58, expanded_uncertainty=0.02, conformance_probability=0.84)
+    assert cells.why_undecided(high.figures["q"]).endswith("1.59: passes up to 1.570, fails above 1.610")
+    wide = guarded(stored, "q", measured=1.5, expanded_uncertainty=0.1, conformance_probability=0.84)
+    assert "passes nowhere" in cells.why_undecided(wide.figures["q"])
+
+
+def test_an_undecided_gain_is_told_in_decibels(stored):
+    # By hand: 10^(9/20) = 2.81838; U of 1 % of 2.83 is 0.0283: 20 lg 2.84668 = 9.087, 20 lg 2.79008 = 8.912.
+    stage = guarded(stored, "gain", measured=2.83, expanded_uncertainty=0.0283, conformance_probability=0.8)
+    why = cells.why_undecided(stage.figures["gain"])
+    assert why == "is within 1 U of its limit 9 dB: passes from 9.087 dB, fails below 8.912 dB"
+
+
+def test_an_undecided_figure_by_risk_or_doubt_is_told(stored):
+    figure = replace(stored.stages[0].figures["q"], verdict="undecided", rule="risk 2 %", conformance_probability=0.9)
+    assert cells.why_undecided(figure).endswith("probability of 90 %: passes from 98 %, fails up to 2 %")
+    assert "doubted" in cells.why_undecided(replace(figure, conformance_probability=math.nan))
+
+
+def test_digests_and_addresses_are_in_the_text_layer_as_a_tool_prints_them(stored):
+    """A copied digest must equal what sha256sum prints: no invisible letters, no line broken within it."""
+    run = stored.run
+    address = "TCPIP::bench-scope-2.laboratory.example.org::5025::SOCKET"
+    scope = replace(run.bench.instruments["scope"], address=address)
+    moved = replace(run, bench=replace(run.bench, instruments={**run.bench.instruments, "scope": scope}))
+    attempts = [{"attempt": 1, "verdict": "fail", "pooled": False, "digest": "0123456789abcdef" * 4}]
+    for whose, result in ((run, stored.result), (moved, {**stored.result, "attempts": attempts})):
+        reader = pypdf.PdfReader(io.BytesIO(document(stored, run=whose, result=result)))
+        last = "\n".join(page.extract_text() for page in reader.pages)
+        assert not re.search("[\u00ad\u200b-\u200f\u2060\ufeff]", last)
+        wanted = [stored.digest, stored.link, *(text for _, text in bench_content(whose)["texts"])]
+        wanted += [entry["digest"] for entry in result["attempts"] or () if entry["digest"]]
+        assert all(len(text) == 64 for text in wanted)
+        assert len(wanted) >= 5
+        assert [text for text in wanted if text not in last] == []
+        addresses = [instrument.address for instrument in whose.bench.instruments.values()]
+        assert [text for text in addresses if text not in last.replace("\n", "")] == []
+        assert run.bench.instruments["generator"].address in last
+
+
+def test_every_head_has_the_first_eight_digits_of_the_run_file(text, stored):
+    for page in text:
+        assert f"run file {stored.digest[:8]}…" in page
+
+
+def test_the_last_page_says_how_to_check_and_it_is_true(text, stored):
+    """`tail -c +513` prints from the 513th byte on (POSIX tail)."""
+    assert "tail -c +513 run.h5 | sha256sum" in text[-1]
+    content = stored.path.read_bytes()
+    assert hashlib.sha256(content[512:]).hexdigest() == stored.digest
+    assert stored.digest.encode() in content[:512]
+
+
+def test_a_rehearsal_is_told_on_page_one(stored):
+    assert "Simulated instruments: this was a rehearsal" in pages(document(stored))[0]
+    real = replace(stored.run, identities=dict.fromkeys(stored.run.identities, "MAKER,G1,17,2.0"))
+    assert "Simulated instruments" not in pages(document(stored, run=real))[0]
+
+
+def test_cautions_come_by_their_weight_once_and_with_their_band(stored):
+    low, other = stored.stages
+    figures = {name: replace(figure, measured=math.nan, verdict=None) for name, figure in other.figures.items()}
+    lost = replace(
+        other, figures=figures, theta=(), status="no usable points", alarms=(f"{other.name}: no usable points",)
+    )
+    alarms = ("low: the record at 150 Hz had not settled", "low: a wrong tap", "low: a wrong tap")
+    said = pages(document(stored, run=replace(stored.run, alarms=alarms), stages=[low, lost]))
+    places = [
+        said[0].index(text) for text in (f"{other.name}: no usable points", "low: a wrong tap", "had not settled")
+    ]
+    assert places == sorted(places)
+    assert said[0].count("low: a wrong tap") == 1
+    assert "the record at 150 Hz had not settled • a wrong tap" in said[1]
+    assert said[2].count("no usable points") == 1
