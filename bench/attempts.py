@@ -12,6 +12,7 @@ from datetime import datetime
 from pathlib import Path
 from typing import Any
 
+from bandproof.bench.chain import CHAIN
 from bandproof.bench.errors import BadInput
 from bandproof.bench.journal import Journal
 from bandproof.bench.runfile import digest_of, read_result
@@ -71,8 +72,8 @@ def place_of(folder: Path, serial: str) -> Path:
     BadInput
         It has other characters than letters, digits and ``. _ -``.
     """
-    if not _SERIAL.fullmatch(serial) or serial in (".", ".."):
-        raise BadInput(f"{serial!r} cannot be a serial number: letters, digits and . _ - only, at most 64")
+    if not _SERIAL.fullmatch(serial) or serial.lower() in (".", "..", CHAIN):
+        raise BadInput(f"{serial!r} cannot be a serial number: letters, digits and . _ - only, at most 64, not {CHAIN}")
     return folder / serial
 
 

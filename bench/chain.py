@@ -55,8 +55,12 @@ class Chain:
     problem: str
     size: int
 
+    def line_of(self, run_path: Path, digest: str) -> Entry | None:
+        """Return the last line for a run file that has its digest."""
+        return next((entry for entry in reversed(self.of(run_path)) if entry.digest == digest), None)
+
     def of(self, run_path: Path) -> list[Entry]:
-        """Return the lines for a run file."""
+        """Return the lines for a run file, the last for the run that was made there last."""
         below = run_path.resolve().relative_to(self.path.parent).as_posix()
         return [entry for entry in self.entries if entry.path == below]
 
@@ -80,12 +84,14 @@ def link_of(run_path: Path, digest: str) -> str:
         chain = chain_of(run_path)
     except OSError:
         return ""
-    found = [entry.link for entry in chain.of(run_path) if entry.digest == digest] if chain else []
-    return found[0] if found else ""
+    entry = chain.line_of(run_path, digest) if chain else None
+    return entry.link if entry else ""
 
 
-def add_to_chain(folder: Path, runs: Sequence[tuple[str, str, str]]) -> None:
-    """Add runs (UTC, path below the folder, digest) that the folder's chain does not have; on disk when it returns.
+def add_to_chain(folder: Path, runs: Sequence[tuple[str, str, str]]) -> str:
+    """Add runs (UTC, path below the folder, digest) that are not the last in their place; on disk when it returns.
+
+    Returns what to tell of half a line at the chain's end, which is cut off; "" where there was none.
 
     Raises
     ------
@@ -98,12 +104,15 @@ def add_to_chain(folder: Path, runs: Sequence[tuple[str, str, str]]) -> None:
     with path.open("a+b") as file:
         _lock(file.fileno(), path)
         file.seek(0)
-        chain = _read(path, file.read())
+        content = file.read()
+        chain = _read(path, content)
         if chain.problem:
             raise ChainBroken(str(path), f"{chain.problem}. Move it away, and the next run begins a new one")
-        known = {(entry.path, entry.digest) for entry in chain.entries}
-        link, number, text = chain.entries[-1].link if chain.entries else "", len(chain.entries), ""
-        for utc, below, digest in [run for run in runs if run[1:] not in known]:
+        known = {entry.path: entry.digest for entry in chain.entries}  # the last in each place
+        whole, half = content[: chain.size], content[chain.size :]
+        text = "\n" if whole and not whole.endswith(b"\n") else ""
+        link, number = chain.entries[-1].link if chain.entries else "", len(chain.entries)
+        for utc, below, digest in [run for run in runs if known.get(run[1]) != run[2]]:
             number += 1
             line = f"{number} {utc} {below} {digest}"
             link = _link(link, line)
@@ -113,6 +122,8 @@ def add_to_chain(folder: Path, runs: Sequence[tuple[str, str, str]]) -> None:
         file.flush()
         os.fsync(file.fileno())
     sync_folder(folder)
+    told = ascii(half.decode("utf-8", "replace"))
+    return f"the last line of {path} was not whole and was cut off: {told}" if half else ""
 
 
 def _link(before: str, line: str) -> str:
@@ -120,10 +131,16 @@ def _link(before: str, line: str) -> str:
 
 
 def _read(path: Path, content: bytes) -> Chain:
-    """Return a chain up to the first line that is wrong; half a line at the end was never finished and is none."""
+    """Return a chain up to the first line that is wrong; half a line at the end was never finished and is none.
+
+    A last line that lacks nothing but its newline is one.
+    """
     entries: list[Entry] = []
     size, link = 0, ""
-    for number, line in enumerate(content.split(b"\n")[:-1], 1):
+    lines = content.split(b"\n")
+    if not _LINE.fullmatch(lines[-1]):
+        lines.pop()
+    for number, line in enumerate(lines, 1):
         found = _LINE.fullmatch(line)
         if found is None or not line.isascii():
             return Chain(path, tuple(entries), f"line {number} is no line of a chain", size)
@@ -133,7 +150,7 @@ def _read(path: Path, content: bytes) -> Chain:
             why = f"line {number} does not follow from those before it: one of them was changed, added or taken away"
             return Chain(path, tuple(entries), why, size)
         entries.append(entry)
-        size += len(line) + 1
+        size = min(size + len(line) + 1, len(content))
     return Chain(path, tuple(entries), "", size)
 
 

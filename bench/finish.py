@@ -131,10 +131,10 @@ def _chained(run: Run, folder: Path) -> list[str]:
             for path in (*paths, folder / RUN)
             if path.exists()
         ]
-        add_to_chain(folder.parent.parent, runs)
+        cut = add_to_chain(folder.parent.parent, runs)
     except (OSError, BadInput) as problem:  # the run is kept all the same
         return [f"the run is not in {folder.parent.parent / CHAIN}: {problem}"]
-    return []
+    return [cut] if cut else []
 
 
 def _reported(

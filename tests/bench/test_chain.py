@@ -48,11 +48,37 @@ def test_half_a_line_of_a_killed_process_is_written_anew(tmp_path):
     add_to_chain(tmp_path, [run_of(1)])
     add_to_chain(tmp_path, [run_of(2)])
     content = (tmp_path / CHAIN).read_bytes()
-    for size in (len(content) - 1, len(content) - 100, content.index(b"\n") + 2):
+    for size in (len(content) - 2, len(content) - 100, content.index(b"\n") + 2):
         (tmp_path / CHAIN).write_bytes(content[:size])
         assert (read(tmp_path).problem, len(read(tmp_path).entries)) == ("", 1)
-        add_to_chain(tmp_path, [run_of(2)])
+        told = add_to_chain(tmp_path, [run_of(2)])
+        assert told.endswith(f"was cut off: '{content[len(content) // 2 : size].decode()}'")
         assert (tmp_path / CHAIN).read_bytes() == content
+
+
+def test_a_last_line_that_lacks_only_its_newline_is_kept_and_gets_it(tmp_path):
+    for number in (1, 2, 3):
+        add_to_chain(tmp_path, [run_of(number)])
+    content = (tmp_path / CHAIN).read_bytes()
+    second = content.index(b"\n", content.index(b"\n") + 1)
+    (tmp_path / CHAIN).write_bytes(content[:second])
+    assert [entry.path for entry in read(tmp_path).entries] == ["TB-1/1/run.h5", "TB-2/1/run.h5"]
+    assert add_to_chain(tmp_path, [run_of(3)]) == ""
+    assert (tmp_path / CHAIN).read_bytes() == content
+    (tmp_path / CHAIN).write_bytes(content[: second - 1] + b"x")
+    assert "cut off" in add_to_chain(tmp_path, [])
+    (tmp_path / CHAIN).write_bytes(content[: second - 64] + b"0" * 64)  # whole, and yet another: no process writes it
+    with pytest.raises(ChainBroken, match="line 2 does not follow"):
+        add_to_chain(tmp_path, [run_of(3)])
+
+
+def test_a_run_that_is_made_again_after_another_stood_there_has_a_line_again(tmp_path):
+    first, other = run_of(1), (*run_of(1)[:2], run_of(2)[2])
+    for made in (first, other, first, first):
+        add_to_chain(tmp_path, [made])
+    path = tmp_path / first[1]
+    assert [entry.digest for entry in read(tmp_path).of(path)] == [first[2], other[2], first[2]]
+    assert link_of(path, first[2]) == read(tmp_path).entries[-1].link
 
 
 def changed(lines):

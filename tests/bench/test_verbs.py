@@ -478,7 +478,7 @@ def test_the_bench_verb_names_every_instrument_and_leaves_the_generator_off(cons
     assert bench.ask_generator(b"OUTP?") == b"0\n"
 
 
-@pytest.mark.parametrize("serial", ["../up", "a/b", "", "ö", "x" * 65, ".."])
+@pytest.mark.parametrize("serial", ["../up", "a/b", "", "ö", "x" * 65, "..", "chain.txt", "Chain.TXT"])
 def test_a_serial_number_that_is_no_folder_name_is_exit_2(console, served, serial):
     bench = served()
     code, _, err = bench.sweep(console, serial=serial)
