@@ -15,7 +15,7 @@ from bandproof.drivers.dialect import load
 from bandproof.drivers.schema import DialectMistakes
 from bandproof.drivers.serial_line import Flow, Parity, Serial
 
-__all__ = ["check_wiring", "find_bench", "parse_bench", "read_bench"]
+__all__ = ["STATED", "check_wiring", "find_bench", "parse_bench", "read_bench"]
 
 Role = Literal["generator", "scope", "switch", "supply"]
 BY_HAND = "by hand"
@@ -25,17 +25,17 @@ _BAUD = 50, 4_000_000  # what operating systems name (POSIX from 50)
 # Loads of usual probes by factor, Ω and F (common practice): a 10:1 probe; a 1:1 probe or a metre of cable.
 _LOADS = {10.0: (10e6, 15e-12), 1.0: (1e6, 100e-12)}
 # What the file may say about errors: name of Accuracy, table, key, kind.
-_ACCURACY: tuple[tuple[str, str, str, Kind], ...] = (
-    ("channel_skew", "scope", "channel_skew", "time"),
-    ("linearity", "scope", "linearity", "steps"),
-    ("range_gain", "scope", "range_accuracy", "relative"),
-    ("drift", "scope", "drift", "drift"),
-    ("reseating", "probes", "reseating", "relative"),
-    ("probe_compensation", "probes", "compensation", "relative"),
-    ("probe_corner", "probes", "corner", "frequency"),
-    ("probe_resistance", "probes", "resistance", "resistance"),
-    ("probe_capacitance", "probes", "capacitance", "capacitance"),
-)
+STATED: dict[str, tuple[str, str, Kind]] = {
+    "channel_skew": ("scope", "channel_skew", "time"),
+    "linearity": ("scope", "linearity", "steps"),
+    "range_gain": ("scope", "range_accuracy", "relative"),
+    "drift": ("scope", "drift", "drift"),
+    "reseating": ("probes", "reseating", "relative"),
+    "probe_compensation": ("probes", "compensation", "relative"),
+    "probe_corner": ("probes", "corner", "frequency"),
+    "probe_resistance": ("probes", "resistance", "resistance"),
+    "probe_capacitance": ("probes", "capacitance", "capacitance"),
+}
 
 
 def find_bench(named: str | None, folder: Path = Path(".")) -> tuple[Path, str]:
@@ -162,9 +162,9 @@ def _accuracy(generator: Table, scope: Table, probes: Table) -> Accuracy:
     tables = {"scope": scope, "probes": probes}
     stated: dict[str, Any] = {
         name: tables[table].quantity(key, kind, getattr(usual, name), positive=False)
-        for name, table, key, kind in _ACCURACY
+        for name, (table, key, kind) in STATED.items()
     }
-    declared = {name for name, table, key, _ in _ACCURACY if key in tables[table]}
+    declared = {name for name, (table, key, _) in STATED.items() if key in tables[table]}
     return replace(usual, **stated, declared=frozenset({"channel_gain", "generator_frequency", *declared}))
 
 

@@ -12,6 +12,7 @@ from typing import Literal
 __all__ = [
     "Kind",
     "QuantityError",
+    "as_written",
     "engineering",
     "read_quantity",
     "read_tolerance",
@@ -214,6 +215,24 @@ def tolerance_text(lower: float, upper: float) -> str:
     if abs(lower * upper - 1.0) < 1e-9:
         return f"±{20.0 * math.log10(upper):.4g} dB"
     return f"±{100.0 * (upper - 1.0):.4g} %"
+
+
+_SHOWN_IN: dict[Kind, str] = {"steps": "LSB", "drift": "%/min"}
+_PLAIN: dict[Kind, str] = {"frequency": "Hz", "resistance": "Ω", "capacitance": "F", "time": "s"}
+
+
+def as_written(value: float, kind: Kind) -> str:
+    """Return a value of a bench file's accuracy as the file has it.
+
+    Examples
+    --------
+    >>> as_written(0.005, "relative"), as_written(2e-5, "relative"), as_written(1e-7, "time")
+    ('0.5 %', '20 ppm', '100 ns')
+    """
+    if kind in _PLAIN:
+        return engineering(value, _PLAIN[kind])
+    unit = _SHOWN_IN.get(kind) or ("%" if value >= 1e-4 else "ppm")
+    return f"{value / _UNITS[kind][unit]:.4g} {unit}"
 
 
 _PREFIXES = {-12: "p", -9: "n", -6: "µ", -3: "m", 0: "", 3: "k", 6: "M", 9: "G"}

@@ -225,6 +225,7 @@ EVENTS: Mapping[str, tuple[tuple[str, ...], str]] = {  # event: (its keys beside
     "wired": (("stage",), "a stage's test points were connected"),
     "failure": (("instrument", "step", "words"), "an instrument did not do what it should"),
     "recovered": (("attempt", "instrument", "step"), "it was reopened and the record taken again"),
+    "taken again": (("step", "words"), "a record was not as it should be, and another was taken"),
     "pause": (("seconds", "step"), "nothing was measured for so long"),
     "clock set back": (("seconds", "step"), "the computer's clock was set back"),
     "probes looked at again": (("read", "stage"), "a gain far from the design, hands on the probes"),

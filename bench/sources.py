@@ -14,7 +14,9 @@ import numpy as np
 from bandproof.analysis.fit import BandFit
 from bandproof.analysis.types import ComplexArray, FloatArray
 from bandproof.analysis.uncertainty import Distribution
+from bandproof.bench.bench_file import STATED
 from bandproof.bench.check_chart import reproducibility
+from bandproof.bench.quantities import as_written
 from bandproof.bench.record import HUM_BELOW
 from bandproof.bench.thru import Path
 from bandproof.bench.types import Bench, Board, CheckHistory, Point, Quantity, Stage
@@ -108,8 +110,11 @@ def _ones(measured: Measured) -> ComplexArray:
 
 
 def _stated(measured: Measured, name: str) -> str:
-    declared = name in measured.bench.accuracy.declared
-    return "declared in the bench file" if declared else "not declared, a careful default"
+    accuracy = measured.bench.accuracy
+    if name in accuracy.declared:
+        return "declared in the bench file"
+    table, key, kind = STATED[name]
+    return f'not declared, a careful default ({key} = "{as_written(getattr(accuracy, name), kind)}" in [{table}])'
 
 
 def _reseating(measured: Measured) -> Source:

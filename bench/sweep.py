@@ -227,7 +227,11 @@ class Sweep:
 
     def _settled(self, step: Step, stage: Stage, first: int) -> tuple[Point, FloatArray]:
         """Take a step's record, again while it has not settled, at most `repeats` times more."""
+        wrong = ""
         for attempt in range(first, first + self.repeats + 1):
+            if attempt > first:
+                words = wrong or "the record had not settled"
+                self.journal.told(self.elapsed(), "taken again", step=step.index, words=words)
             taken = self._taken(step, stage, attempt)
             point = point_of(step, taken, self.bench.mains, self.bench.accuracy.linearity)
             wrong = frequency_problem(point) or level_problem(stage, self._low_level(step), point)

@@ -10,7 +10,7 @@ import re
 import string
 from functools import lru_cache
 
-__all__ = ["is_like", "number_in"]
+__all__ = ["is_like", "is_spelt_otherwise", "number_in"]
 
 _NUMBER = r"\s*((?>[+-]?(?:\d+\.?\d*|\.\d+)(?:E ?[+-]?\d+)?))\s*"  # as `scpi.parse_number` has it, whole or not at all
 
@@ -52,6 +52,16 @@ def is_like(template: str, answer: str, **names: str) -> bool:
     (True, False)
     """
     return _pattern(template, tuple(names.items())).fullmatch(answer.strip("\"'")) is not None
+
+
+def is_spelt_otherwise(answer: str, wanted: str) -> bool:
+    """Return whether two answers differ by blanks and leading zeros alone.
+
+    >>> is_spelt_otherwise("AT 01", "AT 1"), is_spelt_otherwise("AT 10", "AT 1")
+    (True, False)
+    """
+    first, second = (re.sub(r"\s+|(?<!\d)0+(?=\d)", "", text) for text in (answer, wanted))
+    return first == second
 
 
 @lru_cache(maxsize=256)

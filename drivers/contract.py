@@ -20,6 +20,7 @@ from bandproof.drivers.scope_contract import SCOPE_CLAUSES
 from bandproof.drivers.session import as_text
 from bandproof.drivers.supply import Supply
 from bandproof.drivers.switch import Switch
+from bandproof.drivers.trials import AWKWARD
 from bandproof.drivers.walk import NO_BOARD
 
 __all__ = ["CLAUSES", "Broken", "NotTried", "Outcome", "check"]
@@ -81,6 +82,7 @@ def is_off_when_safe(generator: Generator) -> None:
 def reads_back_frequency_amplitude_and_offset(generator: Generator) -> None:
     """Frequency, amplitude and offset read back as they were set."""
     _settle(generator)
+    generator.set_frequency(AWKWARD)
 
 
 def keeps_its_frequency_when_the_amplitude_changes(generator: Generator) -> None:

@@ -101,6 +101,9 @@ def parse(text: str, name: str) -> Dialect:
     kind = table.get("kind")
     if not isinstance(kind, str) or kind not in _KINDS:
         raise DialectMistakes(name, (Finding("kind", repr(kind)[:200], " or ".join(_KINDS), choices=tuple(_KINDS)),))
+    interval = table.get("interval")
+    if kind == "scope" and isinstance(interval, dict) and interval.get("set"):
+        table.setdefault("duration", {})  # nothing is told of it
     findings: list[Finding] = []
     dialect: Dialect | None = read_table(_KINDS[kind], table, "", findings)
     if dialect is not None and not findings:

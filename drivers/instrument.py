@@ -155,9 +155,9 @@ class Instrument:
         if not low <= value <= high:
             raise self._beyond(slot, f"{slot} must be from {low:g} to {high:g} by the dialect, got {value!r}")
         text = number.set.format(value=spelt(number, value), channel=channel)
-        return self._once(slot + channel, text, lambda: self._set_and_read(number, value, text, channel))
+        return self._once(slot + channel, text, lambda: self._set_and_read(slot, number, value, text, channel))
 
-    def _set_and_read(self, number: Number, value: float, text: str, channel: str) -> float:
+    def _set_and_read(self, slot: str, number: Number, value: float, text: str, channel: str) -> float:
         self.session.command(text)
         if not number.query:
             self.check_errors()
@@ -167,6 +167,7 @@ class Instrument:
         if not is_accepted(number, value, found):
             low, high = number.readback
             accepted = f"{low:.9g} to {high:.9g} times that, or within {number.absolute:g}"
+            accepted += f"; `readback` and `absolute` of [{slot}]"
             raise SettingRefused(
                 self.address, text, f"{value:.9g}", f"{found:.9g}", accepted, self.session.setting_line
             )

@@ -217,9 +217,12 @@ class Session:
     def error_entry(self, line: bytes) -> ErrorEntry:
         """Return what an answer to the error query says."""
         template = self.habits.errors_answer
-        return (
-            ErrorEntry(parse_integer(number_in(template, line)), as_text(line)) if template else parse_error_entry(line)
-        )
+        if template:
+            return ErrorEntry(parse_integer(number_in(template, line)), as_text(line))
+        try:
+            return parse_error_entry(line)
+        except ValueError as problem:
+            raise ValueError(f"{problem}: has it to have a template, `errors_answer`?") from problem
 
     def _queue(self) -> list[ErrorEntry]:
         entries: list[ErrorEntry] = []

@@ -1,4 +1,4 @@
-"""Which values a walk sets a number to: always the same two, moved into the limits that the dialect declares."""
+"""Which values a walk sets a number to: always the same, moved into the limits that the dialect declares."""
 
 from __future__ import annotations
 
@@ -7,17 +7,19 @@ import math
 from bandproof.drivers.instrument import spelt
 from bandproof.drivers.slots import Number
 
-__all__ = ["limits_of", "trials"]
+__all__ = ["AWKWARD", "limits_of", "trials"]
+
+AWKWARD = 1234.56789  # Hz: no round one, as a sweep asks for; arbitrary
 
 
-def trials(number: Number, wanted: tuple[float, float]) -> tuple[float, ...]:
-    """Return two values within a number's limits, or one where they leave no more.
+def trials(number: Number, wanted: tuple[float, ...]) -> tuple[float, ...]:
+    """Return values within a number's limits: two, or one where they leave no more; between them what they allow.
 
     Parameters
     ----------
     number : Number
         Its limits hold; its format must tell the two apart.
-    wanted : (float, float)
+    wanted : tuple of float, two or more
         SI; taken as they are if the limits allow it. The last is what the instrument is left at.
 
     Returns
@@ -26,12 +28,14 @@ def trials(number: Number, wanted: tuple[float, float]) -> tuple[float, ...]:
         SI.
     """
     low, high = number.limits
-    first, last = (min(max(value, low), high) for value in wanted)
+    first, last = (min(max(value, low), high) for value in (wanted[0], wanted[-1]))
     if number.reciprocal and 0 in (first, last):
         first = last = first or last or 1.0  # nothing is the reciprocal of 0
     if first == last:
         first = _inside(last, high if last == low else low)
-    return (last,) if spelt(number, first) == spelt(number, last) else (first, last)
+    if spelt(number, first) == spelt(number, last):
+        return (last,)
+    return (first, *(value for value in wanted[1:-1] if low <= value <= high), last)
 
 
 def _inside(end: float, far: float) -> float:

@@ -12,7 +12,7 @@ from dataclasses import dataclass, replace
 from functools import partial
 from typing import Literal
 
-from bandproof.drivers.answers import is_like
+from bandproof.drivers.answers import is_like, is_spelt_otherwise
 from bandproof.drivers.errors import InstrumentError, InstrumentProblem, LinkBroken, NoAnswer, ReplyError
 from bandproof.drivers.instrument import Instrument, is_accepted, spelt, understood
 from bandproof.drivers.session import as_text
@@ -25,6 +25,7 @@ Verdict = Literal["accepted", "refused", "missing", "skipped"]
 NO_BOARD = "nobody said that no board is connected"
 _SILENT = 3  # slots without an answer, from the first on, after which nobody is there; arbitrary
 _SHOWN = 100  # characters of an answer that are kept; arbitrary
+_ROUNDED = 0.01  # of a value that is set: what reads back so near is rounded, not counted otherwise; arbitrary
 _TOLD = 400  # characters of what went wrong that are kept; arbitrary
 Hint = Callable[[InstrumentProblem], str]
 
@@ -165,15 +166,15 @@ class Walk:
         self.ask("habits.confirm", habits.confirm)
 
     def number(
-        self, slot: str, number: Number, channel: str = "", *, values: tuple[float, float], stays: bool = False
+        self, slot: str, number: Number, channel: str = "", *, values: tuple[float, ...], stays: bool = False
     ) -> bool:
-        """Try a number: ask it, set it to two values, set it back; return whether it can be asked.
+        """Try a number: ask it, set it to some values, set it back; return whether it can be asked.
 
         Parameters
         ----------
         slot, number, channel
             Which.
-        values : (float, float)
+        values : tuple of float, two or more
             SI; moved into the limits of the dialect.
         stays : bool
             It stays at the last of them until `restore`.
@@ -209,8 +210,8 @@ class Walk:
     def _follow(self, number: Number, values: tuple[float, ...], channel: str) -> str:
         """Set a number to one value after the other; return the answers, which must differ."""
         answers = [self._set(number, value, channel) for value in values]
-        if len(answers) > len(set(answers)):
-            raise ValueError(f"answers {answers[0]} to both: it does not follow, or `query` or `place` is wrong")
+        if again := [answer for answer in answers if answers.count(answer) > 1]:
+            raise ValueError(f"answers {again[0]} to more than one: it does not follow, or `query` or `place` is wrong")
         return ", ".join(answers) + limits_of(number)
 
     def _read(self, number: Number, channel: str) -> tuple[str, float]:
@@ -227,9 +228,12 @@ class Walk:
         self.instrument.session.command(self._text(number, value, channel))
         answer, found = self._read(number, channel)
         if not is_accepted(number, value, found):
-            ratio = f", {found / value:.4g} times what was set" if value else ""
-            told = f"told {spelt(number, value)} it answers {answer}{ratio}"
-            raise ValueError(f"{told}, which `readback` does not accept: do set and query count the same?")
+            told = f"told {spelt(number, value)} it answers {answer}, "
+            if value and abs(found / value - 1) < _ROUNDED:
+                away = f"{abs(found - value):.2g} away, which neither `readback` nor `absolute` accepts"
+                raise ValueError(f"{told}{away}: does it round, and how much?")
+            ratio = f"{found / value:.4g} times what was set, " if value else ""
+            raise ValueError(f"{told}{ratio}which `readback` does not accept: do set and query count the same?")
         return answer
 
     def _text(self, number: Number, value: float, channel: str) -> str:
@@ -276,7 +280,10 @@ class Walk:
             return None
         found = session.ask(query, as_text)
         if not is_like(answer, found, **names):
-            raise ValueError(f"then answers {found}, not {answer.format(any='...', **names)}")
+            wanted = answer.format(any="...", **names)
+            alike = "route" in names and is_spelt_otherwise(found, wanted)
+            how = ": name the route in [wiring] as it stands there, or change `is_closed`" if alike else ""
+            raise ValueError(f"then answers {found}, not {wanted}{how}")
         return found
 
     def _reason(self, problem: Exception) -> str:

@@ -13,6 +13,7 @@ from bandproof.drivers.scope_walk import walk_scope
 from bandproof.drivers.session import as_text
 from bandproof.drivers.supply import Supply
 from bandproof.drivers.switch import Switch
+from bandproof.drivers.trials import AWKWARD
 from bandproof.drivers.walk import NO_BOARD, Line, Walk
 
 __all__ = ["walk"]
@@ -27,7 +28,7 @@ def walk(instrument: Instrument, *, no_board: bool = False, routes: Sequence[str
     no_board : bool
         The operator says that no board is connected, so that outputs may be switched on.
     routes : sequence of str
-        The switch's routes; the first is closed once.
+        The switch's routes; each is closed once.
 
     Returns
     -------
@@ -65,9 +66,9 @@ def _generator(steps: Walk, instrument: Generator, no_board: bool) -> None:
         steps.tell("shape.sine", text)
     if not dialect.shape.sine:
         steps.note("shape.sine", "missing")
-    steps.number("frequency", dialect.frequency, values=(1000.0, 2500.0))
+    steps.number("frequency", dialect.frequency, values=(1000.0, AWKWARD, 2500.0))
     _load(steps, instrument)
-    steps.number("amplitude", dialect.amplitude, values=(0.5, 0.2))
+    steps.number("amplitude", dialect.amplitude, values=(0.5, 0.34567, 0.2))
     steps.number("offset", dialect.offset, values=(0.1, 0.05))
     if no_board:
         steps.answered("output.on", output.on, output.query, output.is_on)
@@ -98,7 +99,7 @@ def _switch(steps: Walk, instrument: Switch, routes: Sequence[str]) -> None:
     steps.tell("open_all", dialect.open_all)
     if not routes:
         steps.note("close", "skipped", dialect.close, "the bench file names no route")
-    for route in routes[:1]:
+    for route in routes:
         text, query = dialect.close.format(route=route), dialect.query.format(route=route)
         steps.answered(f"close {route}", text, query, dialect.is_closed, route=route)
         steps.attempt("open_all", dialect.open_all, partial(_open_all, instrument, route))

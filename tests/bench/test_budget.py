@@ -304,6 +304,13 @@ STATED = {
     "reseating": "probes",
     "compensation": "probes",
 }
+ROWS_STATED = {  # row: what the bench file would say of it, with the careful default
+    "reseating": 'reseating = "0.5 %" in [probes]',
+    "drift": 'drift = "0.1 %/min" in [scope]',
+    "range to range": 'range_accuracy = "2 %" in [scope]',
+    "linearity in": 'linearity = "0.5 LSB" in [scope]',
+    "linearity out": 'linearity = "0.5 LSB" in [scope]',
+}
 
 
 def test_what_a_bench_file_leaves_out_is_a_careful_default_and_says_so(low):
@@ -313,8 +320,8 @@ def test_what_a_bench_file_leaves_out_is_a_careful_default_and_says_so(low):
         text = re.sub(rf"^{key} = .*\n", "", text, flags=re.MULTILINE)
     bare = low.but(bench=parse_bench(text, "bare"), known={})
     said = low.but(bench=parse_bench(low.bench.text, "full"), known={})
-    for name in ("reseating", "drift", "range to range", "linearity in", "linearity out"):
-        assert "not declared, a careful default" in bare.row(name)[0].reason
+    for name, line in ROWS_STATED.items():
+        assert f"not declared, a careful default ({line})" in bare.row(name)[0].reason
         assert "declared in the bench file" in said.row(name)[0].reason
         assert "not declared" not in said.row(name)[0].reason
         # careful: no smaller than what a bench in good order declares, here that of the demo

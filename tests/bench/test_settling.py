@@ -62,7 +62,12 @@ def test_repeating_an_unsettled_record_mends_it(swept, one_band, seed):
     board = swept(seed, board=one_band, change=at_once, dwell_factor=1 / 3)
     assert worst_error(board) < 4.0
     assert not unsettled(board)
-    assert any(point.attempt > 0 for point in board.journal.points)
+    again = [point for point in board.journal.points if point.attempt > 0]
+    told = [entry for entry in board.journal.history if entry["event"] == "taken again"]
+    assert again
+    assert len(told) == sum(point.attempt for point in again)
+    assert {entry["step"] for entry in told} == {point.step for point in again}
+    assert {entry["words"] for entry in told} == {"the record had not settled"}
 
 
 @pytest.fixture

@@ -259,6 +259,17 @@ def test_an_instrument_that_does_otherwise_breaks_the_clause(memory_port, role, 
     assert verdicts[clause].found
 
 
+def test_a_frequency_that_is_rounded_breaks_the_clause_though_round_ones_are_kept(memory_port):
+    def whole_hertz(self, head, value):
+        self.values.update({head: f"{float(value):.0f}"} if head == "SOURce:FREQuency:CW" else {})
+        return b"" if head == "SOURce:FREQuency:CW" else None
+
+    outcomes = check(in_memory(memory_port, "generator", kind=other("generator", whole_hertz)), no_board=True)
+    broken = {outcome.clause: outcome.found for outcome in outcomes if outcome.verdict == "broken"}
+    assert list(broken) == ["reads_back_frequency_amplitude_and_offset"]
+    assert "reads back 1235" in broken["reads_back_frequency_amplitude_and_offset"]
+
+
 def test_an_identity_that_changes_breaks_its_clause(memory_port):
     driver = in_memory(memory_port, "generator")
     names = iter(("one", "two"))

@@ -179,3 +179,10 @@ def test_importing_the_drivers_imports_neither_numpy_nor_pyvisa():
     code = f"import sys, {modules}; print(sorted({{'numpy', 'pyvisa', 'pyvisa_py'}} & set(sys.modules)))"
     run = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
     assert run.stdout.strip() == "[]"
+
+
+def test_a_scope_that_is_told_its_interval_has_no_duration():
+    bare = SCOPE.replace('[duration]\nset = "T {value}"\nquery = "T?"\n', "")
+    told = bare.replace('query = "I?"', 'query = "I?"\nset = "I {value}"')
+    assert dialect.parse(told, "mine") == dialect.parse(told + "[duration]\n", "mine")
+    assert [finding.path for finding in mistakes(bare).findings] == ["duration"]

@@ -126,8 +126,9 @@ def test_the_value_read_back_is_used_and_refused_beyond_the_limit(generator):
     instrument.fixed["KHZ?"] = b"1.0000005"
     assert made.set_frequency(1000.0) == pytest.approx(1000.0005, abs=1e-9)
     instrument.fixed["KHZ?"] = b"2.00001"
-    with pytest.raises(SettingRefused, match=r"MEMORY was given 2000 by 'KHZ 2.000000' and reads back 2000.01"):
+    with pytest.raises(SettingRefused, match=r"MEMORY was given 2000 by 'KHZ 2.000000' and reads back 2000.01") as told:
         made.set_frequency(2000.0)
+    assert "or within 0; `readback` and `absolute` of [frequency])" in str(told.value)
     assert made.set_offset(0.0) == 0.0  # the link is still in step
 
 

@@ -193,7 +193,66 @@ def test_an_answer_that_never_changes_is_refused(memory_port, registers):
     lines = walk(Generator(Session(Link("MEMORY", RealClock(), opener=lambda *_: port), dialect.habits), dialect))
     (line,) = [line for line in lines if line.slot == "frequency.set"]
     assert line.verdict == "refused"
-    assert "answers 777 to both" in line.came
+    assert "answers 777 to more than one" in line.came
+
+
+class Rounding:
+    """Turns a memory instrument's frequency into the nearest twentieth of a hertz."""
+
+    def __init__(self, inner):
+        self.inner = inner
+
+    def __call__(self, message):
+        head, _, value = message.partition(b" ")
+        return self.inner(
+            b"%s %.2f" % (head, round(float(value) * 20) / 20) if head == b"SOURce:FREQuency:CW" else message
+        )
+
+
+def test_a_frequency_that_is_rounded_unsaid_is_refused(memory_port, registers):
+    """Round values read back as they were set."""
+    for line, told in (("", "`absolute`"), ("\nabsolute = 0.03", "")):
+        dialect = parse(source("scpi99-generator").replace("[frequency]", f"[frequency]{line}"), "generator")
+        port = memory_port(Rounding(registers()))
+        lines = walk(
+            Generator(Session(Link("MEMORY", RealClock(), opener=lambda *_, p=port: p), dialect.habits), dialect)
+        )
+        refused = [line.came for line in lines if line.slot == "frequency.set" and line.verdict == "refused"]
+        assert len(refused) == bool(told)
+        assert all(told in came and "1234.55, 0.018 away" in came for came in refused)
+
+
+def test_a_value_between_the_two_is_tried_where_the_limits_have_it():
+    assert trials(Number(set="R {value}"), (1000.0, 1234.5, 2500.0)) == (1000.0, 1234.5, 2500.0)
+    assert trials(Number(set="R {value}", limits=(1300.0, 1e6)), (1000.0, 1234.5, 2500.0)) == (1300.0, 2500.0)
+
+
+NAMED = {  # route in the bench file, what the switch answers, whether that is another spelling
+    "zeros": ("1", b"AT 01", True),
+    "blanks": ("B1", b"AT B 1", True),
+    "another route": ("1", b"AT 10", False),
+    "none": ("1", b"AT 00", False),
+}
+
+
+@pytest.mark.parametrize(("route", "answer", "alike"), NAMED.values(), ids=NAMED.keys())
+def test_a_route_that_the_switch_spells_otherwise_is_told(memory_port, registers, route, answer, alike):
+    dialect = replace(parse(source("scpi99-switch"), "switch"), query="WHERE?", is_closed="AT {route}")
+    port = memory_port(registers({"WHERE?": answer}))
+    switch = Switch(Session(Link("MEMORY", RealClock(), opener=lambda *_: port), dialect.habits), dialect)
+    (line,) = [line for line in walk(switch, routes=(route,)) if line.verdict == "refused"]
+    assert f"then answers {answer.decode()}, not AT {route}" in line.came
+    assert ("[wiring]" in line.came) == alike
+
+
+def test_every_wired_route_is_closed_and_opened_again(memory_port, registers):
+    dialect = replace(parse(source("scpi99-switch"), "switch"), query="")
+    port = memory_port(registers())
+    switch = Switch(Session(Link("MEMORY", RealClock(), opener=lambda *_: port), dialect.habits), dialect)
+    walk(switch, routes=("101", "102"))
+    told = [message for message in port.messages if message.startswith((b"ROUTe:CLOS", b"ROUTe:OPEN"))]
+    opened = dialect.open_all.encode()
+    assert told == [opened, b"ROUTe:CLOSe (@101)", opened, b"ROUTe:CLOSe (@102)", opened]
 
 
 def test_a_route_that_always_answers_closed_is_refused(memory_port, registers):

@@ -488,7 +488,8 @@ def test_an_answer_to_the_error_query_that_is_not_understood_is_filed_there_and_
     habits = driver.session.habits
     refused = [line for line in walk(driver) if line.verdict == "refused"]
     assert [line.slot for line in refused] == ["habits.errors"]
-    assert refused[0].came == "answers FAULT 00 NONE, not a decimal number"
+    hint = "has it to have a template, `errors_answer`?"
+    assert refused[0].came == f"answers FAULT 00 NONE, not a decimal number: {hint}"
     assert driver.session.habits == habits
 
 
