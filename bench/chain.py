@@ -21,7 +21,7 @@ __all__ = ["CHAIN", "Chain", "ChainBroken", "Entry", "add_to_chain", "chain_of",
 
 CHAIN = "chain.txt"
 _PATIENCE = 10.0  # s that another bench may take to write its line; arbitrary, it takes milliseconds
-_LINE = re.compile(rb"(\d{1,9}) (\S+) (\S+) ([0-9a-f]{64}) ([0-9a-f]{64})")
+_LINE = re.compile(rb"(\d{1,9}) (\S+) ([^\s\0]+) ([0-9a-f]{64}) ([0-9a-f]{64})")
 
 
 class ChainBroken(BadInput):

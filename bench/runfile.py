@@ -166,11 +166,11 @@ def digest_of(path: Path) -> str:
 
 
 def _checked(path: Path) -> tuple[str, bytes]:
-    if path.is_dir():
-        raise RunFileDamaged(str(path), "is a folder: name the run file in it, run.h5")
-    if path.exists() and not path.is_file():
-        raise RunFileDamaged(str(path), "is not a file")
     try:
+        if path.is_dir():
+            raise RunFileDamaged(str(path), "is a folder: name the run file in it, run.h5")
+        if path.exists() and not path.is_file():
+            raise RunFileDamaged(str(path), "is not a file")
         if path.stat().st_size > _LARGEST:
             raise RunFileDamaged(str(path), f"is larger than {_LARGEST // 10**9} GB, no run file is")
         content = path.read_bytes()

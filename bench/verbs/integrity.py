@@ -15,7 +15,7 @@ def command(run_path: Path, as_json: bool) -> int:
     """Compare a run file with the digest it carries, its figures with its points, its digest with its folder's chain.
 
     \b
-    sound     exit 0
+    sound     exit 0; "as it was written" only where a line of the chain has its digest
     damaged   exit 2: the digest is wrong; or no run file, empty, cut off, or of a version that is not read
     altered   exit 2: the digest is right, but the figures do not follow from the points, or the chain is broken
 
@@ -33,15 +33,14 @@ def command(run_path: Path, as_json: bool) -> int:
         raise RunAltered(str(run_path), found.reasons)
     if as_json:
         return 0
-    run, told = found.run, "; its figures follow from its points" if found.compared else ""
-    click.echo(f"{run_path}: sound, as it was written{told}")
+    run = found.run
+    click.echo(f"{run_path}: {found.words}")
     click.echo(
         f"  serial {run.serial}, attempt {run.attempt}, run {run.run_id}, {len(run.points)} records, {run.ended}"
     )
     click.echo(f"  sha256 {found.digest}")
-    if chain := found.chain:
-        for entry in chain.of(run_path):
-            click.echo(f"  link   {entry.link}, line {entry.number} of {len(chain.entries)} in {chain.path}")
+    if (chain := found.chain) and (line := found.line):
+        click.echo(f"  link   {line.link}, line {line.number} of {len(chain.entries)} in {chain.path}")
     for note in found.notes:
         click.echo(wrapped(f"note: {note}"))
     return 0

@@ -10,11 +10,11 @@ import numpy as np
 import pytest
 
 from bandproof.bench import verification
-from bandproof.bench.chain import CHAIN
+from bandproof.bench.chain import CHAIN, add_to_chain
 from bandproof.bench.documents.report import report_bytes
 from bandproof.bench.documents.stored import read_stored
 from bandproof.bench.result import board_verdict
-from bandproof.bench.runfile import read_result, read_run
+from bandproof.bench.runfile import digest_of, read_result, read_run
 from bandproof.bench.verbs import console
 from bandproof.bench.verification import RunAltered, verified
 
@@ -43,7 +43,7 @@ def test_a_reference_of_version_1_is_read_verified_fitted_and_reported(name):
     assert (result["verdict"], len(run.points)) == (verdict, records)
     assert sum(len(stage["suspects"]) for stage in result["stages"]) == suspects
     found = verified(V1 / name)
-    assert (found.reasons, found.notes, found.compared) == ((), (), True)
+    assert (found.reasons, found.notes, found.absent) == ((), (), ())
     assert [entry.digest for entry in found.chain.of(V1 / name)] == [found.digest]
     for stage, then in zip(stored.stages, result["stages"], strict=True):
         for quantity, figure in stage.figures.items():
@@ -174,8 +174,77 @@ def test_a_run_that_the_chain_does_not_have_is_sound_and_it_is_said(folder):
 def test_a_pooled_run_without_its_other_attempt_is_not_called_altered(folder, spoil):
     spoil(folder / "PASS-1/1/run.h5")
     found = verified(folder / "PASS-1/2/run.h5")
-    assert (found.reasons, found.compared) == ((), False)
+    assert (found.reasons, found.absent) == ((), (1,))
     assert "means with attempt 1, not to be had as it was then" in found.notes[0]
+    assert found.words == "as it was written; not compared: attempt 1 is not there as it was then"  # its line says so
+    (folder / CHAIN).unlink()
+    found = verified(folder / "PASS-1/2/run.h5")
+    assert found.words == "matches its digest; not compared: attempt 1 is not there as it was then"
+    assert (found.plain()["state"], found.plain()["chain"]) == ("not compared", None)
+
+
+ABSENT = text(
+    "result",
+    '"attempts":null',
+    '"attempts":[{"attempt":9,"digest":"0","verdict":"undecided","pooled":true},{"attempt":1}]',
+)
+
+
+def test_a_forged_run_that_claims_an_absent_attempt_is_not_called_sound(folder, capsys):
+    path = folder / "PASS-1/1/run.h5"
+    (folder / CHAIN).unlink()
+    signed(path, lambda file: (point("response_real", 1.01)(file), ABSENT(file)))
+    code, out, _ = verify(capsys, path)
+    assert (code, "sound" in out, "as it was written" in out) == (0, False, False)
+    assert f"{path}: matches its digest; not compared: attempt 9 is not there" in out
+
+
+@pytest.mark.parametrize("name", ["a stage left out", "a conclusion that is none"])
+def test_what_an_absent_attempt_cannot_explain_is_altered_all_the_same(folder, name):
+    change, words = ALTERED[name]
+    signed(folder / "PASS-1/1/run.h5", lambda file: (change(file), ABSENT(file)))
+    (folder / CHAIN).unlink()
+    assert words in verified(folder / "PASS-1/1/run.h5").reasons[0]
+
+
+# --- several lines of the chain ---
+
+
+def chained(folder, name):
+    """Write a line for a run file as it is now."""
+    add_to_chain(folder, [("2026-01-02T00:00:00+00:00", name, digest_of(folder / name))])
+
+
+def test_a_run_made_where_another_stood_before_is_sound_and_told_with_its_own_link(folder, capsys):
+    name = "PASS-1/1/run.h5"
+    shutil.copy(folder / "FAIL-1/1/run.h5", folder / name)
+    chained(folder, name)
+    code, out, _ = verify(capsys, folder / name)
+    assert (code, "another run stood here before: line 1" in out) == (0, True)
+    assert "sound, as it was written" in out
+    link = (folder / CHAIN).read_text().split()[-1]
+    assert f"link   {link}, line 5 of 5" in out
+    chain = verified(folder / name).plain()["chain"]
+    assert (chain["line"], chain["link"]) == (5, link)
+
+
+def test_a_run_that_is_not_the_last_made_in_its_place_is_altered(folder):
+    path = folder / "PASS-1/1/run.h5"
+    before = path.read_bytes()
+    shutil.copy(folder / "FAIL-1/1/run.h5", path)
+    chained(folder, "PASS-1/1/run.h5")
+    path.write_bytes(before)
+    found = verified(path)
+    assert "line 5 of" in found.reasons[0]
+    assert not any("stood here" in note for note in found.notes)
+
+
+def test_other_runs_of_the_chain_that_are_missing_or_changed_are_told_with_their_lines(folder):
+    shutil.rmtree(folder / "CUT-1")
+    signed(folder / "FAIL-1/1/run.h5", text("about", "reference-FAIL", "another-FAIL"))
+    found = verified(folder / "PASS-1/1/run.h5")
+    assert found.reasons == ()
+    assert found.notes[0].endswith(f"another one: line 3 (FAIL-1/1/run.h5), line 4 ({CUT})")
 
 
 # --- the command ---
