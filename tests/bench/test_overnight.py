@@ -9,7 +9,8 @@ def test_boards_measured_while_instruments_fail_are_complete_or_honestly_cut_sho
     tmp_path, monkeypatch, capsys
 ):
     monkeypatch.setattr(overnight, "ODDS", 3 * overnight.ODDS)
-    monkeypatch.setattr("bandproof.bench.finish._drawn", lambda run, result, *_: result)  # pictures cost three quarters of the time
+    # pictures cost three quarters of the time
+    monkeypatch.setattr("bandproof.bench.finish._drawn", lambda run, result, *_: result)
     night = overnight.measured(hours=1.0, most_boards=BOARDS, seed=11, folder=tmp_path, bands=1)
     night.show()
     assert night.boards == BOARDS
