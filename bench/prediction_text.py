@@ -17,6 +17,7 @@ __all__ = ["SCHEMA", "prediction_lines", "prediction_object", "warnings"]
 SCHEMA = "bandproof-prediction/1"
 _LABELS: dict[Quantity, str] = {"centre": "f0", "q": "Q", "gain": "gain"}
 _BAND = 12  # columns of a band's name; a longer one has a line of its own
+_NEAR = 1.0 / 3.0  # of the tolerance; arbitrary: a drawing that uses more is told
 _TOLD = 0.8  # of a figure's variance that the parts named make together, at least; arbitrary
 _THRU = "a thru: both probes on one node, a wire named thru in the bench file's [wiring]"
 _STRAIGHTER = "a scope whose converter is straighter or has more bits, declared as linearity in the bench file"
@@ -129,6 +130,7 @@ def prediction_lines(
         yield from _figure_lines(quantity, boards.stages)
     yield from _yield_lines(boards)
     yield from _spread_lines(boards.stages)
+    yield from _off_centre_lines(boards.stages)
     for stage in boards.stages:
         for note in stage.notes:
             yield from _wrapped(f"note: {note}")
@@ -218,6 +220,27 @@ def _spread_lines(stages: Sequence[PredictedStage]) -> Iterator[str]:
                 groups.setdefault(named, []).append((stage.name, share))
         for named, members in groups.items():
             yield from _wrapped(_cost(quantity, named, members, everywhere=len(members) == len(stages)))
+
+
+def _off_centre_lines(stages: Sequence[PredictedStage]) -> Iterator[str]:
+    """Yield the figures that the drawing itself brings near a limit: other values mend them, not better parts."""
+    for stage in stages:
+        for quantity, figure in stage.figures.items():
+            used = _used(quantity, figure)
+            if figure.spread is not None and _NEAR < used <= 1.0:
+                yield from _wrapped(
+                    f"  {_LABELS[quantity]} of {stage.name}: its parts as drawn make {_shown(quantity, figure.nodal)}, "
+                    f"{100.0 * used:.0f} % of the tolerance before any part varies: other values cost nothing "
+                    "(bandproof parts)"
+                )
+
+
+def _used(quantity: Quantity, figure: PredictedFigure) -> float:
+    """Return how much of the tolerance lies between the designed value and the nodal one, gain in decibels."""
+    scale = dB if quantity == "gain" else float
+    nodal, designed = scale(figure.nodal), scale(figure.limit.designed)
+    end = scale(figure.limit.upper if nodal >= designed else figure.limit.lower)
+    return abs((nodal - designed) / (end - designed))
 
 
 def _most(figure: PredictedFigure) -> tuple[tuple[str, ...], float]:

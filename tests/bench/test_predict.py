@@ -454,6 +454,13 @@ def test_what_no_draw_or_every_draw_showed_has_one_form(predict, one_band_text, 
     assert "100.00" not in out
 
 
+@pytest.mark.parametrize(("tolerance", "told"), [("1 %", True), ("2 %", False)])
+def test_a_drawing_off_centre_is_told_beside_what_tolerances_cost(predict, one_band_text, tolerance, told):
+    """By hand 1/(2 pi C sqrt(R_feedback (R_in || R_shunt))) = 159.44 Hz of 160 Hz; the op-amp takes 0.02 Hz more."""
+    out = " ".join(predict(changed(one_band_text, {'centre = "6 %"': f'centre = "{tolerance}"'}))[1].split())
+    assert ("f0 of low: its parts as drawn make 159.4 Hz, 36 % of the tolerance before any part varies" in out) is told
+
+
 def test_drawing_outside_its_own_limits_is_noted(predict, one_band_text):
     out = predict(changed(one_band_text, {'C_1 = "33 nF"': 'C_1 = "47 nF"'}))[1]
     assert "note: low: its parts as drawn should give centre" in " ".join(out.split())
