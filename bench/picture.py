@@ -138,7 +138,7 @@ def labels(views: Sequence[StageView]) -> list[str]:
 
 def numbered(views: Sequence[StageView]) -> str:
     """Return what a picture says of its labels where they are numbers, else ""."""
-    return "   numbers: bands in the order of the table" if labels(views)[0] == "1" else ""
+    return "   numbers: as in the table" if labels(views)[0] == "1" else ""
 
 
 def _draw_magnitude(axes: "Axes", view: StageView, mark: str, label: str) -> None:

@@ -12,6 +12,7 @@ from matplotlib.colors import to_rgb
 from matplotlib.figure import Figure
 from matplotlib.text import Text
 
+from bandproof.bench.documents.content import draw_board
 from bandproof.bench.documents.stage_picture import draw_stage
 from bandproof.bench.evaluate import views
 from bandproof.bench.picture import draw, image, of_tolerance, save, ticks
@@ -272,6 +273,18 @@ def test_all_letters_are_large_enough_inside_and_apart(any_view):
     outside = [name for name, b in boxes.items() if min(b.x0 - left, b.y0 - bottom, right - b.x1, top - b.y1) < 0.0]
     assert outside == []
     assert [pair for pair in combinations(boxes, 2) if boxes[pair[0]].overlaps(boxes[pair[1]])] == []
+
+
+@pytest.mark.parametrize("count", [2, 12, 40])
+def test_the_words_above_the_bands_of_a_report_end_within_its_width(two, count):
+    views = [replace(v, result=replace(v.result, name=v.result.name + 20 * "x")) for v in many(two[0], count)]
+    figure = draw_board(views)
+    renderer = FigureCanvasAgg(figure).get_renderer()
+    figure.draw(renderer)
+    words = [text for text in figure.axes[0].findobj(Text) if text.get_text().startswith("line:")]
+    assert len(words) == 1
+    assert words[0].get_window_extent(renderer).x0 >= 0.0
+    assert words[0].get_window_extent(renderer).x1 <= figure.bbox.x1
 
 
 def test_a_stage_far_from_its_limits_shows_both(moved):
