@@ -67,7 +67,8 @@ def _other_limits(before: Run, board: Board) -> str:
 
 
 def _span(quantity: Quantity, limit: Limit) -> str:
-    return f"{read_figure(quantity, limit.lower)} to {read_figure(quantity, limit.upper)} by rule {limit.rule}"
+    spread = f", spread {limit.prior.sd:.3g}" if limit.prior else ""
+    return f"{read_figure(quantity, limit.lower)} to {read_figure(quantity, limit.upper)} by rule {limit.rule}{spread}"
 
 
 def outlook(run: Run, stages: Sequence[StageResult], result: Mapping[str, Any]) -> str:
